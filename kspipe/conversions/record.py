@@ -1,0 +1,72 @@
+"""What every published conversion states about itself."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal
+
+__all__ = ["Certainty", "Range", "Record"]
+
+Certainty = Literal["verified", "from memory"]
+
+
+@dataclass(frozen=True)
+class Range:
+    """Where a record was calibrated.
+
+    Attributes
+    ----------
+    quantity : str
+        The input, with its unit.
+    low, high : float
+    """
+
+    quantity: str
+    low: float
+    high: float
+
+    def __str__(self) -> str:
+        return f"{self.low:g} <= {self.quantity} <= {self.high:g}"
+
+
+@dataclass(frozen=True, kw_only=True)
+class Record:
+    """One published conversion.
+
+    Attributes
+    ----------
+    key : str
+        ``author2012`` or ``author2012_tracer``; never reused for a changed formula.
+    label : str
+        For figures and tables.
+    cite : str
+        Key of `kspipe.core.citations`.
+    where : str
+        Equation or table of the paper.
+    formula : str
+        In words and symbols, with units.
+    certainty : {"verified", "from memory"}
+        Whether the coefficients were compared with a stored text of the source, or recomputed.
+    ranges : tuple of Range
+        Empty where the paper gives none.
+    scatter_dex : float or None
+        Intrinsic scatter; None where the paper gives none.
+    helium_factor : float or None
+        Total over hydrogen mass that the result includes; None where it does not apply.
+    imf : str or None
+        Initial mass function that the result assumes; None where it does not apply.
+    note : str
+        What a user must know before believing it.
+    """
+
+    key: str
+    label: str
+    cite: str
+    where: str
+    formula: str
+    certainty: Certainty
+    ranges: tuple[Range, ...] = ()
+    scatter_dex: float | None = None
+    helium_factor: float | None = None
+    imf: str | None = None
+    note: str = ""

@@ -1,0 +1,1 @@
+"""What every room stands on: errors, constants, citations, tracers, units, seeds, progress."""

@@ -1,0 +1,1 @@
+"""Plain functions on arrays: no unit objects, no headers, no files, no logging."""

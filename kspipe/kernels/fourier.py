@@ -1,0 +1,129 @@
+"""Gaussian smoothing by its exact transfer function, for values and for their noise."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+import scipy.fft
+from numpy.typing import NDArray
+
+__all__ = ["Padded", "correlated_noise_gain", "gaussian_smooth", "white_noise_gain"]
+
+Array = NDArray[np.float64]
+
+# A Gaussian holds 1 - 6e-7 of its weight within this many sigma.
+REACH_SIGMA: Final = 5.0
+
+
+@dataclass(frozen=True)
+class Padded:
+    """An array with a margin on each side, so that a map fades out instead of wrapping around.
+
+    Attributes
+    ----------
+    array : (ny + 2 margin, nx + 2 margin) float64 array
+    margin : int
+        Pixels added on each side.
+    """
+
+    array: Array
+    margin: int
+
+
+def _transfer(shape: tuple[int, int], covariance_pix2: Array) -> Array:
+    """Fourier transform of a unit Gaussian on the half plane of a real FFT."""
+    ky = np.fft.fftfreq(shape[0])[:, None]
+    kx = np.fft.rfftfreq(shape[1])[None, :]
+    (cxx, cxy), (_, cyy) = covariance_pix2
+    return np.asarray(
+        np.exp(-2.0 * math.pi**2 * (cxx * kx**2 + 2.0 * cxy * kx * ky + cyy * ky**2))
+    )
+
+
+def gaussian_smooth(
+    array: Array, covariance_pix2: Array, *, margin: int | None = None, workers: int = 1
+) -> Padded:
+    """Convolve with a Gaussian whose transfer function is exact; zero beyond the edges.
+
+    Parameters
+    ----------
+    array : (ny, nx) float64 array
+        Finite everywhere: blanks are zero in value and in weight.
+    covariance_pix2 : (2, 2) float64 array
+        Kernel covariance on (x, y) [pixel2]; zeros leave the array as it is.
+    margin : int, optional
+        Pixels of the output kept around the input; by default the reach of the kernel.
+    workers : int
+        Threads of the FFT; the result does not depend on them.
+
+    Returns
+    -------
+    Padded
+
+    Notes
+    -----
+    The transfer function of a Gaussian of covariance C is exp(-2 pi^2 k^T C k); nothing is
+    sampled on pixels, so a kernel narrower than a pixel is as exact as a wide one.
+    """
+    reach = math.ceil(REACH_SIGMA * math.sqrt(float(np.max(np.linalg.eigvalsh(covariance_pix2)))))
+    margin = max(reach, 2) if margin is None else margin
+    if not np.any(covariance_pix2):
+        return Padded(np.pad(array, margin), margin)
+    ny, nx = array.shape
+    # Twice the reach must fit beyond the far edge, or the tail would wrap into the margin.
+    room = margin + max(reach, margin)
+    shape = (
+        scipy.fft.next_fast_len(ny + room, real=True),
+        scipy.fft.next_fast_len(nx + room, real=True),
+    )
+    spectrum = scipy.fft.rfft2(array, s=shape, workers=workers)
+    spectrum *= _transfer(shape, covariance_pix2)
+    smooth = scipy.fft.irfft2(spectrum, s=shape, workers=workers, overwrite_x=True)
+    rows = np.arange(-margin, ny + margin) % shape[0]
+    columns = np.arange(-margin, nx + margin) % shape[1]
+    return Padded(np.ascontiguousarray(smooth[np.ix_(rows, columns)]), margin)
+
+
+def white_noise_gain(covariance_pix2: Array) -> float:
+    """Variance that is left of uncorrelated unit noise after Gaussian smoothing.
+
+    Parameters
+    ----------
+    covariance_pix2 : (2, 2) float64 array
+        Kernel covariance [pixel2].
+
+    Returns
+    -------
+    float
+        Mean of the squared transfer function over all frequencies of the pixel grid; 1 for no
+        smoothing, 1 / (4 pi sqrt(det)) for a wide kernel.
+    """
+    wide = 1.0 / (4.0 * math.pi * math.sqrt(max(float(np.linalg.det(covariance_pix2)), 1e-300)))
+    if float(np.min(np.linalg.eigvalsh(covariance_pix2))) > 1.0:
+        return wide
+    k = (np.arange(256) + 0.5) / 256.0 - 0.5
+    kx, ky = np.meshgrid(k, k)
+    (cxx, cxy), (_, cyy) = covariance_pix2
+    exponent = cxx * kx**2 + 2.0 * cxy * kx * ky + cyy * ky**2
+    return float(np.mean(np.exp(-4.0 * math.pi**2 * exponent)))
+
+
+def correlated_noise_gain(correlation: Array, kernel: Array) -> float:
+    """Variance that is left of correlated unit noise after Gaussian smoothing.
+
+    Parameters
+    ----------
+    correlation : (2, 2) float64 array
+        Covariance of the Gaussian that white noise was smoothed with.
+    kernel : (2, 2) float64 array
+        Covariance of the further smoothing, same unit.
+
+    Returns
+    -------
+    float
+        sqrt(det C / det(C + K)).
+    """
+    return math.sqrt(float(np.linalg.det(correlation) / np.linalg.det(correlation + kernel)))

@@ -1,0 +1,61 @@
+"""Robust numbers and sums of correlated pixels."""
+
+from __future__ import annotations
+
+import math
+from typing import Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+__all__ = ["clipped_scatter", "correlation_area", "median_error"]
+
+Array = NDArray[np.float64]
+
+# Standard deviation of a normal distribution over its median absolute deviation.
+MAD_TO_SIGMA: Final = 1.4826022185056018
+
+
+def clipped_scatter(values: Array, *, n_sigma: float = 4.0, n_iterations: int = 20) -> tuple[float, float]:
+    """Mean and standard deviation of the bulk of a sample, blind to emission and stars.
+
+    Parameters
+    ----------
+    values : (n,) float64 array
+        Finite values.
+    n_sigma : float
+        Values farther than this from the mean are left out, again and again; at 4 the bias on a
+        normal sample is below 0.1 %.
+    n_iterations : int
+        Most rounds.
+
+    Returns
+    -------
+    centre, sigma : float
+    """
+    centre = float(np.median(values))
+    sigma = MAD_TO_SIGMA * float(np.median(np.abs(values - centre)))
+    for _ in range(n_iterations):
+        kept = values[np.abs(values - centre) <= n_sigma * sigma]
+        new_centre, new_sigma = float(np.mean(kept)), float(np.std(kept))
+        if math.isclose(new_sigma, sigma, rel_tol=1e-6):
+            break
+        centre, sigma = new_centre, new_sigma
+    return centre, sigma
+
+
+def correlation_area(correlation: Array) -> float:
+    """Area over which noise sums coherently, in the square unit of the covariance.
+
+    White noise smoothed with a Gaussian of covariance C has the autocorrelation
+    exp(-d^T C^-1 d / 4), whose integral is 4 pi sqrt(det C): two beam areas.
+    """
+    return 4.0 * math.pi * math.sqrt(max(float(np.linalg.det(correlation)), 0.0))
+
+
+def median_error(values: Array, rng: np.random.Generator, n_draws: int = 1000) -> float:
+    """Bootstrap error of a median; NaN for fewer than two values."""
+    if values.size < 2:
+        return math.nan
+    picks = rng.integers(0, values.size, (n_draws, values.size))
+    return float(np.std(np.median(values[picks], axis=1)))

@@ -1,0 +1,255 @@
+"""Reading the sky coordinates, the beam and the observed frequency off a header."""
+
+from __future__ import annotations
+
+import math
+import warnings
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+from astropy.io import fits
+from astropy.wcs import WCS, FITSFixedWarning
+from astropy.wcs.utils import pixel_to_skycoord
+from numpy.typing import NDArray
+
+from kspipe.core.constants import C_KM_S, DEG_ARCSEC
+from kspipe.core.errors import BeamError, Fault, GridError
+from kspipe.core.tracers import Tracer
+from kspipe.kernels.geometry import beam_covariance
+
+__all__ = [
+    "Beam",
+    "celestial_wcs",
+    "header_beam",
+    "header_frequency_ghz",
+    "observed_frequency_ghz",
+    "pixel_areas_arcsec2",
+    "pixel_jacobian",
+    "sky_of_pixels",
+]
+
+Array = NDArray[np.float64]
+
+# Header and galaxy velocity may differ by a rotation curve, not by more.
+VELOCITY_TOLERANCE: Final = 0.002
+
+
+@dataclass(frozen=True)
+class Beam:
+    """A Gaussian beam and where it was read.
+
+    Attributes
+    ----------
+    major_arcsec, minor_arcsec, pa_deg : float
+        Full widths at half maximum and position angle, north through east.
+    origin : str
+        ``header BMAJ, BMIN, BPA`` or ``recipe``.
+    """
+
+    major_arcsec: float
+    minor_arcsec: float
+    pa_deg: float
+    origin: str
+
+    @property
+    def covariance_arcsec2(self) -> Array:
+        """Covariance on (east, north)."""
+        return beam_covariance(self.major_arcsec, self.minor_arcsec, self.pa_deg)
+
+    def __str__(self) -> str:
+        if math.isclose(self.major_arcsec, self.minor_arcsec, rel_tol=1e-9):
+            return f"{self.major_arcsec:.4g} arcsec"
+        return f"{self.major_arcsec:.4g} x {self.minor_arcsec:.4g} arcsec, pa {self.pa_deg:.4g} deg"
+
+
+def celestial_wcs(header: fits.Header, where: str) -> WCS:
+    """Read the celestial coordinates of a map.
+
+    Raises
+    ------
+    GridError
+        If the header has no celestial axes, no pixel size, or an absurd one.
+    """
+    if not any(
+        key in header for key in ("CDELT1", "CD1_1", "PC1_1", "CD1_2", "CD2_1", "PC1_2", "CROTA2")
+    ):
+        raise GridError(
+            Fault(
+                where,
+                "the header has no pixel size (no CDELT, CD or PC card)",
+                "add CDELT1 and CDELT2 to a copy of the file",
+            )
+        )
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", FITSFixedWarning)
+        try:
+            wcs = WCS(header).celestial
+            has_sky = wcs.has_celestial and wcs.naxis == 2
+        except Exception as error:  # astropy raises many kinds for malformed cards
+            raise GridError(Fault(where, f"the sky coordinates cannot be read: {error}")) from error
+    if not has_sky:
+        kinds = [header.get(f"CTYPE{i}", "absent") for i in (1, 2)]
+        raise GridError(
+            Fault(
+                where,
+                f"no sky coordinates: CTYPE1 and CTYPE2 are {kinds[0]!r} and {kinds[1]!r}; "
+                "expected a pair such as 'RA---TAN' and 'DEC--TAN'",
+                "give a map with a celestial WCS",
+            )
+        )
+    scale_arcsec = math.sqrt(abs(float(np.linalg.det(wcs.pixel_scale_matrix)))) * DEG_ARCSEC
+    if not 1e-3 < scale_arcsec < 2 * DEG_ARCSEC:
+        raise GridError(
+            Fault(
+                where,
+                f"pixels of {scale_arcsec:.3g} arcsec; expected 0.001 arcsec to 2 degrees",
+                "check CDELT and CUNIT (degrees are expected)",
+            )
+        )
+    return wcs
+
+
+def pixel_jacobian(wcs: WCS, x: float, y: float, *, icrs: bool = True) -> Array:
+    """Sky offset (east, north) [arcsec] for one pixel step in x and in y at one position.
+
+    Parameters
+    ----------
+    wcs : astropy.wcs.WCS
+        Celestial, any frame.
+    x, y : float
+        Pixel position.
+    icrs : bool
+        East and north of ICRS; else those of the map's own frame, on which its beam angle counts.
+
+    Returns
+    -------
+    (2, 2) float64 array
+        Columns are the steps in x and y.
+    """
+    half = 0.5
+    xs, ys = np.array([x - half, x + half, x, x]), np.array([y, y, y - half, y + half])
+    lon, lat = sky_of_pixels(wcs, xs, ys) if icrs else wcs.all_pix2world(xs, ys, 0)
+    dlon = (lon[1::2] - lon[::2] + 180.0) % 360.0 - 180.0
+    dlat = lat[1::2] - lat[::2]
+    return np.array([dlon * math.cos(math.radians(float(np.mean(lat)))), dlat]) * DEG_ARCSEC
+
+
+def pixel_areas_arcsec2(wcs: WCS, shape: tuple[int, int]) -> Array:
+    """Area of each pixel from the local Jacobian [arcsec2].
+
+    The pixel's corners are put on the unit sphere; the area is half the cross product of its
+    diagonals, exact to (pixel size)^2 in radians.
+    """
+    ny, nx = shape
+    x, y = np.meshgrid(np.arange(nx + 1) - 0.5, np.arange(ny + 1) - 0.5)
+    lon, lat = np.radians(wcs.all_pix2world(x, y, 0))
+    corner = np.stack([np.cos(lat) * np.cos(lon), np.cos(lat) * np.sin(lon), np.sin(lat)], axis=-1)
+    cross = np.cross(corner[1:, 1:] - corner[:-1, :-1], corner[1:, :-1] - corner[:-1, 1:])
+    return np.asarray(0.5 * np.linalg.norm(cross, axis=-1) * (180.0 / math.pi * DEG_ARCSEC) ** 2)
+
+
+def header_beam(header: fits.Header, where: str) -> Beam | None:
+    """Read BMAJ, BMIN, BPA (degrees); None where there is no BMAJ.
+
+    Raises
+    ------
+    BeamError
+        If BMAJ or BMIN is not a positive number.
+    """
+    if "BMAJ" not in header:
+        return None
+    cards = {key: header.get(key) for key in ("BMAJ", "BMIN", "BPA")}
+    major = cards["BMAJ"]
+    minor = cards["BMIN"] if cards["BMIN"] is not None else major
+    angle = cards["BPA"] if cards["BPA"] is not None else 0.0
+    try:
+        major, minor, angle = float(major), float(minor), float(angle)
+    except (TypeError, ValueError):
+        major = math.nan
+    if not (major > 0 and minor > 0 and math.isfinite(major * minor)):
+        raise BeamError(
+            Fault(
+                where,
+                f"BMAJ, BMIN, BPA are {cards['BMAJ']!r}, {cards['BMIN']!r}, {cards['BPA']!r}; "
+                "expected positive numbers in degrees",
+                'type beam = "... arcsec" for this map',
+            )
+        )
+    read = ", ".join(key for key, card in cards.items() if card is not None)
+    if minor > major:
+        major, minor, angle = minor, major, angle + 90.0
+    return Beam(major * DEG_ARCSEC, minor * DEG_ARCSEC, angle % 180.0, f"header {read}")
+
+
+def header_frequency_ghz(header: fits.Header) -> float | None:
+    """Observed frequency off a degenerate spectral axis of kind FREQ; None where there is none."""
+    for axis in range(1, header.get("NAXIS", 0) + 1):
+        if str(header.get(f"CTYPE{axis}", "")).startswith("FREQ"):
+            unit = str(header.get(f"CUNIT{axis}", "Hz")).strip().lower()
+            to_ghz = {"hz": 1e-9, "khz": 1e-6, "mhz": 1e-3, "ghz": 1.0}.get(unit)
+            value = header.get(f"CRVAL{axis}")
+            if to_ghz is None or not isinstance(value, (int, float)) or value <= 0:
+                return None
+            offset = (1.0 - header.get(f"CRPIX{axis}", 1.0)) * header.get(f"CDELT{axis}", 0.0)
+            return float(value + offset) * to_ghz
+    return None
+
+
+def observed_frequency_ghz(
+    tracer: Tracer, header: fits.Header, velocity_kms: float | None, convention: str, where: str
+) -> tuple[float, str]:
+    """Frequency at which a line was observed, and where that was read.
+
+    Parameters
+    ----------
+    tracer : Tracer
+    header : astropy.io.fits.Header
+    velocity_kms : float or None
+        The galaxy's velocity, if the recipe gives it.
+    convention : {"optical", "radio"}
+        v/c = nu0/nu - 1 or 1 - nu/nu0.
+    where : str
+        For messages.
+
+    Returns
+    -------
+    frequency_ghz : float
+    origin : str
+
+    Raises
+    ------
+    GridError
+        If neither recipe nor header tells, or if they contradict each other.
+    """
+    from_header = header_frequency_ghz(header)
+    if velocity_kms is None:
+        if from_header is None:
+            raise GridError(
+                Fault(
+                    where,
+                    "Jy per beam needs the observed frequency, and the header has no FREQ axis",
+                    'type galaxy.velocity = "... km/s"',
+                )
+            )
+        return from_header, "header FREQ axis"
+    beta = velocity_kms / C_KM_S
+    frequency = tracer.frequency_ghz * (
+        1.0 / (1.0 + beta) if convention == "optical" else 1.0 - beta
+    )
+    if from_header is not None and abs(from_header / frequency - 1.0) > VELOCITY_TOLERANCE:
+        raise GridError(
+            Fault(
+                where,
+                f"the header's FREQ axis says {from_header:.6g} GHz, galaxy.velocity gives "
+                f"{frequency:.6g} GHz for {tracer.key}",
+                "correct galaxy.velocity or the tracer",
+            )
+        )
+    return frequency, f"galaxy.velocity, {convention} convention"
+
+
+def sky_of_pixels(wcs: WCS, x: Array, y: Array) -> tuple[Array, Array]:
+    """ICRS longitude and latitude [deg] of pixel positions in any celestial frame."""
+    sky = pixel_to_skycoord(x, y, wcs, origin=0, mode="all").icrs
+    return np.asarray(sky.ra.deg), np.asarray(sky.dec.deg)

@@ -1,0 +1,142 @@
+"""From stored numbers to a `SkyMap` in the canonical intensity of its tracer."""
+
+from __future__ import annotations
+
+from typing import Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kspipe.core.errors import Fault, MapError
+from kspipe.maps.header import pixel_areas_arcsec2
+from kspipe.maps.skymap import CommonError, NoiseTerm, SkyMap
+from kspipe.maps.source import MapSource
+
+__all__ = ["load_map"]
+
+Array = NDArray[np.float64]
+
+# More pixels at exactly zero than this are a mask, not a measurement.
+MOST_ZEROS: Final = 0.01
+
+
+def load_map(source: MapSource) -> SkyMap:
+    """Read the pixels of a map and of its noise.
+
+    Parameters
+    ----------
+    source : MapSource
+        The header, checked.
+
+    Returns
+    -------
+    SkyMap
+        On the map's own pixels; without noise terms where the noise is to be measured.
+
+    Raises
+    ------
+    MapError
+        If nothing is finite, the noise is not positive, or exact zeros need a meaning.
+    """
+    request, where = source.request, f"maps.{source.request.name}, {source.image}"
+    value = source.image.read()
+    history = [f"read {source.image}: {value.shape[1]} x {value.shape[0]} pixels"]
+    blank = ~np.isfinite(value)
+    value[blank] = np.nan
+    history += _zeros(value, source, where)
+    if not np.isfinite(value).any():
+        raise MapError(Fault(where, "no pixel of the map is finite"))
+
+    scale: Array | float = source.door.factor
+    if source.door.per_pixel:
+        areas = pixel_areas_arcsec2(source.wcs, value.shape)
+        scale = scale * float(abs(np.linalg.det(source.jacobian_arcsec))) / areas
+    value *= scale
+    history += [source.door.reason, f"beam {source.beam} from {source.beam.origin}"]
+
+    noise: tuple[NoiseTerm, ...] = ()
+    if request.noise.kind != "measure":
+        sigma, note = _stated_sigma(source, value, where)
+        correlated = request.noise.correlated == "beam"
+        term = NoiseTerm(
+            source=request.name,
+            sigma=sigma * (scale / source.door.factor),
+            correlation_arcsec2=source.beam_arcsec2 if correlated else np.zeros((2, 2)),
+        )
+        unobserved = np.isfinite(value) & ~np.isfinite(sigma)
+        value[unobserved] = np.nan
+        noise = (term,)
+        history.append(note)
+        if unobserved.any():
+            history.append(f"{int(unobserved.sum())} pixels without a stated error left out")
+    return SkyMap(
+        name=request.name,
+        tracer=request.tracer,
+        value=value,
+        noise=noise,
+        coverage=np.isfinite(value).astype(float),
+        flags=np.zeros(value.shape, dtype=np.int32),
+        unit=source.tracer.unit,
+        wcs=source.wcs,
+        beam_arcsec2=source.beam_arcsec2,
+        averages_pixels=request.averages_pixels,
+        common=CommonError(request.calibration_error, source.pedestal),
+        history=tuple(history),
+        facts={
+            "file": str(source.image),
+            "unit": source.door.reason,
+            "beam": f"{source.beam} from {source.beam.origin}",
+            "pixel_arcsec": source.pixel_arcsec,
+            "blank_pixels": int(np.isnan(value).sum()),
+        },
+    )
+
+
+def _zeros(value: Array, source: MapSource, where: str) -> list[str]:
+    """Obey the recipe on exact zeros, or ask."""
+    zero = value == 0.0
+    finite = int(np.isfinite(value).sum())
+    if source.request.zeros == "blank":
+        value[zero] = np.nan
+        return [f"{int(zero.sum())} pixels at exactly zero taken as not observed (recipe)"]
+    if source.request.zeros is None and finite and zero.sum() > MOST_ZEROS * finite:
+        raise MapError(
+            Fault(
+                where,
+                f"{zero.sum() / finite:.1%} of the pixels are exactly zero: not observed, or "
+                "masked, or no emission?",
+                f'type maps.{source.request.name}.zeros = "blank" or "flux"',
+            )
+        )
+    return []
+
+
+def _stated_sigma(source: MapSource, value: Array, where: str) -> tuple[Array, str]:
+    """1-sigma error per pixel in the canonical unit at the galaxy's centre."""
+    noise = source.request.noise
+    if noise.kind == "value" or source.noise_image is None:
+        sigma = noise.value * source.noise_factor
+        note = f"noise {noise.value:g} {noise.unit or source.unit.text} from the recipe"
+        return np.full(value.shape, sigma), f"{note}, correlated like: {noise.correlated}"
+    stored = source.noise_image.read()
+    seen = stored[np.isfinite(value) & np.isfinite(stored)]
+    if not seen.size:
+        raise MapError(Fault(f"{where}, noise", f"{source.noise_image} is blank where the map is not"))
+    if seen.min() <= 0:
+        raise MapError(
+            Fault(
+                f"maps.{source.request.name}.noise, {source.noise_image}",
+                f"{int((seen <= 0).sum())} pixels of the noise map are zero or negative (least "
+                f"value {seen.min():g}); a {noise.stated} is positive",
+                'check what the file holds (is = "sigma", "variance" or "inverse variance") or '
+                "blank those pixels",
+            )
+        )
+    with np.errstate(invalid="ignore"):
+        sigma_stored = {
+            "sigma": lambda a: a,
+            "variance": np.sqrt,
+            "inverse variance": lambda a: 1.0 / np.sqrt(a),
+        }[noise.stated](stored)
+    note = f"noise from {source.noise_image}, read as {noise.stated}"
+    return sigma_stored * source.noise_factor, f"{note}, correlated like: {noise.correlated}"

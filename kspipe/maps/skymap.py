@@ -1,0 +1,122 @@
+"""A map with everything that belongs to it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field, replace
+from enum import IntFlag
+
+import numpy as np
+from astropy.wcs import WCS
+from numpy.typing import NDArray
+
+__all__ = ["CommonError", "Flag", "NoiseTerm", "SkyMap"]
+
+Array = NDArray[np.float64]
+
+
+class Flag(IntFlag):
+    """What a pixel's flags say; one meaning for each bit in every map and table."""
+
+    NONPOSITIVE_SFR = 1
+    NONPOSITIVE_GAS = 2
+    LOW_SNR = 4
+    OUTSIDE_RANGE = 8
+    LOW_COVERAGE = 16
+    NO_SOLUTION = 32
+    USER_MASK = 64
+
+    @classmethod
+    def meanings(cls) -> dict[str, int]:
+        """Return the names, in lower case, with their values."""
+        return {flag.name.lower(): flag.value for flag in cls if flag.name}
+
+
+@dataclass(frozen=True)
+class NoiseTerm:
+    """One random error of a map.
+
+    Attributes
+    ----------
+    source : str
+        Where the noise comes from; terms of one source are the same noise.
+    sigma : (ny, nx) float64 array
+        Signed 1-sigma error in the map's unit.
+    correlation_arcsec2 : (2, 2) float64 array
+        Covariance (east, north) of the Gaussian that white noise was smoothed with; zeros for
+        noise that is independent from pixel to pixel.
+    """
+
+    source: str
+    sigma: Array
+    correlation_arcsec2: Array
+
+
+@dataclass(frozen=True)
+class CommonError:
+    """An error that all pixels of a map share; never part of the random error.
+
+    Attributes
+    ----------
+    calibration : float
+        Fractional 1-sigma error of the flux scale.
+    pedestal : float
+        1-sigma error of the zero level, in the map's unit.
+    """
+
+    calibration: float = 0.0
+    pedestal: float = 0.0
+
+
+@dataclass(frozen=True)
+class SkyMap:
+    """An intensity map on the sky.
+
+    Attributes
+    ----------
+    name, tracer : str
+        The recipe's name for the map and what it is a map of.
+    value : (ny, nx) float64 array
+        Intensity in `unit`; NaN where not observed.
+    noise : tuple of NoiseTerm
+    coverage : (ny, nx) float64 array
+        Share of the beam that fell on observed sky, 0 to 1.
+    flags : (ny, nx) int32 array
+        Bits of `Flag`.
+    unit : str
+        Canonical unit of the tracer.
+    wcs : astropy.wcs.WCS
+        Celestial, two axes.
+    beam_arcsec2 : (2, 2) float64 array
+        Beam covariance on (east, north).
+    averages_pixels : bool
+        Whether a value is the mean over its pixel on top of the beam (detectors) or the intensity
+        at the pixel's centre (radio).
+    common : CommonError
+    history : tuple of str
+        Every step, in order.
+    facts : dict
+        Numbers worth showing: flux before and after, origins of unit, beam and noise.
+    """
+
+    name: str
+    tracer: str
+    value: Array
+    noise: tuple[NoiseTerm, ...]
+    coverage: Array
+    flags: NDArray[np.int32]
+    unit: str
+    wcs: WCS
+    beam_arcsec2: Array
+    averages_pixels: bool
+    common: CommonError = CommonError()
+    history: tuple[str, ...] = ()
+    facts: dict[str, object] = field(default_factory=dict)
+
+    @property
+    def error(self) -> Array:
+        """Random 1-sigma error: the root sum of squares of the terms."""
+        return np.sqrt(sum((term.sigma**2 for term in self.noise), np.zeros(self.value.shape)))
+
+    def with_step(self, step: str, **changes: object) -> SkyMap:
+        """Return a changed copy with one more line of history."""
+        return replace(self, history=(*self.history, step), **changes)  # type: ignore[arg-type]

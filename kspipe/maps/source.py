@@ -1,0 +1,409 @@
+"""A map as it lies on disk: what its header says, before any pixel is read."""
+
+from __future__ import annotations
+
+import math
+import warnings
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Final, Literal
+
+import numpy as np
+from astropy.coordinates import SkyCoord
+from astropy.io import fits
+from astropy.utils.exceptions import AstropyUserWarning
+from astropy.wcs import WCS
+from astropy.wcs.utils import skycoord_to_pixel
+from numpy.typing import NDArray
+
+from kspipe.core.errors import BeamError, Fault, MapError, ShapeError
+from kspipe.core.tracers import TRACERS, Tracer
+from kspipe.kernels.geometry import beam_area
+from kspipe.maps.header import (
+    Beam,
+    celestial_wcs,
+    header_beam,
+    observed_frequency_ghz,
+    pixel_jacobian,
+)
+from kspipe.maps.intensity import Door, UnitReading, open_door, read_stored_unit
+
+__all__ = ["MapRequest", "MapSource", "NoiseRequest", "StoredImage"]
+
+Array = NDArray[np.float64]
+
+# A beam of more pixels than this is BMAJ in the wrong unit, not a map.
+MOST_PIXELS_PER_BEAM: Final = 300.0
+
+
+@dataclass(frozen=True)
+class NoiseRequest:
+    """How a recipe states the noise of a map.
+
+    Attributes
+    ----------
+    kind : {"measure", "value", "file"}
+    value : float
+        1-sigma error per stored pixel, for ``value``.
+    unit : str
+        Unit of `value`; empty for that of the map.
+    file : Path or None
+    hdu : int or None
+    stated : {"sigma", "variance", "inverse variance"}
+        What the numbers in `file` are.
+    correlated : {"beam", "none"}
+        Whether the noise has the correlation of the beam (radio) or none (detectors).
+    """
+
+    kind: Literal["measure", "value", "file"]
+    value: float = math.nan
+    unit: str = ""
+    file: Path | None = None
+    hdu: int | None = None
+    stated: Literal["sigma", "variance", "inverse variance"] = "sigma"
+    correlated: Literal["beam", "none"] = "none"
+
+
+@dataclass(frozen=True)
+class MapRequest:
+    """What a recipe says of one map; plain values, so that it travels between processes.
+
+    Attributes
+    ----------
+    name, tracer : str
+    file : Path
+    noise : NoiseRequest
+    hdu : int or None
+    unit : str or None
+        Overrides BUNIT.
+    beam : (float, float, float) or None
+        FWHM major, minor [arcsec] and position angle [deg]; overrides the header.
+    averages_pixels : bool
+        Whether values are means over the pixel on top of the beam.
+    calibration_error : float
+        Fraction.
+    pedestal_error : (float, str) or None
+        1-sigma error of the zero level with its unit.
+    zeros : {"flux", "blank"} or None
+        What pixels at exactly zero mean.
+    """
+
+    name: str
+    tracer: str
+    file: Path
+    noise: NoiseRequest
+    hdu: int | None = None
+    unit: str | None = None
+    beam: tuple[float, float, float] | None = None
+    averages_pixels: bool = False
+    calibration_error: float = 0.0
+    pedestal_error: tuple[float, str] | None = None
+    zeros: Literal["flux", "blank"] | None = None
+
+
+@dataclass(frozen=True)
+class StoredImage:
+    """One two-dimensional image of a FITS file, or an HDU in memory.
+
+    Attributes
+    ----------
+    file : Path
+        For messages, and to read from.
+    index : int
+        HDU.
+    header : astropy.io.fits.Header
+    shape : (int, int)
+        Rows and columns without degenerate axes.
+    memory : HDU or None
+        Read from here instead of the file.
+    """
+
+    file: Path
+    index: int
+    header: fits.Header
+    shape: tuple[int, int]
+    memory: fits.PrimaryHDU | None = None
+
+    def __str__(self) -> str:
+        return f"{self.file}" + (f"[{self.index}]" if self.index else "")
+
+    @classmethod
+    def find(
+        cls, file: Path, hdu: int | None, memory: fits.PrimaryHDU | None = None
+    ) -> StoredImage:
+        """Find the one image in a file.
+
+        Raises
+        ------
+        MapError
+            If the file cannot be read, or holds no image or several.
+        ShapeError
+            If the image has more than two axes longer than one.
+        """
+        if memory is not None:
+            return cls(file, 0, memory.header.copy(), _plane(memory.header, str(file)), memory)
+        with _open(file) as hdus:
+            images = [
+                i for i, h in enumerate(hdus) if h.is_image and len(_long_axes(h.header)) >= 2
+            ]
+            listed = ", ".join(f"{i} {hdus[i].name or 'unnamed'}" for i in images)
+            if hdu is not None and hdu not in images:
+                raise MapError(
+                    Fault(str(file), f"HDU {hdu} holds no image; images are in: {listed or 'none'}")
+                )
+            if hdu is None and len(images) != 1:
+                what = "the file holds no image" if not images else f"several images: {listed}"
+                raise MapError(Fault(str(file), what, "type hdu = N for this map"))
+            index = images[0] if hdu is None else hdu
+            header = hdus[index].header.copy()
+        return cls(file, index, header, _plane(header, f"{file}[{index}]"))
+
+    def read(self) -> Array:
+        """Read the pixels, degenerate axes dropped, as a fresh (ny, nx) float64 array."""
+        if self.memory is not None:
+            return np.array(self.memory.data, dtype=float).reshape(self.shape)
+        with _open(self.file) as hdus:
+            return np.array(hdus[self.index].data, dtype=float).reshape(self.shape)
+
+
+def _long_axes(header: fits.Header) -> list[int]:
+    return [
+        axis for axis in range(1, header.get("NAXIS", 0) + 1) if header.get(f"NAXIS{axis}", 0) > 1
+    ]
+
+
+def _plane(header: fits.Header, where: str) -> tuple[int, int]:
+    axes = _long_axes(header)
+    sizes = [header.get(f"NAXIS{axis}", 0) for axis in axes]
+    if axes != [1, 2]:
+        raise ShapeError(
+            Fault(
+                where,
+                f"axes {axes} are longer than one (sizes {sizes}); expected an image on axes 1 "
+                "and 2",
+                "make an integrated map of the cube first" if len(axes) > 2 else "",
+            )
+        )
+    return sizes[1], sizes[0]
+
+
+@contextmanager
+def _open(file: Path) -> Iterator[fits.HDUList]:
+    """Open a FITS file; every way in which that fails becomes one message."""
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", AstropyUserWarning)
+            hdus = fits.open(file)
+            hdus.info(output=False)
+    except FileNotFoundError as error:
+        raise MapError(Fault(str(file), "the file does not exist")) from error
+    except Exception as error:  # astropy and gzip raise many kinds for damaged files
+        raise MapError(Fault(str(file), f"the file cannot be read as FITS ({error})")) from error
+    with hdus:
+        yield hdus
+
+
+@dataclass(frozen=True)
+class MapSource:
+    """A map whose header was read and found usable.
+
+    Attributes
+    ----------
+    request : MapRequest
+    image : StoredImage
+    noise_image : StoredImage or None
+    wcs : astropy.wcs.WCS
+        Celestial part.
+    beam : Beam
+    unit : UnitReading
+    door : Door
+        From stored numbers to the canonical intensity.
+    noise_factor : float
+        From stored noise numbers (as sigma) to the canonical intensity.
+    pedestal : float
+        1-sigma error of the zero level, canonical intensity.
+    jacobian_arcsec : (2, 2) float64 array
+        ICRS offset (east, north) per pixel step at the galaxy's centre.
+    beam_arcsec2 : (2, 2) float64 array
+        Beam covariance on ICRS axes.
+    """
+
+    request: MapRequest
+    image: StoredImage
+    noise_image: StoredImage | None
+    wcs: WCS
+    beam: Beam
+    unit: UnitReading
+    door: Door
+    noise_factor: float
+    pedestal: float
+    jacobian_arcsec: Array
+    beam_arcsec2: Array
+
+    @property
+    def tracer(self) -> Tracer:
+        """What it is a map of."""
+        return TRACERS[self.request.tracer]
+
+    @property
+    def pixel_arcsec(self) -> float:
+        """Side of a square pixel of the same area, at the galaxy's centre."""
+        return math.sqrt(abs(float(np.linalg.det(self.jacobian_arcsec))))
+
+    @classmethod
+    def open(
+        cls,
+        request: MapRequest,
+        *,
+        centre_deg: tuple[float, float],
+        velocity_kms: float | None,
+        velocity_convention: str,
+        memory: tuple[fits.PrimaryHDU, fits.PrimaryHDU | None] | None = None,
+    ) -> MapSource:
+        """Read the header of a map and check everything that it can tell.
+
+        Parameters
+        ----------
+        request : MapRequest
+        centre_deg : (float, float)
+            The galaxy's centre, ICRS.
+        velocity_kms, velocity_convention
+            See `observed_frequency_ghz`.
+        memory : tuple of HDU, optional
+            The map and its noise in memory, read instead of the files.
+
+        Raises
+        ------
+        MapError
+            One of its kinds, saying what to type.
+        """
+        where = f"maps.{request.name}"
+        tracer = TRACERS[request.tracer]
+        image = StoredImage.find(request.file, request.hdu, memory[0] if memory else None)
+        wcs = celestial_wcs(image.header, f"{where}, {image}")
+        unit = read_stored_unit(
+            image.header.get("BUNIT"), request.unit, tracer, f"{where}, {image}"
+        )
+        beam = _beam(request, image, where)
+        x, y = _centre_pixel(wcs, image.shape, centre_deg)
+        own, jacobian = pixel_jacobian(wcs, x, y, icrs=False), pixel_jacobian(wcs, x, y)
+        pixel_area = abs(float(np.linalg.det(own)))
+        _check_beam(beam, math.sqrt(pixel_area), image, where)
+        frequency = None
+        note = ""
+        if unit.needs_frequency and tracer.unit == "K km/s":
+            frequency, note = observed_frequency_ghz(
+                tracer, image.header, velocity_kms, velocity_convention, f"{where}, {image}"
+            )
+
+        def through(reading: UnitReading) -> Door:
+            return open_door(
+                reading,
+                tracer,
+                frequency_ghz=frequency,
+                beam_area_arcsec2=beam_area(beam.covariance_arcsec2),
+                pixel_area_arcsec2=pixel_area,
+                where=f"{where}, {image}",
+            )
+
+        door = through(unit)
+        if note:
+            door = Door(door.factor, door.per_pixel, f"{door.reason}; frequency from {note}")
+        noise_image, noise_factor = _noise(request, image, tracer, unit, door, through, memory)
+        pedestal = 0.0
+        if request.pedestal_error is not None:
+            level, text = request.pedestal_error
+            pedestal = level * through(
+                read_stored_unit(None, text, tracer, f"{where}.pedestal_error")
+            ).factor
+        to_icrs = jacobian @ np.linalg.inv(own)
+        return cls(
+            request=request,
+            image=image,
+            noise_image=noise_image,
+            wcs=wcs,
+            beam=beam,
+            unit=unit,
+            door=door,
+            noise_factor=noise_factor,
+            pedestal=pedestal,
+            jacobian_arcsec=jacobian,
+            beam_arcsec2=to_icrs @ beam.covariance_arcsec2 @ to_icrs.T,
+        )
+
+
+def _beam(request: MapRequest, image: StoredImage, where: str) -> Beam:
+    if request.beam is not None:
+        return Beam(*request.beam, origin="recipe")
+    beam = header_beam(image.header, f"{where}, {image}")
+    if beam is None:
+        raise BeamError(
+            Fault(
+                f"{where}, {image}",
+                "the header has no beam (no BMAJ)",
+                'type beam = "... arcsec" for this map',
+            )
+        )
+    return beam
+
+
+def _check_beam(beam: Beam, pixel_arcsec: float, image: StoredImage, where: str) -> None:
+    """Refuse a beam that no map of these pixels can have."""
+    ratio = beam.minor_arcsec / pixel_arcsec
+    field_arcsec = max(image.shape) * pixel_arcsec
+    if ratio > MOST_PIXELS_PER_BEAM or beam.major_arcsec > field_arcsec or ratio < 0.2:
+        raise BeamError(
+            Fault(
+                f"{where}, {image}",
+                f"a beam of {beam} ({beam.origin}) on pixels of {pixel_arcsec:.4g} arcsec and a "
+                f"field of {field_arcsec:.4g} arcsec is not plausible; BMAJ counts in degrees",
+                'type beam = "... arcsec" for this map',
+            )
+        )
+
+
+def _centre_pixel(
+    wcs: WCS, shape: tuple[int, int], centre_deg: tuple[float, float]
+) -> tuple[float, float]:
+    """Pixel of the galaxy's centre, or of the image's where the galaxy is outside."""
+    x, y = skycoord_to_pixel(SkyCoord(*centre_deg, unit="deg"), wcs, origin=0, mode="wcs")
+    inside = -0.5 <= x <= shape[1] - 0.5 and -0.5 <= y <= shape[0] - 0.5
+    return (float(x), float(y)) if inside else ((shape[1] - 1) / 2, (shape[0] - 1) / 2)
+
+
+def _noise(
+    request: MapRequest,
+    image: StoredImage,
+    tracer: Tracer,
+    unit: UnitReading,
+    door: Door,
+    through: Callable[[UnitReading], Door],
+    memory: tuple[fits.PrimaryHDU, fits.PrimaryHDU | None] | None,
+) -> tuple[StoredImage | None, float]:
+    """Find the noise image, check its shape, and work out its factor."""
+    where = f"maps.{request.name}.noise"
+    noise = request.noise
+    if noise.kind == "measure":
+        return None, 1.0
+    if noise.kind == "value":
+        if not noise.unit:
+            return None, door.factor
+        return None, through(read_stored_unit(None, noise.unit, tracer, where)).factor
+    if noise.file is None:
+        raise MapError(Fault(where, "no file is given"))
+    found = StoredImage.find(noise.file, noise.hdu, memory[1] if memory else None)
+    if found.shape != image.shape:
+        raise ShapeError(
+            Fault(
+                f"{where}, {found}",
+                f"the noise map has {found.shape[1]} x {found.shape[0]} pixels, the map "
+                f"{image.shape[1]} x {image.shape[0]}",
+                "give a noise map on the pixels of the map",
+            )
+        )
+    bunit = found.header.get("BUNIT")
+    if noise.stated == "sigma" and request.unit is None and isinstance(bunit, str) and bunit.strip():
+        return found, through(read_stored_unit(bunit, None, tracer, f"{where}, {found}")).factor
+    return found, door.factor

@@ -1,0 +1,147 @@
+"""The common grid: north up, centred on the galaxy, over the sky that all maps share."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from astropy.coordinates import SkyCoord
+from astropy.wcs import WCS
+from astropy.wcs.utils import skycoord_to_pixel
+from numpy.typing import NDArray
+
+from kspipe.core.errors import Fault, GridError
+from kspipe.kernels.geometry import position_offsets
+from kspipe.maps import MapSource
+from kspipe.maps.header import pixel_areas_arcsec2, pixel_jacobian, sky_of_pixels
+
+__all__ = ["Grid"]
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Grid:
+    """Pixels on the sky that all matched maps share.
+
+    Attributes
+    ----------
+    wcs : astropy.wcs.WCS
+        TAN, ICRS, north up.
+    shape : (int, int)
+        Rows and columns.
+    pixel_arcsec : float
+    centre_deg : (float, float)
+        The galaxy's centre, on the centre of a pixel.
+    """
+
+    wcs: WCS
+    shape: tuple[int, int]
+    pixel_arcsec: float
+    centre_deg: tuple[float, float]
+
+    @property
+    def centre_pixel(self) -> tuple[float, float]:
+        """Pixel (x, y) of the galaxy's centre, zero-based."""
+        x, y = self.wcs.wcs.crpix
+        return float(x) - 1.0, float(y) - 1.0
+
+    @classmethod
+    def around(
+        cls,
+        centre_deg: tuple[float, float],
+        pixel_arcsec: float,
+        sources: list[MapSource],
+        size_arcsec: float | None = None,
+    ) -> Grid:
+        """Lay the grid over the overlap of all maps, or over a square of a given size.
+
+        Raises
+        ------
+        GridError
+            If the maps do not overlap, or the galaxy's centre is outside one of them.
+        """
+        wcs = _tangent(centre_deg, pixel_arcsec)
+        low, high = np.array([-math.inf, -math.inf]), np.array([math.inf, math.inf])
+        boxes = {}
+        for source in sources:
+            edge = _outline(source, wcs)
+            boxes[source.request.name] = edge
+            low, high = np.maximum(low, edge.min(axis=0)), np.minimum(high, edge.max(axis=0))
+        if np.any(low > 0) or np.any(high < 0):
+            raise _not_there(boxes, pixel_arcsec)
+        if size_arcsec is not None:
+            half = size_arcsec / 2 / pixel_arcsec
+            low, high = np.maximum(low, -half), np.minimum(high, half)
+        first, last = np.ceil(low - 1e-6).astype(int), np.floor(high + 1e-6).astype(int)
+        wcs.wcs.crpix = [1.0 - first[0], 1.0 - first[1]]
+        columns, rows = last - first + 1
+        return cls(wcs, (int(rows), int(columns)), pixel_arcsec, centre_deg)
+
+    def sky(self) -> tuple[Array, Array]:
+        """ICRS longitude and latitude of each pixel's centre [deg]."""
+        y, x = np.indices(self.shape, dtype=float)
+        lon, lat = self.wcs.all_pix2world(x, y, 0)
+        return np.asarray(lon), np.asarray(lat)
+
+    def offsets_arcsec(self) -> tuple[Array, Array]:
+        """Offsets east and north of the galaxy's centre [arcsec]."""
+        return position_offsets(*self.sky(), *self.centre_deg)
+
+    def areas_arcsec2(self) -> Array:
+        """Area of each pixel from the local Jacobian [arcsec2]."""
+        return pixel_areas_arcsec2(self.wcs, self.shape)
+
+    def jacobian_arcsec(self) -> Array:
+        """Sky offset per pixel step at the galaxy's centre."""
+        return pixel_jacobian(self.wcs, *self.centre_pixel)
+
+    def pixels_in(self, wcs: WCS) -> tuple[Array, Array]:
+        """Positions of this grid's pixels on another map's pixels, (x, y), zero-based."""
+        lon, lat = self.sky()
+        x, y = skycoord_to_pixel(SkyCoord(lon, lat, unit="deg"), wcs, origin=0, mode="all")
+        return np.asarray(x, dtype=float), np.asarray(y, dtype=float)
+
+
+def _tangent(centre_deg: tuple[float, float], pixel_arcsec: float) -> WCS:
+    wcs = WCS(naxis=2)
+    wcs.wcs.ctype = ["RA---TAN", "DEC--TAN"]
+    wcs.wcs.cunit = ["deg", "deg"]
+    wcs.wcs.crval = list(centre_deg)
+    wcs.wcs.crpix = [1.0, 1.0]
+    wcs.wcs.cdelt = [-pixel_arcsec / 3600.0, pixel_arcsec / 3600.0]
+    wcs.wcs.radesys = "ICRS"
+    wcs.wcs.set()
+    return wcs
+
+
+def _outline(source: MapSource, wcs: WCS) -> Array:
+    """Outer edge of a map as (x, y) pixel offsets on the grid, (n, 2)."""
+    ny, nx = source.image.shape
+    along_x, along_y = np.linspace(-0.5, nx - 0.5, 33), np.linspace(-0.5, ny - 0.5, 33)
+    x = np.concatenate([along_x, along_x, np.full(33, -0.5), np.full(33, nx - 0.5)])
+    y = np.concatenate([np.full(33, -0.5), np.full(33, ny - 0.5), along_y, along_y])
+    lon, lat = sky_of_pixels(source.wcs, x, y)
+    seen = np.isfinite(lon) & np.isfinite(lat)
+    px, py = wcs.all_world2pix(lon[seen], lat[seen], 0)
+    edge = np.column_stack([px, py])
+    return edge[np.isfinite(edge).all(axis=1)]
+
+
+def _not_there(boxes: dict[str, Array], pixel_arcsec: float) -> GridError:
+    """Say where each map lies relative to the galaxy's centre."""
+    faults = []
+    for name, edge in boxes.items():
+        (west, south), (east, north) = edge.min(axis=0), edge.max(axis=0)
+        if west > 0 or south > 0 or east < 0 or north < 0:
+            away = np.hypot(*edge.mean(axis=0)) * pixel_arcsec / 60
+            faults.append(
+                Fault(
+                    f"maps.{name}",
+                    f"the map does not reach the galaxy's centre: its middle is {away:.4g} arcmin "
+                    "away, so the maps do not overlap there",
+                    "check galaxy.centre and the file",
+                )
+            )
+    return GridError(*faults)

@@ -1,0 +1,225 @@
+"""What ties the values of a recipe together."""
+
+from __future__ import annotations
+
+import math
+from collections import Counter
+from collections.abc import Mapping
+from typing import Any, Final
+
+from kspipe.conversions import STAR_FORMATION
+from kspipe.core.errors import Fault, nearest
+from kspipe.core.tracers import CO_LINES
+from kspipe.recipe.models import (
+    GalaxyTable,
+    GasTable,
+    MapTable,
+    MetallicityTable,
+    RelationTable,
+    StarFormationTable,
+)
+from kspipe.relations import LAWS
+
+__all__ = ["MOST_INCLINED_DEG", "check_relation", "check_together"]
+
+# Above this the radius and the column of a pixel are smeared along the line of sight, so that a
+# prediction pixel by pixel means nothing (common practice).
+MOST_INCLINED_DEG: Final = 75.0
+
+
+def check_together(tables: Mapping[str, Any]) -> list[Fault]:
+    """Find the faults between tables; tables that are faulty themselves (None) are passed over."""
+    maps = {name: table for name, table in tables["maps"].items() if table is not None}
+    some_map_is_faulty = len(maps) < len(tables["maps"])
+    faults = _duplicates(maps)
+    faults += _gas_faults(tables["gas"], maps, complete=not some_map_is_faulty)
+    faults += _map_extras(maps)
+    if isinstance(tables["star_formation"], StarFormationTable):
+        faults += _star_formation_faults(tables["star_formation"], tables["maps"])
+    galaxy, metallicity = tables["galaxy"], tables["metallicity"]
+    if isinstance(galaxy, GalaxyTable):
+        if isinstance(metallicity, MetallicityTable) and metallicity.slope[1] == "r25":
+            if galaxy.r25 is None:
+                faults.append(
+                    Fault(
+                        "metallicity.gradient",
+                        "a gradient per r25 needs galaxy.r25",
+                        'type r25 = "... arcmin" in [galaxy]',
+                    )
+                )
+        if galaxy.inclination.value > MOST_INCLINED_DEG and tables["relations"]:
+            faults.append(
+                Fault(
+                    "galaxy.inclination",
+                    f"{galaxy.inclination.text} is above {MOST_INCLINED_DEG:g} deg: relations "
+                    "pixel by pixel are refused, the line of sight crosses the whole disc",
+                    "remove [relations] to make surface densities only",
+                )
+            )
+    return faults
+
+
+def _duplicates(maps: Mapping[str, MapTable]) -> list[Fault]:
+    counts = Counter(table.tracer for table in maps.values())
+    return [
+        Fault(
+            f"maps.{name}.tracer",
+            f"{table.tracer} is the tracer of {counts[table.tracer]} maps",
+            "keep one map per tracer",
+        )
+        for name, table in maps.items()
+        if counts[table.tracer] > 1
+    ]
+
+
+def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) -> list[Fault]:
+    faults = []
+    tracers = {table.tracer: name for name, table in maps.items()}
+    lines = [line for line in CO_LINES if line in tracers]
+    if complete and "HI" not in tracers:
+        faults.append(
+            Fault("maps", "no map of HI, which the atomic gas needs", 'add one with tracer = "HI"')
+        )
+    if len(lines) > 1:
+        faults.append(
+            Fault("maps", f"maps of {' and '.join(lines)}: the molecular gas takes one CO line")
+        )
+    if gas == "atomic only" and lines:
+        faults.append(
+            Fault(
+                "gas",
+                f'"atomic only", but maps.{tracers[lines[0]]} is {lines[0]}',
+                "type a table [gas] with alpha_co, or remove that map",
+            )
+        )
+    if isinstance(gas, GasTable):
+        if complete and not lines:
+            faults.append(
+                Fault(
+                    "gas.alpha_co",
+                    "the recipe lists no CO map",
+                    'add one, or type gas = "atomic only" in place of [gas]',
+                )
+            )
+        if lines and lines[0] != "CO(1-0)" and gas.line_ratio is None:
+            faults.append(
+                Fault(
+                    "gas.line_ratio",
+                    f"{lines[0]} needs its ratio to CO(1-0)",
+                    "type line_ratio, for example 0.65 for CO(2-1) (Leroy et al. 2022: 0.50-0.83)",
+                )
+            )
+        if lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
+            faults.append(Fault("gas.line_ratio", "CO(1-0) takes no line ratio", "remove the key"))
+    return faults
+
+
+def _map_extras(maps: Mapping[str, MapTable]) -> list[Fault]:
+    """Keys that belong to one tracer only."""
+    faults = []
+    for name, table in maps.items():
+        if table.tracer == "Halpha" and table.nii_ratio is None:
+            faults.append(
+                Fault(
+                    f"maps.{name}.nii_ratio",
+                    "an H-alpha map needs [NII]6583/Halpha",
+                    "type nii_ratio = 0 if the map is free of [NII]",
+                )
+            )
+        for key, value, owner in (
+            ("nii_ratio", table.nii_ratio, "Halpha"),
+            ("as_24um", table.as_24um, "22um"),
+        ):
+            if value is None:
+                continue
+            if table.tracer != owner:
+                faults.append(
+                    Fault(f"maps.{name}.{key}", f"belongs to a map of {owner}, not {table.tracer}")
+                )
+            elif not 0 <= value.value < 10 or (key == "as_24um" and value.value == 0):
+                faults.append(
+                    Fault(f"maps.{name}.{key}", f"{value.text} is not a plausible ratio (0 to 10)")
+                )
+    return faults
+
+
+def _star_formation_faults(
+    table: StarFormationTable, maps: Mapping[str, MapTable | None]
+) -> list[Fault]:
+    faults = []
+    record = STAR_FORMATION.get(table.calibration)
+    found: list[str] = []
+    for name in table.maps:
+        if name not in maps:
+            faults.append(
+                Fault("star_formation.maps", f'no map is called "{name}"', nearest(name, maps))
+            )
+            return faults
+        listed = maps[name]
+        if listed is None:
+            return faults
+        tracer = listed.tracer
+        if tracer == "22um" and "24um" in record.tracers:
+            if listed.as_24um is None:
+                faults.append(
+                    Fault(
+                        f"maps.{name}.as_24um",
+                        f'"{record.key}" is calibrated on 24 um and this map is 22 um',
+                        "type as_24um = 24 um over 22 um intensity, for example 1.0",
+                    )
+                )
+            tracer = "24um"
+        found.append(tracer)
+    if sorted(found) != sorted(record.tracers):
+        faults.append(
+            Fault(
+                "star_formation.maps",
+                f'"{record.key}" takes {" and ".join(record.tracers)}; listed are '
+                f"{' and '.join(found) or 'none'}",
+                "list one map of each",
+            )
+        )
+    return faults
+
+
+def check_relation(name: str, raw: object, faults: list[Fault]) -> RelationTable | None:
+    """Check one ``[relations.NAME]`` against what its law declares."""
+    where = f"relations.{name}"
+    if not name.isidentifier():
+        faults.append(
+            Fault(where, "the name becomes a file name and a column: letters, digits, _ only")
+        )
+        return None
+    if not isinstance(raw, dict) or "law" not in raw:
+        faults.append(Fault(f"{where}.law", "the key is missing", f"known: {', '.join(LAWS.keys())}"))
+        return None
+    if raw["law"] not in LAWS:
+        faults.append(Fault(f"{where}.law", LAWS.unknown(str(raw["law"]))))
+        return None
+    law = LAWS.get(raw["law"])
+    known = {parameter.name: parameter for parameter in law.parameters}
+    before = len(faults)
+    for key, value in raw.items():
+        if key == "law":
+            continue
+        if key not in known:
+            faults.append(
+                Fault(f"{where}.{key}", f'"{law.key}" has no parameter "{key}"', nearest(key, known))
+            )
+            continue
+        low, high = known[key].low, known[key].high
+        is_number = isinstance(value, (int, float)) and not isinstance(value, bool)
+        if not is_number or not math.isfinite(value) or not low <= value <= high:
+            faults.append(
+                Fault(f"{where}.{key}", f"{value!r} is not a number between {low:g} and {high:g}")
+            )
+    for key, parameter in known.items():
+        if key not in raw and parameter.default is None:
+            faults.append(
+                Fault(f"{where}.{key}", f"the key is missing: {parameter.meaning}", f"type {key} = ...")
+            )
+    if len(faults) > before:
+        return None
+    given = {key: float(value) for key, value in raw.items() if key != "law"}
+    defaults = tuple(key for key in known if key not in given)
+    return RelationTable(law=law.key, parameters=law.filled(given), defaults=defaults)

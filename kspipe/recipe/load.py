@@ -1,0 +1,245 @@
+"""From TOML text to a `Recipe`, or to every fault at once."""
+
+from __future__ import annotations
+
+import tomllib
+from pathlib import Path
+from typing import Any, Final, TypeVar
+
+from pydantic import BaseModel, ValidationError
+
+from kspipe.core.errors import Fault, RecipeError, nearest
+from kspipe.recipe.checks import check_relation, check_together
+from kspipe.recipe.models import (
+    ComparisonTable,
+    ForegroundTable,
+    GalaxyTable,
+    GasTable,
+    GridTable,
+    MapTable,
+    MetallicityTable,
+    NoiseFile,
+    NoiseTyped,
+    Recipe,
+    RelationTable,
+    StarFormationTable,
+)
+
+__all__ = ["load_recipe", "parse_recipe"]
+
+M = TypeVar("M", bound=BaseModel)
+
+_TABLES: Final[dict[str, type[BaseModel]]] = {
+    "galaxy": GalaxyTable,
+    "grid": GridTable,
+    "metallicity": MetallicityTable,
+    "foreground": ForegroundTable,
+    "star_formation": StarFormationTable,
+    "comparison": ComparisonTable,
+}
+_OPTIONAL: Final = ("relations", "comparison")
+_TOP: Final = ("seed", "maps", "gas", "relations", *_TABLES)
+
+
+def load_recipe(path: str | Path) -> Recipe:
+    """Read and check a recipe.
+
+    Parameters
+    ----------
+    path : str or Path
+        A TOML file; relative paths in it are relative to its folder.
+
+    Returns
+    -------
+    Recipe
+
+    Raises
+    ------
+    RecipeError
+        With every fault found, each with its full key. No map was opened.
+    """
+    path = Path(path)
+    try:
+        raw = tomllib.loads(path.read_text(encoding="utf-8"))
+    except FileNotFoundError:
+        raise RecipeError(Fault(str(path), "the recipe does not exist")) from None
+    except (OSError, UnicodeDecodeError) as error:
+        raise RecipeError(Fault(str(path), f"the recipe cannot be read ({error})")) from None
+    except tomllib.TOMLDecodeError as error:
+        raise RecipeError(Fault(str(path), f"not valid TOML: {error}")) from None
+    return parse_recipe(raw, folder=path.resolve().parent, path=path.resolve())
+
+
+def parse_recipe(
+    raw: dict[str, Any],
+    *,
+    folder: Path | None = None,
+    path: Path | None = None,
+    in_memory: frozenset[str] = frozenset(),
+) -> Recipe:
+    """Check a recipe given as nested dictionaries.
+
+    Parameters
+    ----------
+    raw : dict
+        As TOML gives it.
+    folder : Path, optional
+        Relative paths are relative to it; the current folder by default.
+    path : Path, optional
+        Remembered in the recipe.
+    in_memory : set of str
+        Maps whose files need not exist, because they are handed over in memory.
+
+    Raises
+    ------
+    RecipeError
+        With every fault found.
+    """
+    folder = folder or Path.cwd()
+    faults: list[Fault] = [
+        Fault(key, f'"{key}" is not a key of a recipe', nearest(key, _TOP))
+        for key in raw
+        if key not in _TOP
+    ]
+    tables: dict[str, Any] = {
+        name: _table(model, raw.get(name), name, faults)
+        for name, model in _TABLES.items()
+        if name in raw or name not in _OPTIONAL
+    }
+    tables["seed"] = _seed(raw, faults)
+    tables["gas"] = _gas(raw, faults)
+    tables["maps"] = _maps(raw, folder, in_memory, faults)
+    tables["relations"] = _relations(raw, faults)
+    if isinstance(tables["metallicity"], MetallicityTable) and tables["metallicity"].map:
+        located = _locate(tables["metallicity"].map, folder, "metallicity.map", faults)
+        tables["metallicity"] = tables["metallicity"].model_copy(update={"map": located})
+    faults += check_together(tables)
+    if faults:
+        raise RecipeError(*faults)
+    return Recipe(path=path, **tables)
+
+
+def _fields(model: type[BaseModel]) -> list[str]:
+    return [field.alias or name for name, field in model.model_fields.items()]
+
+
+def _table(model: type[M], raw: object, where: str, faults: list[Fault]) -> M | None:
+    """Check one table; its faults are appended and None comes back if there is any."""
+    if raw is None:
+        needed = [
+            field.alias or name
+            for name, field in model.model_fields.items()
+            if field.is_required()
+        ]
+        faults.append(Fault(where, "the table is missing", f"type [{where}] with {needed}"))
+        return None
+    if not isinstance(raw, dict):
+        faults.append(Fault(where, f"{raw!r} is not a table", f"type [{where}]"))
+        return None
+    try:
+        return model.model_validate(raw)
+    except ValidationError as error:
+        faults += [_fault(model, where, dict(detail)) for detail in error.errors()]
+        return None
+
+
+def _fault(model: type[BaseModel], where: str, detail: dict[str, Any]) -> Fault:
+    """Turn one of pydantic's details into a fault with its full key."""
+    steps = [str(step) for step in detail["loc"]]
+    # Steps that name the branch of a union are no keys of the recipe.
+    branches = {"NoiseFile", "NoiseTyped", "str"}
+    key = ".".join([where, *(step for step in steps if step not in branches)])
+    kind, message = detail["type"], str(detail["msg"])
+    if kind == "extra_forbidden":
+        return Fault(key, f'"{steps[-1]}" is not a key of [{where}]', nearest(steps[-1], _fields(model)))
+    if kind == "missing":
+        return Fault(key, "the key is missing", f"type {steps[-1]} = ... in [{where}]")
+    message = message.removeprefix("Value error, ")
+    seen = detail.get("input")
+    if kind != "value_error" and isinstance(seen, (str, int, float)):
+        message = f"{seen!r}: {message}"
+    return Fault(key, message)
+
+
+def _seed(raw: dict[str, Any], faults: list[Fault]) -> int | None:
+    seed = raw.get("seed")
+    if isinstance(seed, int) and not isinstance(seed, bool) and seed >= 0:
+        return seed
+    seen = "the key is missing" if seed is None else f"{seed!r} is not a whole number from 0 up"
+    faults.append(Fault("seed", seen, "type seed = 1 at the top"))
+    return None
+
+
+def _gas(raw: dict[str, Any], faults: list[Fault]) -> GasTable | str | None:
+    gas = raw.get("gas")
+    if gas == "atomic only":
+        return "atomic only"
+    if gas is None or isinstance(gas, str):
+        seen = "is missing" if gas is None else f"is {gas!r}"
+        faults.append(
+            Fault(
+                "gas",
+                f"the gas {seen}",
+                'type a table [gas] with alpha_co, or gas = "atomic only" where there is no CO map',
+            )
+        )
+        return None
+    return _table(GasTable, gas, "gas", faults)
+
+
+def _maps(
+    raw: dict[str, Any], folder: Path, in_memory: frozenset[str], faults: list[Fault]
+) -> dict[str, MapTable | None]:
+    maps = raw.get("maps")
+    if not isinstance(maps, dict) or not maps:
+        faults.append(Fault("maps", "no map is listed", "type [maps.hi] with tracer, file, noise"))
+        return {}
+    found: dict[str, MapTable | None] = {}
+    for name, table in maps.items():
+        where = f"maps.{name}"
+        if not name.isidentifier():
+            faults.append(
+                Fault(where, "the name becomes a file name and a column: letters, digits, _ only")
+            )
+        found[name] = _map(table, where, faults)
+        model = found[name]
+        if model is None or name in in_memory:
+            continue
+        changes: dict[str, Any] = {"file": _locate(model.file, folder, f"{where}.file", faults)}
+        if isinstance(model.noise, NoiseFile):
+            located = _locate(model.noise.file, folder, f"{where}.noise.file", faults)
+            changes["noise"] = model.noise.model_copy(update={"file": located})
+        found[name] = model.model_copy(update=changes)
+    return found
+
+
+def _map(table: object, where: str, faults: list[Fault]) -> MapTable | None:
+    """Check a map's table; its noise first, so that a union of forms gives one message."""
+    if isinstance(table, dict) and isinstance(table.get("noise"), dict):
+        noise = table["noise"]
+        form = NoiseFile if "file" in noise else NoiseTyped
+        checked = _table(form, noise, f"{where}.noise", faults)
+        table = {**table, "noise": checked if checked is not None else "measure"}
+        model = _table(MapTable, table, where, faults)
+        return model if checked is not None else None
+    return _table(MapTable, table, where, faults)
+
+
+def _locate(file: Path, folder: Path, where: str, faults: list[Fault]) -> Path:
+    located = (folder / file.expanduser()).resolve()
+    if not located.is_file():
+        faults.append(
+            Fault(where, f"{located} does not exist", "relative paths count from the recipe's folder")
+        )
+    return located
+
+
+def _relations(raw: dict[str, Any], faults: list[Fault]) -> dict[str, RelationTable]:
+    relations = raw.get("relations", {})
+    if not isinstance(relations, dict):
+        faults.append(Fault("relations", f"{relations!r} is not a table", "type [relations.NAME]"))
+        return {}
+    checked = {name: check_relation(name, table, faults) for name, table in relations.items()}
+    return {name: table for name, table in checked.items() if table is not None}
+
+

@@ -1,0 +1,377 @@
+"""What a recipe may hold: one frozen model for each table.
+
+Models check single values; what ties values together is checked in `checks`.
+"""
+
+from __future__ import annotations
+
+import math
+from pathlib import Path
+from typing import Annotated, Any, Literal
+
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, model_validator
+
+from kspipe.conversions import ALPHA_CO, EXTINCTION, STAR_FORMATION
+from kspipe.core.registry import Registry
+from kspipe.core.tracers import TRACERS
+from kspipe.core.errors import nearest
+from kspipe.maps import MapRequest, NoiseRequest
+from kspipe.recipe.quantity import Measured, parse_centre, parse_measured, parse_percent
+
+__all__ = [
+    "ComparisonTable",
+    "ForegroundTable",
+    "GalaxyTable",
+    "GasTable",
+    "GridTable",
+    "MapTable",
+    "MetallicityTable",
+    "NoiseFile",
+    "Recipe",
+    "RelationTable",
+    "StarFormationTable",
+]
+
+
+def _measured(unit: str, example: str) -> Any:
+    return BeforeValidator(lambda typed: parse_measured(typed, unit, example))
+
+
+def _positive(quantity: Measured) -> Measured:
+    if quantity.value <= 0:
+        raise ValueError(f"{quantity.text!r} is not positive")
+    return quantity
+
+
+def _key_of(registry: Registry[Any]) -> Any:
+    def check(typed: Any) -> str:
+        if not isinstance(typed, str) or typed not in registry:
+            raise ValueError(registry.unknown(str(typed)))
+        return typed
+
+    return BeforeValidator(check)
+
+
+def _tracer(typed: Any) -> str:
+    if typed not in TRACERS:
+        raise ValueError(f'tracer "{typed}" is not known; {nearest(str(typed), TRACERS)}')
+    return str(typed)
+
+
+class Table(BaseModel):
+    """A table of the recipe: frozen, no unknown keys."""
+
+    model_config = ConfigDict(frozen=True, extra="forbid", arbitrary_types_allowed=True)
+
+
+Distance = Annotated[Measured, _measured("Mpc", '"8.3 +- 0.4 Mpc"')]
+Angle = Annotated[Measured, _measured("deg", '"41 +- 3 deg"')]
+Speed = Annotated[Measured, _measured("km/s", '"640 km/s"')]
+Plain = Annotated[Measured, _measured("", '0.65 or "0.65 +- 0.08"')]
+Percent = Annotated[float, BeforeValidator(parse_percent)]
+Arcsec = Annotated[Measured, _measured("arcsec", '"4.1 arcmin"')]
+
+
+class GalaxyTable(Table):
+    """Where the galaxy is and how it is tilted."""
+
+    name: str = Field(min_length=1)
+    centre: Annotated[tuple[float, float], BeforeValidator(parse_centre)]
+    distance: Distance
+    inclination: Angle
+    position_angle: Angle
+    r25: Arcsec | None = None
+    velocity: Speed | None = None
+    velocity_convention: Literal["optical", "radio"] = "optical"
+
+    @model_validator(mode="after")
+    def _plausible(self) -> GalaxyTable:
+        if self.distance.value <= 0:
+            raise ValueError(f"distance {self.distance.text!r} is not positive")
+        if not 0 <= self.inclination.value < 90:
+            raise ValueError(
+                f"inclination {self.inclination.text!r} is not between 0 (face-on) and 90 deg"
+            )
+        return self
+
+    @property
+    def cos_i(self) -> float:
+        """Cosine of the inclination."""
+        return math.cos(math.radians(self.inclination.value))
+
+    @property
+    def pc_per_arcsec(self) -> float:
+        """Length on the sky for one arcsecond."""
+        return self.distance.value * 1e6 * math.pi / 648000.0
+
+
+def _beam_target(typed: Any) -> str:
+    if typed == "common":
+        return "common"
+    for unit in ("arcsec", "pc"):
+        try:
+            if parse_measured(typed, unit, "").value > 0:
+                return str(typed)
+        except ValueError:
+            continue
+    raise ValueError(f'{typed!r} is not a beam; expected "15 arcsec", "600 pc" or "common"')
+
+
+class GridTable(Table):
+    """The common beam and grid."""
+
+    beam: Annotated[str, BeforeValidator(_beam_target)]
+    pixels_per_beam: float = Field(default=3.0, ge=2.0, le=20.0)
+    size: Arcsec | None = None
+    minimum_coverage: float = Field(default=0.5, gt=0.0, le=1.0)
+
+    def fwhm_arcsec(self, pc_per_arcsec: float) -> float | None:
+        """Width of the target beam; None for the smallest common one."""
+        if self.beam == "common":
+            return None
+        try:
+            return parse_measured(self.beam, "arcsec", "").value
+        except ValueError:
+            return parse_measured(self.beam, "pc", "").value / pc_per_arcsec
+
+
+class NoiseFile(Table):
+    """Noise that lies in a file of its own."""
+
+    file: Path
+    is_: Literal["sigma", "variance", "inverse variance"] = Field(alias="is")
+    hdu: int | None = None
+    correlated: Literal["beam", "none"] | None = None
+
+
+class NoiseTyped(Table):
+    """Noise measured or stated, with its correlation."""
+
+    level: str
+    correlated: Literal["beam", "none"]
+
+
+def _beam_typed(typed: Any) -> tuple[float, float, float]:
+    """Read ``15 arcsec`` or ``13.4 x 10.6 arcsec, pa 35 deg``."""
+    example = '"4.6 arcsec" or "13.4 x 10.6 arcsec, pa 35 deg"'
+    if not isinstance(typed, str):
+        raise ValueError(f"{typed!r} is not a beam; expected, for example, {example}")
+    widths, comma, angle = typed.partition(",")
+    major, cross, minor = widths.partition(" x ")
+    try:
+        if not cross:
+            width = parse_measured(widths, "arcsec", example).value
+            beam = (width, width, 0.0)
+        else:
+            pa = parse_measured(angle.strip().removeprefix("pa"), "deg", example).value
+            unit = minor.strip().split(" ", 1)[1]
+            beam = (
+                parse_measured(f"{major} {unit}", "arcsec", example).value,
+                parse_measured(minor, "arcsec", example).value,
+                pa % 180.0,
+            )
+    except (ValueError, IndexError):
+        raise ValueError(f"{typed!r} is not a beam; expected, for example, {example}") from None
+    if (comma and not cross) or beam[1] <= 0 or beam[0] < beam[1]:
+        raise ValueError(f"{typed!r} is not a beam; expected, for example, {example}")
+    return beam
+
+
+class MapTable(Table):
+    """One map: what it is, where it lies, and what its header does not say."""
+
+    tracer: Annotated[str, BeforeValidator(_tracer)]
+    file: Path
+    noise: NoiseFile | NoiseTyped | str
+    hdu: int | None = None
+    unit: str | None = None
+    beam: Annotated[tuple[float, float, float] | None, BeforeValidator(_beam_typed)] = None
+    averages_pixels: bool | None = None
+    calibration_error: Percent = 0.0
+    pedestal_error: str | None = None
+    zeros: Literal["flux", "blank"] | None = None
+    nii_ratio: Plain | None = None
+    as_24um: Plain | None = None
+
+    @model_validator(mode="after")
+    def _noise_readable(self) -> MapTable:
+        level = self.noise.level if isinstance(self.noise, NoiseTyped) else self.noise
+        if isinstance(level, str) and level != "measure":
+            noise_value(level)
+        if self.pedestal_error is not None:
+            noise_value(self.pedestal_error)
+        return self
+
+    def request(self, name: str) -> MapRequest:
+        """Plain values for the room that reads maps."""
+        is_radio = TRACERS[self.tracer].is_radio
+        usual: Literal["beam", "none"] = "beam" if is_radio else "none"
+        averages = (not is_radio) if self.averages_pixels is None else self.averages_pixels
+        return MapRequest(
+            name=name,
+            tracer=self.tracer,
+            file=self.file,
+            noise=self._noise(usual),
+            hdu=self.hdu,
+            unit=self.unit,
+            beam=self.beam,
+            averages_pixels=averages,
+            calibration_error=self.calibration_error,
+            pedestal_error=self.pedestal_error and noise_value(self.pedestal_error),
+            zeros=self.zeros,
+        )
+
+    def _noise(self, usual: Literal["beam", "none"]) -> NoiseRequest:
+        if isinstance(self.noise, NoiseFile):
+            return NoiseRequest(
+                "file",
+                file=self.noise.file,
+                hdu=self.noise.hdu,
+                stated=self.noise.is_,
+                correlated=self.noise.correlated or usual,
+            )
+        level = self.noise.level if isinstance(self.noise, NoiseTyped) else self.noise
+        correlated = self.noise.correlated if isinstance(self.noise, NoiseTyped) else usual
+        if level == "measure":
+            return NoiseRequest("measure", correlated=correlated)
+        value, unit = noise_value(level)
+        return NoiseRequest("value", value=value, unit=unit, correlated=correlated)
+
+
+def noise_value(typed: str) -> tuple[float, str]:
+    """Split ``0.0012 MJy/sr`` into number and unit.
+
+    Raises
+    ------
+    ValueError
+        If there is no positive number, or no unit.
+    """
+    number, _, unit = typed.strip().partition(" ")
+    try:
+        value = float(number)
+    except ValueError:
+        value = math.nan
+    if not value > 0 or not unit.strip():
+        raise ValueError(
+            f'{typed!r} is not a noise; expected "measure", a number with its unit such as '
+            '"0.0012 MJy/sr", or {file = "...", is = "sigma"}'
+        )
+    return value, unit.strip()
+
+
+class MetallicityTable(Table):
+    """12 + log10(O/H) over the disc: a centre and a gradient, or a map."""
+
+    oh: Plain | None = None
+    gradient: str | None = None
+    map: Path | None = None
+    scale: str = "not stated"
+
+    @property
+    def slope(self) -> tuple[float, str]:
+        """Gradient and what it counts per: ``kpc`` or ``r25``; zero where none is given."""
+        if self.gradient is None:
+            return 0.0, "kpc"
+        text, _, per = self.gradient.partition("dex/")
+        try:
+            value = float(text)
+        except ValueError:
+            value = math.nan
+        if not math.isfinite(value) or per.strip() not in ("kpc", "r25"):
+            raise ValueError(
+                f'{self.gradient!r} is not a gradient; expected "-0.045 dex/kpc" or '
+                '"-0.3 dex/r25"'
+            )
+        return value, per.strip()
+
+    @model_validator(mode="after")
+    def _one_way(self) -> MetallicityTable:
+        _ = self.slope
+        if (self.map is None) == (self.oh is None):
+            raise ValueError(
+                'give either oh = 8.69 (with gradient = "... dex/kpc") or map = "file.fits"'
+            )
+        if self.map is not None and self.gradient is not None:
+            raise ValueError("a gradient and a map exclude each other")
+        if self.oh is not None and not 6.5 <= self.oh.value <= 9.5:
+            raise ValueError(f"oh = {self.oh.text}: expected 12+log10(O/H) between 6.5 and 9.5")
+        return self
+
+
+class ForegroundTable(Table):
+    """Extinction by the Milky Way; the colour excess must be typed, zero if it was removed."""
+
+    ebv: Plain
+    uv: Annotated[str, _key_of(EXTINCTION)] = "bianchi2017"
+    halpha: Annotated[str, _key_of(EXTINCTION)] = "cardelli1989"
+
+    @model_validator(mode="after")
+    def _plausible(self) -> ForegroundTable:
+        if not 0 <= self.ebv.value < 3:
+            raise ValueError(f"ebv = {self.ebv.text}: expected E(B-V) between 0 and 3 mag")
+        return self
+
+
+class GasTable(Table):
+    """From lines to atomic and molecular gas."""
+
+    alpha_co: Annotated[str, _key_of(ALPHA_CO)]
+    line_ratio: Plain | None = None
+
+    @model_validator(mode="after")
+    def _plausible(self) -> GasTable:
+        if self.line_ratio is not None and not 0 < self.line_ratio.value < 3:
+            raise ValueError(f"line_ratio = {self.line_ratio.text}: expected between 0 and 3")
+        return self
+
+
+class StarFormationTable(Table):
+    """Which calibration, on which maps."""
+
+    calibration: Annotated[str, _key_of(STAR_FORMATION)]
+    maps: tuple[str, ...]
+
+
+class RelationTable(Table):
+    """One law with its parameters, under a name of the user's."""
+
+    law: str
+    parameters: dict[str, float] = Field(default_factory=dict)
+    defaults: tuple[str, ...] = ()
+
+
+class ComparisonTable(Table):
+    """How the comparison is made."""
+
+    low_snr: float = Field(default=3.0, ge=0.0)
+
+
+class Recipe(Table):
+    """A whole recipe, checked.
+
+    Attributes
+    ----------
+    path : Path or None
+        Where it was read from.
+    """
+
+    path: Path | None = None
+    seed: int = Field(ge=0)
+    galaxy: GalaxyTable
+    grid: GridTable
+    maps: dict[str, MapTable]
+    metallicity: MetallicityTable
+    foreground: ForegroundTable
+    gas: GasTable | Literal["atomic only"]
+    star_formation: StarFormationTable
+    relations: dict[str, RelationTable] = Field(default_factory=dict)
+    comparison: ComparisonTable = ComparisonTable()
+
+    def map_of(self, *tracers: str) -> str | None:
+        """Name of the first map of one of these tracers."""
+        return next((name for name, table in self.maps.items() if table.tracer in tracers), None)
+
+    @property
+    def has_molecular(self) -> bool:
+        """Whether the recipe asks for molecular gas."""
+        return isinstance(self.gas, GasTable)
