@@ -6,6 +6,7 @@ from kspipe.conversions.convert import Choices, Converted, Parameters, convert
 from kspipe.conversions.extinction import EXTINCTION, Extinction
 from kspipe.conversions.metallicity import oh_from_gradient, z_prime
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
+from kspipe.conversions.surface import Surface, make_surface
 
 __all__ = [
     "ALPHA_CO",
@@ -19,7 +20,9 @@ __all__ = [
     "Extinction",
     "Parameters",
     "StarFormation",
+    "Surface",
     "convert",
+    "make_surface",
     "oh_from_gradient",
     "z_prime",
 ]

@@ -100,9 +100,7 @@ class Converted:
     derivatives: dict[str, dict[str, Array]]
 
 
-def convert(
-    intensity: Mapping[str, Array], choices: Choices, parameters: Parameters
-) -> Converted:
+def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parameters) -> Converted:
     """Turn intensities into face-on surface densities.
 
     Parameters

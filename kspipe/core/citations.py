@@ -37,14 +37,18 @@ def _citations(*entries: Citation) -> dict[str, Citation]:
 
 
 CITATIONS = _citations(
-    Citation(
-        "asplund2009", "Asplund et al. 2009", "ARA&A 47, 481", "2009ARA&A..47..481A"
-    ),
+    Citation("asplund2009", "Asplund et al. 2009", "ARA&A 47, 481", "2009ARA&A..47..481A"),
     Citation("bianchi2017", "Bianchi et al. 2017", "ApJS 230, 24", "2017ApJS..230...24B"),
-    Citation("bolatto2013", "Bolatto, Wolfire & Leroy 2013", "ARA&A 51, 207", "2013ARA&A..51..207B"),
+    Citation(
+        "bolatto2013", "Bolatto, Wolfire & Leroy 2013", "ARA&A 51, 207", "2013ARA&A..51..207B"
+    ),
     Citation("calzetti2007", "Calzetti et al. 2007", "ApJ 666, 870", "2007ApJ...666..870C"),
-    Citation("cardelli1989", "Cardelli, Clayton & Mathis 1989", "ApJ 345, 245", "1989ApJ...345..245C"),
-    Citation("krumholz2009", "Krumholz, McKee & Tumlinson 2009", "ApJ 699, 850", "2009ApJ...699..850K"),
+    Citation(
+        "cardelli1989", "Cardelli, Clayton & Mathis 1989", "ApJ 345, 245", "1989ApJ...345..245C"
+    ),
+    Citation(
+        "krumholz2009", "Krumholz, McKee & Tumlinson 2009", "ApJ 699, 850", "2009ApJ...699..850K"
+    ),
     Citation(
         "krumholz2009_fraction",
         "Krumholz, McKee & Tumlinson 2009",

@@ -38,9 +38,7 @@ def _transfer(shape: tuple[int, int], covariance_pix2: Array) -> Array:
     ky = np.fft.fftfreq(shape[0])[:, None]
     kx = np.fft.rfftfreq(shape[1])[None, :]
     (cxx, cxy), (_, cyy) = covariance_pix2
-    return np.asarray(
-        np.exp(-2.0 * math.pi**2 * (cxx * kx**2 + 2.0 * cxy * kx * ky + cyy * ky**2))
-    )
+    return np.asarray(np.exp(-2.0 * math.pi**2 * (cxx * kx**2 + 2.0 * cxy * kx * ky + cyy * ky**2)))
 
 
 def gaussian_smooth(

@@ -16,7 +16,9 @@ Array = NDArray[np.float64]
 MAD_TO_SIGMA: Final = 1.4826022185056018
 
 
-def clipped_scatter(values: Array, *, n_sigma: float = 4.0, n_iterations: int = 20) -> tuple[float, float]:
+def clipped_scatter(
+    values: Array, *, n_sigma: float = 4.0, n_iterations: int = 20
+) -> tuple[float, float]:
     """Mean and standard deviation of the bulk of a sample, blind to emission and stars.
 
     Parameters

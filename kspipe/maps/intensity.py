@@ -83,7 +83,9 @@ def examples(tracer: Tracer) -> str:
     return _EXAMPLES[tracer.unit] + extra
 
 
-def read_stored_unit(bunit: object, override: str | None, tracer: Tracer, where: str) -> UnitReading:
+def read_stored_unit(
+    bunit: object, override: str | None, tracer: Tracer, where: str
+) -> UnitReading:
     """Read the unit of a map from the recipe or else from its header.
 
     Raises
@@ -139,10 +141,10 @@ def open_door(
     if u.beam in unit.bases:
         if beam_area_arcsec2 is None:
             raise UnitError(Fault(where, f"the unit {reading.text!r} needs a beam"))
-        unit = unit * u.beam / (beam_area_arcsec2 * ARCSEC2_SR * u.sr)
+        unit = u.Unit(unit * u.beam / (beam_area_arcsec2 * ARCSEC2_SR * u.sr))
         notes.append(f"beam of {beam_area_arcsec2:.6g} arcsec2")
     if per_pixel:
-        unit = unit * u.pix / (pixel_area_arcsec2 * ARCSEC2_SR * u.sr)
+        unit = u.Unit(unit * u.pix / (pixel_area_arcsec2 * ARCSEC2_SR * u.sr))
         notes.append(f"pixel of {pixel_area_arcsec2:.6g} arcsec2")
     factor = _factor(unit, tracer, frequency_ghz, notes)
     if factor is None:

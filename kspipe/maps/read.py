@@ -121,7 +121,9 @@ def _stated_sigma(source: MapSource, value: Array, where: str) -> tuple[Array, s
     stored = source.noise_image.read()
     seen = stored[np.isfinite(value) & np.isfinite(stored)]
     if not seen.size:
-        raise MapError(Fault(f"{where}, noise", f"{source.noise_image} is blank where the map is not"))
+        raise MapError(
+            Fault(f"{where}, noise", f"{source.noise_image} is blank where the map is not")
+        )
     if seen.min() <= 0:
         raise MapError(
             Fault(

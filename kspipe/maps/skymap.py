@@ -9,6 +9,8 @@ import numpy as np
 from astropy.wcs import WCS
 from numpy.typing import NDArray
 
+from kspipe.kernels.noise import NoiseTerm, total_error
+
 __all__ = ["CommonError", "Flag", "NoiseTerm", "SkyMap"]
 
 Array = NDArray[np.float64]
@@ -29,26 +31,6 @@ class Flag(IntFlag):
     def meanings(cls) -> dict[str, int]:
         """Return the names, in lower case, with their values."""
         return {flag.name.lower(): flag.value for flag in cls if flag.name}
-
-
-@dataclass(frozen=True)
-class NoiseTerm:
-    """One random error of a map.
-
-    Attributes
-    ----------
-    source : str
-        Where the noise comes from; terms of one source are the same noise.
-    sigma : (ny, nx) float64 array
-        Signed 1-sigma error in the map's unit.
-    correlation_arcsec2 : (2, 2) float64 array
-        Covariance (east, north) of the Gaussian that white noise was smoothed with; zeros for
-        noise that is independent from pixel to pixel.
-    """
-
-    source: str
-    sigma: Array
-    correlation_arcsec2: Array
 
 
 @dataclass(frozen=True)
@@ -115,7 +97,7 @@ class SkyMap:
     @property
     def error(self) -> Array:
         """Random 1-sigma error: the root sum of squares of the terms."""
-        return np.sqrt(sum((term.sigma**2 for term in self.noise), np.zeros(self.value.shape)))
+        return total_error(self.noise)
 
     def with_step(self, step: str, **changes: object) -> SkyMap:
         """Return a changed copy with one more line of history."""

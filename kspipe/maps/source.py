@@ -315,9 +315,10 @@ class MapSource:
         pedestal = 0.0
         if request.pedestal_error is not None:
             level, text = request.pedestal_error
-            pedestal = level * through(
-                read_stored_unit(None, text, tracer, f"{where}.pedestal_error")
-            ).factor
+            pedestal = (
+                level
+                * through(read_stored_unit(None, text, tracer, f"{where}.pedestal_error")).factor
+            )
         to_icrs = jacobian @ np.linalg.inv(own)
         return cls(
             request=request,
@@ -404,6 +405,11 @@ def _noise(
             )
         )
     bunit = found.header.get("BUNIT")
-    if noise.stated == "sigma" and request.unit is None and isinstance(bunit, str) and bunit.strip():
+    if (
+        noise.stated == "sigma"
+        and request.unit is None
+        and isinstance(bunit, str)
+        and bunit.strip()
+    ):
         return found, through(read_stored_unit(bunit, None, tracer, f"{where}, {found}")).factor
     return found, door.factor

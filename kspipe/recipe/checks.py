@@ -136,10 +136,6 @@ def _map_extras(maps: Mapping[str, MapTable]) -> list[Fault]:
                 faults.append(
                     Fault(f"maps.{name}.{key}", f"belongs to a map of {owner}, not {table.tracer}")
                 )
-            elif not 0 <= value.value < 10 or (key == "as_24um" and value.value == 0):
-                faults.append(
-                    Fault(f"maps.{name}.{key}", f"{value.text} is not a plausible ratio (0 to 10)")
-                )
     return faults
 
 
@@ -191,7 +187,9 @@ def check_relation(name: str, raw: object, faults: list[Fault]) -> RelationTable
         )
         return None
     if not isinstance(raw, dict) or "law" not in raw:
-        faults.append(Fault(f"{where}.law", "the key is missing", f"known: {', '.join(LAWS.keys())}"))
+        faults.append(
+            Fault(f"{where}.law", "the key is missing", f"known: {', '.join(LAWS.keys())}")
+        )
         return None
     if raw["law"] not in LAWS:
         faults.append(Fault(f"{where}.law", LAWS.unknown(str(raw["law"]))))
@@ -204,7 +202,9 @@ def check_relation(name: str, raw: object, faults: list[Fault]) -> RelationTable
             continue
         if key not in known:
             faults.append(
-                Fault(f"{where}.{key}", f'"{law.key}" has no parameter "{key}"', nearest(key, known))
+                Fault(
+                    f"{where}.{key}", f'"{law.key}" has no parameter "{key}"', nearest(key, known)
+                )
             )
             continue
         low, high = known[key].low, known[key].high
@@ -216,7 +216,11 @@ def check_relation(name: str, raw: object, faults: list[Fault]) -> RelationTable
     for key, parameter in known.items():
         if key not in raw and parameter.default is None:
             faults.append(
-                Fault(f"{where}.{key}", f"the key is missing: {parameter.meaning}", f"type {key} = ...")
+                Fault(
+                    f"{where}.{key}",
+                    f"the key is missing: {parameter.meaning}",
+                    f"type {key} = ...",
+                )
             )
     if len(faults) > before:
         return None

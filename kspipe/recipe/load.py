@@ -127,9 +127,7 @@ def _table(model: type[M], raw: object, where: str, faults: list[Fault]) -> M | 
     """Check one table; its faults are appended and None comes back if there is any."""
     if raw is None:
         needed = [
-            field.alias or name
-            for name, field in model.model_fields.items()
-            if field.is_required()
+            field.alias or name for name, field in model.model_fields.items() if field.is_required()
         ]
         faults.append(Fault(where, "the table is missing", f"type [{where}] with {needed}"))
         return None
@@ -146,12 +144,12 @@ def _table(model: type[M], raw: object, where: str, faults: list[Fault]) -> M | 
 def _fault(model: type[BaseModel], where: str, detail: dict[str, Any]) -> Fault:
     """Turn one of pydantic's details into a fault with its full key."""
     steps = [str(step) for step in detail["loc"]]
-    # Steps that name the branch of a union are no keys of the recipe.
-    branches = {"NoiseFile", "NoiseTyped", "str"}
-    key = ".".join([where, *(step for step in steps if step not in branches)])
+    key = ".".join([where, *steps])
     kind, message = detail["type"], str(detail["msg"])
     if kind == "extra_forbidden":
-        return Fault(key, f'"{steps[-1]}" is not a key of [{where}]', nearest(steps[-1], _fields(model)))
+        return Fault(
+            key, f'"{steps[-1]}" is not a key of [{where}]', nearest(steps[-1], _fields(model))
+        )
     if kind == "missing":
         return Fault(key, "the key is missing", f"type {steps[-1]} = ... in [{where}]")
     message = message.removeprefix("Value error, ")
@@ -229,7 +227,9 @@ def _locate(file: Path, folder: Path, where: str, faults: list[Fault]) -> Path:
     located = (folder / file.expanduser()).resolve()
     if not located.is_file():
         faults.append(
-            Fault(where, f"{located} does not exist", "relative paths count from the recipe's folder")
+            Fault(
+                where, f"{located} does not exist", "relative paths count from the recipe's folder"
+            )
         )
     return located
 
@@ -241,5 +241,3 @@ def _relations(raw: dict[str, Any], faults: list[Fault]) -> dict[str, RelationTa
         return {}
     checked = {name: check_relation(name, table, faults) for name, table in relations.items()}
     return {name: table for name, table in checked.items() if table is not None}
-
-

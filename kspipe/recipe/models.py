@@ -9,14 +9,14 @@ import math
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, model_validator
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, PlainValidator, model_validator
 
 from kspipe.conversions import ALPHA_CO, EXTINCTION, STAR_FORMATION
 from kspipe.core.registry import Registry
 from kspipe.core.tracers import TRACERS
 from kspipe.core.errors import nearest
 from kspipe.maps import MapRequest, NoiseRequest
-from kspipe.recipe.quantity import Measured, parse_centre, parse_measured, parse_percent
+from kspipe.recipe.quantity import Measured, Position, parse_centre, parse_measured, parse_percent
 
 __all__ = [
     "ComparisonTable",
@@ -37,10 +37,22 @@ def _measured(unit: str, example: str) -> Any:
     return BeforeValidator(lambda typed: parse_measured(typed, unit, example))
 
 
-def _positive(quantity: Measured) -> Measured:
-    if quantity.value <= 0:
-        raise ValueError(f"{quantity.text!r} is not positive")
-    return quantity
+def _between(low: float, high: float, what: str) -> Any:
+    """Check that a value lies in the open interval, or on its lower end where that is zero."""
+
+    def check(quantity: Measured | None) -> Measured | None:
+        if quantity is None:
+            return None
+        above = (
+            quantity.value >= low
+            if low == 0 and ", or 0" in what or ", 0 or" in what
+            else quantity.value > low
+        )
+        if not (above and quantity.value < high):
+            raise ValueError(f"{quantity.text!r}: expected {what}")
+        return quantity
+
+    return AfterValidator(check)
 
 
 def _key_of(registry: Registry[Any]) -> Any:
@@ -64,35 +76,49 @@ class Table(BaseModel):
     model_config = ConfigDict(frozen=True, extra="forbid", arbitrary_types_allowed=True)
 
 
-Distance = Annotated[Measured, _measured("Mpc", '"8.3 +- 0.4 Mpc"')]
-Angle = Annotated[Measured, _measured("deg", '"41 +- 3 deg"')]
+Distance = Annotated[
+    Measured, _measured("Mpc", '"8.3 +- 0.4 Mpc"'), _between(0, math.inf, "a positive distance")
+]
+Inclination = Annotated[
+    Measured, _measured("deg", '"41 +- 3 deg"'), _between(0, 90, "0 (face-on), or 0 to 90 deg")
+]
+Angle = Annotated[Measured, _measured("deg", '"128 +- 2 deg"')]
+Abundance = Annotated[
+    Measured,
+    _measured("", '8.69 or "8.69 +- 0.05"'),
+    _between(6.5, 9.5, "12+log10(O/H) between 6.5 and 9.5"),
+]
+Reddening = Annotated[
+    Measured,
+    _measured("", '0.03 or "0.03 +- 0.005"'),
+    _between(0, 3, "E(B-V), 0 or between 0 and 3 mag"),
+]
+Ratio = Annotated[
+    Measured, _measured("", '0.65 or "0.65 +- 0.08"'), _between(0, 10, "a ratio between 0 and 10")
+]
+RatioOrZero = Annotated[
+    Measured, _measured("", '0.3 or "0.3 +- 0.1"'), _between(0, 10, "a ratio, 0 or 0 to 10")
+]
 Speed = Annotated[Measured, _measured("km/s", '"640 km/s"')]
-Plain = Annotated[Measured, _measured("", '0.65 or "0.65 +- 0.08"')]
-Percent = Annotated[float, BeforeValidator(parse_percent)]
-Arcsec = Annotated[Measured, _measured("arcsec", '"4.1 arcmin"')]
+Percent = Annotated[Measured, BeforeValidator(parse_percent)]
+Arcsec = Annotated[
+    Measured, _measured("arcsec", '"4.1 arcmin"'), _between(0, math.inf, "a positive angle")
+]
+
+NO_ERROR = Measured(0.0, 0.0, "0 %")
 
 
 class GalaxyTable(Table):
     """Where the galaxy is and how it is tilted."""
 
     name: str = Field(min_length=1)
-    centre: Annotated[tuple[float, float], BeforeValidator(parse_centre)]
+    centre: Annotated[Position, BeforeValidator(parse_centre)]
     distance: Distance
-    inclination: Angle
+    inclination: Inclination
     position_angle: Angle
     r25: Arcsec | None = None
     velocity: Speed | None = None
     velocity_convention: Literal["optical", "radio"] = "optical"
-
-    @model_validator(mode="after")
-    def _plausible(self) -> GalaxyTable:
-        if self.distance.value <= 0:
-            raise ValueError(f"distance {self.distance.text!r} is not positive")
-        if not 0 <= self.inclination.value < 90:
-            raise ValueError(
-                f"inclination {self.inclination.text!r} is not between 0 (face-on) and 90 deg"
-            )
-        return self
 
     @property
     def cos_i(self) -> float:
@@ -135,6 +161,43 @@ class GridTable(Table):
             return parse_measured(self.beam, "pc", "").value / pc_per_arcsec
 
 
+_NOISE_EXAMPLE = (
+    'expected "measure", a number with its unit such as "0.0012 MJy/sr", or '
+    '{file = "...", is = "sigma"}'
+)
+
+
+def noise_value(typed: str) -> tuple[float, str]:
+    """Split ``0.0012 MJy/sr`` into number and unit.
+
+    Raises
+    ------
+    ValueError
+        If there is no positive number, or no unit.
+    """
+    number, _, unit = typed.strip().partition(" ")
+    try:
+        value = float(number)
+    except ValueError:
+        value = math.nan
+    if not value > 0 or not unit.strip():
+        raise ValueError(f"{typed!r} is not a noise; {_NOISE_EXAMPLE}")
+    return value, unit.strip()
+
+
+def _level(typed: Any) -> Any:
+    if isinstance(typed, BaseModel):
+        return typed
+    if not isinstance(typed, str):
+        raise ValueError(f"{typed!r} is not a noise; {_NOISE_EXAMPLE}")
+    if typed != "measure":
+        noise_value(typed)
+    return typed
+
+
+Level = Annotated[str, BeforeValidator(_level)]
+
+
 class NoiseFile(Table):
     """Noise that lies in a file of its own."""
 
@@ -147,7 +210,7 @@ class NoiseFile(Table):
 class NoiseTyped(Table):
     """Noise measured or stated, with its correlation."""
 
-    level: str
+    level: Level
     correlated: Literal["beam", "none"]
 
 
@@ -182,25 +245,16 @@ class MapTable(Table):
 
     tracer: Annotated[str, BeforeValidator(_tracer)]
     file: Path
-    noise: NoiseFile | NoiseTyped | str
+    noise: Annotated[NoiseFile | NoiseTyped | str, PlainValidator(_level)]
     hdu: int | None = None
     unit: str | None = None
     beam: Annotated[tuple[float, float, float] | None, BeforeValidator(_beam_typed)] = None
     averages_pixels: bool | None = None
-    calibration_error: Percent = 0.0
-    pedestal_error: str | None = None
+    calibration_error: Percent = NO_ERROR
+    pedestal_error: Level | None = None
     zeros: Literal["flux", "blank"] | None = None
-    nii_ratio: Plain | None = None
-    as_24um: Plain | None = None
-
-    @model_validator(mode="after")
-    def _noise_readable(self) -> MapTable:
-        level = self.noise.level if isinstance(self.noise, NoiseTyped) else self.noise
-        if isinstance(level, str) and level != "measure":
-            noise_value(level)
-        if self.pedestal_error is not None:
-            noise_value(self.pedestal_error)
-        return self
+    nii_ratio: RatioOrZero | None = None
+    as_24um: Ratio | None = None
 
     def request(self, name: str) -> MapRequest:
         """Plain values for the room that reads maps."""
@@ -216,7 +270,7 @@ class MapTable(Table):
             unit=self.unit,
             beam=self.beam,
             averages_pixels=averages,
-            calibration_error=self.calibration_error,
+            calibration_error=self.calibration_error.value,
             pedestal_error=self.pedestal_error and noise_value(self.pedestal_error),
             zeros=self.zeros,
         )
@@ -238,91 +292,69 @@ class MapTable(Table):
         return NoiseRequest("value", value=value, unit=unit, correlated=correlated)
 
 
-def noise_value(typed: str) -> tuple[float, str]:
-    """Split ``0.0012 MJy/sr`` into number and unit.
+def gradient_value(typed: str) -> tuple[float, str]:
+    """Split ``-0.045 dex/kpc`` into the number and what it counts per.
 
     Raises
     ------
     ValueError
-        If there is no positive number, or no unit.
+        If it is neither per kpc nor per r25.
     """
-    number, _, unit = typed.strip().partition(" ")
+    text, _, per = typed.partition("dex/")
     try:
-        value = float(number)
+        value = float(text)
     except ValueError:
         value = math.nan
-    if not value > 0 or not unit.strip():
+    if not math.isfinite(value) or per.strip() not in ("kpc", "r25"):
         raise ValueError(
-            f'{typed!r} is not a noise; expected "measure", a number with its unit such as '
-            '"0.0012 MJy/sr", or {file = "...", is = "sigma"}'
+            f'{typed!r} is not a gradient; expected "-0.045 dex/kpc" or "-0.3 dex/r25"'
         )
-    return value, unit.strip()
+    return value, per.strip()
+
+
+def _gradient(typed: str | None) -> str | None:
+    if typed is not None:
+        gradient_value(typed)
+    return typed
 
 
 class MetallicityTable(Table):
     """12 + log10(O/H) over the disc: a centre and a gradient, or a map."""
 
-    oh: Plain | None = None
-    gradient: str | None = None
+    oh: Abundance | None = None
+    gradient: Annotated[str | None, AfterValidator(_gradient)] = None
     map: Path | None = None
     scale: str = "not stated"
 
     @property
     def slope(self) -> tuple[float, str]:
         """Gradient and what it counts per: ``kpc`` or ``r25``; zero where none is given."""
-        if self.gradient is None:
-            return 0.0, "kpc"
-        text, _, per = self.gradient.partition("dex/")
-        try:
-            value = float(text)
-        except ValueError:
-            value = math.nan
-        if not math.isfinite(value) or per.strip() not in ("kpc", "r25"):
-            raise ValueError(
-                f'{self.gradient!r} is not a gradient; expected "-0.045 dex/kpc" or '
-                '"-0.3 dex/r25"'
-            )
-        return value, per.strip()
+        return (0.0, "kpc") if self.gradient is None else gradient_value(self.gradient)
 
     @model_validator(mode="after")
     def _one_way(self) -> MetallicityTable:
-        _ = self.slope
         if (self.map is None) == (self.oh is None):
             raise ValueError(
                 'give either oh = 8.69 (with gradient = "... dex/kpc") or map = "file.fits"'
             )
         if self.map is not None and self.gradient is not None:
             raise ValueError("a gradient and a map exclude each other")
-        if self.oh is not None and not 6.5 <= self.oh.value <= 9.5:
-            raise ValueError(f"oh = {self.oh.text}: expected 12+log10(O/H) between 6.5 and 9.5")
         return self
 
 
 class ForegroundTable(Table):
     """Extinction by the Milky Way; the colour excess must be typed, zero if it was removed."""
 
-    ebv: Plain
+    ebv: Reddening
     uv: Annotated[str, _key_of(EXTINCTION)] = "bianchi2017"
     halpha: Annotated[str, _key_of(EXTINCTION)] = "cardelli1989"
-
-    @model_validator(mode="after")
-    def _plausible(self) -> ForegroundTable:
-        if not 0 <= self.ebv.value < 3:
-            raise ValueError(f"ebv = {self.ebv.text}: expected E(B-V) between 0 and 3 mag")
-        return self
 
 
 class GasTable(Table):
     """From lines to atomic and molecular gas."""
 
     alpha_co: Annotated[str, _key_of(ALPHA_CO)]
-    line_ratio: Plain | None = None
-
-    @model_validator(mode="after")
-    def _plausible(self) -> GasTable:
-        if self.line_ratio is not None and not 0 < self.line_ratio.value < 3:
-            raise ValueError(f"line_ratio = {self.line_ratio.text}: expected between 0 and 3")
-        return self
+    line_ratio: Ratio | None = None
 
 
 class StarFormationTable(Table):

@@ -10,7 +10,7 @@ from typing import Any, Final
 import astropy.units as u
 from astropy.coordinates import SkyCoord
 
-__all__ = ["Measured", "parse_centre", "parse_measured", "parse_percent"]
+__all__ = ["Measured", "Position", "parse_centre", "parse_measured", "parse_percent"]
 
 _NUMBER: Final = r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?"
 _MEASURED: Final = re.compile(
@@ -79,7 +79,7 @@ def parse_measured(typed: Any, unit: str, example: str) -> Measured:
     return Measured(value * factor, error * factor, str(typed))
 
 
-def parse_percent(typed: Any) -> float:
+def parse_percent(typed: Any) -> Measured:
     """Read ``5 %`` as 0.05.
 
     Raises
@@ -90,10 +90,35 @@ def parse_percent(typed: Any) -> float:
     match = _PERCENT.match(typed) if isinstance(typed, str) else None
     if match is None or float(match["value"]) < 0:
         raise ValueError(f'{typed!r} is not a percentage; expected, for example, "5 %"')
-    return float(match["value"]) / 100.0
+    return Measured(float(match["value"]) / 100.0, 0.0, typed)
 
 
-def parse_centre(typed: Any) -> tuple[float, float]:
+@dataclass(frozen=True)
+class Position:
+    """A position on the sky.
+
+    Attributes
+    ----------
+    lon_deg, lat_deg : float
+        ICRS.
+    text : str
+        As typed.
+    """
+
+    lon_deg: float
+    lat_deg: float
+    text: str
+
+    @property
+    def degrees(self) -> tuple[float, float]:
+        """Longitude and latitude, ICRS."""
+        return self.lon_deg, self.lat_deg
+
+    def __str__(self) -> str:
+        return self.text
+
+
+def parse_centre(typed: Any) -> Position:
     """Read ``13h33m38.4s -21d46m12s`` or ``80.05 -69.30 deg`` as ICRS degrees.
 
     Raises
@@ -114,4 +139,4 @@ def parse_centre(typed: Any) -> tuple[float, float]:
             raise ValueError(typed)
     except ValueError:
         raise ValueError(f"{typed!r} is not a position; {expected}") from None
-    return float(sky.ra.deg), float(sky.dec.deg)
+    return Position(float(sky.ra.deg), float(sky.dec.deg), typed)

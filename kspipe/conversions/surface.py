@@ -1,0 +1,90 @@
+"""Surface densities with their noise terms, from matched intensities."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kspipe.conversions.convert import Choices, Parameters, convert
+from kspipe.kernels.noise import NoiseTerm, propagate, total_error
+
+__all__ = ["Surface", "make_surface"]
+
+Array = NDArray[np.float64]
+Terms = tuple[NoiseTerm, ...]
+
+
+@dataclass(frozen=True)
+class Surface:
+    """One map on the common grid with its random errors.
+
+    Attributes
+    ----------
+    value : (ny, nx) float64 array
+    noise : tuple of NoiseTerm
+    slopes : dict of str to float64 array
+        Derivative with respect to the intensity of each tracer that it was made from.
+    """
+
+    value: Array
+    noise: Terms
+    slopes: Mapping[str, Array]
+
+    @property
+    def error(self) -> Array:
+        """Random 1-sigma error."""
+        return total_error(self.noise)
+
+
+def make_surface(
+    intensity: Mapping[str, Array],
+    noise: Mapping[str, Terms],
+    choices: Choices,
+    parameters: Parameters,
+) -> dict[str, Surface]:
+    """Convert intensities and carry their noise through, ratios included.
+
+    Parameters
+    ----------
+    intensity : mapping of str to (ny, nx) float64 array
+        By tracer, canonical units.
+    noise : mapping of str to tuple of NoiseTerm
+        By tracer.
+    choices, parameters
+        As in `convert`.
+
+    Returns
+    -------
+    dict of str to Surface
+        ``sigma_atom sigma_gas sigma_sfr t_dep_gas`` and, with CO, ``sigma_mol f_mol t_dep``.
+
+    Notes
+    -----
+    f_mol = sigma_mol / sigma_gas has the derivatives (1 - f) / sigma_gas with respect to
+    sigma_mol and -f / sigma_gas with respect to sigma_atom. Ratios are NaN where the denominator
+    is not positive.
+    """
+    converted = convert(intensity, choices, parameters)
+    made = {}
+    for name, value in converted.values.items():
+        slopes = converted.derivatives[name]
+        made[name] = Surface(value, propagate(noise, slopes), slopes)
+    if "sigma_mol" in made:
+        made["f_mol"] = _ratio(made["sigma_mol"], made["sigma_gas"], noise, 1.0)
+        made["t_dep"] = _ratio(made["sigma_mol"], made["sigma_sfr"], noise, 1e-3)
+    made["t_dep_gas"] = _ratio(made["sigma_gas"], made["sigma_sfr"], noise, 1e-3)
+    return made
+
+
+def _ratio(top: Surface, bottom: Surface, noise: Mapping[str, Terms], unit: float) -> Surface:
+    """Ratio of two surfaces times a unit factor; what they share cancels in its error."""
+    positive = np.where(bottom.value > 0, bottom.value, np.nan)
+    ratio = top.value / positive
+    slopes = {}
+    for tracer in {**top.slopes, **bottom.slopes}:
+        d_top, d_bottom = top.slopes.get(tracer, 0.0), bottom.slopes.get(tracer, 0.0)
+        slopes[tracer] = unit * (d_top - ratio * d_bottom) / positive
+    return Surface(unit * ratio, propagate(noise, slopes), slopes)

@@ -1,0 +1,175 @@
+"""Product files: a value with its extensions, and matched maps with all their noise terms."""
+
+from __future__ import annotations
+
+import textwrap
+import warnings
+from collections.abc import Iterable, Mapping
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from astropy.io import fits
+from astropy.wcs import WCS, FITSFixedWarning
+from numpy.typing import NDArray
+
+from kspipe.core.constants import DEG_ARCSEC
+from kspipe.kernels.geometry import beam_axes, beam_covariance
+from kspipe.kernels.noise import NoiseTerm
+from kspipe.maps.skymap import CommonError, Flag, SkyMap
+
+__all__ = ["read_image", "read_matched", "write_matched", "write_product"]
+
+Array = NDArray[np.float64]
+
+# FITS spelling of the units that products carry.
+FITS_UNITS = {
+    "K km/s": "K km s-1",
+    "MJy/sr": "MJy sr-1",
+    "erg/s/cm2/sr": "erg s-1 cm-2 sr-1",
+}
+
+
+def write_product(
+    path: Path,
+    value: Array,
+    unit: str,
+    wcs: WCS,
+    beam_arcsec2: Array,
+    *,
+    extensions: Mapping[str, tuple[Array | NDArray[np.int32], str]],
+    history: Iterable[str],
+    cards: Mapping[str, tuple[Any, str]] | None = None,
+) -> None:
+    """Write one product file.
+
+    Parameters
+    ----------
+    path : Path
+    value : (ny, nx) float64 array
+        Primary image.
+    unit : str
+        BUNIT, in FITS spelling; empty for a pure number.
+    wcs : astropy.wcs.WCS
+    beam_arcsec2 : (2, 2) float64 array
+    extensions : mapping of str to (array, unit)
+        Further images by EXTNAME; integer arrays are flags and carry the meaning of their bits.
+    history : iterable of str
+        One HISTORY entry each.
+    cards : mapping of str to (value, comment), optional
+        Further cards of the primary header.
+    """
+    sky = _sky_header(wcs, beam_arcsec2)
+    primary = fits.PrimaryHDU(value.astype(np.float32), header=sky)
+    _set_unit(primary.header, unit)
+    for key, (card, comment) in (cards or {}).items():
+        primary.header[key] = (card, comment)
+    for entry in history:
+        for line in textwrap.wrap(entry, 70, subsequent_indent="  "):
+            primary.header.add_history(line)
+    hdus = [primary]
+    for name, (array, extension_unit) in extensions.items():
+        is_flags = np.issubdtype(array.dtype, np.integer)
+        image = fits.ImageHDU(array.astype(np.int32 if is_flags else np.float32), sky, name)
+        _set_unit(image.header, extension_unit)
+        if is_flags:
+            for meaning, bit in Flag.meanings().items():
+                image.header[f"FLAG{bit}"] = (meaning, "meaning of this bit")
+        hdus.append(image)
+    fits.HDUList(hdus).writeto(path)
+
+
+def _sky_header(wcs: WCS, beam_arcsec2: Array) -> fits.Header:
+    header = wcs.to_header()
+    for key in ("DATE-OBS", "MJD-OBS", "MJDREF", "MJDREFI", "MJDREFF"):
+        header.remove(key, ignore_missing=True)
+    major, minor, pa = beam_axes(beam_arcsec2)
+    header["BMAJ"] = (major / DEG_ARCSEC, "[deg] beam FWHM, major axis")
+    header["BMIN"] = (minor / DEG_ARCSEC, "[deg] beam FWHM, minor axis")
+    header["BPA"] = (pa, "[deg] beam angle, north through east")
+    return header
+
+
+def _set_unit(header: fits.Header, unit: str) -> None:
+    header["BUNIT"] = (unit, "unit of the image")
+
+
+def write_matched(path: Path, sky: SkyMap) -> None:
+    """Write a matched map with every noise term, so that nothing is smoothed twice."""
+    unit = FITS_UNITS[sky.unit]
+    extensions: dict[str, tuple[Array | NDArray[np.int32], str]] = {
+        f"NOISE{i}": (term.sigma, unit) for i, term in enumerate(sky.noise, 1)
+    }
+    extensions["COVERAGE"] = (sky.coverage, "")
+    extensions["FLAGS"] = (sky.flags, "")
+    cards: dict[str, tuple[Any, str]] = {
+        "TRACER": (sky.tracer, "what it is a map of"),
+        "MAPNAME": (sky.name, "name in the recipe"),
+        "CALERR": (sky.common.calibration, "fractional flux-scale error, all pixels"),
+        "PEDERR": (sky.common.pedestal, "zero-level error, all pixels"),
+    }
+    for i, term in enumerate(sky.noise, 1):
+        cards[f"NSRC{i}"] = (term.source, f"source of NOISE{i}")
+        for j, (row, column) in enumerate(((0, 0), (0, 1), (1, 1)), 1):
+            cards[f"NCOV{i}{j}"] = (
+                float(term.correlation_arcsec2[row, column]),
+                "[arcsec2] noise correlation EE, EN, NN"[: 47],
+            )
+    write_product(
+        path,
+        sky.value,
+        unit,
+        sky.wcs,
+        sky.beam_arcsec2,
+        extensions=extensions,
+        history=sky.history,
+        cards=cards,
+    )
+
+
+def read_matched(path: Path) -> SkyMap:
+    """Read back what `write_matched` wrote (values to single precision)."""
+    with fits.open(path) as hdus:
+        header = hdus[0].header
+        arrays = {hdu.name: np.array(hdu.data) for hdu in hdus[1:]}
+        value = np.array(hdus[0].data, dtype=float)
+    wcs, beam = _read_sky(header)
+    terms = []
+    for i in range(1, 100):
+        if f"NSRC{i}" not in header:
+            break
+        ee, en, nn = (float(header[f"NCOV{i}{j}"]) for j in (1, 2, 3))
+        correlation = np.array([[ee, en], [en, nn]])
+        terms.append(NoiseTerm(header[f"NSRC{i}"], arrays[f"NOISE{i}"].astype(float), correlation))
+    canonical = {fits_unit: unit for unit, fits_unit in FITS_UNITS.items()}
+    return SkyMap(
+        name=header["MAPNAME"],
+        tracer=header["TRACER"],
+        value=value,
+        noise=tuple(terms),
+        coverage=arrays["COVERAGE"].astype(float),
+        flags=arrays["FLAGS"],
+        unit=canonical[header["BUNIT"]],
+        wcs=wcs,
+        beam_arcsec2=beam,
+        averages_pixels=False,
+        common=CommonError(float(header["CALERR"]), float(header["PEDERR"])),
+        history=tuple(str(line) for line in header.get("HISTORY", [])),
+    )
+
+
+def _read_sky(header: fits.Header) -> tuple[WCS, Array]:
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", FITSFixedWarning)
+        wcs = WCS(header)
+    beam = beam_covariance(
+        header["BMAJ"] * DEG_ARCSEC, header["BMIN"] * DEG_ARCSEC, header["BPA"]
+    )
+    return wcs, beam
+
+
+def read_image(path: Path, extension: str | int = 0) -> tuple[Array, fits.Header]:
+    """Read one image of a product file with its header."""
+    with fits.open(path) as hdus:
+        hdu = hdus[extension]
+        return np.array(hdu.data, dtype=float), hdu.header.copy()

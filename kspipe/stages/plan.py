@@ -1,0 +1,215 @@
+"""What a reduction will do: maps found usable, beam and grid chosen, fingerprints of each stage."""
+
+from __future__ import annotations
+
+import hashlib
+import warnings
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass
+from typing import Any
+
+import numpy as np
+from astropy.io import fits
+from numpy.typing import NDArray
+
+from kspipe import __version__
+from kspipe.conversions import ALPHA_CO, ATOMIC, EXTINCTION, STAR_FORMATION, Choices
+from kspipe.core.errors import Fault, KspipeWarning, MapError
+from kspipe.kernels.geometry import beam_axes
+from kspipe.maps import MapSource
+from kspipe.matching import Grid, choose_beam
+from kspipe.recipe import Recipe
+from kspipe.relations import LAWS
+from kspipe.stages.folder import file_checksum, fingerprint
+
+__all__ = ["InMemory", "Plan", "choices_of", "compare_print", "convert_print", "make_plan"]
+
+Array = NDArray[np.float64]
+InMemory = Mapping[str, tuple[fits.PrimaryHDU, fits.PrimaryHDU | None]]
+
+# From here on the recipe is told how fast cos i changes.
+INCLINED_DEG = 65.0
+
+
+@dataclass(frozen=True)
+class Plan:
+    """A reduction, decided.
+
+    Attributes
+    ----------
+    recipe : Recipe
+    sources : dict of str to MapSource
+    target_arcsec2 : (2, 2) float64 array
+        Beam covariance.
+    grid : Grid
+    prints : dict of str to str
+        Fingerprints of ``match.NAME`` and ``convert``.
+    """
+
+    recipe: Recipe
+    sources: dict[str, MapSource]
+    target_arcsec2: Array
+    grid: Grid
+    prints: dict[str, str]
+
+    @property
+    def fwhm_arcsec(self) -> float:
+        """Width of the target beam."""
+        return beam_axes(self.target_arcsec2)[0]
+
+
+def make_plan(recipe: Recipe, memory: InMemory | None = None) -> Plan:
+    """Read all headers, choose beam and grid.
+
+    Parameters
+    ----------
+    recipe : Recipe
+    memory : mapping of str to (HDU, HDU or None), optional
+        Maps, and their noise, that stand in for files.
+
+    Raises
+    ------
+    MapError
+        With the faults of all maps at once.
+    """
+    galaxy = recipe.galaxy
+    sources, faults = {}, []
+    for name, table in recipe.maps.items():
+        try:
+            sources[name] = MapSource.open(
+                table.request(name),
+                centre_deg=galaxy.centre.degrees,
+                velocity_kms=galaxy.velocity.value if galaxy.velocity else None,
+                velocity_convention=galaxy.velocity_convention,
+                memory=(memory or {}).get(name),
+            )
+        except MapError as error:
+            faults += error.faults
+    if faults:
+        raise MapError(*faults)
+    listed = list(sources.values())
+    target = choose_beam(listed, recipe.grid.fwhm_arcsec(galaxy.pc_per_arcsec))
+    fwhm = beam_axes(target)[0]
+    grid = Grid.around(
+        galaxy.centre.degrees,
+        fwhm / recipe.grid.pixels_per_beam,
+        listed,
+        recipe.grid.size.value if recipe.grid.size else None,
+    )
+    _check_grid(grid, recipe)
+    _warn_inclination(recipe)
+    prints = {f"match.{name}": _match_print(recipe, sources[name], grid, fwhm) for name in sources}
+    prints["convert"] = convert_print(recipe, prints)
+    return Plan(recipe, sources, target, grid, prints)
+
+
+def _check_grid(grid: Grid, recipe: Recipe) -> None:
+    if min(grid.shape) < 3:
+        raise MapError(
+            Fault(
+                "grid",
+                f"the maps share only {grid.shape[1]} x {grid.shape[0]} pixels of "
+                f"{grid.pixel_arcsec:.3g} arcsec",
+                "type a narrower grid.beam or check the maps",
+            )
+        )
+
+
+def _warn_inclination(recipe: Recipe) -> None:
+    inclination = recipe.galaxy.inclination.value
+    if inclination > INCLINED_DEG:
+        per_degree = 100 * np.tan(np.radians(inclination)) * np.radians(1.0)
+        warnings.warn(
+            f"galaxy.inclination {inclination:g} deg: cos i, and each surface density with it, "
+            f"changes by {per_degree:.1f} % per degree",
+            KspipeWarning,
+            stacklevel=2,
+        )
+
+
+def _match_print(recipe: Recipe, source: MapSource, grid: Grid, fwhm: float) -> str:
+    galaxy, request = recipe.galaxy, asdict(source.request)
+    # Contents count, not where they lie.
+    del request["file"], request["noise"]["file"]
+    return fingerprint(
+        {
+            "kspipe": __version__,
+            "map": request,
+            "pixels": _checksum(source.image),
+            "noise": _checksum(source.noise_image) if source.noise_image else None,
+            "galaxy": [
+                galaxy.centre.degrees,
+                galaxy.velocity,
+                galaxy.velocity_convention,
+                # Blank sky is what lies outside the disc.
+                [galaxy.inclination.value, galaxy.position_angle.value, galaxy.r25]
+                if source.request.noise.kind == "measure"
+                else None,
+            ],
+            "grid": [fwhm, grid.pixel_arcsec, grid.shape, grid.centre_pixel],
+            "coverage": recipe.grid.minimum_coverage,
+        }
+    )
+
+
+def _checksum(image: Any) -> str:
+    if image.memory is None:
+        return file_checksum(image.file)
+    header = image.memory.header.tostring(endcard=False).encode()
+    return hashlib.sha256(header + np.ascontiguousarray(image.memory.data).tobytes()).hexdigest()
+
+
+def choices_of(recipe: Recipe) -> Choices:
+    """Pick the records that a recipe names, by key."""
+    return Choices(
+        calibration=recipe.star_formation.calibration,
+        alpha_co=None if isinstance(recipe.gas, str) else recipe.gas.alpha_co,
+        extinction={
+            "FUV": recipe.foreground.uv,
+            "NUV": recipe.foreground.uv,
+            "Halpha": recipe.foreground.halpha,
+        },
+    )
+
+
+def records_of(recipe: Recipe) -> list[Any]:
+    """All conversion records that a recipe uses."""
+    choices = choices_of(recipe)
+    records: list[Any] = [ATOMIC.get(choices.atomic)]
+    if choices.alpha_co is not None:
+        records.append(ALPHA_CO.get(choices.alpha_co))
+    calibration = STAR_FORMATION.get(choices.calibration)
+    records.append(calibration)
+    keys = {choices.extinction[t] for t in calibration.tracers if t in choices.extinction}
+    return [*records, *(EXTINCTION.get(key) for key in sorted(keys))]
+
+
+def convert_print(recipe: Recipe, match_prints: Mapping[str, str]) -> str:
+    """Fingerprint of the surface densities."""
+    return fingerprint(
+        {
+            "matched": {k: v for k, v in match_prints.items() if k.startswith("match.")},
+            "galaxy": recipe.galaxy.model_dump(),
+            "metallicity": recipe.metallicity.model_dump(exclude={"map"}),
+            "metallicity map": recipe.metallicity.map and file_checksum(recipe.metallicity.map),
+            "foreground": recipe.foreground.model_dump(),
+            "gas": recipe.gas if isinstance(recipe.gas, str) else recipe.gas.model_dump(),
+            "star formation": recipe.star_formation.model_dump(),
+            "ratios": {n: [t.nii_ratio, t.as_24um] for n, t in recipe.maps.items()},
+            "low_snr": recipe.comparison.low_snr,
+            "records": [f"{r.key}: {r.formula}" for r in records_of(recipe)],
+        }
+    )
+
+
+def compare_print(recipe: Recipe, reduction_print: str) -> str:
+    """Fingerprint of the comparison."""
+    return fingerprint(
+        {
+            "reduction": reduction_print,
+            "relations": {n: t.model_dump() for n, t in recipe.relations.items()},
+            "laws": [LAWS.get(t.law).formula for t in recipe.relations.values()],
+            "comparison": recipe.comparison.model_dump(),
+            "seed": recipe.seed,
+        }
+    )
