@@ -43,7 +43,8 @@ ATOMIC.add(
         label="H I, optically thin",
         cite="leroy2008",
         where="Eq. A1",
-        formula="Sigma_atom = 1.36 m_H 1.823e18 I_HI cos i = 0.019868 I_HI cos i  [Msun/pc2; K km/s]",
+        formula="Sigma_atom = 1.36 m_H 1.823e18 I_HI cos i = 0.019868 I_HI cos i  "
+        "[Msun/pc2; K km/s]",
         certainty="verified",
         helium_factor=HELIUM_FACTOR,
         note="No opacity correction: cold peaks may hold 10 to 30 % more. The paper rounds the "

@@ -161,9 +161,11 @@ def _sfr_slopes(
             slope = slope * 10.0 ** (0.4 * extinction * np.asarray(parameters.ebv, dtype=float))
         if tracer == "Halpha":
             slope = slope / (1.0 + NII_DOUBLET * np.asarray(parameters.nii_ratio, dtype=float))
-        if tracer == "24um" and "24um" not in intensity:
-            tracer, slope = "22um", slope * parameters.as_24um
-        if tracer not in intensity:
+        stands_in = tracer == "24um" and "24um" not in intensity
+        if stands_in:
+            slope = slope * parameters.as_24um
+        source = "22um" if stands_in else tracer
+        if source not in intensity:
             raise KeyError(f"record {record.key!r} needs {tracer}, which is not among the maps")
-        slopes[tracer] = slope
+        slopes[source] = slope
     return slopes

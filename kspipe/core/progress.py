@@ -14,5 +14,5 @@ class Progress(Protocol):
         """Say that `done` of `total` pieces are finished and `what` begins."""
 
 
-def no_progress(done: int, total: int, what: str) -> None:  # noqa: ARG001 - the null object
+def no_progress(done: int, total: int, what: str) -> None:
     """Say nothing."""

@@ -49,7 +49,8 @@ _TOKEN: Final = re.compile(
     r"""\s*(?:
         (?P<power>10\s*(?:\*\*|\^)\s*\(?\s*(?P<exp10>[+-]?\d+)\s*\)?)
       | (?P<number>\d+(?:\.\d+)?(?:[eE][+-]?\d+)?)
-      | (?P<word>[A-Za-z_]+)(?:\s*(?:\*\*|\^)\s*\(?\s*(?P<exp>[+-]?\d+)\s*\)?|(?P<exp_plain>[+-]?\d+))?
+      | (?P<word>[A-Za-z_]+)
+        (?:\s*(?:\*\*|\^)\s*\(?\s*(?P<exp>[+-]?\d+)\s*\)? | (?P<exp_plain>[+-]?\d+))?
       | (?P<mark>[*./()])
     )""",
     re.VERBOSE,

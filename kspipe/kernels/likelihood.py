@@ -1,4 +1,4 @@
-"""Zero point and intrinsic scatter of measurements about predictions, without logarithms of noise."""
+"""Zero point and intrinsic scatter about predictions, without logarithms of noise."""
 
 from __future__ import annotations
 
@@ -92,9 +92,7 @@ def log_likelihood(
     return float(np.sum(logsumexp(log_terms, b=weights[:, None], axis=0) + np.log(step)))
 
 
-def fit_zero_point(
-    y: Array, predicted: Array, variance_terms: Array
-) -> ZeroPoint | None:
+def fit_zero_point(y: Array, predicted: Array, variance_terms: Array) -> ZeroPoint | None:
     """Fit offset and scatter by maximum likelihood.
 
     Parameters
@@ -113,7 +111,9 @@ def fit_zero_point(
     y, predicted, variance_terms = y[used], predicted[used], variance_terms[:, used]
 
     def cost(x: Array) -> float:
-        return -log_likelihood(x[0], max(math.exp(x[1]), LEAST_SCATTER_DEX), y, predicted, variance_terms)
+        return -log_likelihood(
+            x[0], max(math.exp(x[1]), LEAST_SCATTER_DEX), y, predicted, variance_terms
+        )
 
     total = float(np.sum(y) / np.sum(predicted))
     begin = [math.log10(total) if total > 0 else -1.0, math.log(0.3)]
@@ -128,7 +128,6 @@ def fit_zero_point(
 
 def _errors(f: Callable[[Array], float], x: Array, *, only_first: bool) -> tuple[float, float]:
     """1-sigma errors from the curvature of the log-likelihood at its peak."""
-
     h = np.array([1e-3, 1e-2])
     e = np.diag(h)
     f0 = f(x)

@@ -46,7 +46,7 @@ Terms = tuple[NoiseTerm, ...]
 def total_error(terms: Iterable[NoiseTerm]) -> Array:
     """Random 1-sigma error: the root sum of squares over sources."""
     terms = tuple(terms)
-    return np.sqrt(np.asarray(sum(term.sigma**2 for term in terms)))
+    return np.asarray(np.sqrt(sum(term.sigma**2 for term in terms)))
 
 
 def covariance(first: Iterable[NoiseTerm], second: Iterable[NoiseTerm]) -> Array | float:

@@ -113,7 +113,7 @@ def write_matched(path: Path, sky: SkyMap) -> None:
         for j, (row, column) in enumerate(((0, 0), (0, 1), (1, 1)), 1):
             cards[f"NCOV{i}{j}"] = (
                 float(term.correlation_arcsec2[row, column]),
-                "[arcsec2] noise correlation EE, EN, NN"[: 47],
+                "[arcsec2] noise correlation EE, EN, NN"[:47],
             )
     write_product(
         path,
@@ -162,9 +162,7 @@ def _read_sky(header: fits.Header) -> tuple[WCS, Array]:
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", FITSFixedWarning)
         wcs = WCS(header)
-    beam = beam_covariance(
-        header["BMAJ"] * DEG_ARCSEC, header["BMIN"] * DEG_ARCSEC, header["BPA"]
-    )
+    beam = beam_covariance(header["BMAJ"] * DEG_ARCSEC, header["BMIN"] * DEG_ARCSEC, header["BPA"])
     return wcs, beam
 
 

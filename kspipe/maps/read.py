@@ -134,11 +134,8 @@ def _stated_sigma(source: MapSource, value: Array, where: str) -> tuple[Array, s
                 "blank those pixels",
             )
         )
-    with np.errstate(invalid="ignore"):
-        sigma_stored = {
-            "sigma": lambda a: a,
-            "variance": np.sqrt,
-            "inverse variance": lambda a: 1.0 / np.sqrt(a),
-        }[noise.stated](stored)
+    power = {"sigma": 1.0, "variance": 0.5, "inverse variance": -0.5}[noise.stated]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        sigma_stored = stored**power
     note = f"noise from {source.noise_image}, read as {noise.stated}"
     return sigma_stored * source.noise_factor, f"{note}, correlated like: {noise.correlated}"

@@ -311,7 +311,7 @@ class MapSource:
         door = through(unit)
         if note:
             door = Door(door.factor, door.per_pixel, f"{door.reason}; frequency from {note}")
-        noise_image, noise_factor = _noise(request, image, tracer, unit, door, through, memory)
+        noise_image, noise_factor = _noise(request, image, tracer, door, through, memory)
         pedestal = 0.0
         if request.pedestal_error is not None:
             level, text = request.pedestal_error
@@ -378,7 +378,6 @@ def _noise(
     request: MapRequest,
     image: StoredImage,
     tracer: Tracer,
-    unit: UnitReading,
     door: Door,
     through: Callable[[UnitReading], Door],
     memory: tuple[fits.PrimaryHDU, fits.PrimaryHDU | None] | None,

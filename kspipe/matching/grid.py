@@ -126,7 +126,7 @@ def _outline(source: MapSource, wcs: WCS) -> Array:
     seen = np.isfinite(lon) & np.isfinite(lat)
     px, py = wcs.all_world2pix(lon[seen], lat[seen], 0)
     edge = np.column_stack([px, py])
-    return edge[np.isfinite(edge).all(axis=1)]
+    return np.asarray(edge[np.isfinite(edge).all(axis=1)])
 
 
 def _not_there(boxes: dict[str, Array], pixel_arcsec: float) -> GridError:

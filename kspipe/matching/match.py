@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
@@ -74,32 +75,13 @@ def match_map(
     GridError
         If the target beam spans too few of the map's pixels to be interpolated.
     """
-    where = f"maps.{sky.name}"
     x, y = grid.pixels_in(sky.wcs)
-    centre = (float(np.median(x)), float(np.median(y)))
-    jacobian = pixel_jacobian(sky.wcs, *centre)
-    source_beam = sky.beam_arcsec2
-    if sky.averages_pixels:
-        source_beam = source_beam + pixel_covariance(jacobian)
-    kernel_arcsec2 = subtract_covariance(target_arcsec2, source_beam)
-    if kernel_arcsec2 is None:
-        raise BeamError(Fault(where, "the map's beam is wider than the target beam"))
-    target_fwhm_pix = beam_axes(transform_covariance(target_arcsec2, jacobian))[1]
-    if target_fwhm_pix < LEAST_PIXELS_PER_BEAM:
-        raise GridError(
-            Fault(
-                where,
-                f"the target beam spans {target_fwhm_pix:.2f} pixels of the map; at least "
-                f"{LEAST_PIXELS_PER_BEAM:g} are needed to interpolate it",
-                "type a wider grid.beam",
-            )
-        )
-    kernel_pix2 = transform_covariance(kernel_arcsec2, jacobian)
+    kernel = _kernel(sky, target_arcsec2, float(np.median(x)), float(np.median(y)))
 
     observed = np.isfinite(sky.value)
-    weight = observed.astype(float)
-    smooth_value = gaussian_smooth(np.where(observed, sky.value, 0.0), kernel_pix2, workers=workers)
-    smooth_weight = gaussian_smooth(weight, kernel_pix2, workers=workers)
+    filled = np.where(observed, sky.value, 0.0)
+    smooth_value = gaussian_smooth(filled, kernel.pix2, workers=workers)
+    smooth_weight = gaussian_smooth(observed.astype(float), kernel.pix2, workers=workers)
     coverage = np.clip(_sample(smooth_weight, x, y), 0.0, 1.0)
     kept = coverage >= minimum_coverage
     with np.errstate(invalid="ignore", divide="ignore"):
@@ -107,38 +89,79 @@ def match_map(
 
     terms = []
     for term in sky.noise:
-        variance, correlation = _smooth_noise(term, observed, kernel_arcsec2, kernel_pix2, workers)
-        gain = interpolation_noise_gain(x, y, transform_covariance(correlation, jacobian))
+        variance, correlation = _smooth_noise(term, observed, kernel, workers)
+        gain = interpolation_noise_gain(x, y, transform_covariance(correlation, kernel.jacobian))
         with np.errstate(invalid="ignore", divide="ignore"):
             sigma = np.sqrt(_sample_variance(variance, x, y) * gain) / coverage
         terms.append(NoiseTerm(term.source, np.where(kept, sigma, np.nan), correlation))
 
-    flags = np.where(kept & (coverage < FULL_COVERAGE), int(Flag.LOW_COVERAGE), 0).astype(np.int32)
+    flags = np.where(kept & (coverage < FULL_COVERAGE), int(Flag.LOW_COVERAGE), 0)
     before, after = _fluxes(sky, value, grid)
-    kernel_fwhm = beam_axes(kernel_arcsec2)
-    steps = (
-        f"smoothed with a Gaussian of {kernel_fwhm[0]:.4f} x {kernel_fwhm[1]:.4f} arcsec FWHM, pa "
-        f"{kernel_fwhm[2]:.2f} deg"
-        + (", detector pixel counted in the beam" if sky.averages_pixels else ""),
-        f"interpolated (cubic) to {grid.shape[1]} x {grid.shape[0]} pixels of "
-        f"{grid.pixel_arcsec:.4g} arcsec",
-        f"coverage limit {minimum_coverage:g}: {int((~kept).sum())} of {kept.size} pixels blank",
-        f"flux on the grid's sky {before:.6g}, after matching {after:.6g} ({sky.unit} sr)",
-    )
-    return SkyMap(
-        name=sky.name,
-        tracer=sky.tracer,
+    return replace(
+        sky,
         value=value,
         noise=tuple(terms),
         coverage=coverage,
-        flags=flags,
-        unit=sky.unit,
+        flags=flags.astype(np.int32),
         wcs=grid.wcs,
         beam_arcsec2=target_arcsec2,
         averages_pixels=False,
-        common=sky.common,
-        history=(*sky.history, *steps),
+        history=(*sky.history, *_steps(sky, kernel, grid, minimum_coverage, kept, before, after)),
         facts={**sky.facts, "flux_before": before, "flux_after": after},
+    )
+
+
+@dataclass(frozen=True)
+class _Kernel:
+    """What turns a map's beam into the target, on the sky and on the map's pixels."""
+
+    arcsec2: Array
+    pix2: Array
+    jacobian: Array
+
+
+def _kernel(sky: SkyMap, target_arcsec2: Array, x: float, y: float) -> _Kernel:
+    """Work out the kernel at one pixel of the map; refuse what cannot be done."""
+    where = f"maps.{sky.name}"
+    jacobian = pixel_jacobian(sky.wcs, x, y)
+    beam = sky.beam_arcsec2 + (pixel_covariance(jacobian) if sky.averages_pixels else 0.0)
+    kernel = subtract_covariance(target_arcsec2, beam)
+    if kernel is None:
+        raise BeamError(Fault(where, "the map's beam is wider than the target beam"))
+    fwhm_pix = beam_axes(transform_covariance(target_arcsec2, jacobian))[1]
+    if fwhm_pix < LEAST_PIXELS_PER_BEAM:
+        raise GridError(
+            Fault(
+                where,
+                f"the target beam spans {fwhm_pix:.2f} pixels of the map; at least "
+                f"{LEAST_PIXELS_PER_BEAM:g} are needed to interpolate it",
+                "type a wider grid.beam",
+            )
+        )
+    return _Kernel(kernel, transform_covariance(kernel, jacobian), jacobian)
+
+
+def _steps(
+    sky: SkyMap,
+    kernel: _Kernel,
+    grid: Grid,
+    minimum_coverage: float,
+    kept: NDArray[np.bool_],
+    before: float,
+    after: float,
+) -> tuple[str, ...]:
+    """Say what was done, for the history."""
+    major, minor, pa = beam_axes(kernel.arcsec2)
+    smoothed = f"smoothed with a Gaussian of {major:.4f} x {minor:.4f} arcsec FWHM, pa {pa:.2f} deg"
+    if sky.averages_pixels:
+        smoothed += ", detector pixel counted in the beam"
+    rows, columns = grid.shape
+    blank = int((~kept).sum())
+    return (
+        smoothed,
+        f"interpolated (cubic) to {columns} x {rows} pixels of {grid.pixel_arcsec:.4g} arcsec",
+        f"coverage limit {minimum_coverage:g}: {blank} of {kept.size} pixels blank",
+        f"flux on the grid's sky {before:.6g}, after matching {after:.6g} ({sky.unit} sr)",
     )
 
 
@@ -152,11 +175,7 @@ def _sample_variance(padded: Padded, x: Array, y: Array) -> Array:
 
 
 def _smooth_noise(
-    term: NoiseTerm,
-    observed: NDArray[np.bool_],
-    kernel_arcsec2: Array,
-    kernel_pix2: Array,
-    workers: int,
+    term: NoiseTerm, observed: NDArray[np.bool_], kernel: _Kernel, workers: int
 ) -> tuple[Padded, Array]:
     """Variance of a smoothed noise term (before division by coverage^2), and its correlation.
 
@@ -165,17 +184,17 @@ def _smooth_noise(
     covariance K/2: the square of the kernel. White noise has its own gain, the sum of the
     squared kernel.
     """
+    correlation = term.correlation_arcsec2
     variance = np.where(observed, term.sigma**2, 0.0)
-    is_white = not np.any(term.correlation_arcsec2)
-    if not np.any(kernel_arcsec2):
-        return gaussian_smooth(variance, kernel_pix2), term.correlation_arcsec2
+    if not np.any(kernel.arcsec2):
+        return gaussian_smooth(variance, kernel.pix2), correlation
     gain = (
-        white_noise_gain(kernel_pix2)
-        if is_white
-        else correlated_noise_gain(term.correlation_arcsec2, kernel_arcsec2)
+        correlated_noise_gain(correlation, kernel.arcsec2)
+        if np.any(correlation)
+        else white_noise_gain(kernel.pix2)
     )
-    spread = gaussian_smooth(gain * variance, kernel_pix2 / 2.0, workers=workers)
-    return spread, term.correlation_arcsec2 + kernel_arcsec2
+    spread = gaussian_smooth(gain * variance, kernel.pix2 / 2.0, workers=workers)
+    return spread, correlation + kernel.arcsec2
 
 
 def _fluxes(sky: SkyMap, value: Array, grid: Grid) -> tuple[float, float]:

@@ -63,7 +63,7 @@ def measure_noise(sky: SkyMap, is_outside: NDArray[np.bool_], *, correlated: boo
         raise MapError(
             Fault(
                 where,
-                f"{share:.1%} of the blank sky is exactly zero: the map is masked and shows no noise",
+                f"{share:.1%} of the blank sky is exactly zero: a masked map shows no noise",
                 "state the noise as a number with its unit or as a file",
             )
         )

@@ -38,15 +38,15 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
         faults += _star_formation_faults(tables["star_formation"], tables["maps"])
     galaxy, metallicity = tables["galaxy"], tables["metallicity"]
     if isinstance(galaxy, GalaxyTable):
-        if isinstance(metallicity, MetallicityTable) and metallicity.slope[1] == "r25":
-            if galaxy.r25 is None:
-                faults.append(
-                    Fault(
-                        "metallicity.gradient",
-                        "a gradient per r25 needs galaxy.r25",
-                        'type r25 = "... arcmin" in [galaxy]',
-                    )
+        per_r25 = isinstance(metallicity, MetallicityTable) and metallicity.slope[1] == "r25"
+        if per_r25 and galaxy.r25 is None:
+            faults.append(
+                Fault(
+                    "metallicity.gradient",
+                    "a gradient per r25 needs galaxy.r25",
+                    'type r25 = "... arcmin" in [galaxy]',
                 )
+            )
         if galaxy.inclination.value > MOST_INCLINED_DEG and tables["relations"]:
             faults.append(
                 Fault(

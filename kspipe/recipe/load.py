@@ -41,13 +41,15 @@ _OPTIONAL: Final = ("relations", "comparison")
 _TOP: Final = ("seed", "maps", "gas", "relations", *_TABLES)
 
 
-def load_recipe(path: str | Path) -> Recipe:
+def load_recipe(path: str | Path, *, in_memory: frozenset[str] = frozenset()) -> Recipe:
     """Read and check a recipe.
 
     Parameters
     ----------
     path : str or Path
         A TOML file; relative paths in it are relative to its folder.
+    in_memory : set of str
+        Maps whose files need not exist, because they are handed over in memory.
 
     Returns
     -------
@@ -67,7 +69,8 @@ def load_recipe(path: str | Path) -> Recipe:
         raise RecipeError(Fault(str(path), f"the recipe cannot be read ({error})")) from None
     except tomllib.TOMLDecodeError as error:
         raise RecipeError(Fault(str(path), f"not valid TOML: {error}")) from None
-    return parse_recipe(raw, folder=path.resolve().parent, path=path.resolve())
+    resolved = path.resolve()
+    return parse_recipe(raw, folder=resolved.parent, path=resolved, in_memory=in_memory)
 
 
 def parse_recipe(

@@ -9,12 +9,20 @@ import math
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, PlainValidator, model_validator
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    PlainValidator,
+    model_validator,
+)
 
 from kspipe.conversions import ALPHA_CO, EXTINCTION, STAR_FORMATION
+from kspipe.core.errors import nearest
 from kspipe.core.registry import Registry
 from kspipe.core.tracers import TRACERS
-from kspipe.core.errors import nearest
 from kspipe.maps import MapRequest, NoiseRequest
 from kspipe.recipe.quantity import Measured, Position, parse_centre, parse_measured, parse_percent
 
@@ -45,7 +53,7 @@ def _between(low: float, high: float, what: str) -> Any:
             return None
         above = (
             quantity.value >= low
-            if low == 0 and ", or 0" in what or ", 0 or" in what
+            if (low == 0 and ", or 0" in what) or ", 0 or" in what
             else quantity.value > low
         )
         if not (above and quantity.value < high):
@@ -271,7 +279,7 @@ class MapTable(Table):
             beam=self.beam,
             averages_pixels=averages,
             calibration_error=self.calibration_error.value,
-            pedestal_error=self.pedestal_error and noise_value(self.pedestal_error),
+            pedestal_error=noise_value(self.pedestal_error) if self.pedestal_error else None,
             zeros=self.zeros,
         )
 
@@ -375,7 +383,7 @@ class RelationTable(Table):
 class ComparisonTable(Table):
     """How the comparison is made."""
 
-    low_snr: float = Field(default=3.0, ge=0.0)
+    low_snr: float = Field(default=5.0, ge=0.0)
 
 
 class Recipe(Table):

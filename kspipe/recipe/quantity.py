@@ -130,13 +130,12 @@ def parse_centre(typed: Any) -> Position:
     if not isinstance(typed, str):
         raise ValueError(f"{typed!r} is not a position; {expected}")
     in_degrees = re.match(rf"^\s*({_NUMBER})\s+({_NUMBER})\s+deg\s*$", typed)
+    in_sexagesimal = re.search(r"\dh.*\d[ms]?.*\dd", typed)
     try:
         if in_degrees:
             sky = SkyCoord(float(in_degrees[1]), float(in_degrees[2]), unit="deg")
-        elif re.search(r"\dh.*\d[ms]?.*\dd", typed):
-            sky = SkyCoord(typed)
         else:
-            raise ValueError(typed)
+            sky = SkyCoord(typed if in_sexagesimal else "")
     except ValueError:
         raise ValueError(f"{typed!r} is not a position; {expected}") from None
     return Position(float(sky.ra.deg), float(sky.dec.deg), typed)

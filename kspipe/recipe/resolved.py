@@ -30,8 +30,7 @@ def resolved_recipe(recipe: Recipe, found: Mapping[str, Mapping[str, str]]) -> s
         TOML that gives identical numbers when it is run.
     """
     lines = [
-        "# Resolved recipe: values without a comment were typed, the others say where they come "
-        "from.",
+        "# Resolved recipe: values without a comment were typed, the others say their origin.",
         f"seed = {recipe.seed}",
     ]
     if isinstance(recipe.gas, str):

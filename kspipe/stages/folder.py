@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import hashlib
 import json
-import os
 import shutil
 import tempfile
 from collections.abc import Iterator, Mapping
@@ -59,7 +58,9 @@ class ProductFolder:
         """
         manifest = path / MANIFEST
         if path.exists() and not path.is_dir():
-            raise OutputError(Fault(str(path), "is a file; expected a folder", "type another --out"))
+            raise OutputError(
+                Fault(str(path), "is a file; expected a folder", "type another --out")
+            )
         if not manifest.is_file():
             return cls(path)
         try:
@@ -176,7 +177,7 @@ class ProductFolder:
             (self.path / name).unlink(missing_ok=True)
         for name in written:
             (self.path / name.parent).mkdir(parents=True, exist_ok=True)
-            os.replace(staging / name, self.path / name)
+            (staging / name).replace(self.path / name)
         for stage in drop:
             self.stages.pop(stage, None)
         now = datetime.now(UTC).isoformat(timespec="seconds")
@@ -191,7 +192,7 @@ class ProductFolder:
             json.dumps({"kspipe": __version__, "stages": self.stages}, indent=1) + "\n",
             encoding="utf-8",
         )
-        os.replace(manifest, self.path / MANIFEST)
+        manifest.replace(self.path / MANIFEST)
 
 
 def _owner(name: Path, prints: Mapping[str, str]) -> str:

@@ -73,7 +73,8 @@ def make_plan(recipe: Recipe, memory: InMemory | None = None) -> Plan:
         With the faults of all maps at once.
     """
     galaxy = recipe.galaxy
-    sources, faults = {}, []
+    sources: dict[str, MapSource] = {}
+    faults: list[Fault] = []
     for name, table in recipe.maps.items():
         try:
             sources[name] = MapSource.open(
@@ -96,14 +97,14 @@ def make_plan(recipe: Recipe, memory: InMemory | None = None) -> Plan:
         listed,
         recipe.grid.size.value if recipe.grid.size else None,
     )
-    _check_grid(grid, recipe)
+    _check_grid(grid)
     _warn_inclination(recipe)
     prints = {f"match.{name}": _match_print(recipe, sources[name], grid, fwhm) for name in sources}
     prints["convert"] = convert_print(recipe, prints)
     return Plan(recipe, sources, target, grid, prints)
 
 
-def _check_grid(grid: Grid, recipe: Recipe) -> None:
+def _check_grid(grid: Grid) -> None:
     if min(grid.shape) < 3:
         raise MapError(
             Fault(

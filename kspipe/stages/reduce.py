@@ -95,15 +95,15 @@ def reduce_maps(
         progress(len(to_match), steps, "converting")
         # Every run converts what lies in the files, so that a reused map gives the same numbers.
         matched = {
-            name: read_matched(
-                (staging if name in to_match else out) / "matched" / f"{name}.fits"
-            )
+            name: read_matched((staging if name in to_match else out) / "matched" / f"{name}.fits")
             for name in plan.sources
         }
         disc = surfaces_of(recipe, matched, plan.grid)
         (staging / "maps").mkdir()
         _write_maps(staging / "maps", plan, disc)
-        (staging / "recipe.toml").write_text(resolved_recipe(recipe, _found(plan)), encoding="utf-8")
+        (staging / "recipe.toml").write_text(
+            resolved_recipe(recipe, _found(plan)), encoding="utf-8"
+        )
         progress(steps, steps, "reduced")
     return True
 
@@ -147,9 +147,7 @@ def _outside_galaxy(sky: SkyMap, recipe: Recipe) -> NDArray[np.bool_]:
 
 def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
     """Write the surface densities, ratios, metallicity and radius."""
-    lines = [
-        f"{r.key} ({r.cite}, {r.where}): {r.formula}" for r in records_of(plan.recipe)
-    ]
+    lines = [f"{r.key} ({r.cite}, {r.where}): {r.formula}" for r in records_of(plan.recipe)]
     galaxy = plan.recipe.galaxy
     lines.append(
         f"face-on, helium included (1.36), cos i = {galaxy.cos_i:.5f} applied once; distance "

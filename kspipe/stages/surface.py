@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
 from astropy.io import fits
@@ -22,11 +23,12 @@ from kspipe.core.tracers import CO_LINES
 from kspipe.kernels.geometry import disc_radius
 from kspipe.maps.header import celestial_wcs
 from kspipe.maps.skymap import Flag, SkyMap
+from kspipe.maps.source import StoredImage
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe
 from kspipe.stages.plan import choices_of
 
-__all__ = ["Disc", "surfaces_of"]
+__all__ = ["Disc", "parameters_of", "surfaces_of"]
 
 Array = NDArray[np.float64]
 
@@ -85,7 +87,7 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
     oh = metallicity_of(recipe, grid, radius_kpc)
     used = _used_maps(recipe, matched)
     choices = choices_of(recipe)
-    parameters = _parameters(recipe, z_prime(oh))
+    parameters = parameters_of(recipe, z_prime(oh))
     surfaces = make_surface(
         {tracer: sky.value for tracer, sky in used.items()},
         {tracer: sky.noise for tracer, sky in used.items()},
@@ -110,7 +112,8 @@ def _used_maps(recipe: Recipe, matched: dict[str, SkyMap]) -> dict[str, SkyMap]:
     }
 
 
-def _parameters(recipe: Recipe, z: Array) -> Parameters:
+def parameters_of(recipe: Recipe, z: Array) -> Parameters:
+    """The numbers of a recipe that are not records, with Z' on the grid."""
     ratio = None if isinstance(recipe.gas, str) else recipe.gas.line_ratio
     tables = [recipe.maps[name] for name in recipe.star_formation.maps]
     nii = next((t.nii_ratio for t in tables if t.nii_ratio is not None), None)
@@ -143,15 +146,12 @@ def metallicity_of(recipe: Recipe, grid: Grid, radius_kpc: Array) -> Array:
     return oh_from_gradient(radius_kpc, centre, slope)
 
 
-def _metallicity_map(path: object, grid: Grid) -> Array:
+def _metallicity_map(path: Path, grid: Grid) -> Array:
     """Interpolate a map of 12 + log10(O/H) linearly; it is not smoothed."""
-    from pathlib import Path
+    # Its imports cost a second, and few recipes need it.
+    from reproject import reproject_interp  # noqa: PLC0415
 
-    from reproject import reproject_interp
-
-    from kspipe.maps.source import StoredImage
-
-    image = StoredImage.find(Path(str(path)), None)
+    image = StoredImage.find(path, None)
     wcs: WCS = celestial_wcs(image.header, f"metallicity.map, {image}")
     hdu = fits.PrimaryHDU(image.read(), wcs.to_header())
     oh, _ = reproject_interp(hdu, grid.wcs, shape_out=grid.shape, order="bilinear")
@@ -178,4 +178,4 @@ def _flags(
     flags = np.bitwise_or.reduce([sky.flags for sky in maps]).astype(np.int32)
     for flag, where in bits.items():
         flags |= np.where(where, int(flag), 0).astype(np.int32)
-    return flags
+    return np.asarray(flags)

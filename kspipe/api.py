@@ -1,0 +1,287 @@
+"""The job for scripts and notebooks: the same stages, with quantities at the border."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping, Sequence
+from html import escape
+from pathlib import Path
+from typing import Any
+
+import astropy.units as u
+import numpy as np
+from astropy.io import fits
+from astropy.table import Table
+from astropy.wcs import WCS
+
+from kspipe.core.errors import Fault, OutputError
+from kspipe.core.progress import Progress, no_progress
+from kspipe.core.report import relation_rows, total_rows
+from kspipe.maps.product import read_image
+from kspipe.products import draw_figures
+from kspipe.recipe import Recipe, load_recipe
+from kspipe.stages.compare import compare_relations
+from kspipe.stages.reduce import PRODUCT_UNITS, reduce_maps
+
+__all__ = ["Comparison", "Reduction", "compare", "figures", "reduce", "run"]
+
+Maps = Mapping[str, fits.PrimaryHDU | tuple[fits.PrimaryHDU, fits.PrimaryHDU | None]]
+
+
+class Reduction:
+    """Surface densities of one galaxy, read from a product folder when asked for.
+
+    Parameters
+    ----------
+    folder : str or Path
+        Written by `reduce` or `run`.
+
+    Raises
+    ------
+    OutputError
+        If there is no reduction in it.
+
+    Examples
+    --------
+    >>> import kspipe
+    >>> reduction = kspipe.reduce("galaxy.toml", "out")  # doctest: +SKIP
+    >>> reduction["sigma_gas"].unit  # doctest: +SKIP
+    Unit("solMass / pc2")
+    """
+
+    def __init__(self, folder: str | Path) -> None:
+        self.folder = Path(folder)
+        if not (self.folder / "maps" / "sigma_gas.fits").is_file():
+            raise OutputError(Fault(str(folder), "holds no reduction", "call kspipe.reduce first"))
+
+    @property
+    def names(self) -> list[str]:
+        """Products that there are."""
+        return sorted(path.stem for path in (self.folder / "maps").glob("*.fits"))
+
+    def __getitem__(self, name: str) -> u.Quantity:
+        """Return the map of a product, NaN where not covered.
+
+        Raises
+        ------
+        KeyError
+            If there is no such product.
+        """
+        return self._image(name, 0)
+
+    def error(self, name: str) -> u.Quantity:
+        """Random 1-sigma error of a product.
+
+        Raises
+        ------
+        KeyError
+            If there is no such product or it has no random error.
+        """
+        if name not in PRODUCT_UNITS:
+            raise KeyError(f"{name!r} has no random error; those that have: {list(PRODUCT_UNITS)}")
+        return self._image(name, "ERROR")
+
+    def _image(self, name: str, extension: str | int) -> u.Quantity:
+        if name not in self.names:
+            raise KeyError(f"{name!r} is not among the products: {self.names}")
+        value, header = read_image(self.folder / "maps" / f"{name}.fits", extension)
+        return u.Quantity(value, u.Unit(header.get("BUNIT", ""), format="fits"))
+
+    @property
+    def wcs(self) -> WCS:
+        """Sky coordinates of every product."""
+        return WCS(read_image(self.folder / "maps" / "sigma_gas.fits")[1])
+
+    def __repr__(self) -> str:
+        return f"<Reduction in {self.folder}: {', '.join(self.names)}>"
+
+    def _repr_html_(self) -> str:
+        rows = []
+        for name in self.names:
+            value = self[name]
+            seen = value[np.isfinite(value)]
+            low, middle, high = np.percentile(seen, [16, 50, 84]) if seen.size else [np.nan] * 3
+            unit = value.unit.to_string("unicode")
+            rows.append((name, unit, f"{seen.size}", f"{middle:.4g}", f"{low:.4g} to {high:.4g}"))
+        head = ("product", "unit", "pixels", "median", "16 to 84 %")
+        return f"<p>Reduction in {escape(str(self.folder))}</p>" + _html_table(head, rows)
+
+
+class Comparison(Reduction):
+    """A reduction with relations held against it.
+
+    Parameters
+    ----------
+    folder : str or Path
+        Written by `compare` or `run`.
+
+    Raises
+    ------
+    OutputError
+        If there is no comparison in it.
+    """
+
+    def __init__(self, folder: str | Path) -> None:
+        super().__init__(folder)
+        if not (self.folder / "summary.json").is_file():
+            raise OutputError(
+                Fault(str(folder), "holds no comparison", "call kspipe.compare first")
+            )
+
+    @property
+    def summary(self) -> dict[str, Any]:
+        """Totals and headline numbers."""
+        text = (self.folder / "summary.json").read_text(encoding="utf-8")
+        return dict(json.loads(text))
+
+    @property
+    def pixels(self) -> Table:
+        """One row for each covered pixel, with units and descriptions."""
+        return Table.read(self.folder / "pixels.ecsv")
+
+    @property
+    def relations(self) -> list[str]:
+        """Names of the relations."""
+        return list(self.summary["relations"])
+
+    def residual(self, relation: str) -> u.Quantity:
+        """Map of log10(observed / predicted) [dex].
+
+        Raises
+        ------
+        KeyError
+            If the recipe has no such relation.
+        """
+        if relation not in self.relations:
+            raise KeyError(f"{relation!r} is not among the relations: {self.relations}")
+        value, _ = read_image(self.folder / "residuals" / f"{relation}.fits")
+        return u.Quantity(value, u.dex)
+
+    def __repr__(self) -> str:
+        return f"<Comparison in {self.folder}: {', '.join(self.relations)}>"
+
+    def _repr_html_(self) -> str:
+        summary = self.summary
+        return (
+            super()._repr_html_()
+            + _html_table(("total", "value", "error"), total_rows(summary))
+            + _html_table(
+                ("relation", "observed / predicted", "zero point, scatter", "median"),
+                relation_rows(summary),
+            )
+        )
+
+
+def _html_table(head: tuple[str, ...], rows: Sequence[tuple[str, ...]]) -> str:
+    def row(cells: tuple[str, ...], tag: str) -> str:
+        return "<tr>" + "".join(f"<{tag}>{escape(cell)}</{tag}>" for cell in cells) + "</tr>"
+
+    return "<table>" + row(head, "th") + "".join(row(cells, "td") for cells in rows) + "</table>"
+
+
+def reduce(
+    recipe: Recipe | str | Path,
+    out: str | Path,
+    *,
+    maps: Maps | None = None,
+    overwrite: bool = False,
+    progress: Progress = no_progress,
+) -> Reduction:
+    """Bring all maps of a recipe to one beam and grid and convert them to surface densities.
+
+    Parameters
+    ----------
+    recipe : Recipe or path
+    out : path
+        Product folder.
+    maps : mapping of str to HDU or (HDU, HDU), optional
+        Maps (with their noise maps) in memory, by the recipe's names, instead of files.
+    overwrite : bool
+        Whether products made from something else may be replaced.
+    progress : Progress
+
+    Returns
+    -------
+    Reduction
+
+    Raises
+    ------
+    InputError
+        With every fault of the recipe or of the maps; nothing is written then.
+    """
+    memory = _memory(maps)
+    loaded = _loaded(recipe, memory)
+    reduce_maps(loaded, Path(out), overwrite=overwrite, memory=memory, progress=progress)
+    return Reduction(out)
+
+
+def compare(
+    out: str | Path,
+    *,
+    maps: Maps | None = None,
+    overwrite: bool = False,
+    progress: Progress = no_progress,
+) -> Comparison:
+    """Hold the relations of a reduced recipe against the galaxy.
+
+    Parameters
+    ----------
+    out : path
+        Product folder of a reduction.
+    maps, overwrite, progress
+        As in `reduce`.
+
+    Raises
+    ------
+    OutputError
+        If the reduction is absent or stale.
+    """
+    compare_relations(Path(out), overwrite=overwrite, memory=_memory(maps), progress=progress)
+    return Comparison(out)
+
+
+def figures(
+    out: str | Path, *, overwrite: bool = False, progress: Progress = no_progress
+) -> list[Path]:
+    """Draw the figures of a comparison and return their files.
+
+    Raises
+    ------
+    OutputError
+        If the comparison is absent.
+    """
+    draw_figures(Path(out), overwrite=overwrite, progress=progress)
+    return sorted((Path(out) / "figures").iterdir())
+
+
+def run(
+    recipe: Recipe | str | Path,
+    out: str | Path,
+    *,
+    maps: Maps | None = None,
+    overwrite: bool = False,
+    progress: Progress = no_progress,
+) -> Comparison:
+    """Reduce, compare and draw, through the same files.
+
+    Parameters
+    ----------
+    recipe, out, maps, overwrite, progress
+        As in `reduce`.
+    """
+    reduce(recipe, out, maps=maps, overwrite=overwrite, progress=progress)
+    comparison = compare(out, maps=maps, overwrite=overwrite, progress=progress)
+    figures(out, overwrite=overwrite, progress=progress)
+    return comparison
+
+
+def _memory(maps: Maps | None) -> dict[str, tuple[fits.PrimaryHDU, fits.PrimaryHDU | None]] | None:
+    if maps is None:
+        return None
+    return {name: m if isinstance(m, tuple) else (m, None) for name, m in maps.items()}
+
+
+def _loaded(recipe: Recipe | str | Path, memory: Mapping[str, Any] | None) -> Recipe:
+    if isinstance(recipe, Recipe):
+        return recipe
+    return load_recipe(recipe, in_memory=frozenset(memory or ()))

@@ -1,0 +1,126 @@
+"""Commands of ``kspipe``."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from kspipe import __version__
+
+__all__ = ["app", "main"]
+
+app = typer.Typer(
+    name="kspipe",
+    help="From maps of a nearby galaxy to surface densities, predictions and residual maps.",
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+)
+
+RecipeArgument = Annotated[Path, typer.Argument(metavar="RECIPE", help="TOML file of one galaxy.")]
+FolderArgument = Annotated[Path, typer.Argument(metavar="DIR", help="Product folder.")]
+OutOption = Annotated[Path, typer.Option("--out", metavar="DIR", help="Product folder to write.")]
+OverwriteOption = Annotated[
+    bool, typer.Option("--overwrite", help="Replace products made from something else.")
+]
+QuietOption = Annotated[bool, typer.Option("--quiet", help="No progress, no log.")]
+DebugOption = Annotated[bool, typer.Option("--debug", help="Show where an error arose.")]
+
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        typer.echo(f"kspipe {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def _top(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version.")
+    ] = False,
+) -> None:
+    """From maps of a nearby galaxy to surface densities, predictions and residual maps."""
+
+
+@app.command("reduce", epilog="Example: kspipe reduce galaxy.toml --out galaxy")
+def reduce_command(
+    recipe: RecipeArgument,
+    out: OutOption,
+    overwrite: OverwriteOption = False,
+    quiet: QuietOption = False,
+    debug: DebugOption = False,
+) -> None:
+    """Bring all maps to one beam and grid; write matched/, maps/ and recipe.toml."""
+    from kspipe.cli.session import session
+
+    with session(quiet=quiet, debug=debug) as progress:
+        from kspipe.recipe import load_recipe
+        from kspipe.stages.reduce import reduce_maps
+
+        made = reduce_maps(load_recipe(recipe), out, overwrite=overwrite, progress=progress)
+    typer.echo(f"{'written' if made else 'unchanged, reused'}: {out / 'maps'}")
+
+
+@app.command("compare", epilog="Example: kspipe compare galaxy")
+def compare_command(
+    folder: FolderArgument,
+    overwrite: OverwriteOption = False,
+    quiet: QuietOption = False,
+    debug: DebugOption = False,
+) -> None:
+    """Hold relations against a reduction; write residuals/, pixels.ecsv, summary.json."""
+    from kspipe.cli.session import print_summary, session
+
+    with session(quiet=quiet, debug=debug) as progress:
+        from kspipe.stages.compare import compare_relations
+
+        compare_relations(folder, overwrite=overwrite, progress=progress)
+    print_summary(folder)
+
+
+@app.command("figures", epilog="Example: kspipe figures galaxy")
+def figures_command(
+    folder: FolderArgument,
+    overwrite: OverwriteOption = False,
+    quiet: QuietOption = False,
+    debug: DebugOption = False,
+) -> None:
+    """Draw the figures of a comparison; write figures/."""
+    from kspipe.cli.session import session
+
+    with session(quiet=quiet, debug=debug) as progress:
+        from kspipe.products import draw_figures
+
+        made = draw_figures(folder, overwrite=overwrite, progress=progress)
+    typer.echo(f"{'written' if made else 'unchanged, reused'}: {folder / 'figures'}")
+
+
+@app.command("run", epilog="Example: kspipe run galaxy.toml --out galaxy")
+def run_command(
+    recipe: RecipeArgument,
+    out: OutOption,
+    overwrite: OverwriteOption = False,
+    quiet: QuietOption = False,
+    debug: DebugOption = False,
+) -> None:
+    """Reduce, compare and draw: the whole job."""
+    from kspipe.cli.session import print_summary, session
+
+    with session(quiet=quiet, debug=debug) as progress:
+        from kspipe.products import draw_figures
+        from kspipe.recipe import load_recipe
+        from kspipe.stages.compare import compare_relations
+        from kspipe.stages.reduce import reduce_maps
+
+        reduce_maps(load_recipe(recipe), out, overwrite=overwrite, progress=progress)
+        compare_relations(out, overwrite=overwrite, progress=progress)
+        draw_figures(out, overwrite=overwrite, progress=progress)
+    print_summary(out)
+
+
+def main() -> None:
+    """Entry point of the command."""
+    app(prog_name="kspipe")

@@ -1,0 +1,14 @@
+"""Pixels, independent samples, residuals, and the numbers that sum them up."""
+
+from kspipe.comparison.headline import Headline, headline
+from kspipe.comparison.residuals import Residuals, predict_residuals
+from kspipe.comparison.samples import independent_beams, independent_samples
+
+__all__ = [
+    "Headline",
+    "Residuals",
+    "headline",
+    "independent_beams",
+    "independent_samples",
+    "predict_residuals",
+]

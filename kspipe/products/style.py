@@ -1,0 +1,165 @@
+"""One look for all figures: sizes, type, colours, units, and files that repeat byte for byte."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any, Final
+
+import matplotlib as mpl
+import numpy as np
+from matplotlib import patheffects, style
+from matplotlib.axes import Axes
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.figure import Figure
+
+__all__ = [
+    "GAS_UNIT",
+    "HALO",
+    "SFR_UNIT",
+    "SIGMA",
+    "WIDE_INCHES",
+    "angle_on_page",
+    "figure_style",
+    "law_name",
+    "measured",
+    "new_figure",
+    "nice_below",
+    "parameter_text",
+    "relation_look",
+    "save_figure",
+]
+
+# Width of a page with two columns in the journals of the field.
+WIDE_INCHES: Final = 7.1
+PNG_DPI: Final = 200
+# Dense layers inside a PDF are pixels at this density.
+RASTER_DPI: Final = 300
+
+GAS_UNIT: Final = r"M$_\odot$ pc$^{-2}$"
+SFR_UNIT: Final = r"M$_\odot$ yr$^{-1}$ kpc$^{-2}$"
+SIGMA: Final = {
+    "sigma_atom": r"$\Sigma_\mathrm{atom}$",
+    "sigma_mol": r"$\Sigma_\mathrm{mol}$",
+    "sigma_gas": r"$\Sigma_\mathrm{gas}$",
+    "sigma_sfr": r"$\Sigma_\mathrm{SFR}$",
+}
+
+# Okabe & Ito 2008: told apart with any colour vision. Line styles tell them apart in grey.
+_COLOURS: Final = ("#D55E00", "#0072B2", "#009E73", "#CC79A7")
+_LINES: Final = ("-", "--", "-.", ":")
+
+# A white rim keeps letters readable across lines and data.
+HALO: Final = [patheffects.withStroke(linewidth=2.0, foreground="white")]
+
+_STYLE: Final[dict[str, Any]] = {
+    "font.family": "STIXGeneral",
+    "mathtext.fontset": "stix",
+    "font.size": 9.0,
+    "axes.titlesize": 9.0,
+    "axes.labelsize": 9.0,
+    "xtick.labelsize": 8.0,
+    "ytick.labelsize": 8.0,
+    "legend.fontsize": 8.0,
+    "axes.linewidth": 0.6,
+    "lines.linewidth": 1.0,
+    "hatch.linewidth": 0.4,
+    "xtick.direction": "in",
+    "ytick.direction": "in",
+    "xtick.top": True,
+    "ytick.right": True,
+    "legend.frameon": False,
+    "pdf.fonttype": 42,
+    "savefig.dpi": RASTER_DPI,
+}
+
+
+@contextmanager
+def figure_style() -> Iterator[None]:
+    """Draw with the project's settings, whatever the user's own are; they come back after."""
+    with style.context(["default", _STYLE]):
+        yield
+
+
+def new_figure(height_inches: float, width_inches: float = WIDE_INCHES) -> Figure:
+    """Return an empty figure that belongs to no window system."""
+    figure = Figure(figsize=(width_inches, height_inches))
+    FigureCanvasAgg(figure)
+    return figure
+
+
+def save_figure(figure: Figure, path: Path) -> None:
+    """Write `path` with the suffixes pdf and png, without dates or versions.
+
+    Parameters
+    ----------
+    figure : Figure
+    path : Path
+        Without suffix.
+    """
+    figure.savefig(
+        path.with_suffix(".pdf"), metadata={"CreationDate": None, "Creator": None, "Producer": None}
+    )
+    figure.savefig(path.with_suffix(".png"), dpi=PNG_DPI, metadata={"Software": None})
+
+
+def relation_look(index: int) -> dict[str, Any]:
+    """Colour and line style of the relation with this place in the recipe."""
+    return {
+        "color": _COLOURS[index % len(_COLOURS)],
+        "linestyle": _LINES[index // len(_COLOURS) % len(_LINES)]
+        if index >= len(_COLOURS)
+        else _LINES[index],
+    }
+
+
+def parameter_text(parameters: Mapping[str, float]) -> str:
+    """Write parameters as ``clumping = 5, anchor_oh = 8.69``."""
+    return ", ".join(f"{name} = {value:g}" for name, value in parameters.items())
+
+
+def law_name(label: str, parameters: Mapping[str, float]) -> str:
+    """Write a relation with its parameters, if it has any."""
+    return f"{label} ({parameter_text(parameters)})" if parameters else label
+
+
+def measured(value: float | None, error: float | None, *, sign: bool = False) -> str:
+    """Write a number with its error to the error's first two digits.
+
+    Parameters
+    ----------
+    value, error : float or None
+        None, as the summary has it, where the number does not exist.
+    sign : bool
+        Whether a plus sign is written.
+
+    Examples
+    --------
+    >>> measured(0.86974, 0.00778)
+    '0.8697 ± 0.0078'
+    >>> measured(0.171, None, sign=True)
+    '+0.171'
+    >>> measured(None, None)
+    'not defined'
+    """
+    if value is None:
+        return "not defined"
+    plus = "+" if sign else ""
+    if not error:
+        return f"{value:{plus}.3g}"
+    digits = max(0, 1 - math.floor(math.log10(error)))
+    return f"{value:{plus}.{digits}f} ± {error:.{digits}f}"
+
+
+def nice_below(value: float) -> float:
+    """Find the largest of 1, 2, 5, 10, ... that does not exceed a positive value."""
+    decade = 10.0 ** math.floor(math.log10(value))
+    return max(step for step in (1.0, 2.0, 5.0) if step * decade <= value * (1 + 1e-9)) * decade
+
+
+def angle_on_page(axes: Axes, start: tuple[float, float], end: tuple[float, float]) -> float:
+    """Angle on the page [deg] of the step between two points of the data, limits being set."""
+    (x0, y0), (x1, y1) = axes.transData.transform(np.array([start, end]))
+    return math.degrees(math.atan2(y1 - y0, x1 - x0))

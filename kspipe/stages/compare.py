@@ -1,0 +1,185 @@
+"""Compare: from surface densities to residual maps, the pixel table and the summary."""
+
+from __future__ import annotations
+
+import logging
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kspipe import __version__
+from kspipe.comparison import (
+    Residuals,
+    headline,
+    independent_samples,
+    predict_residuals,
+)
+from kspipe.core.errors import Fault, OutputError
+from kspipe.core.progress import Progress, no_progress
+from kspipe.core.seeds import generator
+from kspipe.kernels.geometry import beam_axes
+from kspipe.maps.product import read_matched, write_product
+from kspipe.maps.skymap import Flag
+from kspipe.matching import Grid
+from kspipe.recipe import Recipe, load_recipe
+from kspipe.relations import LAWS
+from kspipe.stages.folder import ProductFolder
+from kspipe.stages.pixels import pixel_table, write_pixels
+from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
+from kspipe.stages.summary import make_summary, summary_text
+from kspipe.stages.surface import surfaces_of
+
+__all__ = ["compare_relations"]
+
+log = logging.getLogger(__name__)
+
+SFR_UNIT = "solMass yr-1 kpc-2"
+
+
+def compare_relations(
+    out: Path,
+    *,
+    overwrite: bool = False,
+    memory: InMemory | None = None,
+    progress: Progress = no_progress,
+) -> bool:
+    """Hold every relation of a reduced recipe against the galaxy.
+
+    Parameters
+    ----------
+    out : Path
+        Folder of a reduction; ``residuals/``, ``pixels.ecsv`` and ``summary.json`` are written.
+    overwrite : bool
+        Whether an older comparison may be replaced.
+    memory : mapping, optional
+        As given to the reduction.
+    progress : Progress
+
+    Returns
+    -------
+    bool
+        False where everything was there already and was reused.
+
+    Raises
+    ------
+    OutputError
+        If the folder holds no reduction, or one made from other inputs.
+    """
+    folder = ProductFolder.open(out)
+    plan = _reduced_plan(folder, memory)
+    recipe, grid = plan.recipe, plan.grid
+    print_ = compare_print(recipe, folder.stages["convert"]["fingerprint"])
+    if not folder.check({"compare": print_}, overwrite=overwrite):
+        log.info("compare: nothing changed, %s is reused", out)
+        return False
+    matched = {name: read_matched(out / "matched" / f"{name}.fits") for name in recipe.maps}
+    disc = surfaces_of(recipe, matched, grid)
+    gas, sfr = disc.surfaces["sigma_gas"], disc.surfaces["sigma_sfr"]
+    used = np.isfinite(gas.value) & np.isfinite(sfr.value)
+    if not used.any():
+        raise OutputError(
+            Fault(str(out), "no pixel is covered by all maps", "check coverage in DIR/matched")
+        )
+    beam = next(iter(matched.values())).beam_arcsec2
+    independent = independent_samples(
+        grid.shape, grid.centre_pixel, beam_axes(beam)[0] / grid.pixel_arcsec
+    )
+    residuals, headlines = {}, {}
+    names = list(recipe.relations)
+    for done, name in enumerate(names):
+        progress(done, len(names), f"comparing with {name}")
+        table = recipe.relations[name]
+        residuals[name] = predict_residuals(
+            gas, sfr, disc.oh, disc.flags, table.law, table.parameters
+        )
+        rng = generator(recipe.seed, "compare", name)
+        headlines[name] = headline(
+            residuals[name], sfr, used, independent, grid.pixel_arcsec**2, rng
+        )
+    progress(len(names), len(names), "compared")
+    drop = tuple(stage for stage in folder.stages if stage == "figures")
+    with folder.publish({"compare": print_}, drop=drop) as staging:
+        (staging / "residuals").mkdir()
+        for name in names:
+            _write_residuals(
+                staging / "residuals" / f"{name}.fits", recipe, name, residuals, beam, grid
+            )
+        meta = {"galaxy": recipe.galaxy.name, "kspipe": __version__, "flags": Flag.meanings()}
+        write_pixels(
+            pixel_table(disc, residuals, used, independent, grid, meta), staging / "pixels.ecsv"
+        )
+        summary = make_summary(plan, disc, headlines, residuals, used, independent, matched)
+        (staging / "summary.json").write_text(summary_text(summary), encoding="utf-8")
+    return True
+
+
+def _reduced_plan(folder: ProductFolder, memory: InMemory | None) -> Plan:
+    """Plan DIR/recipe.toml again and refuse a reduction that was made from something else."""
+    out = folder.path
+    if "convert" not in folder.stages or not (out / "recipe.toml").is_file():
+        raise OutputError(
+            Fault(str(out), "holds no reduction", "run: kspipe reduce RECIPE --out DIR")
+        )
+    recipe = load_recipe(out / "recipe.toml", in_memory=frozenset(memory or ()))
+    plan = make_plan(recipe, memory)
+    stale = [
+        stage
+        for stage, print_ in plan.prints.items()
+        if folder.stages.get(stage, {}).get("fingerprint") != print_
+    ]
+    touched = [
+        stage
+        for stage in plan.prints
+        if stage not in stale and not _untouched(folder, stage, plan.prints[stage])
+    ]
+    if stale or touched:
+        what = (
+            f"the reduction is stale: inputs, recipe or version changed since ({', '.join(stale)})"
+            if stale
+            else f"files of the reduction were changed by hand ({', '.join(touched)})"
+        )
+        raise OutputError(
+            Fault(str(out), what, "run again: kspipe reduce RECIPE --out DIR --overwrite")
+        )
+    return plan
+
+
+def _untouched(folder: ProductFolder, stage: str, print_: str) -> bool:
+    """Whether the products of a stage are as written; the recipe's relations may be edited."""
+    record = folder.stages[stage]
+    without_recipe = {k: v for k, v in record["outputs"].items() if k != "recipe.toml"}
+    probe = ProductFolder(folder.path, {stage: {**record, "outputs": without_recipe}})
+    return probe.is_current(stage, print_)
+
+
+def _write_residuals(
+    path: Path,
+    recipe: Recipe,
+    name: str,
+    residuals: dict[str, Residuals],
+    beam: NDArray[np.float64],
+    grid: Grid,
+) -> None:
+    r, table = residuals[name], recipe.relations[name]
+    law = LAWS.get(table.law)
+    write_product(
+        path,
+        r.ratio_dex,
+        "dex",
+        grid.wcs,
+        beam,
+        extensions={
+            "PREDICTED": (r.predicted, SFR_UNIT),
+            "PREDICTED_ERROR": (r.predicted_error, SFR_UNIT),
+            "DIFFERENCE": (r.difference, SFR_UNIT),
+            "NORMALISED": (r.normalised, ""),
+            "FLAGS": (r.flags, ""),
+        },
+        history=[
+            f"{law.key} ({law.cite}, {law.where}): {law.formula}",
+            f"parameters: {', '.join(f'{k} = {v:g}' for k, v in table.parameters.items())}",
+            f"primary image: log10(observed / predicted); a {law.statistic} is predicted",
+            f"predicted error: random; integrated over the noise in {r.n_integrated} pixels",
+        ],
+    )

@@ -1,0 +1,151 @@
+"""The summary of a comparison: totals, flags, headline numbers, sources."""
+
+from __future__ import annotations
+
+import json
+import math
+from dataclasses import asdict
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kspipe import __version__
+from kspipe.comparison import Headline, Residuals, independent_beams
+from kspipe.core.citations import cite
+from kspipe.kernels.geometry import beam_axes
+from kspipe.kernels.noise import sum_covariance
+from kspipe.maps.skymap import Flag, SkyMap
+from kspipe.matching import Grid
+from kspipe.recipe import Recipe
+from kspipe.relations import LAWS
+from kspipe.stages.plan import Plan, records_of
+from kspipe.stages.surface import Disc
+
+__all__ = ["make_summary", "summary_text"]
+
+
+def make_summary(
+    plan: Plan,
+    disc: Disc,
+    headlines: dict[str, Headline],
+    residuals: dict[str, Residuals],
+    used: NDArray[np.bool_],
+    independent: NDArray[np.bool_],
+    matched: dict[str, SkyMap],
+) -> dict[str, Any]:
+    """Sum up a comparison as nested plain values.
+
+    Parameters
+    ----------
+    plan : Plan
+    disc : Disc
+    headlines, residuals : dict
+        By the recipe's name of the relation.
+    used, independent : (ny, nx) bool array
+        Covered pixels, and the lattice of independent samples.
+    matched : dict of str to SkyMap
+    """
+    recipe, grid = plan.recipe, plan.grid
+    beam = next(iter(matched.values())).beam_arcsec2
+    pixel_area = grid.pixel_arcsec**2
+    flags = np.bitwise_or.reduce([disc.flags, *(r.flags for r in residuals.values())])
+    laws = [LAWS.get(table.law) for table in recipe.relations.values()]
+    cited = sorted({record.cite for record in [*records_of(recipe), *laws]})
+    return {
+        "kspipe": __version__,
+        "galaxy": recipe.galaxy.name,
+        "beam_arcsec": beam_axes(beam)[0],
+        "beam_pc": beam_axes(beam)[0] * recipe.galaxy.pc_per_arcsec,
+        "pixel_arcsec": grid.pixel_arcsec,
+        "n_pixels": int(used.sum()),
+        "n_independent": independent_beams(int(used.sum()), pixel_area, beam),
+        "n_samples": int((used & independent).sum()),
+        "gas": recipe.gas if isinstance(recipe.gas, str) else "atomic and molecular",
+        "totals": _totals(recipe, disc, used, grid),
+        "flags": {
+            name: int(np.sum((flags[used] & bit) != 0)) for name, bit in Flag.meanings().items()
+        },
+        "relations": {
+            name: {
+                "law": recipe.relations[name].law,
+                "parameters": recipe.relations[name].parameters,
+                "predicts": LAWS.get(recipe.relations[name].law).statistic,
+                **asdict(result),
+            }
+            for name, result in headlines.items()
+        },
+        "maps": {name: {"history": list(sky.history)} for name, sky in matched.items()},
+        "sources": {key: str(cite(key)) for key in cited},
+    }
+
+
+def _totals(
+    recipe: Recipe, disc: Disc, used: NDArray[np.bool_], grid: Grid
+) -> dict[str, dict[str, float | str]]:
+    """Sums over the covered sky, with random and calibration errors."""
+    areas = grid.areas_arcsec2()
+    pc2 = recipe.galaxy.pc_per_arcsec**2 / recipe.galaxy.cos_i
+    # Face-on surface densities times the area in the plane of the disc.
+    weights = {"sigma_atom": pc2, "sigma_mol": pc2, "sigma_gas": pc2, "sigma_sfr": pc2 * 1e-6}
+    names = {
+        "sigma_atom": ("mass_atom", "Msun"),
+        "sigma_mol": ("mass_mol", "Msun"),
+        "sigma_gas": ("mass_gas", "Msun"),
+        "sigma_sfr": ("sfr", "Msun/yr"),
+    }
+    totals: dict[str, dict[str, float | str]] = {}
+    for product, (name, unit) in names.items():
+        if product not in disc.surfaces:
+            continue
+        surface = disc.surfaces[product]
+        pixel = float(np.mean(areas)) * weights[product]
+        random = math.sqrt(
+            max(sum_covariance(surface.noise, surface.noise, used, grid.pixel_arcsec**2), 0.0)
+        )
+        totals[name] = {
+            "value": float(np.sum((surface.value * areas)[used])) * weights[product],
+            "random_error": random * pixel,
+            "calibration_error": _common_error(disc, product, used, areas) * weights[product],
+            "unit": unit,
+        }
+    total = {name: float(entry["value"]) for name, entry in totals.items()}
+    if "mass_mol" in total:
+        totals["f_mol"] = {"value": _over(total["mass_mol"], total["mass_gas"]), "unit": ""}
+        totals["t_dep"] = {"value": _over(total["mass_mol"], total["sfr"]) / 1e9, "unit": "Gyr"}
+    totals["t_dep_gas"] = {"value": _over(total["mass_gas"], total["sfr"]) / 1e9, "unit": "Gyr"}
+    return totals
+
+
+def _over(top: float, bottom: float) -> float:
+    return top / bottom if bottom > 0 else math.nan
+
+
+def _common_error(
+    disc: Disc, product: str, used: NDArray[np.bool_], areas: NDArray[np.float64]
+) -> float:
+    """Error of a sum from flux scales and zero levels, which all pixels of a map share."""
+    variance = 0.0
+    for tracer, slope in disc.surfaces[product].slopes.items():
+        sky = disc.intensity[tracer]
+        per_scale = float(np.sum((slope * sky.value * areas)[used]))
+        per_level = float(np.sum((slope * areas)[used]))
+        variance += (sky.common.calibration * per_scale) ** 2
+        variance += (sky.common.pedestal * per_level) ** 2
+    return math.sqrt(variance)
+
+
+def summary_text(summary: dict[str, Any]) -> str:
+    """Write a summary as JSON; what is not a number becomes null."""
+    return json.dumps(_plain(summary), indent=1) + "\n"
+
+
+def _plain(value: Any) -> Any:
+    """Make a structure fit for JSON: no NaN, no numpy numbers."""
+    if isinstance(value, dict):
+        return {str(k): _plain(v) for k, v in value.items()}
+    if isinstance(value, list | tuple):
+        return [_plain(v) for v in value]
+    if isinstance(value, float | np.floating):
+        return float(value) if math.isfinite(value) else None
+    return value
