@@ -81,14 +81,15 @@ def make_hdu(
     return hdu
 
 
-def make_request(file: Path | str = "map.fits", **changes: Any) -> MapRequest:
+def make_request(file: Path | str = "map.fits", /, **changes: Any) -> MapRequest:
     """Request for a map called ``probe`` with a stated noise of one stored unit."""
     given: dict[str, Any] = {"noise": NoiseRequest("value", value=1.0), "tracer": "HI"}
     return MapRequest(name="probe", file=Path(file), **(given | changes))
 
 
 def open_source(
-    hdu: fits.PrimaryHDU | Path,
+    image: fits.PrimaryHDU | Path,
+    /,
     *,
     noise_hdu: fits.PrimaryHDU | None = None,
     velocity_kms: float | None = None,
@@ -97,19 +98,19 @@ def open_source(
     **changes: Any,
 ) -> MapSource:
     """Open a file, or an HDU in memory."""
-    in_file = isinstance(hdu, Path)
+    in_file = isinstance(image, Path)
     return MapSource.open(
-        make_request(hdu if in_file else "map.fits", **changes),
+        make_request(image if in_file else "map.fits", **changes),
         centre_deg=centre,
         velocity_kms=velocity_kms,
         velocity_convention=convention,
-        memory=None if in_file else (hdu, noise_hdu),
+        memory=None if in_file else (image, noise_hdu),
     )
 
 
-def read_map(hdu: fits.PrimaryHDU | Path, **changes: Any) -> SkyMap:
+def read_map(image: fits.PrimaryHDU | Path, /, **changes: Any) -> SkyMap:
     """Open and load."""
-    return load_map(open_source(hdu, **changes))
+    return load_map(open_source(image, **changes))
 
 
 def make_sky(

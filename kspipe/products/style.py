@@ -107,12 +107,9 @@ def save_figure(figure: Figure, path: Path) -> None:
 
 def relation_look(index: int) -> dict[str, Any]:
     """Colour and line style of the relation with this place in the recipe."""
-    return {
-        "color": _COLOURS[index % len(_COLOURS)],
-        "linestyle": _LINES[index // len(_COLOURS) % len(_LINES)]
-        if index >= len(_COLOURS)
-        else _LINES[index],
-    }
+    # The shift after each round keeps pairs of colour and line apart up to the sixteenth.
+    line = index + index // len(_COLOURS)
+    return {"color": _COLOURS[index % len(_COLOURS)], "linestyle": _LINES[line % len(_LINES)]}
 
 
 def parameter_text(parameters: Mapping[str, float]) -> str:
