@@ -4,18 +4,25 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Final
 
 import numpy as np
 import scipy.fft
 from numpy.typing import NDArray
 
-__all__ = ["Padded", "correlated_noise_gain", "gaussian_smooth", "white_noise_gain"]
+__all__ = [
+    "Padded",
+    "correlated_noise_gain",
+    "gaussian_reach",
+    "gaussian_smooth",
+    "white_noise_gain",
+]
 
 Array = NDArray[np.float64]
 
-# A Gaussian holds 1 - 6e-7 of its weight within this many sigma.
-REACH_SIGMA: Final = 5.0
+# A Gaussian falls to 1.5e-8 of its peak within this many sigma.
+REACH_SIGMA: Final = 6.0
 
 
 @dataclass(frozen=True)
@@ -33,12 +40,21 @@ class Padded:
     margin: int
 
 
-def _transfer(shape: tuple[int, int], covariance_pix2: Array) -> Array:
-    """Fourier transform of a unit Gaussian on the half plane of a real FFT."""
+@lru_cache(maxsize=4)
+def _transfer(shape: tuple[int, int], cxx: float, cxy: float, cyy: float) -> Array:
+    """Fourier transform of a unit Gaussian on the half plane of a real FFT.
+
+    The tiles of one map share it, and it costs as much as the transform itself.
+    """
     ky = np.fft.fftfreq(shape[0])[:, None]
     kx = np.fft.rfftfreq(shape[1])[None, :]
-    (cxx, cxy), (_, cyy) = covariance_pix2
     return np.asarray(np.exp(-2.0 * math.pi**2 * (cxx * kx**2 + 2.0 * cxy * kx * ky + cyy * ky**2)))
+
+
+def gaussian_reach(covariance_pix2: Array) -> int:
+    """Pixels beyond which a Gaussian kernel holds nothing that counts."""
+    widest = math.sqrt(max(float(np.max(np.linalg.eigvalsh(covariance_pix2))), 0.0))
+    return math.ceil(REACH_SIGMA * widest)
 
 
 def gaussian_smooth(
@@ -66,7 +82,7 @@ def gaussian_smooth(
     The transfer function of a Gaussian of covariance C is exp(-2 pi^2 k^T C k); nothing is
     sampled on pixels, so a kernel narrower than a pixel is as exact as a wide one.
     """
-    reach = math.ceil(REACH_SIGMA * math.sqrt(float(np.max(np.linalg.eigvalsh(covariance_pix2)))))
+    reach = gaussian_reach(covariance_pix2)
     margin = max(reach, 2) if margin is None else margin
     if not np.any(covariance_pix2):
         return Padded(np.pad(array, margin), margin)
@@ -78,7 +94,8 @@ def gaussian_smooth(
         scipy.fft.next_fast_len(nx + room, real=True),
     )
     spectrum = scipy.fft.rfft2(array, s=shape, workers=workers)
-    spectrum *= _transfer(shape, covariance_pix2)
+    (cxx, cxy), (_, cyy) = np.asarray(covariance_pix2).tolist()
+    spectrum *= _transfer(shape, cxx, cxy, cyy)
     smooth = scipy.fft.irfft2(spectrum, s=shape, workers=workers, overwrite_x=True)
     rows = np.arange(-margin, ny + margin) % shape[0]
     columns = np.arange(-margin, nx + margin) % shape[1]

@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from kspipe.core.constants import C_KM_S, DEG_ARCSEC
 from kspipe.core.errors import BeamError, Fault, GridError
 from kspipe.core.tracers import Tracer
+from kspipe.kernels.coarse import evaluate_smoothly
 from kspipe.kernels.geometry import beam_covariance
 
 __all__ = [
@@ -24,6 +25,7 @@ __all__ = [
     "header_beam",
     "header_frequency_ghz",
     "observed_frequency_ghz",
+    "pixel_area_at",
     "pixel_areas_arcsec2",
     "pixel_jacobian",
     "sky_of_pixels",
@@ -136,16 +138,26 @@ def pixel_jacobian(wcs: WCS, x: float, y: float, *, icrs: bool = True) -> Array:
 
 
 def pixel_areas_arcsec2(wcs: WCS, shape: tuple[int, int]) -> Array:
-    """Area of each pixel from the local Jacobian [arcsec2].
+    """Area of each pixel from the local Jacobian [arcsec2], to a millionth."""
+    middle = float(pixel_area_at(wcs, np.array((shape[1] - 1) / 2), np.array((shape[0] - 1) / 2)))
+    tolerance = 1e-6 * middle if math.isfinite(middle) else 0.0
+    (areas,), _ = evaluate_smoothly(lambda x, y: (pixel_area_at(wcs, x, y),), shape, tolerance)
+    return areas
 
-    The pixel's corners are put on the unit sphere; the area is half the cross product of its
-    diagonals, exact to (pixel size)^2 in radians.
+
+def pixel_area_at(wcs: WCS, x: Array, y: Array) -> Array:
+    """Area of a pixel-sized square about each position [arcsec2].
+
+    Its corners are put on the unit sphere; the area is half the cross product of the diagonals,
+    exact to (pixel size)^2 in radians.
     """
-    ny, nx = shape
-    x, y = np.meshgrid(np.arange(nx + 1) - 0.5, np.arange(ny + 1) - 0.5)
-    lon, lat = np.radians(wcs.all_pix2world(x, y, 0))
-    corner = np.stack([np.cos(lat) * np.cos(lon), np.cos(lat) * np.sin(lon), np.sin(lat)], axis=-1)
-    cross = np.cross(corner[1:, 1:] - corner[:-1, :-1], corner[1:, :-1] - corner[:-1, 1:])
+
+    def corner(dx: float, dy: float) -> Array:
+        lon, lat = np.radians(wcs.all_pix2world(x + dx, y + dy, 0))
+        return np.stack([np.cos(lat) * np.cos(lon), np.cos(lat) * np.sin(lon), np.sin(lat)], -1)
+
+    h = 0.5
+    cross = np.cross(corner(h, h) - corner(-h, -h), corner(h, -h) - corner(-h, h))
     return np.asarray(0.5 * np.linalg.norm(cross, axis=-1) * (180.0 / math.pi * DEG_ARCSEC) ** 2)
 
 

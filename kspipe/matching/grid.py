@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Final
 
 import numpy as np
 from astropy.coordinates import SkyCoord
@@ -12,6 +13,7 @@ from astropy.wcs.utils import skycoord_to_pixel
 from numpy.typing import NDArray
 
 from kspipe.core.errors import Fault, GridError
+from kspipe.kernels.coarse import evaluate_smoothly
 from kspipe.kernels.geometry import position_offsets
 from kspipe.maps import MapSource
 from kspipe.maps.header import pixel_areas_arcsec2, pixel_jacobian, sky_of_pixels
@@ -19,6 +21,9 @@ from kspipe.maps.header import pixel_areas_arcsec2, pixel_jacobian, sky_of_pixel
 __all__ = ["Grid"]
 
 Array = NDArray[np.float64]
+
+# Splined coordinates farther off than this are refined, at last computed in full.
+COORDINATE_TOLERANCE_PIX: Final = 0.001
 
 
 @dataclass(frozen=True)
@@ -97,11 +102,26 @@ class Grid:
         """Sky offset per pixel step at the galaxy's centre."""
         return pixel_jacobian(self.wcs, *self.centre_pixel)
 
-    def pixels_in(self, wcs: WCS) -> tuple[Array, Array]:
-        """Positions of this grid's pixels on another map's pixels, (x, y), zero-based."""
-        lon, lat = self.sky()
-        x, y = skycoord_to_pixel(SkyCoord(lon, lat, unit="deg"), wcs, origin=0, mode="all")
-        return np.asarray(x, dtype=float), np.asarray(y, dtype=float)
+    def pixels_in(self, wcs: WCS) -> tuple[Array, Array, float]:
+        """Positions of this grid's pixels on another map's pixels.
+
+        Returns
+        -------
+        x, y : (ny, nx) float64 array
+            Zero-based.
+        error_pix : float
+            Largest error of the splined coordinates, below 0.001 pixel.
+        """
+        (x, y), error = evaluate_smoothly(
+            lambda x, y: self.positions_in(wcs, x, y), self.shape, COORDINATE_TOLERANCE_PIX
+        )
+        return x, y, error
+
+    def positions_in(self, wcs: WCS, x: Array, y: Array) -> tuple[Array, Array]:
+        """Positions on this grid as positions on another map's pixels, in full."""
+        lon, lat = self.wcs.all_pix2world(x, y, 0)
+        there = skycoord_to_pixel(SkyCoord(lon, lat, unit="deg"), wcs, origin=0, mode="all")
+        return np.asarray(there[0], dtype=float), np.asarray(there[1], dtype=float)
 
 
 def _tangent(centre_deg: tuple[float, float], pixel_arcsec: float) -> WCS:

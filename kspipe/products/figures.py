@@ -12,6 +12,7 @@ from matplotlib.figure import Figure
 from kspipe import __version__
 from kspipe.core.errors import Fault, OutputError
 from kspipe.core.progress import Progress, no_progress
+from kspipe.products.map_figures import draw_surface_densities
 from kspipe.products.read import Products, read_products, read_recipe
 from kspipe.products.relation_figure import draw_star_formation_law
 from kspipe.products.style import figure_style, save_figure
@@ -70,6 +71,7 @@ def _drawings(products: Products) -> dict[str, Callable[[], Figure]]:
     """What to draw, by file name."""
     return {
         "star_formation_law": partial(draw_star_formation_law, products),
+        "surface_densities": partial(draw_surface_densities, products),
     }
 
 

@@ -108,8 +108,8 @@ class Products:
     def size_text(self) -> str:
         """Pixels and independent values, side by side."""
         return (
-            f"N_pixels = {self.summary['n_pixels']}, "
-            f"N_independent = {self.summary['n_independent']:.0f}"
+            rf"N$_\mathrm{{pixels}}$ = {self.summary['n_pixels']}, "
+            rf"N$_\mathrm{{independent}}$ = {self.summary['n_independent']:.0f}"
         )
 
 

@@ -42,7 +42,7 @@ LEAST_BEAMS: Final = 3.0
 # The frame begins at this fraction of the random error: what lies below is noise.
 FRAME_LOW: Final = 0.3
 FRAME_HIGH: Final = 2.5
-GREY: Final = "0.45"
+FAINT: Final = "0.72"
 
 
 def draw_star_formation_law(products: Products) -> Figure:
@@ -77,7 +77,7 @@ def draw_star_formation_law(products: Products) -> Figure:
         handlelength=2.4,
         labelspacing=0.6,
     )
-    figure.text(0.667, 0.105, _notes(products), va="bottom", fontsize=8, linespacing=1.35)
+    figure.text(0.672, 0.105, _notes(products), va="bottom", fontsize=8, linespacing=1.35)
     return figure
 
 
@@ -109,7 +109,8 @@ def _draw_depletion_times(axes: Axes) -> None:
         # 1 Msun/pc2 per Gyr is 1e-3 Msun/yr/kpc2.
         rate = 1e-3 / gyr
         axes.plot([x0, x1], [rate * x0, rate * x1], color="0.6", lw=0.5, ls=(0, (6, 3)), zorder=1)
-        x = min(x1, y1 / rate) / 1.12
+        # Inside the right and the upper edge, with room for the letters.
+        x = min(_inside(x0, x1, 0.96), _inside(y0, y1, 0.95) / rate)
         if rate * x < y0 or x < x0:
             continue
         axes.annotate(
@@ -127,6 +128,11 @@ def _draw_depletion_times(axes: Axes) -> None:
         )
 
 
+def _inside(low: float, high: float, share: float) -> float:
+    """Position on a logarithmic axis by its share of the length."""
+    return low * (high / low) ** share
+
+
 def _draw_pixels(axes: Axes, products: Products) -> None:
     """All covered positive pixels as a light density."""
     gas, sfr = _pair(products)
@@ -137,13 +143,13 @@ def _draw_pixels(axes: Axes, products: Products) -> None:
     axes.hexbin(
         gas.value[shown],
         sfr.value[shown],
-        gridsize=(52, 30),
+        gridsize=(78, 45),
         extent=tuple(math.log10(edge) for edge in (x0, x1, y0, y1)),  # type: ignore[arg-type]
         xscale="log",
         yscale="log",
         bins="log",
         mincnt=1,
-        vmax=400,
+        vmax=200,
         cmap="Greys",
         alpha=0.55,
         linewidths=0.1,
@@ -185,7 +191,7 @@ def _label_curve(
 ) -> None:
     """Write along a curve, low in the frame where the metallicities lie apart."""
     y0, y1 = axes.get_ylim()
-    height = y0 * (y1 / y0) ** (0.05 + 0.09 * index)
+    height = _inside(y0, y1, 0.05 + 0.09 * index)
     above = np.flatnonzero(y > height)
     if not above.size or above[0] == 0 or above[0] + 6 >= x.size:
         return
@@ -209,9 +215,10 @@ def _draw_samples(axes: Axes, products: Products) -> None:
     gas, sfr = _pair(products)
     shown = products.covered & products.independent & (gas.value > 0) & (sfr.value > 0)
     floor = (axes.get_xlim()[0] / 100, axes.get_ylim()[0] / 100)
-    for chosen, shade, alpha, width in (
-        (shown & products.is_faint, "0.5", 0.35, 0.4),
-        (shown & ~products.is_faint, "black", 1.0, 0.6),
+    # Faint samples, with bars across half the frame, stay below the tracks.
+    for chosen, shade, width, layer in (
+        (shown & products.is_faint, FAINT, 0.35, 2.5),
+        (shown & ~products.is_faint, "black", 0.6, 6.0),
     ):
         bars = [
             np.array([np.minimum(d.error[chosen], d.value[chosen] - low), d.error[chosen]])
@@ -228,8 +235,7 @@ def _draw_samples(axes: Axes, products: Products) -> None:
             color=shade,
             ecolor=shade,
             elinewidth=width,
-            alpha=alpha,
-            zorder=6,
+            zorder=layer,
         )
 
 
@@ -247,7 +253,11 @@ def _draw_median(axes: Axes, products: Products) -> None:
         least=math.ceil(LEAST_BEAMS * per_beam),
     )
     above = running.y[0] > 0
-    axes.plot(10 ** running.x[above], running.y[0][above], **_MEDIAN, zorder=7)
+    x, y = 10 ** running.x[above], running.y[0][above]
+    axes.plot(x, y, **_MEDIAN, zorder=7)
+    # Bins chosen on noisy gas mix with their neighbours: told apart by a grey filling.
+    noisy = x < products.recipe.comparison.low_snr * np.median(gas.error[products.covered])
+    axes.plot(x[noisy], y[noisy], **{**_MEDIAN, "lw": 0, "mfc": FAINT}, zorder=7)
 
 
 _MEDIAN: Final[dict[str, Any]] = {
@@ -265,8 +275,9 @@ def _legend(products: Products) -> list[Any]:
     handles: list[Any] = [
         Patch(color="0.75", label="all covered pixels"),
         Line2D([], [], marker="o", ms=3, color="black", lw=0.6, label="independent samples"),
-        Line2D([], [], marker="o", ms=3, color="0.75", lw=0.6, label=f"the same, S/N < {snr}"),
-        Line2D([], [], **_MEDIAN, label="running median of all,\nnon-positive included"),
+        Line2D([], [], marker="o", ms=3, color=FAINT, lw=0.6, label=f"the same, S/N < {snr}"),
+        Line2D([], [], **_MEDIAN, label=f"running median of all pixels,\nnon-positive {SIGMA['sigma_sfr']} included\n"
+            f"(grey: {SIGMA['sigma_gas']} below S/N = {snr})"),
         Line2D([], [], color="0.6", lw=0.5, ls=(0, (6, 3)), label="constant gas depletion time"),
     ]
     for index, (name, table) in enumerate(products.recipe.relations.items()):
@@ -281,13 +292,14 @@ def _legend(products: Products) -> list[Any]:
 def _notes(products: Products) -> str:
     flags, n = products.summary["flags"], products.summary["n_pixels"]
     gas, sfr = SIGMA["sigma_gas"], SIGMA["sigma_sfr"]
+    snr = f"{products.recipe.comparison.low_snr:g}"
     lines = []
     if products.recipe.relations:
         z = _significant_z_prime(products)
         lines += [
-            f"Band: Z′ = {z.min():.2f} to {z.max():.2f} of the galaxy,",
-            f"thick line: its median, {np.median(z):.2f}",
-            f"(Z′ = 1 at 12 + log(O/H) = {OH_SOLAR:g}).",
+            f"Band: Z′ = {z.min():.2f} to {z.max():.2f}, the galaxy's own",
+            f"where S/N ≥ {snr}; thick line: its median, {np.median(z):.2f}",
+            f"(Z′ = 1 is 12 + log(O/H) = {OH_SOLAR:g}).",
         ]
     lines += [
         f"{flags['nonpositive_sfr']} of {n} pixels have {sfr} ≤ 0,",

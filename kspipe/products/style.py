@@ -23,6 +23,7 @@ __all__ = [
     "WIDE_INCHES",
     "angle_on_page",
     "figure_style",
+    "in_figure",
     "law_name",
     "measured",
     "new_figure",
@@ -88,6 +89,14 @@ def new_figure(height_inches: float, width_inches: float = WIDE_INCHES) -> Figur
     figure = Figure(figsize=(width_inches, height_inches))
     FigureCanvasAgg(figure)
     return figure
+
+
+def in_figure(
+    figure: Figure, left: float, bottom: float, width: float, height: float
+) -> tuple[float, float, float, float]:
+    """Turn a box in inches into fractions of the figure."""
+    across, up = figure.get_size_inches()
+    return left / across, bottom / up, width / across, height / up
 
 
 def save_figure(figure: Figure, path: Path) -> None:

@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kspipe.core.progress import Progress, no_progress
+from kspipe.kernels.coarse import evaluate_smoothly
 from kspipe.kernels.geometry import disc_radius, position_offsets
 from kspipe.maps.header import sky_of_pixels
 from kspipe.maps.product import read_matched, write_matched, write_product
@@ -134,8 +135,12 @@ def _outside_galaxy(sky: SkyMap, recipe: Recipe) -> NDArray[np.bool_]:
     galaxy = recipe.galaxy
     if galaxy.r25 is None:
         return np.ones(sky.value.shape, dtype=bool)
-    y, x = np.indices(sky.value.shape, dtype=float)
-    east, north = position_offsets(*sky_of_pixels(sky.wcs, x, y), *galaxy.centre.degrees)
+
+    def offsets(x: NDArray[np.float64], y: NDArray[np.float64]) -> tuple[NDArray[np.float64], ...]:
+        return position_offsets(*sky_of_pixels(sky.wcs, x, y), *galaxy.centre.degrees)
+
+    # A tenth of an arcsecond is nothing at 1.5 r25.
+    (east, north), _ = evaluate_smoothly(offsets, sky.value.shape, 0.1)
     radius = disc_radius(
         east,
         north,

@@ -164,9 +164,11 @@ def test_symmetries_of_the_gain(x: float, y: float, a: float, ratio: float) -> N
 
     value = at(x, y)
     assert 0.5 < value <= 1.0 + 1e-9
-    # Mirrors, whole steps and exchanged axes.
-    assert at(-x, y) == pytest.approx(value, rel=1e-9)
-    assert at(x, -y) == pytest.approx(value, rel=1e-9)
+    # Mirrors, whole steps and exchanged axes. The spline's weights may be cut at some pixels, which
+    # a mirror sees: at eight pixels it is (2 - sqrt 3)^16 of the squared weights, 1e-9, and up to
+    # 1e-7 where noise is anticorrelated.
+    assert at(-x, y) == pytest.approx(value, rel=1e-6)
+    assert at(x, -y) == pytest.approx(value, rel=1e-6)
     assert at(x + 3, y - 2) == pytest.approx(value, rel=1e-9)
     assert at(y, x, covariance[::-1, ::-1]) == pytest.approx(value, rel=1e-9)
 

@@ -135,13 +135,10 @@ def test_integer_blank_is_not_observed(tmp_path) -> None:
     expected = np.where(stored == -32768, np.nan, stored * 0.5 + 10.0)
     file = tmp_path / "blank.fits"
     make_hdu(stored, cards={"BLANK": -32768}).writeto(file)
-    # Scaling cards typed into the bytes of the header, so that no library has scaled the data.
-    raw = file.read_bytes()
-    for key, number in (("BSCALE", 0.5), ("BZERO", 10.0)):
-        card = fits.Card(key, number).image.encode()
-        raw = raw.replace(b"END" + b" " * 77, card + b"END" + b" " * 77, 1)
-        raw = raw[:2880].rstrip(b" ").ljust(2880) + raw[2880 + 80 :]
-    file.write_bytes(raw)
+    # Set on the file, where the pixels stay as stored.
+    fits.setval(file, "BSCALE", value=0.5)
+    fits.setval(file, "BZERO", value=10.0)
+    assert fits.getval(file, "BITPIX") == 16
     assert_maps_close(read_map(file).value, expected, rtol=0)
 
 

@@ -1,0 +1,154 @@
+"""Maps of the surface densities side by side."""
+
+from __future__ import annotations
+
+import math
+from typing import Any, Final
+
+import numpy as np
+from matplotlib.colorbar import Colorbar
+from matplotlib.colors import AsinhNorm
+from matplotlib.figure import Figure
+from numpy.typing import NDArray
+
+from kspipe.products.read import Products
+from kspipe.products.sky import add_landmarks, add_sky_axes, fitted_inches
+from kspipe.products.style import GAS_UNIT, SFR_UNIT, SIGMA, WIDE_INCHES, in_figure, new_figure
+
+__all__ = ["draw_surface_densities"]
+
+Array = NDArray[np.float64]
+
+# Light where faint and evenly darker to the bright end, in colour and in grey.
+COLOUR_MAP: Final = "magma_r"
+NO_DATA: Final = "0.82"
+CONTOUR_SNR: Final = 3.0
+# Colours are linear up to this many sigma and logarithmic beyond; they begin as far below zero.
+LINEAR_SIGMA: Final = 3.0
+# Ticks of a colour bar are at least this fraction of its length apart.
+TICK_SPACING: Final = 0.09
+
+# The layout in inches.
+LEFT: Final = 0.78
+PANEL: Final = 2.42
+COLUMN: Final = 3.34
+TITLE: Final = 0.24
+BOTTOM: Final = 0.42
+TOP: Final = 0.32
+
+_TITLES: Final = {
+    "sigma_atom": "Atomic gas",
+    "sigma_mol": "Molecular gas",
+    "sigma_gas": "Atomic + molecular gas",
+    "sigma_sfr": "Star formation",
+}
+
+
+def draw_surface_densities(products: Products) -> Figure:
+    """Draw one map of each surface density.
+
+    Parameters
+    ----------
+    products : Products
+
+    Returns
+    -------
+    Figure
+        All gas maps share one range of colours. Without molecular gas the total is the atomic
+        gas, and is drawn once.
+    """
+    titles = dict(_TITLES)
+    if "sigma_mol" not in products.densities:
+        del titles["sigma_mol"], titles["sigma_gas"]
+        titles["sigma_atom"] = "Atomic gas, the only one"
+    shape = (products.covered.shape[0], products.covered.shape[1])
+    width, height = fitted_inches(PANEL, 1.5 * PANEL, shape)
+    rows = math.ceil(len(titles) / 2)
+    figure = new_figure(BOTTOM + rows * (height + TITLE) + TOP)
+    for place, (name, title) in enumerate(titles.items()):
+        row, column = divmod(place, 2)
+        left, bottom = LEFT + COLUMN * column, BOTTOM + (rows - 1 - row) * (height + TITLE)
+        axes = add_sky_axes(
+            figure,
+            in_figure(figure, left, bottom, width, height),
+            products,
+            ra=row == rows - 1,
+            dec=column == 0,
+        )
+        bar = figure.add_axes(in_figure(figure, left + width + 0.06, bottom, 0.1, height))
+        _draw_map(figure, axes, bar, products, name, title)
+    _write_head(figure, products)
+    return figure
+
+
+def _write_head(figure: Figure, products: Products) -> None:
+    top = 1 - 0.06 / figure.get_figheight()
+    figure.text(LEFT / WIDE_INCHES, top, products.recipe.galaxy.name, va="top", size=11, weight="bold")
+    marks = [f"contour S/N = {CONTOUR_SNR:g}", f"ellipse: beam, {products.beam_text}"]
+    if products.recipe.galaxy.r25 is not None:
+        marks.insert(1, "dashed: r$_{25}$")
+    if not products.covered.all():
+        marks.append("grey: not observed")
+    figure.text(0.985, top, ";  ".join(marks), va="top", ha="right", size=8)
+
+
+def _draw_map(
+    figure: Figure, axes: Any, bar: Any, products: Products, name: str, title: str
+) -> None:
+    density = products.densities[name]
+    low, linear, high = _colour_range(products, name)
+    # Units with a power of a thousand in front keep the ticks short.
+    power = 3 * math.floor(math.log10(high) / 3) if name == "sigma_sfr" else 0
+    scale = 10.0**power
+    image = axes.imshow(
+        density.value / scale,
+        norm=AsinhNorm(linear / scale, low / scale, high / scale),
+        cmap=COLOUR_MAP,
+        interpolation="nearest",
+        zorder=1,
+    )
+    axes.set_facecolor(NO_DATA)
+    _draw_contour(axes, density.snr)
+    add_landmarks(axes, products)
+    _finish_bar(figure.colorbar(image, cax=bar, extend="min"))
+    unit = SFR_UNIT if name == "sigma_sfr" else GAS_UNIT
+    factor = f"10$^{{{power}}}$ " if power else ""
+    axes.set_title(f"{title}, {SIGMA[name]} ({factor}{unit})", pad=3)
+
+
+def _colour_range(products: Products, name: str) -> tuple[float, float, float]:
+    """Lower end, end of the linear part, upper end; the same for every phase of the gas."""
+    shown = products.densities["sigma_sfr" if name == "sigma_sfr" else "sigma_gas"]
+    linear = LINEAR_SIGMA * float(np.median(shown.error[products.covered]))
+    high = float(np.max(shown.value[products.covered]))
+    return -linear, linear, max(high, 3.0 * linear)
+
+
+def _draw_contour(axes: Any, snr: Array) -> None:
+    if np.nanmax(snr, initial=-math.inf) > CONTOUR_SNR > np.nanmin(snr, initial=math.inf):
+        axes.contour(snr, levels=[CONTOUR_SNR], colors="black", linewidths=0.5)
+
+
+def _finish_bar(bar: Colorbar) -> None:
+    """Round ticks on both sides of zero, none of them crowded."""
+    bar.set_ticks(_ticks(bar.norm), labels=None)
+    bar.ax.minorticks_off()
+    bar.ax.yaxis.set_major_formatter(lambda value, _: f"{value:g}".replace("-", "−"))
+    bar.ax.tick_params(length=2, pad=2)
+    bar.outline.set_linewidth(0.6)
+
+
+def _ticks(norm: Any) -> list[float]:
+    decades = range(math.ceil(math.log10(norm.vmax)), math.floor(math.log10(norm.linear_width)) - 2, -1)
+    wanted = [0.0]
+    for lead in (1.0, 3.0):
+        for decade in decades:
+            wanted += [lead * 10.0**decade, -lead * 10.0**decade]
+    chosen: list[float] = []
+    for value in wanted:
+        place = float(norm(value))
+        if 0.0 <= place <= 1.0 and all(
+            abs(place - float(norm(other))) >= TICK_SPACING for other in chosen
+        ):
+            chosen.append(value)
+    return sorted(chosen)
