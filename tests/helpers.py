@@ -1,19 +1,18 @@
-"""Small things that many tests need: a WCS, an HDU, the demonstration sky, a comparison of maps."""
+"""Small things that many tests need: a WCS, an HDU, a map, a recipe, a comparison of maps."""
 
 from __future__ import annotations
 
 import copy
-import importlib.util
 import math
-import sys
+import tomllib
 from functools import cache
 from pathlib import Path
-from types import ModuleType
 from typing import Any
 
 import numpy as np
 from astropy.io import fits
 from astropy.wcs import WCS
+from demo import load_demo
 
 from kspipe.maps import MapRequest, MapSource, NoiseRequest
 from kspipe.maps.read import load_map
@@ -163,19 +162,6 @@ def assert_maps_close(
 
 
 @cache
-def load_demo() -> ModuleType:
-    """Import demo_maps/make_demo.py, which is no part of the package, once."""
-    path = CHECKOUT / "demo_maps" / "make_demo.py"
-    spec = importlib.util.spec_from_file_location("make_demo", path)
-    assert spec is not None
-    assert spec.loader is not None
-    module = importlib.util.module_from_spec(spec)
-    sys.modules[spec.name] = module
-    spec.loader.exec_module(module)
-    return module
-
-
-@cache
 def _demo_hdus() -> dict[str, fits.PrimaryHDU]:
     return load_demo().paint(noise_seed=1)
 
@@ -185,8 +171,6 @@ def demo_recipe(folder: Path, **changes: Any) -> dict[str, Any]:
 
     Changes replace whole tables (``None`` takes one out).
     """
-    import tomllib
-
     text = (CHECKOUT / "recipes" / "orrinda_short.toml").read_text(encoding="utf-8")
     raw = tomllib.loads(text.replace("../demo_maps/", ""))
     for stem, hdu in _demo_hdus().items():

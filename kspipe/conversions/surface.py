@@ -59,7 +59,7 @@ def make_surface(
     Returns
     -------
     dict of str to Surface
-        ``sigma_atom sigma_gas sigma_sfr t_dep_gas`` and, with CO, ``sigma_mol f_mol t_dep``.
+        ``sigma_atom sigma_gas sigma_sfr`` and, with CO, ``sigma_mol f_mol t_dep``.
 
     Notes
     -----
@@ -75,7 +75,6 @@ def make_surface(
     if "sigma_mol" in made:
         made["f_mol"] = _ratio(made["sigma_mol"], made["sigma_gas"], noise, 1.0)
         made["t_dep"] = _ratio(made["sigma_mol"], made["sigma_sfr"], noise, 1e-3)
-    made["t_dep_gas"] = _ratio(made["sigma_gas"], made["sigma_sfr"], noise, 1e-3)
     return made
 
 

@@ -41,14 +41,19 @@ class Padded:
 
 
 @lru_cache(maxsize=4)
-def _transfer(shape: tuple[int, int], cxx: float, cxy: float, cyy: float) -> Array:
+def _transfer(shape: tuple[int, int], cxx: float, cxy: float, cyy: float, as_spline: bool) -> Array:
     """Fourier transform of a unit Gaussian on the half plane of a real FFT.
 
-    The tiles of one map share it, and it costs as much as the transform itself.
+    The tiles of one map share it, and it costs as much as the transform itself. A cubic B-spline
+    has the samples 1/6, 4/6, 1/6; dividing by their transform turns values into coefficients.
     """
     ky = np.fft.fftfreq(shape[0])[:, None]
     kx = np.fft.rfftfreq(shape[1])[None, :]
-    return np.asarray(np.exp(-2.0 * math.pi**2 * (cxx * kx**2 + 2.0 * cxy * kx * ky + cyy * ky**2)))
+    exponent = cxx * kx**2 + 2.0 * cxy * kx * ky + cyy * ky**2
+    transfer = np.exp(-2.0 * math.pi**2 * exponent)
+    if as_spline:
+        transfer /= (2.0 + np.cos(2 * math.pi * ky)) / 3.0 * (2.0 + np.cos(2 * math.pi * kx)) / 3.0
+    return np.asarray(transfer)
 
 
 def gaussian_reach(covariance_pix2: Array) -> int:
@@ -58,7 +63,12 @@ def gaussian_reach(covariance_pix2: Array) -> int:
 
 
 def gaussian_smooth(
-    array: Array, covariance_pix2: Array, *, margin: int | None = None, workers: int = 1
+    array: Array,
+    covariance_pix2: Array,
+    *,
+    margin: int | None = None,
+    workers: int = 1,
+    as_spline: bool = False,
 ) -> Padded:
     """Convolve with a Gaussian whose transfer function is exact; zero beyond the edges.
 
@@ -72,6 +82,9 @@ def gaussian_smooth(
         Pixels of the output kept around the input; by default the reach of the kernel.
     workers : int
         Threads of the FFT; the result does not depend on them.
+    as_spline : bool
+        Return the coefficients of the cubic B-spline through the smoothed values instead of the
+        values: the spline's prefilter is one more division in Fourier space.
 
     Returns
     -------
@@ -84,7 +97,7 @@ def gaussian_smooth(
     """
     reach = gaussian_reach(covariance_pix2)
     margin = max(reach, 2) if margin is None else margin
-    if not np.any(covariance_pix2):
+    if not np.any(covariance_pix2) and not as_spline:
         return Padded(np.pad(array, margin), margin)
     ny, nx = array.shape
     # Twice the reach must fit beyond the far edge, or the tail would wrap into the margin.
@@ -95,7 +108,7 @@ def gaussian_smooth(
     )
     spectrum = scipy.fft.rfft2(array, s=shape, workers=workers)
     (cxx, cxy), (_, cyy) = np.asarray(covariance_pix2).tolist()
-    spectrum *= _transfer(shape, cxx, cxy, cyy)
+    spectrum *= _transfer(shape, cxx, cxy, cyy, as_spline)
     smooth = scipy.fft.irfft2(spectrum, s=shape, workers=workers, overwrite_x=True)
     rows = np.arange(-margin, ny + margin) % shape[0]
     columns = np.arange(-margin, nx + margin) % shape[1]

@@ -16,15 +16,17 @@ _REACH: Final = 8
 _PHASES: Final = 9
 
 
-def sample_cubic(array: Array, x: Array, y: Array) -> Array:
+def sample_cubic(array: Array, x: Array, y: Array, *, is_spline: bool = False) -> Array:
     """Interpolate by a cubic B-spline; zero beyond the array.
 
     Parameters
     ----------
     array : (my, mx) float64 array
-        Finite everywhere.
+        Finite everywhere; values, or with `is_spline` the coefficients of the spline.
     x, y : float64 array
         Pixel positions, zero at the centre of the first pixel.
+    is_spline : bool
+        Whether `array` holds coefficients, as `gaussian_smooth` can give them.
 
     Returns
     -------
@@ -32,7 +34,10 @@ def sample_cubic(array: Array, x: Array, y: Array) -> Array:
         The shape of `x`.
     """
     return np.asarray(
-        ndimage.map_coordinates(array, [y, x], order=3, mode="constant", cval=0.0), dtype=float
+        ndimage.map_coordinates(
+            array, [y, x], order=3, mode="constant", cval=0.0, prefilter=not is_spline
+        ),
+        dtype=float,
     )
 
 

@@ -115,27 +115,30 @@ def _stated_sigma(source: MapSource, value: Array, where: str) -> tuple[Array, s
     """1-sigma error per pixel in the canonical unit at the galaxy's centre."""
     noise = source.request.noise
     if noise.kind == "value" or source.noise_image is None:
-        sigma = noise.value * source.noise_factor
+        level = noise.value * source.noise_factor
         note = f"noise {noise.value:g} {noise.unit or source.unit.text} from the recipe"
-        return np.full(value.shape, sigma), f"{note}, correlated like: {noise.correlated}"
-    stored = source.noise_image.read()
-    seen = stored[np.isfinite(value) & np.isfinite(stored)]
-    if not seen.size:
+        return np.full(value.shape, level), f"{note}, correlated like: {noise.correlated}"
+    sigma = source.noise_image.read()
+    observed = np.isfinite(value) & np.isfinite(sigma)
+    if not observed.any():
         raise MapError(
             Fault(f"{where}, noise", f"{source.noise_image} is blank where the map is not")
         )
-    if seen.min() <= 0:
+    least = float(np.min(sigma, where=observed, initial=np.inf))
+    if least <= 0:
+        count = int(np.sum(observed & (sigma <= 0)))
         raise MapError(
             Fault(
                 f"maps.{source.request.name}.noise, {source.noise_image}",
-                f"{int((seen <= 0).sum())} pixels of the noise map are zero or negative (least "
-                f"value {seen.min():g}); a {noise.stated} is positive",
+                f"{count} pixels of the noise map are zero or negative (least value {least:g}); a "
+                f"{noise.stated} is positive",
                 'check what the file holds (is = "sigma", "variance" or "inverse variance") or '
                 "blank those pixels",
             )
         )
-    power = {"sigma": 1.0, "variance": 0.5, "inverse variance": -0.5}[noise.stated]
-    with np.errstate(invalid="ignore", divide="ignore"):
-        sigma_stored = stored**power
+    if noise.stated != "sigma":
+        with np.errstate(invalid="ignore", divide="ignore"):
+            sigma = sigma ** (0.5 if noise.stated == "variance" else -0.5)
+    sigma *= source.noise_factor
     note = f"noise from {source.noise_image}, read as {noise.stated}"
-    return sigma_stored * source.noise_factor, f"{note}, correlated like: {noise.correlated}"
+    return sigma, f"{note}, correlated like: {noise.correlated}"

@@ -207,21 +207,19 @@ def _smooth_and_sample(sky: SkyMap, kernel: _Kernel, x: Array, y: Array, workers
         tx, ty = x[here] - tile.origin[1], y[here] - tile.origin[0]
         value = tile.cut(sky.value)
         observed = tile.cut(np.isfinite(sky.value[tile.section]), is_section=True) > 0
-        smooth = partial(_smooth_section, workers=workers)
-        out.value[here] = sample_cubic(smooth(np.where(observed, value, 0.0), kernel.pix2), tx, ty)
+        smooth = partial(gaussian_smooth, margin=0, workers=workers)
+        spline = smooth(np.where(observed, value, 0.0), kernel.pix2, as_spline=True)
+        out.value[here] = sample_cubic(spline.array, tx, ty, is_spline=True)
         if observed.all():
             out.weight[here] = 1.0
         else:
-            out.weight[here] = sample_cubic(smooth(observed.astype(float), kernel.pix2), tx, ty)
+            spline = smooth(observed.astype(float), kernel.pix2, as_spline=True)
+            out.weight[here] = sample_cubic(spline.array, tx, ty, is_spline=True)
         for term, gain, variance in zip(sky.noise, gains, out.variances, strict=True):
             squared = np.where(observed, tile.cut(term.sigma) ** 2, 0.0) * gain
-            spread = smooth(squared, kernel.pix2 / 2.0)
+            spread = smooth(squared, kernel.pix2 / 2.0).array
             variance[here] = np.maximum(sample_linear(spread, tx, ty), 0.0)
     return out
-
-
-def _smooth_section(section: Array, covariance_pix2: Array, *, workers: int) -> Array:
-    return gaussian_smooth(section, covariance_pix2, margin=0, workers=workers).array
 
 
 def _noise_gain(term: NoiseTerm, kernel: _Kernel) -> float:

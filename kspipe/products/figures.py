@@ -15,6 +15,7 @@ from kspipe.core.progress import Progress, no_progress
 from kspipe.products.map_figures import draw_surface_densities
 from kspipe.products.read import Products, read_products, read_recipe
 from kspipe.products.relation_figure import draw_star_formation_law
+from kspipe.products.residual_figure import draw_residual
 from kspipe.products.style import figure_style, save_figure
 from kspipe.recipe import Recipe
 from kspipe.stages.folder import ProductFolder, fingerprint
@@ -72,6 +73,10 @@ def _drawings(products: Products) -> dict[str, Callable[[], Figure]]:
     return {
         "star_formation_law": partial(draw_star_formation_law, products),
         "surface_densities": partial(draw_surface_densities, products),
+        **{
+            f"residual_{name}": partial(draw_residual, products, name)
+            for name in products.residuals
+        },
     }
 
 

@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from kspipe.products.read import Products
 from kspipe.products.sky import add_landmarks, add_sky_axes, fitted_inches
-from kspipe.products.style import GAS_UNIT, SFR_UNIT, SIGMA, WIDE_INCHES, in_figure, new_figure
+from kspipe.products.style import GAS_UNIT, SFR_UNIT, SIGMA, in_figure, new_figure, write_name
 
 __all__ = ["draw_surface_densities"]
 
@@ -23,18 +23,19 @@ Array = NDArray[np.float64]
 COLOUR_MAP: Final = "magma_r"
 NO_DATA: Final = "0.82"
 CONTOUR_SNR: Final = 3.0
-# Colours are linear up to this many sigma and logarithmic beyond; they begin as far below zero.
-LINEAR_SIGMA: Final = 3.0
+# Colours begin this many sigma below zero, are linear up to so many above, logarithmic beyond.
+LOWEST_SIGMA: Final = -2.0
+LINEAR_SIGMA: Final = 5.0
 # Ticks of a colour bar are at least this fraction of its length apart.
 TICK_SPACING: Final = 0.09
 
 # The layout in inches.
 LEFT: Final = 0.78
-PANEL: Final = 2.42
-COLUMN: Final = 3.34
+PANEL: Final = 2.6
+COLUMN: Final = 3.2
 TITLE: Final = 0.24
 BOTTOM: Final = 0.42
-TOP: Final = 0.32
+TOP: Final = 0.28
 
 _TITLES: Final = {
     "sigma_atom": "Atomic gas",
@@ -82,14 +83,12 @@ def draw_surface_densities(products: Products) -> Figure:
 
 
 def _write_head(figure: Figure, products: Products) -> None:
-    top = 1 - 0.06 / figure.get_figheight()
-    figure.text(LEFT / WIDE_INCHES, top, products.recipe.galaxy.name, va="top", size=11, weight="bold")
     marks = [f"contour S/N = {CONTOUR_SNR:g}", f"ellipse: beam, {products.beam_text}"]
     if products.recipe.galaxy.r25 is not None:
         marks.insert(1, "dashed: r$_{25}$")
     if not products.covered.all():
-        marks.append("grey: not observed")
-    figure.text(0.985, top, ";  ".join(marks), va="top", ha="right", size=8)
+        marks.append("grey: not covered")
+    write_name(figure, LEFT, products.recipe.galaxy.name, ";  ".join(marks))
 
 
 def _draw_map(
@@ -119,9 +118,9 @@ def _draw_map(
 def _colour_range(products: Products, name: str) -> tuple[float, float, float]:
     """Lower end, end of the linear part, upper end; the same for every phase of the gas."""
     shown = products.densities["sigma_sfr" if name == "sigma_sfr" else "sigma_gas"]
-    linear = LINEAR_SIGMA * float(np.median(shown.error[products.covered]))
+    sigma = float(np.median(shown.error[products.covered]))
     high = float(np.max(shown.value[products.covered]))
-    return -linear, linear, max(high, 3.0 * linear)
+    return LOWEST_SIGMA * sigma, LINEAR_SIGMA * sigma, max(high, 2.0 * LINEAR_SIGMA * sigma)
 
 
 def _draw_contour(axes: Any, snr: Array) -> None:
@@ -139,9 +138,11 @@ def _finish_bar(bar: Colorbar) -> None:
 
 
 def _ticks(norm: Any) -> list[float]:
-    decades = range(math.ceil(math.log10(norm.vmax)), math.floor(math.log10(norm.linear_width)) - 2, -1)
+    decades = range(
+        math.ceil(math.log10(norm.vmax)), math.floor(math.log10(norm.linear_width)) - 2, -1
+    )
     wanted = [0.0]
-    for lead in (1.0, 3.0):
+    for lead in (1.0, 3.0, 5.0, 2.0):
         for decade in decades:
             wanted += [lead * 10.0**decade, -lead * 10.0**decade]
     chosen: list[float] = []

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import tomllib
 from dataclasses import dataclass
 from pathlib import Path
@@ -24,6 +25,9 @@ __all__ = ["Density", "Products", "Residual", "read_products", "read_recipe"]
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
+
+# Bins of a running quantile hold at least this many independent values.
+LEAST_INDEPENDENT: Final = 3.0
 
 _DENSITIES: Final = ("sigma_atom", "sigma_mol", "sigma_gas", "sigma_sfr")
 
@@ -98,6 +102,18 @@ class Products:
     def is_faint(self) -> Mask:
         """Pixels in which gas or star formation is below the recipe's limit of S/N."""
         return (self.flags & Flag.LOW_SNR) != 0
+
+    @property
+    def r25_kpc(self) -> float:
+        """Optical radius; NaN where the recipe has none."""
+        galaxy = self.recipe.galaxy
+        return math.nan if galaxy.r25 is None else galaxy.r25.value * galaxy.pc_per_arcsec / 1e3
+
+    @property
+    def least_pixels(self) -> int:
+        """Pixels that hold as many independent values as a running quantile needs."""
+        per_value = self.summary["n_pixels"] / max(self.summary["n_independent"], 1e-9)
+        return math.ceil(LEAST_INDEPENDENT * per_value)
 
     @property
     def beam_text(self) -> str:

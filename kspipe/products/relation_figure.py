@@ -24,9 +24,9 @@ from kspipe.products.style import (
     SIGMA,
     angle_on_page,
     new_figure,
-    parameter_text,
     relation_look,
 )
+from kspipe.products.words import parameter_text
 from kspipe.relations import LAWS, track
 
 __all__ = ["draw_star_formation_law"]
@@ -37,12 +37,10 @@ Mask = NDArray[np.bool_]
 TRACK_Z_PRIME: Final = (0.1, 0.3, 1.0, 3.0)
 DEPLETION_GYR: Final = (0.1, 1.0, 10.0, 100.0)
 BIN_DEX: Final = 0.2
-# A running median needs this many independent values.
-LEAST_BEAMS: Final = 3.0
 # The frame begins at this fraction of the random error: what lies below is noise.
-FRAME_LOW: Final = 0.3
+FRAME_LOW: Final = 0.6
 FRAME_HIGH: Final = 2.5
-FAINT: Final = "0.72"
+FAINT: Final = "0.78"
 
 
 def draw_star_formation_law(products: Products) -> Figure:
@@ -149,7 +147,7 @@ def _draw_pixels(axes: Axes, products: Products) -> None:
         yscale="log",
         bins="log",
         mincnt=1,
-        vmax=200,
+        vmax=80,
         cmap="Greys",
         alpha=0.55,
         linewidths=0.1,
@@ -180,15 +178,13 @@ def _draw_tracks(axes: Axes, products: Products, name: str, index: int) -> None:
     low, middle, high = (float(value) for value in np.quantile(z, [0.0, 0.5, 1.0]))
     axes.fill_between(x, curve(low), curve(high), color=look["color"], alpha=0.22, lw=0, zorder=3)
     axes.plot(x, curve(middle), **look, lw=1.8, zorder=5)
-    for place, round_z in enumerate(TRACK_Z_PRIME):
+    for round_z in TRACK_Z_PRIME:
         y = curve(round_z)
         axes.plot(x, y, **look, lw=0.7, zorder=4)
-        _label_curve(axes, x, y, f"Z′ = {round_z:g}", look["color"], index, place)
+        _label_curve(axes, x, y, f"Z′ = {round_z:g}", look["color"], index)
 
 
-def _label_curve(
-    axes: Axes, x: Array, y: Array, text: str, colour: str, index: int, place: int
-) -> None:
+def _label_curve(axes: Axes, x: Array, y: Array, text: str, colour: str, index: int) -> None:
     """Write along a curve, low in the frame where the metallicities lie apart."""
     y0, y1 = axes.get_ylim()
     height = _inside(y0, y1, 0.05 + 0.09 * index)
@@ -211,7 +207,7 @@ def _label_curve(
 
 
 def _draw_samples(axes: Axes, products: Products) -> None:
-    """Independent samples with the errors of both axes; a bar that reaches zero leaves the frame."""
+    """Independent samples with both errors; a bar that reaches zero leaves the frame."""
     gas, sfr = _pair(products)
     shown = products.covered & products.independent & (gas.value > 0) & (sfr.value > 0)
     floor = (axes.get_xlim()[0] / 100, axes.get_ylim()[0] / 100)
@@ -243,14 +239,13 @@ def _draw_median(axes: Axes, products: Products) -> None:
     """Running median of the observed star formation, its non-positive values counted."""
     gas, sfr = _pair(products)
     used = products.covered & (gas.value > 0)
-    per_beam = products.summary["n_pixels"] / max(products.summary["n_independent"], 1e-9)
     low, high = np.log10(axes.get_xlim())
     running = running_quantiles(
         np.log10(gas.value[used]),
         sfr.value[used],
         np.arange(low, high + BIN_DEX, BIN_DEX),
         [0.5],
-        least=math.ceil(LEAST_BEAMS * per_beam),
+        least=products.least_pixels,
     )
     above = running.y[0] > 0
     x, y = 10 ** running.x[above], running.y[0][above]
@@ -276,16 +271,19 @@ def _legend(products: Products) -> list[Any]:
         Patch(color="0.75", label="all covered pixels"),
         Line2D([], [], marker="o", ms=3, color="black", lw=0.6, label="independent samples"),
         Line2D([], [], marker="o", ms=3, color=FAINT, lw=0.6, label=f"the same, S/N < {snr}"),
-        Line2D([], [], **_MEDIAN, label=f"running median of all pixels,\nnon-positive {SIGMA['sigma_sfr']} included\n"
-            f"(grey: {SIGMA['sigma_gas']} below S/N = {snr})"),
+        Line2D(
+            [],
+            [],
+            **_MEDIAN,
+            label=f"running median of all pixels,\nnon-positive {SIGMA['sigma_sfr']} included\n"
+            f"(grey: {SIGMA['sigma_gas']} below S/N = {snr})",
+        ),
         Line2D([], [], color="0.6", lw=0.5, ls=(0, (6, 3)), label="constant gas depletion time"),
     ]
     for index, (name, table) in enumerate(products.recipe.relations.items()):
-        lines = [f"{name}: {LAWS.get(table.law).label}"]
+        lines = textwrap.wrap(f"{name}: {LAWS.get(table.law).label}", 36)
         lines += textwrap.wrap(parameter_text(table.parameters), 36)
-        handles.append(
-            Line2D([], [], **relation_look(index), lw=1.8, label="\n".join(lines))
-        )
+        handles.append(Line2D([], [], **relation_look(index), lw=1.8, label="\n".join(lines)))
     return handles
 
 
@@ -297,7 +295,7 @@ def _notes(products: Products) -> str:
     if products.recipe.relations:
         z = _significant_z_prime(products)
         lines += [
-            f"Band: Z′ = {z.min():.2f} to {z.max():.2f}, the galaxy's own",
+            f"Band: Z′ = {z.min():.2f} to {z.max():.2f}, the galaxy’s own",
             f"where S/N ≥ {snr}; thick line: its median, {np.median(z):.2f}",
             f"(Z′ = 1 is 12 + log(O/H) = {OH_SOLAR:g}).",
         ]

@@ -15,7 +15,7 @@ from kspipe.core.constants import FWHM_PER_SIGMA
 from kspipe.kernels.geometry import transform_covariance
 from kspipe.maps.header import pixel_jacobian
 from kspipe.products.read import Products
-from kspipe.products.style import HALO, nice_below
+from kspipe.products.style import HALO, R25_LINE, nice_below
 
 __all__ = ["add_hatching", "add_landmarks", "add_sky_axes", "fitted_inches"]
 
@@ -56,11 +56,13 @@ def add_landmarks(axes: Any, products: Products) -> None:
     """Add the beam, a scale bar, and the optical size of the disc where the recipe has it."""
     _add_beam(axes, products)
     _add_scale_bar(axes, products)
-    r25 = products.recipe.galaxy.r25
-    if r25 is not None:
-        kpc = r25.value * products.recipe.galaxy.pc_per_arcsec / 1e3
+    if products.recipe.galaxy.r25 is not None:
         axes.contour(
-            products.radius_kpc, levels=[kpc], colors="black", linewidths=0.7, linestyles=[(0, (5, 3))]
+            products.radius_kpc,
+            levels=[products.r25_kpc],
+            colors="black",
+            linewidths=0.8,
+            linestyles=[R25_LINE],
         )
 
 
@@ -115,6 +117,4 @@ def add_hatching(axes: Any, where: Mask) -> None:
     ).transpose(2, 0, 1)
     codes = [Outline.MOVETO, Outline.LINETO, Outline.LINETO, Outline.LINETO, Outline.CLOSEPOLY]
     outline = Outline(corners.reshape(-1, 2), codes * rows.size)
-    axes.add_patch(
-        PathPatch(outline, fc="0.88", ec="0.6", hatch="//////", lw=0, zorder=1.5)
-    )
+    axes.add_patch(PathPatch(outline, fc="0.93", ec="0.72", hatch="//////", lw=0, zorder=1.5))

@@ -3,12 +3,11 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any, Final
 
-import matplotlib as mpl
 import numpy as np
 from matplotlib import patheffects, style
 from matplotlib.axes import Axes
@@ -18,19 +17,18 @@ from matplotlib.figure import Figure
 __all__ = [
     "GAS_UNIT",
     "HALO",
+    "R25_LINE",
     "SFR_UNIT",
     "SIGMA",
     "WIDE_INCHES",
     "angle_on_page",
     "figure_style",
     "in_figure",
-    "law_name",
-    "measured",
     "new_figure",
     "nice_below",
-    "parameter_text",
     "relation_look",
     "save_figure",
+    "write_name",
 ]
 
 # Width of a page with two columns in the journals of the field.
@@ -54,6 +52,9 @@ _LINES: Final = ("-", "--", "-.", ":")
 
 # A white rim keeps letters readable across lines and data.
 HALO: Final = [patheffects.withStroke(linewidth=2.0, foreground="white")]
+
+# The optical size of the disc is dashed wherever it is drawn.
+R25_LINE: Final = (0, (5, 3))
 
 _STYLE: Final[dict[str, Any]] = {
     "font.family": "STIXGeneral",
@@ -121,42 +122,11 @@ def relation_look(index: int) -> dict[str, Any]:
     return {"color": _COLOURS[index % len(_COLOURS)], "linestyle": _LINES[line % len(_LINES)]}
 
 
-def parameter_text(parameters: Mapping[str, float]) -> str:
-    """Write parameters as ``clumping = 5, anchor_oh = 8.69``."""
-    return ", ".join(f"{name} = {value:g}" for name, value in parameters.items())
-
-
-def law_name(label: str, parameters: Mapping[str, float]) -> str:
-    """Write a relation with its parameters, if it has any."""
-    return f"{label} ({parameter_text(parameters)})" if parameters else label
-
-
-def measured(value: float | None, error: float | None, *, sign: bool = False) -> str:
-    """Write a number with its error to the error's first two digits.
-
-    Parameters
-    ----------
-    value, error : float or None
-        None, as the summary has it, where the number does not exist.
-    sign : bool
-        Whether a plus sign is written.
-
-    Examples
-    --------
-    >>> measured(0.86974, 0.00778)
-    '0.8697 ± 0.0078'
-    >>> measured(0.171, None, sign=True)
-    '+0.171'
-    >>> measured(None, None)
-    'not defined'
-    """
-    if value is None:
-        return "not defined"
-    plus = "+" if sign else ""
-    if not error:
-        return f"{value:{plus}.3g}"
-    digits = max(0, 1 - math.floor(math.log10(error)))
-    return f"{value:{plus}.{digits}f} ± {error:.{digits}f}"
+def write_name(figure: Figure, left_inches: float, name: str, beside: str) -> None:
+    """Write the galaxy's name at the top left and what belongs beside it at the top right."""
+    x, _, _, below = in_figure(figure, left_inches, 0, 0, 0.06)
+    figure.text(x, 1 - below, name, va="top", size=11, weight="bold")
+    figure.text(0.985, 1 - below, beside, va="top", ha="right", size=8.5)
 
 
 def nice_below(value: float) -> float:

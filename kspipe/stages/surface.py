@@ -40,7 +40,7 @@ class Disc:
     Attributes
     ----------
     surfaces : dict of str to Surface
-        ``sigma_atom sigma_gas sigma_sfr t_dep_gas`` and, with CO, ``sigma_mol f_mol t_dep``.
+        ``sigma_atom sigma_gas sigma_sfr`` and, with CO, ``sigma_mol f_mol t_dep``.
     coverage : dict of str to (ny, nx) float64 array
         By product: least coverage of the maps that it needs.
     flags : (ny, nx) int32 array

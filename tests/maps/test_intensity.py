@@ -12,8 +12,8 @@ import astropy.units as u
 import numpy as np
 import pytest
 from astropy.io import fits
-
 from helpers import ARCSEC2_SR, C_KM_S, assert_maps_close, make_hdu, make_wcs, open_source, read_map
+
 from kspipe.core.errors import GridError, UnitError
 from kspipe.core.tracers import TRACERS
 from kspipe.maps.intensity import examples, open_door, read_stored_unit

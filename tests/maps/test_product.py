@@ -11,9 +11,9 @@ import pytest
 from astropy.io import fits
 from astropy.nddata import CCDData
 from astropy.wcs import WCS
+from helpers import assert_maps_close, elliptical_beam, make_sky, make_wcs
 from radio_beam import Beam
 
-from helpers import assert_maps_close, elliptical_beam, make_sky, make_wcs
 from kspipe.maps.product import FITS_UNITS, read_image, read_matched, write_matched, write_product
 from kspipe.maps.skymap import CommonError, Flag, NoiseTerm, SkyMap
 from kspipe.stages.reduce import PRODUCT_UNITS

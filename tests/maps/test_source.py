@@ -10,7 +10,6 @@ import pytest
 from astropy.coordinates import SkyCoord
 from astropy.io import fits
 from astropy.wcs import WCS
-
 from helpers import (
     CENTRE,
     assert_maps_close,
@@ -21,6 +20,7 @@ from helpers import (
     read_map,
     round_beam,
 )
+
 from kspipe.core.errors import BeamError, GridError, MapError, ShapeError
 
 SHAPE = (40, 50)
@@ -101,7 +101,7 @@ def test_several_images_are_listed_and_one_is_taken_on_request(tmp_path, hdu, da
     file = tmp_path / "several.fits"
     images = [fits.ImageHDU(k * data, hdu.header, f"PLANE{k}") for k in (1, 2, 3)]
     fits.HDUList([fits.PrimaryHDU(), *images]).writeto(file)
-    with pytest.raises(MapError, match="1 PLANE1, 2 PLANE2, 3 PLANE3.*hdu = N"):
+    with pytest.raises(MapError, match=r"1 PLANE1, 2 PLANE2, 3 PLANE3.*hdu = N"):
         open_source(file)
     assert_maps_close(read_map(file, hdu=2).value, 2 * data, rtol=0)
     for wrong in (0, 4, -1):
