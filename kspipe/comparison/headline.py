@@ -55,7 +55,7 @@ def headline(
     sfr: Surface,
     used: NDArray[np.bool_],
     independent: NDArray[np.bool_],
-    pixel_area_arcsec2: float,
+    jacobian_arcsec: Array,
     rng: np.random.Generator,
 ) -> Headline:
     """Sum up one relation.
@@ -69,7 +69,8 @@ def headline(
         Covered pixels.
     independent : (ny, nx) bool array
         Lattice of independent samples.
-    pixel_area_arcsec2 : float
+    jacobian_arcsec : (2, 2) float64 array
+        Sky offset (east, north) per pixel step of the grid.
     rng : numpy.random.Generator
         For the bootstrap.
     """
@@ -83,7 +84,7 @@ def headline(
         n_pixels=n_pixels,
         n_samples=int(samples.sum()),
         sum_ratio=observed / predicted if predicted > 0 else math.nan,
-        sum_ratio_error=_ratio_error(observed, predicted, residuals, sfr, both, pixel_area_arcsec2),
+        sum_ratio_error=_ratio_error(observed, predicted, residuals, sfr, both, jacobian_arcsec),
         zero_point=fit_zero_point(
             sfr.value[samples],
             residuals.predicted[samples],
@@ -107,16 +108,15 @@ def _ratio_error(
     residuals: Residuals,
     sfr: Surface,
     used: NDArray[np.bool_],
-    pixel_area_arcsec2: float,
+    jacobian_arcsec: Array,
 ) -> float:
     """Random error of the ratio of the two sums, their covariance included."""
     if predicted <= 0:
         return math.nan
     ratio = observed / predicted
-    area = pixel_area_arcsec2
     variance = (
-        sum_covariance(sfr.noise, sfr.noise, used, area)
-        + ratio**2 * sum_covariance(residuals.noise, residuals.noise, used, area)
-        - 2.0 * ratio * sum_covariance(sfr.noise, residuals.noise, used, area)
+        sum_covariance(sfr.noise, sfr.noise, used, jacobian_arcsec)
+        + ratio**2 * sum_covariance(residuals.noise, residuals.noise, used, jacobian_arcsec)
+        - 2.0 * ratio * sum_covariance(sfr.noise, residuals.noise, used, jacobian_arcsec)
     )
     return math.sqrt(max(variance, 0.0)) / predicted

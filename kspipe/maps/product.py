@@ -14,6 +14,7 @@ from astropy.wcs import WCS, FITSFixedWarning
 from numpy.typing import NDArray
 
 from kspipe.core.constants import DEG_ARCSEC
+from kspipe.kernels.correlation import SampledCorrelation
 from kspipe.kernels.geometry import beam_axes, beam_covariance
 from kspipe.kernels.noise import NoiseTerm
 from kspipe.maps.skymap import CommonError, Flag, SkyMap
@@ -102,6 +103,11 @@ def write_matched(path: Path, sky: SkyMap) -> None:
     }
     extensions["COVERAGE"] = (sky.coverage, "")
     extensions["FLAGS"] = (sky.flags, "")
+    extensions |= {
+        f"NCORR{i}": (term.sampled.values, "")
+        for i, term in enumerate(sky.noise, 1)
+        if term.sampled is not None
+    }
     cards: dict[str, tuple[Any, str]] = {
         "TRACER": (sky.tracer, "what it is a map of"),
         "MAPNAME": (sky.name, "name in the recipe"),
@@ -113,8 +119,11 @@ def write_matched(path: Path, sky: SkyMap) -> None:
         for j, (row, column) in enumerate(((0, 0), (0, 1), (1, 1)), 1):
             cards[f"NCOV{i}{j}"] = (
                 float(term.correlation_arcsec2[row, column]),
-                "[arcsec2] noise correlation EE, EN, NN"[:47],
+                "[arcsec2] noise correlation EE, EN, NN",
             )
+        if term.sampled is not None:
+            for j, step in enumerate(term.sampled.jacobian_arcsec.ravel(), 1):
+                cards[f"NJAC{i}{j}"] = (float(step), "[arcsec] Ex, Ey, Nx, Ny of NCORR per pixel")
     write_product(
         path,
         sky.value,
@@ -140,7 +149,12 @@ def read_matched(path: Path) -> SkyMap:
             break
         ee, en, nn = (float(header[f"NCOV{i}{j}"]) for j in (1, 2, 3))
         correlation = np.array([[ee, en], [en, nn]])
-        terms.append(NoiseTerm(header[f"NSRC{i}"], arrays[f"NOISE{i}"].astype(float), correlation))
+        sampled = None
+        if f"NCORR{i}" in arrays:
+            jacobian = np.array([header[f"NJAC{i}{j}"] for j in (1, 2, 3, 4)]).reshape(2, 2)
+            sampled = SampledCorrelation(arrays[f"NCORR{i}"].astype(float), jacobian)
+        sigma = arrays[f"NOISE{i}"].astype(float)
+        terms.append(NoiseTerm(header[f"NSRC{i}"], sigma, correlation, sampled))
     canonical = {fits_unit: unit for unit, fits_unit in FITS_UNITS.items()}
     return SkyMap(
         name=header["MAPNAME"],

@@ -89,15 +89,15 @@ def match_map(
         value = np.where(kept, smoothed.value / coverage, np.nan)
     terms = []
     for term, variance in zip(sky.noise, smoothed.variances, strict=True):
-        correlation = term.correlation_arcsec2 + kernel.arcsec2
-        gain = interpolation_noise_gain(x, y, transform_covariance(correlation, kernel.jacobian))
+        after = _after(term, kernel)
+        gain = interpolation_noise_gain(x, y, _smoothness_pix2(after, kernel))
         with np.errstate(invalid="ignore", divide="ignore"):
             sigma = np.sqrt(variance * gain) / coverage
-        terms.append(NoiseTerm(term.source, np.where(kept, sigma, np.nan), correlation))
+        terms.append(after.with_sigma(np.where(kept, sigma, np.nan)))
 
     flags = np.where(kept & (coverage < FULL_COVERAGE), int(Flag.LOW_COVERAGE), 0)
-    before, after = flux_within(sky.value, sky.wcs, grid), flux_on_grid(value, grid)
-    steps = _steps(sky, kernel, grid, coordinate_error, minimum_coverage, kept, before, after)
+    fluxes = flux_within(sky.value, sky.wcs, grid), flux_on_grid(value, grid)
+    steps = _steps(sky, kernel, grid, coordinate_error, minimum_coverage, kept, fluxes)
     return replace(
         sky,
         value=value,
@@ -108,7 +108,7 @@ def match_map(
         beam_arcsec2=target_arcsec2,
         averages_pixels=False,
         history=(*sky.history, *steps),
-        facts={**sky.facts, "flux_before": before, "flux_after": after},
+        facts={**sky.facts, "flux_before": fluxes[0], "flux_after": fluxes[1]},
     )
 
 
@@ -149,8 +149,7 @@ def _steps(
     coordinate_error_pix: float,
     minimum_coverage: float,
     kept: NDArray[np.bool_],
-    before: float,
-    after: float,
+    fluxes: tuple[float, float],
 ) -> tuple[str, ...]:
     """Say what was done, for the history."""
     major, minor, pa = beam_axes(kernel.arcsec2)
@@ -164,7 +163,7 @@ def _steps(
         f"interpolated to {columns} x {rows} pixels of {grid.pixel_arcsec:.4g} arcsec",
         f"by cubic spline, coordinates exact to {coordinate_error_pix:.0e} of the map's pixels",
         f"coverage limit {minimum_coverage:g}: {blank} of {kept.size} pixels blank",
-        f"flux on the grid's sky {before:.6g}, after matching {after:.6g} ({sky.unit} sr)",
+        f"flux on the grid's sky {fluxes[0]:.6g}, after matching {fluxes[1]:.6g} ({sky.unit} sr)",
     )
 
 
@@ -232,6 +231,21 @@ def _noise_gain(term: NoiseTerm, kernel: _Kernel) -> float:
     """
     if not np.any(kernel.arcsec2):
         return 1.0
+    if term.sampled is not None:
+        return term.sampled.smoothed(kernel.pix2)[0]
     if np.any(term.correlation_arcsec2):
         return correlated_noise_gain(term.correlation_arcsec2, kernel.arcsec2)
     return white_noise_gain(kernel.pix2)
+
+
+def _after(term: NoiseTerm, kernel: _Kernel) -> NoiseTerm:
+    """The term's correlation after smoothing."""
+    sampled = term.sampled.smoothed(kernel.pix2)[1] if term.sampled is not None else None
+    return replace(
+        term, correlation_arcsec2=term.correlation_arcsec2 + kernel.arcsec2, sampled=sampled
+    )
+
+
+def _smoothness_pix2(term: NoiseTerm, kernel: _Kernel) -> Array:
+    """Covariance, in the map's pixels, of the Gaussian that the noise is as smooth as."""
+    return transform_covariance(term.correlation_arcsec2, kernel.jacobian)

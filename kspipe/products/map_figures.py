@@ -21,7 +21,6 @@ Array = NDArray[np.float64]
 
 # Light where faint and evenly darker to the bright end, in colour and in grey.
 COLOUR_MAP: Final = "magma_r"
-NO_DATA: Final = "0.82"
 CONTOUR_SNR: Final = 3.0
 # Colours begin this many sigma below zero, are linear up to so many above, logarithmic beyond.
 LOWEST_SIGMA: Final = -2.0
@@ -87,7 +86,7 @@ def _write_head(figure: Figure, products: Products) -> None:
     if products.recipe.galaxy.r25 is not None:
         marks.insert(1, "dashed: r$_{25}$")
     if not products.covered.all():
-        marks.append("grey: not covered")
+        marks.append("white: not covered")
     write_name(figure, LEFT, products.recipe.galaxy.name, ";  ".join(marks))
 
 
@@ -106,7 +105,6 @@ def _draw_map(
         interpolation="nearest",
         zorder=1,
     )
-    axes.set_facecolor(NO_DATA)
     _draw_contour(axes, density.snr)
     add_landmarks(axes, products)
     _finish_bar(figure.colorbar(image, cax=bar, extend="min"))

@@ -101,7 +101,7 @@ class Products:
     @property
     def is_faint(self) -> Mask:
         """Pixels in which gas or star formation is below the recipe's limit of S/N."""
-        return (self.flags & Flag.LOW_SNR) != 0
+        return np.asarray((self.flags & int(Flag.LOW_SNR)) != 0)
 
     @property
     def r25_kpc(self) -> float:
@@ -112,7 +112,8 @@ class Products:
     @property
     def least_pixels(self) -> int:
         """Pixels that hold as many independent values as a running quantile needs."""
-        per_value = self.summary["n_pixels"] / max(self.summary["n_independent"], 1e-9)
+        n_independent = float(self.summary["n_independent"])
+        per_value = int(self.covered.sum()) / n_independent if n_independent > 0 else 1.0
         return math.ceil(LEAST_INDEPENDENT * per_value)
 
     @property

@@ -128,7 +128,7 @@ def _draw_depletion_times(axes: Axes) -> None:
 
 def _inside(low: float, high: float, share: float) -> float:
     """Position on a logarithmic axis by its share of the length."""
-    return low * (high / low) ** share
+    return low * math.pow(high / low, share)
 
 
 def _draw_pixels(axes: Axes, products: Products) -> None:

@@ -93,8 +93,8 @@ def draw_residual(products: Products, name: str) -> Figure:
 
 
 def _write_below(figure: Figure, left: float, lines: list[str]) -> None:
-    x, y, _, _ = in_figure(figure, left, 0.06, 0, 0)
-    figure.text(x, y, "\n".join(lines), va="bottom", size=8, linespacing=1.3)
+    x, y, _, _ = in_figure(figure, left, BOTTOM - 0.47, 0, 0)
+    figure.text(x, y, "\n".join(lines), va="top", size=8, linespacing=1.3)
 
 
 def _sort(products: Products, name: str) -> _Shown:
@@ -144,7 +144,7 @@ def _draw_map(figure: Figure, axes: Any, bar: Any, products: Products, shown: _S
     axes.set_title(r"log$_{10}$(observed / predicted), dex", pad=3)
     extend = "both" if shown.clipped(shown.has_log) > 0 else "neither"
     scale = figure.colorbar(ScalarMappable(norm, colours), cax=bar, extend=extend)
-    scale.outline.set_linewidth(0.6)  # type: ignore[operator]
+    scale.outline.set_linewidth(0.6)
     bar.tick_params(length=2, pad=2)
 
 
@@ -176,13 +176,12 @@ def _draw_profile(axes: Axes, products: Products, shown: _Shown) -> None:
         zorder=1.5,
     )
     samples = shown.has_log & products.independent
-    for chosen, colours, label in (
-        (samples & shown.faint, {"mfc": "white", "mec": "0.4"}, f"S/N < {snr}"),
-        (samples & ~shown.faint, {"mfc": "black", "mec": "black"}, "independent"),
+    for chosen, fill, rim, label in (
+        (samples & shown.faint, "white", "0.4", f"S/N < {snr}"),
+        (samples & ~shown.faint, "black", "black", "independent"),
     ):
-        axes.plot(
-            radius[chosen], ratio[chosen], "o", ms=2.4, mew=0.5, **colours, label=label, zorder=3
-        )
+        marker: dict[str, Any] = {"ms": 2.4, "mfc": fill, "mec": rim, "mew": 0.5}
+        axes.plot(radius[chosen], ratio[chosen], "o", **marker, label=label, zorder=3)
     _draw_running(axes, products, shown)
     if products.recipe.galaxy.r25 is not None:
         axes.axvline(products.r25_kpc, color="black", lw=0.7, ls=R25_LINE, zorder=2)

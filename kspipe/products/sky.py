@@ -37,7 +37,7 @@ def add_sky_axes(
     figure: Figure, box: Box, products: Products, *, ra: bool = True, dec: bool = True
 ) -> Any:
     """Add axes with right ascension and declination, labelled where asked."""
-    axes = figure.add_axes(box, projection=products.wcs)
+    axes: Any = figure.add_axes(box, projection=products.wcs)
     ny, nx = products.covered.shape
     axes.set(xlim=(-0.5, nx - 0.5), ylim=(-0.5, ny - 0.5))
     for coordinate, is_labelled, name in zip(

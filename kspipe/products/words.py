@@ -65,7 +65,7 @@ def headline_lines(products: Products, name: str) -> list[str]:
     return [
         f"sum(observed) / sum(predicted) = {ratio}",
         *_zero_point_lines(numbers["zero_point"]),
-        f"median {median} dex without {left_out} of {numbers['n_pixels']} pixels",
+        f"median {median} dex; {left_out} of {numbers['n_pixels']} could not enter",
         f"{products.size_text}; random errors",
     ]
 

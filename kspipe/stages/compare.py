@@ -95,7 +95,7 @@ def compare_relations(
         )
         rng = generator(recipe.seed, "compare", name)
         headlines[name] = headline(
-            residuals[name], sfr, used, independent, grid.pixel_arcsec**2, rng
+            residuals[name], sfr, used, independent, grid.jacobian_arcsec(), rng
         )
     progress(len(names), len(names), "compared")
     drop = tuple(stage for stage in folder.stages if stage == "figures")

@@ -95,14 +95,13 @@ def _totals(
         "sigma_sfr": ("sfr", "Msun/yr"),
     }
     totals: dict[str, dict[str, float | str]] = {}
+    jacobian = grid.jacobian_arcsec()
     for product, (name, unit) in names.items():
         if product not in disc.surfaces:
             continue
         surface = disc.surfaces[product]
         pixel = float(np.mean(areas)) * weights[product]
-        random = math.sqrt(
-            max(sum_covariance(surface.noise, surface.noise, used, grid.pixel_arcsec**2), 0.0)
-        )
+        random = math.sqrt(max(sum_covariance(surface.noise, surface.noise, used, jacobian), 0.0))
         totals[name] = {
             "value": float(np.sum((surface.value * areas)[used])) * weights[product],
             "random_error": random * pixel,
