@@ -71,7 +71,9 @@ def write_product(
     hdus = [primary]
     for name, (array, extension_unit) in extensions.items():
         is_flags = np.issubdtype(array.dtype, np.integer)
-        image = fits.ImageHDU(array.astype(np.int32 if is_flags else np.float32), sky, name)
+        # A correlation counts in lags, not on the sky.
+        on_sky = sky if array.shape == value.shape else None
+        image = fits.ImageHDU(array.astype(np.int32 if is_flags else np.float32), on_sky, name)
         _set_unit(image.header, extension_unit)
         if is_flags:
             for meaning, bit in Flag.meanings().items():

@@ -53,8 +53,15 @@ class NoiseRequest:
     hdu : int or None
     stated : {"sigma", "variance", "inverse variance"}
         What the numbers in `file` are.
-    correlated : {"beam", "none"}
-        Whether the noise has the correlation of the beam (radio) or none (detectors).
+    correlated : {"beam", "none", "measure"}
+        Whether the noise has the correlation of the beam (radio), none (detectors), or one to be
+        measured on blank sky.
+    shape_file : Path or None
+        Map of how the noise varies over the field.
+    shape_is : {"primary beam", "exposure", "channels"}
+        Noise goes as 1 / primary beam, 1 / sqrt(exposure), sqrt(channels summed).
+    gain : float or None
+        Photons per stored unit of one pixel: adds photon noise sqrt(value / gain).
     """
 
     kind: Literal["measure", "value", "file"]
@@ -63,7 +70,10 @@ class NoiseRequest:
     file: Path | None = None
     hdu: int | None = None
     stated: Literal["sigma", "variance", "inverse variance"] = "sigma"
-    correlated: Literal["beam", "none"] = "none"
+    correlated: Literal["beam", "none", "measure"] = "none"
+    shape_file: Path | None = None
+    shape_is: Literal["primary beam", "exposure", "channels"] = "primary beam"
+    gain: float | None = None
 
 
 @dataclass(frozen=True)
@@ -88,6 +98,26 @@ class MapRequest:
         1-sigma error of the zero level with its unit.
     zeros : {"flux", "blank"} or None
         What pixels at exactly zero mean.
+    counts : str or None
+        Physical intensity or flux per pixel of one stored count (per second), with its unit.
+    zero_point : float or None
+        AB magnitude of one stored count (per second).
+    wavelength_um : float or None
+        Effective wavelength for units per Angstrom; by default that of the tracer.
+    psf : Path or None
+        Image of the point-spread function, instead of a Gaussian beam.
+    regrid : {"spline", "area"} or None
+        How the map is brought to the grid; None for the choice by its sampling.
+    shift_arcsec : (float, float)
+        East and north, added to the map's sky coordinates.
+    mask_negative : bool
+        Whether connected regions below -4 sigma are taken as not observed.
+    short_spacings : {"yes", "no", "unknown"} or None
+        Whether an interferometer map holds them.
+    largest_scale_arcsec : float or None
+        Largest scale that it recovers.
+    total_flux : str or None
+        Flux by a single dish, with its unit, to compare with.
     """
 
     name: str
@@ -101,6 +131,16 @@ class MapRequest:
     calibration_error: float = 0.0
     pedestal_error: tuple[float, str] | None = None
     zeros: Literal["flux", "blank"] | None = None
+    counts: str | None = None
+    zero_point: float | None = None
+    wavelength_um: float | None = None
+    psf: Path | None = None
+    regrid: Literal["spline", "area"] | None = None
+    shift_arcsec: tuple[float, float] = (0.0, 0.0)
+    mask_negative: bool = False
+    short_spacings: Literal["yes", "no", "unknown"] | None = None
+    largest_scale_arcsec: float | None = None
+    total_flux: str | None = None
 
 
 @dataclass(frozen=True)

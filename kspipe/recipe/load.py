@@ -210,6 +210,11 @@ def _maps(
         if isinstance(model.noise, NoiseFile):
             located = _locate(model.noise.file, folder, f"{where}.noise.file", faults)
             changes["noise"] = model.noise.model_copy(update={"file": located})
+        elif isinstance(model.noise, NoiseTyped) and model.noise.shape is not None:
+            located = _locate(model.noise.shape, folder, f"{where}.noise.shape", faults)
+            changes["noise"] = model.noise.model_copy(update={"shape": located})
+        if model.psf is not None:
+            changes["psf"] = _locate(model.psf, folder, f"{where}.psf", faults)
         found[name] = model.model_copy(update=changes)
     return found
 

@@ -96,6 +96,12 @@ Abundance = Annotated[
     _measured("", '8.69 or "8.69 +- 0.05"'),
     _between(6.5, 9.5, "12+log10(O/H) between 6.5 and 9.5"),
 ]
+Magnitude = Annotated[Measured, _measured("mag", '"18.82 mag"')]
+Wavelength = Annotated[
+    Measured,
+    _measured("um", '"1538.6 Angstrom" or "0.1539 um"'),
+    _between(0, math.inf, "a positive wavelength"),
+]
 Reddening = Annotated[
     Measured,
     _measured("", '0.03 or "0.03 +- 0.005"'),
@@ -156,6 +162,7 @@ class GridTable(Table):
 
     beam: Annotated[str, BeforeValidator(_beam_target)]
     pixels_per_beam: float = Field(default=3.0, ge=2.0, le=20.0)
+    like: str | None = None
     size: Arcsec | None = None
     minimum_coverage: float = Field(default=0.5, gt=0.0, le=1.0)
 
@@ -206,20 +213,36 @@ def _level(typed: Any) -> Any:
 Level = Annotated[str, BeforeValidator(_level)]
 
 
+Correlated = Literal["beam", "none", "measure"]
+
+
 class NoiseFile(Table):
     """Noise that lies in a file of its own."""
 
     file: Path
     is_: Literal["sigma", "variance", "inverse variance"] = Field(alias="is")
     hdu: int | None = None
-    correlated: Literal["beam", "none"] | None = None
+    correlated: Correlated | None = None
+    gain: float | None = Field(default=None, gt=0)
 
 
 class NoiseTyped(Table):
-    """Noise measured or stated, with its correlation."""
+    """Noise measured or stated as a number, with its correlation and its shape."""
 
     level: Level
-    correlated: Literal["beam", "none"]
+    correlated: Correlated | None = None
+    shape: Path | None = None
+    shape_is: Literal["primary beam", "exposure", "channels"] | None = None
+    gain: float | None = Field(default=None, gt=0)
+
+    @model_validator(mode="after")
+    def _shape_is_said(self) -> NoiseTyped:
+        if (self.shape is None) != (self.shape_is is None):
+            raise ValueError(
+                'shape = "file.fits" and shape_is = "primary beam", "exposure" or "channels" '
+                "go together"
+            )
+        return self
 
 
 def _beam_typed(typed: Any) -> tuple[float, float, float]:
@@ -248,6 +271,18 @@ def _beam_typed(typed: Any) -> tuple[float, float, float]:
     return beam
 
 
+def _shift_typed(typed: Any) -> tuple[float, float]:
+    """Read ``1.2 -0.5 arcsec``: east and north."""
+    example = '"1.2 -0.5 arcsec" (east and north)'
+    words = typed.split() if isinstance(typed, str) else []
+    if len(words) != 3:
+        raise ValueError(f"{typed!r} is not a shift; expected, for example, {example}")
+    east, north = (
+        parse_measured(f"{word} {words[2]}", "arcsec", example).value for word in words[:2]
+    )
+    return east, north
+
+
 class MapTable(Table):
     """One map: what it is, where it lies, and what its header does not say."""
 
@@ -261,6 +296,16 @@ class MapTable(Table):
     calibration_error: Percent = NO_ERROR
     pedestal_error: Level | None = None
     zeros: Literal["flux", "blank"] | None = None
+    counts: Level | None = None
+    zero_point: Magnitude | None = None
+    wavelength: Wavelength | None = None
+    psf: Path | None = None
+    regrid: Literal["spline", "area"] | None = None
+    shift: Annotated[tuple[float, float] | None, BeforeValidator(_shift_typed)] = None
+    mask_negative: bool = False
+    short_spacings: Literal["yes", "no", "unknown"] | None = None
+    largest_scale: Arcsec | None = None
+    total_flux: Level | None = None
     nii_ratio: RatioOrZero | None = None
     as_24um: Ratio | None = None
 
@@ -281,23 +326,40 @@ class MapTable(Table):
             calibration_error=self.calibration_error.value,
             pedestal_error=noise_value(self.pedestal_error) if self.pedestal_error else None,
             zeros=self.zeros,
+            counts=self.counts,
+            zero_point=self.zero_point.value if self.zero_point else None,
+            wavelength_um=self.wavelength.value if self.wavelength else None,
+            psf=self.psf,
+            regrid=self.regrid,
+            shift_arcsec=self.shift or (0.0, 0.0),
+            mask_negative=self.mask_negative,
+            short_spacings=self.short_spacings,
+            largest_scale_arcsec=self.largest_scale.value if self.largest_scale else None,
+            total_flux=self.total_flux,
         )
 
     def _noise(self, usual: Literal["beam", "none"]) -> NoiseRequest:
-        if isinstance(self.noise, NoiseFile):
+        noise = self.noise
+        if isinstance(noise, NoiseFile):
             return NoiseRequest(
                 "file",
-                file=self.noise.file,
-                hdu=self.noise.hdu,
-                stated=self.noise.is_,
-                correlated=self.noise.correlated or usual,
+                file=noise.file,
+                hdu=noise.hdu,
+                stated=noise.is_,
+                correlated=noise.correlated or usual,
+                gain=noise.gain,
             )
-        level = self.noise.level if isinstance(self.noise, NoiseTyped) else self.noise
-        correlated = self.noise.correlated if isinstance(self.noise, NoiseTyped) else usual
-        if level == "measure":
-            return NoiseRequest("measure", correlated=correlated)
-        value, unit = noise_value(level)
-        return NoiseRequest("value", value=value, unit=unit, correlated=correlated)
+        typed = noise if isinstance(noise, NoiseTyped) else NoiseTyped(level=noise)
+        value, unit = (math.nan, "") if typed.level == "measure" else noise_value(typed.level)
+        return NoiseRequest(
+            "measure" if typed.level == "measure" else "value",
+            value=value,
+            unit=unit,
+            correlated=typed.correlated or usual,
+            shape_file=typed.shape,
+            shape_is=typed.shape_is or "primary beam",
+            gain=typed.gain,
+        )
 
 
 def gradient_value(typed: str) -> tuple[float, str]:

@@ -132,6 +132,8 @@ def _match_print(recipe: Recipe, source: MapSource, grid: Grid, fwhm: float) -> 
     galaxy, request = recipe.galaxy, asdict(source.request)
     # Contents count, not where they lie.
     del request["file"], request["noise"]["file"]
+    for table, key in ((request, "psf"), (request["noise"], "shape_file")):
+        table[key] = table[key] and file_checksum(table[key])
     return fingerprint(
         {
             "kspipe": __version__,

@@ -74,12 +74,14 @@ def fitted_fwhm(sky: SkyMap, position) -> tuple[float, float]:
     east, north = offsets(sky.wcs, sky.value.shape, position)
     peak = np.nanmax(sky.value)
     near = np.isfinite(sky.value) & (sky.value > 1e-3 * peak)
+    grid_step = sky.wcs.wcs.cdelt[1] * 3600
 
     def model(_, height, e0, n0, a, b, c) -> np.ndarray:
         x, y = east[near] - e0, north[near] - n0
         return height * np.exp(-0.5 * (a * x**2 + 2 * b * x * y + c * y**2))
 
-    start = (1.0, 0.0, 0.0, 0.02, 0.0, 0.02)
+    guess = np.log(1e3) * 2 * math.pi / (near.sum() * grid_step**2)
+    start = (1.0, 0.0, 0.0, guess, 0.0, guess)
     best, _ = curve_fit(model, None, sky.value[near] / peak, p0=start)
     covariance = np.linalg.inv([[best[3], best[4]], [best[4], best[5]]])
     minor, major = np.sqrt(np.linalg.eigvalsh(covariance)) / SIGMA_PER_FWHM
@@ -134,10 +136,10 @@ def matched_areas(sky: SkyMap) -> np.ndarray:
     return (sky.wcs.wcs.cdelt[1] * 3600) ** 2 * np.cos(theta) ** 3
 
 
-@pytest.mark.parametrize("pixel", [2.0, 4.0])
-def test_detector_pixels_are_part_of_the_beam(pixel) -> None:
-    """Means over pixels of 4 arcsec widen a 6 arcsec beam: the result is still the target."""
-    beam, target = round_beam(6.0), 12.0
+@pytest.mark.parametrize(("pixel", "fwhm"), [(2.0, 6.0), (4.0, 9.0)])
+def test_detector_pixels_are_part_of_the_beam(pixel, fwhm) -> None:
+    """Means over pixels widen the beam: the result is the target all the same."""
+    beam, target = round_beam(fwhm), 12.0
     side = 2 * round(60 / pixel) + 1
     wcs = make_wcs((side, side), pixel, rotation_deg=25.0)
     image = pixel_mean(wcs, (side, side), POSITION, beam)
@@ -145,15 +147,18 @@ def test_detector_pixels_are_part_of_the_beam(pixel) -> None:
     grid = plain_grid((25, 25), 3.0)
     matched = match_map(sky, round_beam(target), grid)
     assert not matched.averages_pixels
-    peak = (6.0 / target) ** 2
+    peak = (fwhm / target) ** 2
     truth = peak * gaussian(*offsets(grid.wcs, grid.shape, POSITION), round_beam(target))
-    # A box has no exact Gaussian: its fourth moment differs, 3e-3 of the peak for 4 arcsec.
-    assert_maps_close(matched.value, truth, rtol=0, atol=3e-3 * peak * (pixel / 4) ** 4 + 1e-6)
+    # At the peak of a Gaussian of s pixels the fourth derivative is 3 / s^4: cubic splines are
+    # then off by 3 / (384 s^4) an axis (de Boor 1978, from memory), and a box differs from its
+    # Gaussian by 1 / (480 s^4).
+    s = target * SIGMA_PER_FWHM / pixel
+    assert_maps_close(matched.value, truth, rtol=0, atol=(2 * 3 / 384 + 1 / 480) / s**4 * peak)
     assert fitted_fwhm(matched, POSITION) == pytest.approx((target, target), rel=0.002)
-    # Taken for samples at points the result is too wide, visibly so.
+    # Taken for samples at points the result is too wide by the variance 1/12 of the pixel.
     wrong = make_sky(image, wcs=wcs, beam_arcsec2=beam)
     excess = fitted_fwhm(match_map(wrong, round_beam(target), grid), POSITION)[0] / target - 1
-    assert excess > 0.3 * (pixel / target) ** 2 / 4
+    assert excess == pytest.approx(1 / 24 / s**2, rel=0.15)
 
 
 # --- Blanks and edges --------------------------------------------------------------------------
