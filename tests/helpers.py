@@ -48,7 +48,10 @@ def make_wcs(
     turn = math.radians(rotation_deg)
     step = pixel_arcsec / 3600
     matrix = np.array([[math.cos(turn), -math.sin(turn)], [math.sin(turn), math.cos(turn)]])
-    wcs.wcs.cd = matrix @ np.diag([step if flip else -step, step])
+    if rotation_deg:
+        wcs.wcs.cd = matrix @ np.diag([step if flip else -step, step])
+    else:
+        wcs.wcs.cdelt = [step if flip else -step, step]
     if axes[0].startswith("RA"):
         wcs.wcs.radesys = "ICRS"
     wcs.wcs.set()

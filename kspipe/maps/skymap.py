@@ -26,6 +26,7 @@ class Flag(IntFlag):
     LOW_COVERAGE = 16
     NO_SOLUTION = 32
     USER_MASK = 64
+    BRIDGED = 128
 
     @classmethod
     def meanings(cls) -> dict[str, int]:

@@ -9,7 +9,7 @@ from typing import Final
 import numpy as np
 from astropy.coordinates import SkyCoord
 from astropy.wcs import WCS
-from astropy.wcs.utils import skycoord_to_pixel
+from astropy.wcs.utils import pixel_to_skycoord, skycoord_to_pixel
 from numpy.typing import NDArray
 
 from kspipe.core.errors import Fault, GridError
@@ -33,12 +33,12 @@ class Grid:
     Attributes
     ----------
     wcs : astropy.wcs.WCS
-        TAN, ICRS, north up.
+        TAN, ICRS, north up; or that of a map whose pixels were taken over.
     shape : (int, int)
         Rows and columns.
     pixel_arcsec : float
     centre_deg : (float, float)
-        The galaxy's centre, on the centre of a pixel.
+        The galaxy's centre, ICRS; on the centre of a pixel of kspipe's own grid.
     """
 
     wcs: WCS
@@ -49,8 +49,8 @@ class Grid:
     @property
     def centre_pixel(self) -> tuple[float, float]:
         """Pixel (x, y) of the galaxy's centre, zero-based."""
-        x, y = self.wcs.wcs.crpix
-        return float(x) - 1.0, float(y) - 1.0
+        x, y = skycoord_to_pixel(SkyCoord(*self.centre_deg, unit="deg"), self.wcs, origin=0)
+        return float(x), float(y)
 
     @classmethod
     def around(
@@ -84,11 +84,30 @@ class Grid:
         columns, rows = last - first + 1
         return cls(wcs, (int(rows), int(columns)), pixel_arcsec, centre_deg)
 
+    @classmethod
+    def like(
+        cls, wcs: WCS, shape: tuple[int, int], centre_deg: tuple[float, float], where: str
+    ) -> Grid:
+        """Take over the pixels of a map, in any frame and projection.
+
+        Raises
+        ------
+        GridError
+            If the galaxy's centre is not on them.
+        """
+        grid = cls(wcs, shape, 1.0, centre_deg)
+        x, y = grid.centre_pixel
+        if not (-0.5 <= x <= shape[1] - 0.5 and -0.5 <= y <= shape[0] - 0.5):
+            raise GridError(
+                Fault("grid.like", f"the galaxy's centre is not on the pixels of {where}")
+            )
+        area = abs(float(np.linalg.det(pixel_jacobian(wcs, x, y))))
+        return cls(wcs, shape, math.sqrt(area), centre_deg)
+
     def sky(self) -> tuple[Array, Array]:
         """ICRS longitude and latitude of each pixel's centre [deg]."""
         y, x = np.indices(self.shape, dtype=float)
-        lon, lat = self.wcs.all_pix2world(x, y, 0)
-        return np.asarray(lon), np.asarray(lat)
+        return sky_of_pixels(self.wcs, x, y)
 
     def offsets_arcsec(self) -> tuple[Array, Array]:
         """Offsets east and north of the galaxy's centre [arcsec]."""
@@ -119,8 +138,8 @@ class Grid:
 
     def positions_in(self, wcs: WCS, x: Array, y: Array) -> tuple[Array, Array]:
         """Positions on this grid as positions on another map's pixels, in full."""
-        lon, lat = self.wcs.all_pix2world(x, y, 0)
-        there = skycoord_to_pixel(SkyCoord(lon, lat, unit="deg"), wcs, origin=0, mode="all")
+        sky = pixel_to_skycoord(x, y, self.wcs, origin=0, mode="all")
+        there = skycoord_to_pixel(sky, wcs, origin=0, mode="all")
         return np.asarray(there[0], dtype=float), np.asarray(there[1], dtype=float)
 
 

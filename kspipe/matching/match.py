@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 from functools import partial
-from typing import Final
+from typing import Final, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,12 +26,14 @@ from kspipe.kernels.regrid import interpolation_noise_gain, sample_cubic, sample
 from kspipe.kernels.tiles import cut_tiles
 from kspipe.maps.header import pixel_jacobian
 from kspipe.maps.skymap import Flag, NoiseTerm, SkyMap
+from kspipe.matching.area import area_weighted
 from kspipe.matching.flux import flux_on_grid, flux_within
 from kspipe.matching.grid import Grid
 
 __all__ = ["match_map"]
 
 Array = NDArray[np.float64]
+Regrid = Literal["spline", "area"]
 
 # Fewer pixels per FWHM of the final beam cannot be interpolated faithfully.
 LEAST_PIXELS_PER_BEAM: Final = 2.0
@@ -47,6 +49,7 @@ def match_map(
     grid: Grid,
     *,
     minimum_coverage: float = 0.5,
+    regrid: Regrid | None = None,
     workers: int = 1,
 ) -> SkyMap:
     """Bring a map and its noise to the target beam on the common grid.
@@ -63,6 +66,9 @@ def match_map(
         Covariance of the target beam (east, north).
     grid : Grid
     minimum_coverage : float
+    regrid : {"spline", "area"}, optional
+        How to go from the map's pixels to the grid's; by default a cubic spline where the target
+        beam spans at least two of the map's pixels, else area-weighted means.
     workers : int
         Threads of the FFT; the result does not depend on them.
 
@@ -77,11 +83,15 @@ def match_map(
     BeamError
         If the map's beam is wider than the target.
     GridError
-        If the target beam spans too few of the map's pixels to be interpolated.
+        If a spline is asked for where the target beam spans too few of the map's pixels.
     """
     x, y, coordinate_error = grid.pixels_in(sky.wcs)
     kernel = _kernel(sky, target_arcsec2, float(np.nanmedian(x)), float(np.nanmedian(y)))
-    smoothed = _smooth_and_sample(sky, kernel, x, y, workers)
+    method = _choose_regrid(sky, kernel, target_arcsec2, regrid)
+    if method == "area":
+        smoothed = _smooth_and_average(sky, kernel, grid, x, y)
+    else:
+        smoothed = _smooth_and_sample(sky, kernel, x, y, workers)
 
     coverage = np.clip(smoothed.weight, 0.0, 1.0)
     kept = coverage >= minimum_coverage
@@ -90,14 +100,29 @@ def match_map(
     terms = []
     for term, variance in zip(sky.noise, smoothed.variances, strict=True):
         after = _after(term, kernel)
-        gain = interpolation_noise_gain(x, y, _smoothness_pix2(after, kernel))
+        gain: Array | float = 1.0
+        if method == "spline":
+            gain = interpolation_noise_gain(x, y, _smoothness_pix2(after, kernel))
         with np.errstate(invalid="ignore", divide="ignore"):
             sigma = np.sqrt(variance * gain) / coverage
         terms.append(after.with_sigma(np.where(kept, sigma, np.nan)))
 
+    bridged = kept & smoothed.on_blank
     flags = np.where(kept & (coverage < FULL_COVERAGE), int(Flag.LOW_COVERAGE), 0)
+    flags |= np.where(bridged, int(Flag.BRIDGED), 0)
     fluxes = flux_within(sky.value, sky.wcs, grid), flux_on_grid(value, grid)
-    steps = _steps(sky, kernel, grid, coordinate_error, minimum_coverage, kept, fluxes)
+    how = (
+        f"by cubic spline, coordinates exact to {coordinate_error:.0e} of the map's pixels"
+        if method == "spline"
+        else "by area-weighted means: the map's and the grid's pixels widen the beam"
+    )
+    filled = f"{int((~kept).sum())} of {kept.size} pixels blank, {int(bridged.sum())} bridged"
+    steps = (
+        *_steps(sky, kernel, grid),
+        f"{how} ({'recipe' if regrid else 'chosen by its sampling'})",
+        f"coverage limit {minimum_coverage:g}: {filled}",
+        f"flux on the grid's sky {fluxes[0]:.6g}, after matching {fluxes[1]:.6g} ({sky.unit} sr)",
+    )
     return replace(
         sky,
         value=value,
@@ -129,51 +154,61 @@ def _kernel(sky: SkyMap, target_arcsec2: Array, x: float, y: float) -> _Kernel:
     kernel = subtract_covariance(target_arcsec2, beam)
     if kernel is None:
         raise BeamError(Fault(where, "the map's beam is wider than the target beam"))
-    fwhm_pix = beam_axes(transform_covariance(target_arcsec2, jacobian))[1]
-    if fwhm_pix < LEAST_PIXELS_PER_BEAM:
-        raise GridError(
-            Fault(
-                where,
-                f"the target beam spans {fwhm_pix:.2f} pixels of the map; at least "
-                f"{LEAST_PIXELS_PER_BEAM:g} are needed to interpolate it",
-                "type a wider grid.beam",
-            )
-        )
     return _Kernel(kernel, transform_covariance(kernel, jacobian), jacobian)
 
 
-def _steps(
-    sky: SkyMap,
-    kernel: _Kernel,
-    grid: Grid,
-    coordinate_error_pix: float,
-    minimum_coverage: float,
-    kept: NDArray[np.bool_],
-    fluxes: tuple[float, float],
-) -> tuple[str, ...]:
-    """Say what was done, for the history."""
+def _choose_regrid(
+    sky: SkyMap, kernel: _Kernel, target_arcsec2: Array, wanted: Regrid | None
+) -> Regrid:
+    """Interpolate what is sampled well enough, average what is not."""
+    fwhm_pix = beam_axes(transform_covariance(target_arcsec2, kernel.jacobian))[1]
+    is_sampled = fwhm_pix >= LEAST_PIXELS_PER_BEAM
+    if wanted == "spline" and not is_sampled:
+        raise GridError(
+            Fault(
+                f"maps.{sky.name}.regrid",
+                f"the target beam spans {fwhm_pix:.2f} pixels of the map; at least "
+                f"{LEAST_PIXELS_PER_BEAM:g} are needed to interpolate it",
+                'type regrid = "area" or a wider grid.beam',
+            )
+        )
+    return wanted or ("spline" if is_sampled else "area")
+
+
+def _steps(sky: SkyMap, kernel: _Kernel, grid: Grid) -> tuple[str, ...]:
+    """Say how the map was smoothed and where it was put, for the history."""
     major, minor, pa = beam_axes(kernel.arcsec2)
     smoothed = f"smoothed with a Gaussian of {major:.4f} x {minor:.4f} arcsec FWHM, pa {pa:.2f} deg"
     if sky.averages_pixels:
         smoothed += ", detector pixel counted in the beam"
     rows, columns = grid.shape
-    blank = int((~kept).sum())
-    return (
-        smoothed,
-        f"interpolated to {columns} x {rows} pixels of {grid.pixel_arcsec:.4g} arcsec",
-        f"by cubic spline, coordinates exact to {coordinate_error_pix:.0e} of the map's pixels",
-        f"coverage limit {minimum_coverage:g}: {blank} of {kept.size} pixels blank",
-        f"flux on the grid's sky {fluxes[0]:.6g}, after matching {fluxes[1]:.6g} ({sky.unit} sr)",
-    )
+    put = f"regridded to {columns} x {rows} pixels of {grid.pixel_arcsec:.4g} arcsec"
+    return smoothed, put
 
 
 @dataclass(frozen=True)
 class _Smoothed:
-    """Smoothed value times weight, weight, and variances, at the pixels of the grid."""
+    """Smoothed value times weight, weight, and variances, at the pixels of the grid.
+
+    `on_blank` marks grid pixels whose centre is no observed pixel of the map.
+    """
 
     value: Array
     weight: Array
     variances: tuple[Array, ...]
+    on_blank: NDArray[np.bool_]
+
+
+def _smooth_and_average(sky: SkyMap, kernel: _Kernel, grid: Grid, x: Array, y: Array) -> _Smoothed:
+    """The way of an under-sampled map."""
+    gains = [_noise_gain(term, kernel) for term in sky.noise]
+    side = float(np.sqrt(abs(np.linalg.det(kernel.jacobian))))
+    value, weight, variances = area_weighted(sky, kernel.pix2, gains, grid, side)
+    ny, nx = sky.value.shape
+    row, column = np.rint(y).astype(int), np.rint(x).astype(int)
+    inside = (row >= 0) & (row < ny) & (column >= 0) & (column < nx)
+    seen = np.isfinite(sky.value)[np.where(inside, row, 0), np.where(inside, column, 0)]
+    return _Smoothed(value, weight, variances, ~(inside & seen))
 
 
 def _smooth_and_sample(sky: SkyMap, kernel: _Kernel, x: Array, y: Array, workers: int) -> _Smoothed:
@@ -184,7 +219,10 @@ def _smooth_and_sample(sky: SkyMap, kernel: _Kernel, x: Array, y: Array, workers
     in full its coverage is one without any smoothing.
     """
     out = _Smoothed(
-        np.zeros(x.shape), np.zeros(x.shape), tuple(np.zeros(x.shape) for _ in sky.noise)
+        value=np.zeros(x.shape),
+        weight=np.zeros(x.shape),
+        variances=tuple(np.zeros(x.shape) for _ in sky.noise),
+        on_blank=np.ones(x.shape, dtype=bool),
     )
     margin = gaussian_reach(kernel.pix2) + SPLINE_MARGIN
     ny, nx = sky.value.shape
@@ -206,6 +244,7 @@ def _smooth_and_sample(sky: SkyMap, kernel: _Kernel, x: Array, y: Array, workers
         tx, ty = x[here] - tile.origin[1], y[here] - tile.origin[0]
         value = tile.cut(sky.value)
         observed = tile.cut(np.isfinite(sky.value[tile.section]), is_section=True) > 0
+        out.on_blank[here] = ~observed[np.rint(ty).astype(int), np.rint(tx).astype(int)]
         smooth = partial(gaussian_smooth, margin=0, workers=workers)
         spline = smooth(np.where(observed, value, 0.0), kernel.pix2, as_spline=True)
         out.value[here] = sample_cubic(spline.array, tx, ty, is_spline=True)

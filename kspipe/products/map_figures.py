@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from typing import Any, Final
 
+import matplotlib as mpl
 import numpy as np
 from matplotlib.colorbar import Colorbar
 from matplotlib.colors import AsinhNorm
@@ -13,7 +14,15 @@ from numpy.typing import NDArray
 
 from kspipe.products.read import Products
 from kspipe.products.sky import add_landmarks, add_sky_axes, fitted_inches
-from kspipe.products.style import GAS_UNIT, SFR_UNIT, SIGMA, in_figure, new_figure, write_name
+from kspipe.products.style import (
+    GAS_UNIT,
+    SFR_UNIT,
+    SIGMA,
+    beside_name,
+    in_figure,
+    new_figure,
+    write_name,
+)
 
 __all__ = ["draw_surface_densities"]
 
@@ -22,8 +31,10 @@ Array = NDArray[np.float64]
 # Light where faint and evenly darker to the bright end, in colour and in grey.
 COLOUR_MAP: Final = "magma_r"
 CONTOUR_SNR: Final = 3.0
+# Deeper holes than noise makes get a colour of their own.
+BELOW: Final = "#56B4E9"
 # Colours begin this many sigma below zero, are linear up to so many above, logarithmic beyond.
-LOWEST_SIGMA: Final = -2.0
+LOWEST_SIGMA: Final = -3.0
 LINEAR_SIGMA: Final = 5.0
 # Ticks of a colour bar are at least this fraction of its length apart.
 TICK_SPACING: Final = 0.09
@@ -60,7 +71,7 @@ def draw_surface_densities(products: Products) -> Figure:
     titles = dict(_TITLES)
     if "sigma_mol" not in products.densities:
         del titles["sigma_mol"], titles["sigma_gas"]
-        titles["sigma_atom"] = "Atomic gas, the only one"
+        titles["sigma_atom"] = "Atomic gas (no CO map)"
     shape = (products.covered.shape[0], products.covered.shape[1])
     width, height = fitted_inches(PANEL, 1.5 * PANEL, shape)
     rows = math.ceil(len(titles) / 2)
@@ -87,7 +98,8 @@ def _write_head(figure: Figure, products: Products) -> None:
         marks.insert(1, "dashed: r$_{25}$")
     if not products.covered.all():
         marks.append("white: not covered")
-    write_name(figure, LEFT, products.recipe.galaxy.name, ";  ".join(marks))
+    name = products.recipe.galaxy.name
+    write_name(figure, LEFT, name, beside_name(name, ";  ".join(marks)))
 
 
 def _draw_map(
@@ -101,7 +113,7 @@ def _draw_map(
     image = axes.imshow(
         density.value / scale,
         norm=AsinhNorm(linear / scale, low / scale, high / scale),
-        cmap=COLOUR_MAP,
+        cmap=mpl.colormaps[COLOUR_MAP].with_extremes(under=BELOW),
         interpolation="nearest",
         zorder=1,
     )

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-import textwrap
 from dataclasses import dataclass
 from typing import Any, Final
 
@@ -18,7 +17,14 @@ from numpy.typing import NDArray
 from kspipe.products.read import Products, Residual
 from kspipe.products.running import running_quantiles
 from kspipe.products.sky import add_hatching, add_landmarks, add_sky_axes, fitted_inches
-from kspipe.products.style import R25_LINE, in_figure, new_figure, write_name
+from kspipe.products.style import (
+    R25_LINE,
+    beside_name,
+    draw_density,
+    in_figure,
+    new_figure,
+    write_name,
+)
 from kspipe.products.words import headline_lines, map_lines, relation_title
 
 __all__ = ["draw_residual"]
@@ -77,16 +83,16 @@ def draw_residual(products: Products, name: str) -> Figure:
     Figure
     """
     shown = _sort(products, name)
-    title = textwrap.wrap(relation_title(products, name), 92)
+    title = beside_name(products.recipe.galaxy.name, relation_title(products, name))
     shape = (products.covered.shape[0], products.covered.shape[1])
     width, height = fitted_inches(PANEL, 1.5 * PANEL, shape)
-    figure = new_figure(BOTTOM + height + TOP + LINE * (len(title) - 1))
+    figure = new_figure(BOTTOM + height + TOP + LINE * title.count("\n"))
     axes = add_sky_axes(figure, in_figure(figure, LEFT, BOTTOM, width, height), products)
     bar = figure.add_axes(in_figure(figure, LEFT + width + 0.06, BOTTOM, 0.1, height))
     _draw_map(figure, axes, bar, products, shown)
     profile = figure.add_axes(in_figure(figure, PROFILE_LEFT, BOTTOM, PROFILE_WIDTH, height))
     _draw_profile(profile, products, shown)
-    write_name(figure, LEFT, products.recipe.galaxy.name, "\n".join(title))
+    write_name(figure, LEFT, products.recipe.galaxy.name, title)
     _write_below(figure, LEFT, _map_words(products, shown))
     _write_below(figure, PROFILE_LEFT - 0.4, _profile_words(products, name, shown))
     return figure
@@ -123,10 +129,10 @@ def _map_words(products: Products, shown: _Shown) -> list[str]:
 def _profile_words(products: Products, name: str, shown: _Shown) -> list[str]:
     samples = np.abs(shown.residual.ratio_dex[shown.has_log & products.independent])
     beyond = int(np.sum(samples > _half_height(products, shown)))
-    return [
-        *headline_lines(products, name),
-        f"shaded: most pixels pale;  {beyond} of {samples.size} samples beyond the frame",
-    ]
+    outside = (
+        f"{beyond} of {samples.size} samples beyond the frame" if samples.size else "no samples"
+    )
+    return [*headline_lines(products, name), f"shaded: most pixels pale;  {outside}"]
 
 
 def _draw_map(figure: Figure, axes: Any, bar: Any, products: Products, shown: _Shown) -> None:
@@ -165,16 +171,8 @@ def _draw_profile(axes: Axes, products: Products, shown: _Shown) -> None:
     radius, ratio = products.radius_kpc, shown.residual.ratio_dex
     half, snr = _half_height(products, shown), f"{products.recipe.comparison.low_snr:g}"
     axes.axhline(0.0, color="black", lw=0.7, zorder=4)
-    axes.plot(
-        radius[shown.has_log],
-        ratio[shown.has_log],
-        ".",
-        ms=1.5,
-        mew=0,
-        color="0.65",
-        rasterized=True,
-        zorder=1.5,
-    )
+    axes.set(xlim=(0.0, float(radius[products.covered].max())), ylim=(-half, half))
+    draw_density(axes, radius[shown.has_log], ratio[shown.has_log])
     samples = shown.has_log & products.independent
     for chosen, fill, rim, label in (
         (samples & shown.faint, "white", "0.4", f"S/N < {snr}"),
@@ -185,7 +183,6 @@ def _draw_profile(axes: Axes, products: Products, shown: _Shown) -> None:
     _draw_running(axes, products, shown)
     if products.recipe.galaxy.r25 is not None:
         axes.axvline(products.r25_kpc, color="black", lw=0.7, ls=R25_LINE, zorder=2)
-    axes.set(xlim=(0.0, float(radius[products.covered].max())), ylim=(-half, half))
     axes.set_xlabel("Radius in the disc (kpc)", labelpad=2)
     axes.set_ylabel(r"log$_{10}$(observed / predicted)", labelpad=1)
     handles, labels = axes.get_legend_handles_labels()

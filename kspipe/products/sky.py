@@ -73,10 +73,11 @@ def _jacobian(products: Products, x: float, y: float) -> Array:
 def _add_beam(axes: Any, products: Products) -> None:
     """Half-power ellipse of the beam, lower left, as the sky lies on the page there."""
     ny, nx = products.covered.shape
-    x, y = 0.08 * nx, 0.08 * ny
-    in_pixels = transform_covariance(products.beam_arcsec2, _jacobian(products, x, y))
+    jacobian = _jacobian(products, 0.08 * nx, 0.08 * ny)
+    in_pixels = transform_covariance(products.beam_arcsec2, jacobian)
     variances, vectors = np.linalg.eigh(in_pixels)
     minor, major = FWHM_PER_SIGMA * np.sqrt(variances)
+    x, y = (max(0.08 * n, 0.6 * major) - 0.5 for n in (nx, ny))
     angle = math.degrees(math.atan2(vectors[1, 1], vectors[0, 1]))
     axes.add_patch(
         Ellipse((x, y), major, minor, angle=angle, fc="0.3", ec="white", lw=0.8, zorder=9)

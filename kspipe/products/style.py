@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import textwrap
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -12,7 +13,9 @@ import numpy as np
 from matplotlib import patheffects, style
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.colors import LinearSegmentedColormap
 from matplotlib.figure import Figure
+from numpy.typing import NDArray
 
 __all__ = [
     "GAS_UNIT",
@@ -21,7 +24,8 @@ __all__ = [
     "SFR_UNIT",
     "SIGMA",
     "WIDE_INCHES",
-    "angle_on_page",
+    "beside_name",
+    "draw_density",
     "figure_style",
     "in_figure",
     "new_figure",
@@ -30,6 +34,8 @@ __all__ = [
     "save_figure",
     "write_name",
 ]
+
+Array = NDArray[np.float64]
 
 # Width of a page with two columns in the journals of the field.
 WIDE_INCHES: Final = 7.1
@@ -122,6 +128,11 @@ def relation_look(index: int) -> dict[str, Any]:
     return {"color": _COLOURS[index % len(_COLOURS)], "linestyle": _LINES[line % len(_LINES)]}
 
 
+def beside_name(name: str, text: str) -> str:
+    """Break a text into lines that fit beside the galaxy's name."""
+    return "\n".join(textwrap.wrap(text, max(40, 100 - 2 * len(name))))
+
+
 def write_name(figure: Figure, left_inches: float, name: str, beside: str) -> None:
     """Write the galaxy's name at the top left and what belongs beside it at the top right."""
     x, _, _, below = in_figure(figure, left_inches, 0, 0, 0.06)
@@ -129,13 +140,34 @@ def write_name(figure: Figure, left_inches: float, name: str, beside: str) -> No
     figure.text(0.985, 1 - below, beside, va="top", ha="right", size=8.5)
 
 
+def draw_density(axes: Axes, x: Array, y: Array) -> None:
+    """Draw many points as a light density inside the limits of the axes."""
+    limits = [axes.get_xlim(), axes.get_ylim()]
+    scales = [axes.get_xscale(), axes.get_yscale()]
+    extent = [
+        edge
+        for pair, scale in zip(limits, scales, strict=True)
+        for edge in (np.log10(pair) if scale == "log" else pair)
+    ]
+    if x.size:
+        axes.hexbin(
+            x,
+            y,
+            gridsize=(78, 45),
+            extent=tuple(extent),
+            xscale=scales[0],
+            yscale=scales[1],
+            bins="log",
+            mincnt=1,
+            cmap=LinearSegmentedColormap.from_list("density", ["0.88", "0.5"]),
+            linewidths=0.1,
+            rasterized=True,
+            zorder=1.5,
+        )
+    axes.set(xlim=limits[0], ylim=limits[1])
+
+
 def nice_below(value: float) -> float:
     """Find the largest of 1, 2, 5, 10, ... that does not exceed a positive value."""
     decade = 10.0 ** math.floor(math.log10(value))
     return max(step for step in (1.0, 2.0, 5.0) if step * decade <= value * (1 + 1e-9)) * decade
-
-
-def angle_on_page(axes: Axes, start: tuple[float, float], end: tuple[float, float]) -> float:
-    """Angle on the page [deg] of the step between two points of the data, limits being set."""
-    (x0, y0), (x1, y1) = axes.transData.transform(np.array([start, end]))
-    return math.degrees(math.atan2(y1 - y0, x1 - x0))

@@ -18,13 +18,17 @@ def parameter_text(parameters: Mapping[str, float]) -> str:
     return ", ".join(f"{name} = {value:g}" for name, value in parameters.items())
 
 
-def measured(value: float | None, error: float | None, *, sign: bool = False) -> str:
+def measured(
+    value: float | None, error: float | None, unit: str = "", *, sign: bool = False
+) -> str:
     """Write a number with its error to the error's first two digits.
 
     Parameters
     ----------
     value, error : float or None
         None, as the summary has it, where the number does not exist.
+    unit : str
+        Written behind.
     sign : bool
         Whether a plus sign is written.
 
@@ -32,9 +36,9 @@ def measured(value: float | None, error: float | None, *, sign: bool = False) ->
     --------
     >>> measured(0.86974, 0.00778)
     '0.8697 ± 0.0078'
-    >>> measured(0.171, None, sign=True)
-    '+0.171'
-    >>> measured(None, None)
+    >>> measured(0.171, None, "dex", sign=True)
+    '+0.171 dex'
+    >>> measured(None, None, "dex")
     'not defined'
     """
     if value is None:
@@ -45,7 +49,7 @@ def measured(value: float | None, error: float | None, *, sign: bool = False) ->
     else:
         digits = max(0, 1 - math.floor(math.log10(error)))
         text = f"{value:{plus}.{digits}f} ± {error:.{digits}f}"
-    return text.replace("-", "−")
+    return f"{text} {unit}".rstrip().replace("-", "−")
 
 
 def relation_title(products: Products, name: str) -> str:
@@ -60,12 +64,11 @@ def headline_lines(products: Products, name: str) -> list[str]:
     """Write the numbers that sum up one relation, as the summary has them."""
     numbers: dict[str, Any] = products.summary["relations"][name]
     ratio = measured(numbers["sum_ratio"], numbers["sum_ratio_error"])
-    median = measured(numbers["median_dex"], numbers["median_dex_error"], sign=True)
-    left_out = percent(numbers["fraction_without_log"])
+    median = measured(numbers["median_dex"], numbers["median_dex_error"], "dex", sign=True)
     return [
         f"sum(observed) / sum(predicted) = {ratio}",
         *_zero_point_lines(numbers["zero_point"]),
-        f"median {median} dex; {left_out} of {numbers['n_pixels']} could not enter",
+        f"median {median}; {_left_out(numbers)}",
         f"{products.size_text}; random errors",
     ]
 
@@ -73,12 +76,19 @@ def headline_lines(products: Products, name: str) -> list[str]:
 def _zero_point_lines(zero: dict[str, Any] | None) -> list[str]:
     if zero is None:
         return ["zero point not fitted: too few independent samples"]
-    offset = measured(zero["offset_dex"], zero["offset_error_dex"], sign=True)
-    scatter = measured(zero["scatter_dex"], zero["scatter_error_dex"])
+    offset = measured(zero["offset_dex"], zero["offset_error_dex"], "dex", sign=True)
+    scatter = measured(zero["scatter_dex"], zero["scatter_error_dex"], "dex")
     return [
-        f"zero point {offset} dex, scatter {scatter} dex",
+        f"zero point {offset}, scatter {scatter}",
         f"(fitted to {zero['n']} independent samples of any sign)",
     ]
+
+
+def _left_out(numbers: Mapping[str, Any]) -> str:
+    """Which part of the pixels is not in the median."""
+    if numbers["fraction_without_log"] is None:
+        return "no pixel has a prediction"
+    return f"{percent(numbers['fraction_without_log'])} of {numbers['n_pixels']} could not enter"
 
 
 def map_lines(
@@ -114,6 +124,6 @@ def map_lines(
     ]
 
 
-def percent(share: float | None) -> str:
+def percent(share: float) -> str:
     """Write a share as a percentage to one decimal."""
-    return "not defined" if share is None else f"{100 * share:.1f} %"
+    return f"{100 * share:.1f} %"

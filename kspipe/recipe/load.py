@@ -116,6 +116,10 @@ def parse_recipe(
     if isinstance(tables["metallicity"], MetallicityTable) and tables["metallicity"].map:
         located = _locate(tables["metallicity"].map, folder, "metallicity.map", faults)
         tables["metallicity"] = tables["metallicity"].model_copy(update={"map": located})
+    grid = tables["grid"]
+    if isinstance(grid, GridTable) and grid.like is not None and grid.like not in tables["maps"]:
+        located = _locate(Path(grid.like), folder, "grid.like", faults)
+        tables["grid"] = grid.model_copy(update={"like": str(located)})
     faults += check_together(tables)
     if faults:
         raise RecipeError(*faults)

@@ -166,6 +166,13 @@ class GridTable(Table):
     size: Arcsec | None = None
     minimum_coverage: float = Field(default=0.5, gt=0.0, le=1.0)
 
+    @model_validator(mode="after")
+    def _one_grid(self) -> GridTable:
+        clash = {"size", "pixels_per_beam"} & self.model_fields_set
+        if self.like is not None and clash:
+            raise ValueError(f"like = ... gives the pixels; remove {' and '.join(sorted(clash))}")
+        return self
+
     def fwhm_arcsec(self, pc_per_arcsec: float) -> float | None:
         """Width of the target beam; None for the smallest common one."""
         if self.beam == "common":

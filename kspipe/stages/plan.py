@@ -6,6 +6,7 @@ import hashlib
 import warnings
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -17,6 +18,8 @@ from kspipe.conversions import ALPHA_CO, ATOMIC, EXTINCTION, STAR_FORMATION, Cho
 from kspipe.core.errors import Fault, KspipeWarning, MapError
 from kspipe.kernels.geometry import beam_axes
 from kspipe.maps import MapSource
+from kspipe.maps.header import celestial_wcs
+from kspipe.maps.source import StoredImage
 from kspipe.matching import Grid, choose_beam
 from kspipe.recipe import Recipe
 from kspipe.relations import LAWS
@@ -91,17 +94,33 @@ def make_plan(recipe: Recipe, memory: InMemory | None = None) -> Plan:
     listed = list(sources.values())
     target = choose_beam(listed, recipe.grid.fwhm_arcsec(galaxy.pc_per_arcsec))
     fwhm = beam_axes(target)[0]
-    grid = Grid.around(
-        galaxy.centre.degrees,
-        fwhm / recipe.grid.pixels_per_beam,
-        listed,
-        recipe.grid.size.value if recipe.grid.size else None,
-    )
+    grid = _grid(recipe, sources, fwhm)
     _check_grid(grid)
     _warn_inclination(recipe)
     prints = {f"match.{name}": _match_print(recipe, sources[name], grid, fwhm) for name in sources}
     prints["convert"] = convert_print(recipe, prints)
     return Plan(recipe, sources, target, grid, prints)
+
+
+def _grid(recipe: Recipe, sources: dict[str, MapSource], fwhm_arcsec: float) -> Grid:
+    """Lay kspipe's own grid, or take over that of a named map or file."""
+    centre, table = recipe.galaxy.centre.degrees, recipe.grid
+    # Also where the pixels are another map's, all maps must reach the galaxy.
+    own = Grid.around(
+        centre,
+        fwhm_arcsec / table.pixels_per_beam,
+        list(sources.values()),
+        table.size.value if table.size else None,
+    )
+    if table.like is None:
+        return own
+    if table.like in sources:
+        source = sources[table.like]
+        return Grid.like(source.wcs, source.image.shape, centre, f"maps.{table.like}")
+    image = StoredImage.find(Path(table.like), None)
+    return Grid.like(
+        celestial_wcs(image.header, f"grid.like, {image}"), image.shape, centre, str(image)
+    )
 
 
 def _check_grid(grid: Grid) -> None:
@@ -149,7 +168,7 @@ def _match_print(recipe: Recipe, source: MapSource, grid: Grid, fwhm: float) -> 
                 if source.request.noise.kind == "measure"
                 else None,
             ],
-            "grid": [fwhm, grid.pixel_arcsec, grid.shape, grid.centre_pixel],
+            "grid": [fwhm, grid.pixel_arcsec, grid.shape, grid.wcs.to_header_string()],
             "coverage": recipe.grid.minimum_coverage,
         }
     )

@@ -126,6 +126,7 @@ def match_one(plan: Plan, name: str) -> SkyMap:
         plan.target_arcsec2,
         plan.grid,
         minimum_coverage=recipe.grid.minimum_coverage,
+        regrid=source.request.regrid,
         workers=os.cpu_count() or 1,
     )
 

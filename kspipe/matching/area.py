@@ -1,0 +1,61 @@
+"""Under-sampled maps: each grid pixel is the area-weighted mean of the map's pixels on it."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kspipe.kernels.fourier import gaussian_smooth
+from kspipe.maps.skymap import SkyMap
+from kspipe.matching.grid import Grid
+
+__all__ = ["area_weighted"]
+
+Array = NDArray[np.float64]
+
+
+def area_weighted(
+    sky: SkyMap, kernel_pix2: Array, gains: list[float], grid: Grid, map_pixel_arcsec: float
+) -> tuple[Array, Array, tuple[Array, ...]]:
+    """Smooth a map and average it over the pixels of the grid, by exact overlap on the sphere.
+
+    No interpolation can recover what a coarse map did not sample. Averages over areas conserve
+    flux instead, and the grid's pixels come on top of the beam.
+
+    Parameters
+    ----------
+    sky : SkyMap
+    kernel_pix2 : (2, 2) float64 array
+        Smoothing kernel on the map's pixels.
+    gains : list of float
+        Share of each noise term's variance that smoothing leaves.
+    grid : Grid
+    map_pixel_arcsec : float
+        Side of the map's pixels.
+
+    Returns
+    -------
+    value_times_weight, weight : (ny, nx) float64 array
+    variances : tuple of (ny, nx) float64 array
+        Of value times weight. A mean over n map pixels has 1/n of their variance; a grid pixel
+        inside one map pixel has all of it.
+    """
+    # Its imports cost a second, and few maps need it.
+    from reproject import reproject_exact  # noqa: PLC0415
+
+    observed = np.isfinite(sky.value)
+
+    def onto_grid(array: Array) -> Array:
+        smooth = gaussian_smooth(array, kernel_pix2, margin=0).array
+        mean, share = reproject_exact((smooth, sky.wcs), grid.wcs, shape_out=grid.shape)
+        # Where the map ends its share of the pixel is its weight.
+        return np.asarray(np.nan_to_num(mean) * np.nan_to_num(share))
+
+    mean_of = min(1.0, (map_pixel_arcsec / grid.pixel_arcsec) ** 2)
+    variances = tuple(
+        onto_grid(np.where(observed, term.sigma**2, 0.0)) * gain * mean_of
+        for term, gain in zip(sky.noise, gains, strict=True)
+    )
+    weight = onto_grid(observed.astype(float))
+    value = onto_grid(np.where(observed, sky.value, 0.0))
+    return value, weight, variances
