@@ -7,12 +7,12 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.core.errors import Fault, MapError
+from kspipe.core.errors import Fault, MapError, ShapeError
 from kspipe.maps.header import pixel_areas_arcsec2
 from kspipe.maps.skymap import CommonError, NoiseTerm, SkyMap
-from kspipe.maps.source import MapSource
+from kspipe.maps.source import MapSource, StoredImage
 
-__all__ = ["load_map"]
+__all__ = ["load_map", "relative_noise", "with_photon_noise"]
 
 Array = NDArray[np.float64]
 
@@ -57,7 +57,7 @@ def load_map(source: MapSource) -> SkyMap:
     noise: tuple[NoiseTerm, ...] = ()
     if request.noise.kind != "measure":
         sigma, note = _stated_sigma(source, value, where)
-        correlated = request.noise.correlated == "beam"
+        correlated = request.noise.correlated != "none"
         term = NoiseTerm(
             source=request.name,
             sigma=sigma * (scale / source.door.factor),
@@ -115,9 +115,13 @@ def _stated_sigma(source: MapSource, value: Array, where: str) -> tuple[Array, s
     """1-sigma error per pixel in the canonical unit at the galaxy's centre."""
     noise = source.request.noise
     if noise.kind == "value" or source.noise_image is None:
-        level = noise.value * source.noise_factor
+        level = np.full(value.shape, noise.value * source.noise_factor)
         note = f"noise {noise.value:g} {noise.unit or source.unit.text} from the recipe"
-        return np.full(value.shape, level), f"{note}, correlated like: {noise.correlated}"
+        relative = relative_noise(source)
+        if relative is not None:
+            level *= relative
+            note += f" where its shape ({noise.shape_is}) is one"
+        return level, f"{note}, correlated like: {noise.correlated}"
     sigma = source.noise_image.read()
     observed = np.isfinite(value) & np.isfinite(sigma)
     if not observed.any():
@@ -142,3 +146,54 @@ def _stated_sigma(source: MapSource, value: Array, where: str) -> tuple[Array, s
     sigma *= source.noise_factor
     note = f"noise from {source.noise_image}, read as {noise.stated}"
     return sigma, f"{note}, correlated like: {noise.correlated}"
+
+
+def relative_noise(source: MapSource) -> Array | None:
+    """How the noise varies over the field, from the recipe's shape; None where it gives none.
+
+    Noise goes as 1 / primary beam (one where the beam is one), as 1 / sqrt(exposure) (one at the
+    longest) and as the square root of the number of channels summed (one for one channel).
+
+    Raises
+    ------
+    ShapeError
+        If the shape is not on the pixels of the map.
+    MapError
+        If it is not positive anywhere.
+    """
+    noise = source.request.noise
+    if noise.shape_file is None:
+        return None
+    where = f"maps.{source.request.name}.noise.shape"
+    image = StoredImage.find(noise.shape_file, None)
+    if image.shape != source.image.shape:
+        raise ShapeError(
+            Fault(
+                f"{where}, {image}",
+                f"the shape has {image.shape[1]} x {image.shape[0]} pixels, the map "
+                f"{source.image.shape[1]} x {source.image.shape[0]}",
+            )
+        )
+    stored = image.read()
+    positive = np.where(stored > 0, stored, np.nan)
+    if not np.isfinite(positive).any():
+        raise MapError(Fault(f"{where}, {image}", "no pixel is positive"))
+    if noise.shape_is == "primary beam":
+        return np.asarray(1.0 / positive)
+    if noise.shape_is == "exposure":
+        return np.asarray(np.sqrt(np.nanmax(positive) / positive))
+    return np.asarray(np.sqrt(positive))
+
+
+def with_photon_noise(sky: SkyMap, source: MapSource) -> SkyMap:
+    """Add the noise of the photons counted in each pixel as a term of its own.
+
+    The measured value stands for the true one, negative values for none: below a few photons
+    per pixel the error is only that good.
+    """
+    gain = source.request.noise.gain or np.inf
+    per_unit = source.door.factor
+    sigma = per_unit * np.sqrt(np.maximum(sky.value / per_unit, 0.0) / gain)
+    term = NoiseTerm(f"{sky.name} photons", sigma, np.zeros((2, 2)))
+    step = f"photon noise added: {gain:g} photons per stored unit of a pixel"
+    return sky.with_step(step, noise=(*sky.noise, term))

@@ -83,7 +83,7 @@ def draw_star_formation_law(products: Products) -> Figure:
     draw_depletion_times(axes)
     gas, sfr = _pair(products)
     positive = products.covered & (gas.value > 0) & (sfr.value > 0)
-    draw_density(axes, gas.value[positive], sfr.value[positive])
+    draw_density(axes, gas.value[positive], sfr.value[positive], "log")
     for name in products.recipe.relations:
         draw_tracks(axes, products, name)
     # Faint samples, with bars across half the frame, stay below the tracks.
@@ -165,7 +165,8 @@ def _key(products: Products) -> list[Any]:
     """What each mark is."""
     snr = f"{products.recipe.comparison.low_snr:g}"
     gas, sfr = SIGMA["sigma_gas"], SIGMA["sigma_sfr"]
-    median = f"running median of all pixels,\nnon-positive {sfr} included\n(grey: {gas} below S/N = {snr})"
+    words = ("running median of all pixels,", f"non-positive {sfr} included")
+    median = "\n".join([*words, f"(grey: {gas} below S/N = {snr})"])
     key: list[Any] = [
         Patch(color="0.75", label="all covered pixels"),
         Line2D([], [], marker="o", ms=3, color="black", lw=0.6, label="independent samples"),

@@ -172,7 +172,7 @@ def _draw_profile(axes: Axes, products: Products, shown: _Shown) -> None:
     half, snr = _half_height(products, shown), f"{products.recipe.comparison.low_snr:g}"
     axes.axhline(0.0, color="black", lw=0.7, zorder=4)
     axes.set(xlim=(0.0, float(radius[products.covered].max())), ylim=(-half, half))
-    draw_density(axes, radius[shown.has_log], ratio[shown.has_log])
+    draw_density(axes, radius[shown.has_log], ratio[shown.has_log], "linear")
     samples = shown.has_log & products.independent
     for chosen, fill, rim, label in (
         (samples & shown.faint, "white", "0.4", f"S/N < {snr}"),

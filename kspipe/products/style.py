@@ -7,7 +7,7 @@ import textwrap
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import Any, Final
+from typing import Any, Final, Literal
 
 import numpy as np
 from matplotlib import patheffects, style
@@ -140,23 +140,19 @@ def write_name(figure: Figure, left_inches: float, name: str, beside: str) -> No
     figure.text(0.985, 1 - below, beside, va="top", ha="right", size=8.5)
 
 
-def draw_density(axes: Axes, x: Array, y: Array) -> None:
-    """Draw many points as a light density inside the limits of the axes."""
-    limits = [axes.get_xlim(), axes.get_ylim()]
-    scales = [axes.get_xscale(), axes.get_yscale()]
-    extent = [
-        edge
-        for pair, scale in zip(limits, scales, strict=True)
-        for edge in (np.log10(pair) if scale == "log" else pair)
-    ]
+def draw_density(axes: Axes, x: Array, y: Array, scale: Literal["linear", "log"]) -> None:
+    """Draw many points as a light density inside the limits of two axes of the same scale."""
+    (x0, x1), (y0, y1) = axes.get_xlim(), axes.get_ylim()
+    corners = np.array([x0, x1, y0, y1])
+    left, right, low, high = np.log10(corners) if scale == "log" else corners
     if x.size:
         axes.hexbin(
             x,
             y,
             gridsize=(78, 45),
-            extent=tuple(extent),
-            xscale=scales[0],
-            yscale=scales[1],
+            extent=(left, right, low, high),
+            xscale=scale,
+            yscale=scale,
             bins="log",
             mincnt=1,
             cmap=LinearSegmentedColormap.from_list("density", ["0.88", "0.5"]),
@@ -164,7 +160,7 @@ def draw_density(axes: Axes, x: Array, y: Array) -> None:
             rasterized=True,
             zorder=1.5,
         )
-    axes.set(xlim=limits[0], ylim=limits[1])
+    axes.set(xlim=(x0, x1), ylim=(y0, y1))
 
 
 def nice_below(value: float) -> float:

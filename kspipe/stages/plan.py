@@ -165,7 +165,7 @@ def _match_print(recipe: Recipe, source: MapSource, grid: Grid, fwhm: float) -> 
                 galaxy.velocity_convention,
                 # Blank sky is what lies outside the disc.
                 [galaxy.inclination.value, galaxy.position_angle.value, galaxy.r25]
-                if source.request.noise.kind == "measure"
+                if "measure" in (source.request.noise.kind, source.request.noise.correlated)
                 else None,
             ],
             "grid": [fwhm, grid.pixel_arcsec, grid.shape, grid.wcs.to_header_string()],

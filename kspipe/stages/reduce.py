@@ -15,9 +15,9 @@ from kspipe.kernels.coarse import evaluate_smoothly
 from kspipe.kernels.geometry import disc_radius, position_offsets
 from kspipe.maps.header import sky_of_pixels
 from kspipe.maps.product import read_matched, write_matched, write_product
-from kspipe.maps.read import load_map
+from kspipe.maps.read import load_map, relative_noise, with_photon_noise
 from kspipe.maps.skymap import SkyMap
-from kspipe.matching import match_map, measure_noise
+from kspipe.matching import match_map, measure_noise, measure_noise_correlation
 from kspipe.recipe import Recipe
 from kspipe.recipe.resolved import resolved_recipe
 from kspipe.stages.folder import ProductFolder
@@ -117,9 +117,20 @@ def match_one(plan: Plan, name: str) -> SkyMap:
     """Read one map, measure its noise if asked, and bring it to the target beam and grid."""
     source, recipe = plan.sources[name], plan.recipe
     sky = load_map(source)
-    if source.request.noise.kind == "measure":
-        correlated = source.request.noise.correlated == "beam"
-        sky = measure_noise(sky, _outside_galaxy(sky, recipe), correlated=correlated)
+    stated = source.request.noise
+    if stated.kind == "measure" or stated.correlated == "measure":
+        outside = _outside_galaxy(sky, recipe)
+    if stated.kind == "measure":
+        sky = measure_noise(
+            sky,
+            outside,
+            correlated=stated.correlated != "none",
+            relative=relative_noise(source),
+        )
+    if stated.correlated == "measure":
+        sky = measure_noise_correlation(sky, outside)
+    if stated.gain is not None:
+        sky = with_photon_noise(sky, source)
     log.info("match %s: %d pixels observed", name, int(np.isfinite(sky.value).sum()))
     return match_map(
         sky,
