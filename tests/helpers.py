@@ -85,8 +85,9 @@ def make_hdu(
 
 def make_request(file: Path | str = "map.fits", /, **changes: Any) -> MapRequest:
     """Request for a map called ``probe`` with a stated noise of one stored unit."""
-    given: dict[str, Any] = {"noise": NoiseRequest("value", value=1.0), "tracer": "HI"}
-    return MapRequest(name="probe", file=Path(file), **(given | changes))
+    noise = NoiseRequest("value", value=1.0)
+    given: dict[str, Any] = {"name": "probe", "tracer": "HI", "noise": noise}
+    return MapRequest(file=Path(file), **(given | changes))
 
 
 def open_source(

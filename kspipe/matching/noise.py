@@ -23,7 +23,7 @@ Array = NDArray[np.float64]
 LEAST_BEAMS: Final = 50.0
 MOST_ZEROS: Final = 0.01
 # A measured correlation reaches this many beams, and takes this many beams of sky.
-CORRELATION_REACH_BEAMS: Final = 4.0
+CORRELATION_REACH_BEAMS: Final = 8.0
 LEAST_BEAMS_FOR_CORRELATION: Final = 200.0
 # Pixels beyond this many sigma are emission or stars, not noise.
 N_SIGMA: Final = 4.0

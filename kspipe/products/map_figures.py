@@ -98,7 +98,7 @@ def _write_head(figure: Figure, products: Products) -> None:
         marks.insert(1, "dashed: r$_{25}$")
     if not products.covered.all():
         marks.append("white: not covered")
-    name = products.recipe.galaxy.name
+    name = products.galaxy_text
     write_name(figure, LEFT, name, beside_name(name, ";  ".join(marks)))
 
 

@@ -117,6 +117,11 @@ class Products:
         return math.ceil(LEAST_INDEPENDENT * per_value)
 
     @property
+    def galaxy_text(self) -> str:
+        """The galaxy's name, safe from being read as mathematics."""
+        return self.recipe.galaxy.name.replace("$", r"\$")
+
+    @property
     def beam_text(self) -> str:
         """The beam in arcsec and pc."""
         return f"{self.summary['beam_arcsec']:.3g}″ = {self.summary['beam_pc']:.3g} pc"
@@ -133,7 +138,10 @@ class Products:
 def read_recipe(folder: Path) -> Recipe:
     """Read DIR/recipe.toml without asking whether the maps it lists are still there."""
     path = folder / "recipe.toml"
-    maps = tomllib.loads(path.read_text(encoding="utf-8"))["maps"]
+    try:
+        maps = tomllib.loads(path.read_text(encoding="utf-8")).get("maps", {})
+    except ValueError:
+        maps = {}  # the reader of recipes says what is wrong
     return load_recipe(path, in_memory=frozenset(maps))
 
 

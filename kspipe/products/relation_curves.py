@@ -51,9 +51,10 @@ def draw_depletion_times(axes: Axes) -> None:
 
 def galaxy_z_prime(products: Products) -> Array:
     """Z' where gas and star formation are both significant; everywhere if that is nowhere."""
-    known = products.covered & np.isfinite(products.oh)
-    good = known & ~products.is_faint
-    return z_prime(products.oh[good if good.any() else known])
+    known = np.isfinite(products.oh)
+    covered = known & products.covered
+    good = covered & ~products.is_faint
+    return z_prime(products.oh[next(where for where in (good, covered, known) if where.any())])
 
 
 def draw_tracks(axes: Axes, products: Products, name: str) -> None:
@@ -78,14 +79,15 @@ def draw_tracks(axes: Axes, products: Products, name: str) -> None:
     def curve(z: float) -> Array:
         return track(table.law, x, OH_SOLAR + math.log10(z), table.parameters)
 
-    low, middle, high = (float(z) for z in np.quantile(galaxy_z_prime(products), [0.0, 0.5, 1.0]))
+    own = np.quantile(galaxy_z_prime(products), [0.0, 0.5, 1.0])
+    low, middle, high = (float(z) for z in own)
     axes.fill_between(x, curve(low), curve(high), color=look["color"], alpha=0.22, lw=0, zorder=3)
     axes.plot(x, curve(middle), **look, lw=1.8, zorder=5)
     height = LABEL_HEIGHT + LABEL_STEP * index
     for z in ROUND_Z_PRIME if len(names) == 1 else (low, high):
         y = curve(z)
         axes.plot(x, y, **look, lw=0.7, zorder=4)
-        _label_curve(axes, x, y, f"Z′ = {z:.2g}", look["color"], height)
+        _label_curve(axes, x, y, f"Z′ = {z:.3g}", look["color"], height)
 
 
 def _label_curve(axes: Axes, x: Array, y: Array, text: str, colour: str, height: float) -> None:

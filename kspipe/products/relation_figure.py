@@ -41,7 +41,7 @@ BIN_DEX: Final = 0.2
 # The frame begins at this fraction of the random error: what lies below is noise.
 FRAME_LOW: Final = 0.6
 FRAME_HIGH: Final = 2.5
-FAINT: Final = "0.78"
+FAINT: Final = "0.72"
 MEDIAN: Final[dict[str, Any]] = {
     "color": "black",
     "lw": 1.0,
@@ -88,7 +88,7 @@ def draw_star_formation_law(products: Products) -> Figure:
         draw_tracks(axes, products, name)
     # Faint samples, with bars across half the frame, stay below the tracks.
     samples = positive & products.independent
-    _draw_samples(axes, products, samples & products.is_faint, FAINT, width=0.35, layer=2.5)
+    _draw_samples(axes, products, samples & products.is_faint, FAINT, width=0.3, layer=2.5)
     _draw_samples(axes, products, samples & ~products.is_faint, "black", width=0.6, layer=6.0)
     _draw_median(axes, products)
     _write_key(figure, products, key, notes)
@@ -168,7 +168,7 @@ def _key(products: Products) -> list[Any]:
     words = ("running median of all pixels,", f"non-positive {sfr} included")
     median = "\n".join([*words, f"(grey: {gas} below S/N = {snr})"])
     key: list[Any] = [
-        Patch(color="0.75", label="all covered pixels"),
+        Patch(color="0.82", label="all covered pixels"),
         Line2D([], [], marker="o", ms=3, color="black", lw=0.6, label="independent samples"),
         Line2D([], [], marker="o", ms=3, color=FAINT, lw=0.6, label=f"the same, S/N < {snr}"),
         Line2D([], [], **MEDIAN, label=median),
@@ -190,8 +190,8 @@ def _notes(products: Products) -> list[str]:
     if products.recipe.relations:
         z, snr = galaxy_z_prime(products), f"{products.recipe.comparison.low_snr:g}"
         lines += [
-            f"Band: Z′ = {z.min():.2g} to {z.max():.2g}, the galaxy’s own",
-            f"where S/N ≥ {snr}; thick line: its median, {np.median(z):.2g}",
+            f"Band: Z′ = {z.min():.3g} to {z.max():.3g}, the galaxy’s own",
+            f"where S/N ≥ {snr}; thick line: its median, {np.median(z):.3g}",
             f"(Z′ = 1 is 12 + log(O/H) = {OH_SOLAR:g}).",
         ]
     return [
@@ -228,7 +228,7 @@ def _write_key(figure: Figure, products: Products, key: list[Any], notes: list[s
         bbox_to_anchor=(x, 1 - top),
         borderaxespad=0,
         alignment="left",
-        title=products.recipe.galaxy.name,
+        title=products.galaxy_text,
         title_fontproperties={"size": 11, "weight": "bold"},
         handlelength=2.4,
         labelspacing=0.6,

@@ -8,6 +8,7 @@ from typing import Any, Final
 
 import matplotlib as mpl
 import numpy as np
+from matplotlib.artist import Artist
 from matplotlib.axes import Axes
 from matplotlib.cm import ScalarMappable
 from matplotlib.colors import Normalize
@@ -42,11 +43,12 @@ FAINT_OPACITY: Final = 0.3
 CONTOUR_SIGMA: Final = 3.0
 RADIUS_BINS: Final = 20
 RUNNING: Final = "#0072B2"
-NOISE: Final = "0.93"
+NOISE: Final = "0.96"
 
 # The layout in inches.
 LEFT: Final = 0.78
 PANEL: Final = 2.6
+LEAST_HEIGHT: Final = 1.8
 BOTTOM: Final = 1.38
 TOP: Final = 0.5
 LINE: Final = 0.15
@@ -83,16 +85,17 @@ def draw_residual(products: Products, name: str) -> Figure:
     Figure
     """
     shown = _sort(products, name)
-    title = beside_name(products.recipe.galaxy.name, relation_title(products, name))
+    title = beside_name(products.galaxy_text, relation_title(products, name))
     shape = (products.covered.shape[0], products.covered.shape[1])
     width, height = fitted_inches(PANEL, 1.5 * PANEL, shape)
-    figure = new_figure(BOTTOM + height + TOP + LINE * title.count("\n"))
+    tall = max(height, LEAST_HEIGHT)
+    figure = new_figure(BOTTOM + tall + TOP + LINE * title.count("\n"))
     axes = add_sky_axes(figure, in_figure(figure, LEFT, BOTTOM, width, height), products)
     bar = figure.add_axes(in_figure(figure, LEFT + width + 0.06, BOTTOM, 0.1, height))
     _draw_map(figure, axes, bar, products, shown)
-    profile = figure.add_axes(in_figure(figure, PROFILE_LEFT, BOTTOM, PROFILE_WIDTH, height))
+    profile = figure.add_axes(in_figure(figure, PROFILE_LEFT, BOTTOM, PROFILE_WIDTH, tall))
     _draw_profile(profile, products, shown)
-    write_name(figure, LEFT, products.recipe.galaxy.name, title)
+    write_name(figure, LEFT, products.galaxy_text, title)
     _write_below(figure, LEFT, _map_words(products, shown))
     _write_below(figure, PROFILE_LEFT - 0.4, _profile_words(products, name, shown))
     return figure
@@ -175,20 +178,20 @@ def _draw_profile(axes: Axes, products: Products, shown: _Shown) -> None:
     draw_density(axes, radius[shown.has_log], ratio[shown.has_log], "linear")
     samples = shown.has_log & products.independent
     for chosen, fill, rim, label in (
-        (samples & shown.faint, "white", "0.4", f"S/N < {snr}"),
         (samples & ~shown.faint, "black", "black", "independent"),
+        (samples & shown.faint, "white", "0.4", f"S/N < {snr}"),
     ):
         marker: dict[str, Any] = {"ms": 2.4, "mfc": fill, "mec": rim, "mew": 0.5}
         axes.plot(radius[chosen], ratio[chosen], "o", **marker, label=label, zorder=3)
-    _draw_running(axes, products, shown)
+    curve = _draw_running(axes, products, shown)
     if products.recipe.galaxy.r25 is not None:
         axes.axvline(products.r25_kpc, color="black", lw=0.7, ls=R25_LINE, zorder=2)
     axes.set_xlabel("Radius in the disc (kpc)", labelpad=2)
     axes.set_ylabel(r"log$_{10}$(observed / predicted)", labelpad=1)
     handles, labels = axes.get_legend_handles_labels()
     axes.legend(
-        handles[::-1],
-        labels[::-1],
+        [curve, *handles],
+        ["median, 16–84 %", *labels],
         loc="lower right",
         bbox_to_anchor=(1.02, 0.985),
         ncols=3,
@@ -206,24 +209,25 @@ def _half_height(products: Products, shown: _Shown) -> float:
     return max(1.0, 1.15 * largest, 1.15 * shown.limit_dex)
 
 
-def _draw_running(axes: Axes, products: Products, shown: _Shown) -> None:
+def _draw_running(axes: Axes, products: Products, shown: _Shown) -> tuple[Artist, Artist]:
     """Running median and 68 % band of all pixels with a prediction, where they say something."""
-    residual = shown.residual
-    predicted = products.covered & (residual.predicted > 0)
-    if not predicted.any():
-        return
-    # Observed values that are not positive lie below every logarithm: quantiles count them there.
-    ratio = np.where(np.isfinite(residual.ratio_dex), residual.ratio_dex, -np.inf)[predicted]
-    radius = products.radius_kpc[predicted]
-    edges = np.linspace(0.0, float(radius.max()), RADIUS_BINS + 1)
+    ratio, radius = shown.residual.ratio_dex, products.radius_kpc
+    predicted = products.covered & (shown.residual.predicted > 0)
+    edges = np.linspace(0.0, float(radius[products.covered].max()), RADIUS_BINS + 1)
     running = running_quantiles(
-        radius, ratio, edges, [0.16, 0.5, 0.84], least=products.least_pixels
+        radius[predicted],
+        # Observed values that are not positive lie below every logarithm, and count there.
+        np.where(np.isfinite(ratio), ratio, -np.inf)[predicted],
+        edges,
+        [0.16, 0.5, 0.84],
+        least=products.least_pixels,
     )
     is_noise = _noise_bins(axes, products, edges)
-    place = np.searchsorted(edges, running.x, side="right") - 1
+    place = np.clip(np.searchsorted(edges, running.x, side="right") - 1, 0, RADIUS_BINS - 1)
     low, middle, high = np.where(is_noise[place], np.nan, np.clip(running.y, -10.0, 10.0))
-    axes.fill_between(running.x, low, high, color=RUNNING, alpha=0.25, lw=0, zorder=2)
-    axes.plot(running.x, middle, color=RUNNING, lw=1.6, label="median, 16–84 %", zorder=5)
+    band = axes.fill_between(running.x, low, high, color=RUNNING, alpha=0.25, lw=0, zorder=2)
+    (line,) = axes.plot(running.x, middle, color=RUNNING, lw=1.6, zorder=5)
+    return band, line
 
 
 def _noise_bins(axes: Axes, products: Products, edges: Array) -> Mask:
@@ -235,4 +239,4 @@ def _noise_bins(axes: Axes, products: Products, edges: Array) -> Mask:
     for start, end, noise in zip(edges[:-1], edges[1:], is_noise, strict=True):
         if noise:
             axes.axvspan(start, end, color=NOISE, lw=0, zorder=0.5)
-    return np.append(is_noise, is_noise[-1])
+    return np.asarray(is_noise)

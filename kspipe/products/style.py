@@ -63,7 +63,8 @@ HALO: Final = [patheffects.withStroke(linewidth=2.0, foreground="white")]
 R25_LINE: Final = (0, (5, 3))
 
 _STYLE: Final[dict[str, Any]] = {
-    "font.family": "STIXGeneral",
+    # The second has the letters that the first lacks.
+    "font.family": ["STIXGeneral", "DejaVu Sans"],
     "mathtext.fontset": "stix",
     "font.size": 9.0,
     "axes.titlesize": 9.0,
@@ -155,7 +156,7 @@ def draw_density(axes: Axes, x: Array, y: Array, scale: Literal["linear", "log"]
             yscale=scale,
             bins="log",
             mincnt=1,
-            cmap=LinearSegmentedColormap.from_list("density", ["0.88", "0.5"]),
+            cmap=LinearSegmentedColormap.from_list("density", ["0.92", "0.66"]),
             linewidths=0.1,
             rasterized=True,
             zorder=1.5,

@@ -129,14 +129,13 @@ def test_equal_beams_leave_no_kernel(major: float, ratio: float, pa: float) -> N
     ):
         kernel = subtract_covariance(beam, other)
         assert kernel is not None
-        assert np.all(np.linalg.eigvalsh(kernel) >= -1e-15 * np.trace(beam))
-        assert np.trace(kernel) <= 2e-6 * np.trace(beam)
+        assert np.abs(kernel).max() <= 1e-13 * np.trace(beam)
 
 
 @pytest.mark.parametrize(
     ("target", "source"),
     [
-        ((10.0, 10.0, 0.0), (10.01, 10.0, 0.0)),  # 0.1 % wider on one axis only
+        ((10.0, 10.0, 0.0), (10.001, 10.0, 0.0)),  # 0.01 % wider on one axis only
         ((10.0, 10.0, 0.0), (12.0, 4.0, 30.0)),  # narrower in area, wider along its major axis
         ((10.0, 5.0, 0.0), (9.0, 4.5, 90.0)),  # both axes narrower, but turned
         ((10.0, 10.0, 0.0), (20.0, 20.0, 0.0)),

@@ -139,6 +139,14 @@ def test_noise_between_pixels_by_drawing_noise(phase: tuple[float, float], sigma
     assert gain(phase, sigma) == pytest.approx(variance, rel=4 * scatter + 0.02)
 
 
+def test_noise_that_is_smooth_along_one_axis_only() -> None:
+    # Noise smoothed along x by 0.9 pixels keeps nearly all between columns, little between rows.
+    got = interpolation_noise_gain(np.array([0.5, 0.0]), np.array([0.0, 0.5]), np.diag([0.81, 0.0]))
+    along, across = exact_gain((0.5, 0.0), 0.9), exact_gain((0.5, 0.0), 0.0)
+    np.testing.assert_allclose(got, [along, across], rtol=0.02)
+    assert along > across + 0.2
+
+
 def test_white_noise_half_way_between_four_pixels() -> None:
     # The mean square of the spline's weights, 0.757 on each axis.
     assert gain((0.5, 0.5), 0.0) == pytest.approx(exact_gain((0.5, 0.5), 0.0), rel=1e-4)
