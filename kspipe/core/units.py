@@ -3,55 +3,128 @@
 The FITS standard allows few spellings and archives use many: upper case, dots, stars, several
 slashes, exponents with and without a caret. The reader below takes a string apart into factors;
 a slash divides by the next factor only (``Jy/beam km/s`` is Jy beam-1 km s-1), and what a word
-means never depends on a guess: upper-case words are read only where they have one meaning.
+means never depends on a guess: where case would tell two meanings apart and was lost, the string
+is refused. Magnitudes of the AB system become astropy's logarithmic unit.
 """
 
 from __future__ import annotations
 
+import difflib
 import re
-from typing import Final
+from collections import deque
+from typing import Final, TypeAlias
 
 import astropy.units as u
 
-__all__ = ["UnitReadingError", "read_unit"]
+__all__ = ["StoredUnit", "UnitReadingError", "read_unit"]
 
-_WORDS: Final[dict[str, u.UnitBase]] = {
-    "K": u.K, "mK": u.mK,
-    "Jy": u.Jy, "mJy": u.mJy, "uJy": u.uJy, "nJy": u.nJy, "MJy": u.MJy, "kJy": u.kJy,
-    "jy": u.Jy, "Jansky": u.Jy, "janskys": u.Jy,
-    "erg": u.erg, "ergs": u.erg, "W": u.W, "J": u.J,
-    "m": u.m, "km": u.km, "cm": u.cm, "mm": u.mm, "um": u.um, "micron": u.um, "nm": u.nm,
-    "Angstrom": u.AA, "angstrom": u.AA, "A": u.AA, "AA": u.AA, "Ang": u.AA,
-    "s": u.s, "sec": u.s, "second": u.s, "Hz": u.Hz, "GHz": u.GHz, "MHz": u.MHz,
-    "beam": u.beam, "Beam": u.beam, "bm": u.beam, "beams": u.beam,
-    "pixel": u.pix, "pix": u.pix, "pixels": u.pix, "Pixel": u.pix, "px": u.pix,
-    "sr": u.sr, "ster": u.sr, "steradian": u.sr,
-    "arcsec": u.arcsec, "asec": u.arcsec, "arcsecond": u.arcsec, "arcmin": u.arcmin,
-    "deg": u.deg, "rad": u.rad,
-    "R": u.R, "Rayleigh": u.R, "Rayleighs": u.R, "rayleigh": u.R, "dR": 0.1 * u.R,
-    "pc": u.pc, "kpc": u.kpc,
-    "solMass": u.Msun, "Msun": u.Msun, "M_sun": u.Msun, "Msol": u.Msun, "M_sol": u.Msun,
-    "yr": u.yr, "Gyr": u.Gyr,
-    "ph": u.ph, "photon": u.ph, "photons": u.ph,
-    "count": u.count, "counts": u.count, "ct": u.count, "cts": u.count, "DN": u.DN, "adu": u.adu,
-    "mag": u.mag,
+StoredUnit: TypeAlias = u.UnitBase | u.MagUnit
+
+# --- Words -------------------------------------------------------------------------------------
+
+# These have one meaning however they are capitalised.
+_ANY_CASE: Final[dict[str, u.UnitBase]] = {
+    name: unit
+    for unit, names in (
+        (u.beam, "beam beams bm"),
+        (u.pix, "pixel pixels pix px spaxel spaxels"),
+        (u.sr, "sr ster steradian steradians"),
+        (u.arcsec, "arcsec arcsecs arcsecond arcseconds asec"),
+        (u.arcmin, "arcmin"),
+        (u.deg, "deg degree degrees"),
+        (u.rad, "rad radian"),
+        (u.erg, "erg ergs"),
+        (u.s, "sec secs second seconds"),
+        (u.Hz, "hz hertz"),
+        (u.MHz, "megahertz"),
+        (u.GHz, "ghz"),
+        (u.km, "km"),
+        (u.cm, "cm"),
+        (u.um, "um micron microns"),
+        (u.nm, "nm"),
+        (u.AA, "aa ang angstrom angstroms"),
+        (u.K, "kelvin"),
+        (u.R, "rayleigh rayleighs"),
+        (0.1 * u.R, "decirayleigh decirayleighs"),
+        (u.count, "count counts cnt cnts ct cts"),
+        (u.count / u.s, "cps"),
+        (u.DN, "dn"),
+        (u.adu, "adu"),
+        (u.electron, "electron electrons"),
+        (u.ph, "ph photon photons"),
+        (u.mag, "mag mags"),
+        (u.mag * u.AB, "abmag mag_ab"),
+        (u.dimensionless_unscaled, "atom atoms"),
+        (u.Msun, "msun m_sun msol m_sol solmass"),
+        (u.pc, "pc"),
+        (u.kpc, "kpc"),
+        (u.yr, "yr"),
+        (u.Gyr, "gyr"),
+    )
+    for name in names.split()
+}
+
+# Of these the case is part of the meaning.
+_EXACT: Final[dict[str, u.UnitBase]] = {
+    "K": u.K, "mK": u.mK, "Kkm": u.K * u.km,
+    "m": u.m, "mm": u.mm, "s": u.s, "MHz": u.MHz,
+    "W": u.W, "mW": 1e-3 * u.W, "uW": 1e-6 * u.W, "nW": 1e-9 * u.W, "J": u.J,
+    "A": u.AA,
+    "R": u.R, "mR": 1e-3 * u.R, "kR": 1e3 * u.R, "dR": 0.1 * u.R,
+    "AB": u.AB,
+    "H": u.dimensionless_unscaled,
 }  # fmt: skip
 
-# In capitals only these words have one meaning: MJY may be milli or mega, and is left out.
-_CAPITALS: Final[dict[str, u.UnitBase]] = {
-    "JY": u.Jy, "KM": u.km, "M": u.m, "CM": u.cm, "S": u.s, "SEC": u.s, "HZ": u.Hz,
-    "BEAM": u.beam, "B": u.beam, "BM": u.beam, "PIXEL": u.pix, "PIX": u.pix, "SR": u.sr,
-    "ARCSEC": u.arcsec, "ERG": u.erg, "ERGS": u.erg, "KELVIN": u.K, "RAYLEIGH": u.R,
-    "ANGSTROM": u.AA,
+# And these are read in a string that has lost its lower case.
+_CAPITALS: Final[dict[str, u.UnitBase]] = {"M": u.m, "S": u.s, "B": u.beam}
+
+_JANSKY: Final = re.compile(
+    r"(?P<prefix>nano|micro|milli|kilo|mega|[numkM]?)(?:jy|janskys?)", re.IGNORECASE
+)
+_JANSKY_PREFIX: Final = {
+    "": 1.0, "n": 1e-9, "nano": 1e-9, "u": 1e-6, "micro": 1e-6, "m": 1e-3, "milli": 1e-3,
+    "k": 1e3, "kilo": 1e3, "M": 1e6, "mega": 1e6,
 }  # fmt: skip
 
+_TWO_MEANINGS: Final = frozenset({"MJY", "mjy", "MK", "MM", "MW", "MR"})
+# Megajansky is only ever used for continuum maps per steradian, and millijansky never.
+_PER_STERADIAN: Final = re.compile(r"/\s*(?:SR|STER)|SR\s*(?:\^|\*\*)?\s*\(?-1")
+
+_NO_UNIT: Final = {
+    "per": '"per" is a word; write "/"',
+    "log": "a logarithm is no unit; the map must hold the quantity itself",
+    "dex": "a logarithm is no unit; the map must hold the quantity itself",
+    "vega": "only magnitudes of the AB system are read",
+    "vegamag": "only magnitudes of the AB system are read",
+    "nanomaggy": '"nanomaggy" is 3.631 uJy in the AB system and another flux in the Vega system',
+    "nanomaggies": '"nanomaggies" are 3.631 uJy in the AB system and others in the Vega system',
+    "molecules": "a number of molecules is no number of atoms",
+}
+
+# --- Marks -------------------------------------------------------------------------------------
+
+_TYPOGRAPHY: Final = str.maketrans(
+    {"µ": "u", "μ": "u", "Å": "A", "\u212b": "A", "ö": "o", "{": "(", "}": ")"}
+    | dict.fromkeys("·⋅×", "*")
+    | dict.fromkeys("−–", "-")
+    | dict.fromkeys("\u00a0\u2009\t~", " ")
+)
+_SUPERSCRIPTS: Final = "⁺⁻⁰¹²³⁴⁵⁶⁷⁸⁹"
+_FROM_SUPERSCRIPT: Final = str.maketrans(_SUPERSCRIPTS, "+-0123456789")
+
+# Antenna temperatures are not yet on the scale of the main beam.
+_ANTENNA: Final = re.compile(r"\bT_?A\s*\*", re.IGNORECASE)
+_MAIN_BEAM: Final = re.compile(r"\(\s*T_?MB\s*\)", re.IGNORECASE)
+
+_INTEGER: Final = r"(?:\(\s*[+-]?\d+\s*\)|[+-]?\d++)"
+# Words and exponents are taken whole or not at all: "cm2.5" is not "cm2" and ".5".
 _TOKEN: Final = re.compile(
-    r"""\s*(?:
-        (?P<power>10\s*(?:\*\*|\^)\s*\(?\s*(?P<exp10>[+-]?\d+)\s*\)?)
-      | (?P<number>\d+(?:\.\d+)?(?:[eE][+-]?\d+)?)
-      | (?P<word>[A-Za-z_]+)
-        (?:\s*(?:\*\*|\^)\s*\(?\s*(?P<exp>[+-]?\d+)\s*\)? | (?P<exp_plain>[+-]?\d+))?
-      | (?P<mark>[*./()])
+    rf"""\s*(?:
+        10(?:\s*(?:\*\*|\^)\s*(?P<caret>{_INTEGER}) | (?P<signed>[+-]\d++))
+      | (?P<number>(?:\d+\.?\d*|\.\d+)(?:[eEdD][+-]?\d+)?+)(?![\d.])
+      | (?P<mark>[*./()]|x(?=\s*10))
+      | (?P<word>[A-Za-z_]++)(?P<exponent>\s*(?:\*\*|\^)\s*{_INTEGER}|[+-]?\d++)?+
+        (?!\.?\d|\s*\^|\s*\*\*)
     )""",
     re.VERBOSE,
 )
@@ -61,64 +134,7 @@ class UnitReadingError(ValueError):
     """A unit string that cannot be read in exactly one way."""
 
 
-def _word(word: str, text: str) -> u.UnitBase:
-    if word in _WORDS:
-        return _WORDS[word]
-    if word == word.upper() and word in _CAPITALS:
-        return _CAPITALS[word]
-    if word in ("MJY", "MK"):
-        # Mega-jansky is only ever used for continuum maps per steradian.
-        if word == "MJY" and re.search(r"/\s*SR|SR\s*(\^|\*\*)?-1", text):
-            return u.MJy
-        raise UnitReadingError(f'"{word}" may be milli or mega')
-    raise UnitReadingError(f'"{word}" is not a known unit')
-
-
-def _factors(text: str) -> list[tuple[u.UnitBase, int] | str]:
-    """Take a string apart into factors with exponents and the marks between them."""
-    parts: list[tuple[u.UnitBase, int] | str] = []
-    position = 0
-    while position < len(text.rstrip()):
-        match = _TOKEN.match(text, position)
-        if match is None:
-            raise UnitReadingError(f'"{text[position:].strip()}" cannot be read')
-        position = match.end()
-        if match["power"]:
-            parts.append((u.dimensionless_unscaled * 10.0 ** int(match["exp10"]), 1))
-        elif match["number"]:
-            parts.append((u.dimensionless_unscaled * float(match["number"]), 1))
-        elif match["word"]:
-            exponent = int(match["exp"] or match["exp_plain"] or 1)
-            parts.append((_word(match["word"], text), exponent))
-        else:
-            parts.append(match["mark"])
-    return parts
-
-
-def _product(parts: list[tuple[u.UnitBase, int] | str]) -> u.UnitBase:
-    """Multiply the factors; consumes `parts` up to a closing bracket."""
-    result = u.dimensionless_unscaled
-    divide = False
-    while parts:
-        part = parts.pop(0)
-        if part == ")":
-            return result
-        if part == "/":
-            if divide:
-                raise UnitReadingError("two slashes follow each other")
-            divide = True
-            continue
-        if part in ("*", "."):
-            continue
-        factor = _product(parts) if part == "(" else part[0] ** part[1]  # type: ignore[operator]
-        result = result / factor if divide else result * factor
-        divide = False
-    if divide:
-        raise UnitReadingError("it ends with a slash")
-    return result
-
-
-def read_unit(text: str) -> u.UnitBase:
+def read_unit(text: str) -> StoredUnit:
     """Read a unit string as an archive may have written it.
 
     Parameters
@@ -128,7 +144,7 @@ def read_unit(text: str) -> u.UnitBase:
 
     Returns
     -------
-    astropy.units.UnitBase
+    astropy.units.UnitBase or astropy.units.MagUnit
         The unit; a numeric factor in front is its scale.
 
     Raises
@@ -142,10 +158,136 @@ def read_unit(text: str) -> u.UnitBase:
     'm Jy / (s beam)'
     >>> read_unit("K.KM/S").to_string()
     'km K / s'
+    >>> read_unit("AB mag arcsec^-2").to_string()
+    'mag(AB / arcsec2)'
     """
-    if not text.strip():
+    clean = _clean(text)
+    if not clean:
         raise UnitReadingError("it is empty")
-    parts = _factors(text.strip())
-    if parts.count("(") != parts.count(")"):
-        raise UnitReadingError("a bracket is not closed")
-    return u.Unit(_product(parts))
+    parts = deque(_factors(clean))
+    unit = u.Unit(_product(parts))
+    if parts:
+        raise UnitReadingError("a bracket is closed that was not opened")
+    return _magnitude(unit) if u.AB in unit.bases else unit
+
+
+def _clean(text: str) -> str:
+    """Take off quotes and brackets around the whole, and write typography in plain letters."""
+    clean = text.strip().strip("'\"`").strip()
+    if clean.startswith("[") and clean.endswith("]"):
+        clean = clean[1:-1].strip()
+    clean = re.sub(
+        f"[{_SUPERSCRIPTS}]+", lambda found: "^" + found[0].translate(_FROM_SUPERSCRIPT), clean
+    )
+    clean = clean.translate(_TYPOGRAPHY)
+    if _ANTENNA.search(clean):
+        raise UnitReadingError(
+            "an antenna temperature must first be divided by the efficiency of the main beam"
+        )
+    return _MAIN_BEAM.sub("", clean)
+
+
+def _factors(text: str) -> list[u.UnitBase | str]:
+    """Take a string apart into factors with their exponents and the marks between them."""
+    parts: list[u.UnitBase | str] = []
+    position, only_numbers = 0, True
+    while position < len(text):
+        match = _TOKEN.match(text, position)
+        if match is None:
+            raise UnitReadingError(f'"{text[position:].strip()}" cannot be read')
+        position = match.end()
+        if match["mark"]:
+            parts.append(match["mark"].replace("x", "*"))
+        elif match["word"]:
+            parts.append(_word(match["word"], match["exponent"] or "", text))
+            only_numbers = False
+        elif only_numbers:
+            parts.append(_number(match) * u.dimensionless_unscaled)
+        else:
+            raise UnitReadingError(
+                f'"{match[0].strip()}" stands behind a unit: neither a factor nor an exponent'
+            )
+    return parts
+
+
+def _number(match: re.Match[str]) -> float:
+    """Value of a number or of a power of ten."""
+    power = match["caret"] or match["signed"]
+    if power:
+        return 10.0 ** _integer(power)
+    number = match["number"].lower().replace("d", "e")
+    mantissa, exponential, exponent = number.partition("e")
+    if exponential and float(mantissa) == 10:
+        raise UnitReadingError(
+            f'"{match["number"]}" is 1e{int(exponent) + 1} as a number and may be meant as '
+            f"1e{int(exponent)}"
+        )
+    if float(number) == 0:
+        raise UnitReadingError("its factor is zero")
+    return float(number)
+
+
+def _integer(text: str) -> int:
+    return int(text.strip("*^() "))
+
+
+def _word(word: str, exponent: str, text: str) -> u.UnitBase:
+    """Unit of a word, raised to its exponent."""
+    if word.lower() in _NO_UNIT:
+        raise UnitReadingError(_NO_UNIT[word.lower()])
+    unit = _meaning(word, text)
+    if exponent and unit == u.dimensionless_unscaled:
+        raise UnitReadingError(f'"{word}{exponent}" may be molecules, and atoms have no exponent')
+    return unit ** _integer(exponent) if exponent else unit
+
+
+def _meaning(word: str, text: str) -> u.UnitBase:
+    if word in _TWO_MEANINGS and not (word == "MJY" and _PER_STERADIAN.search(text)):
+        raise UnitReadingError(f'"{word}" may be milli or mega')
+    if word in _EXACT:
+        return _EXACT[word]
+    if word.lower() in _ANY_CASE:
+        return _ANY_CASE[word.lower()]
+    if word in _CAPITALS and text == text.upper():
+        return _CAPITALS[word]
+    jansky = _JANSKY.fullmatch(word)
+    if jansky is not None:
+        prefix = jansky["prefix"]
+        return _JANSKY_PREFIX[prefix if prefix == "M" else prefix.lower()] * u.Jy
+    near = difflib.get_close_matches(word.lower(), _ANY_CASE, n=1, cutoff=0.7)
+    meant = f'; did you mean "{near[0]}"?' if near else ""
+    raise UnitReadingError(f'"{word}" is not a known unit{meant}')
+
+
+def _product(parts: deque[u.UnitBase | str], *, in_bracket: bool = False) -> u.UnitBase:
+    """Multiply the factors; takes them off `parts` up to the bracket that closes, or to the end."""
+    result, mark = u.dimensionless_unscaled, ""
+    while parts and parts[0] != ")":
+        part = parts.popleft()
+        if isinstance(part, str) and part != "(":
+            if mark:
+                raise UnitReadingError(
+                    "two slashes follow each other"
+                    if part == mark == "/"
+                    else f'"{mark}" and "{part}" follow each other'
+                )
+            mark = part
+            continue
+        factor = _product(parts, in_bracket=True) if part == "(" else part
+        result = result / factor if mark == "/" else result * factor
+        mark = ""
+    if mark:
+        raise UnitReadingError("it ends with a slash" if mark == "/" else f'it ends with "{mark}"')
+    if in_bracket:
+        if not parts:
+            raise UnitReadingError("a bracket is not closed")
+        parts.popleft()
+    return result
+
+
+def _magnitude(unit: u.UnitBase) -> u.MagUnit:
+    """Turn ``AB mag / arcsec2`` into the logarithmic unit of AB / arcsec2."""
+    powers = dict(zip(unit.bases, unit.powers, strict=True))
+    if powers.get(u.mag) != 1 or powers[u.AB] != 1 or unit.scale != 1:
+        raise UnitReadingError('AB magnitudes are written "mag(AB)/arcsec2", without a factor')
+    return u.MagUnit(unit / u.mag)

@@ -3,14 +3,13 @@
 The measure is the correlation coefficient of the two images over the pixels that both observe
 when one is moved over the other. Where both show one sky it is 1 at the true displacement and
 smaller everywhere else, by the Cauchy-Schwarz inequality, whatever the scale and the zero level
-of either image, their edges and their blanks: a product of zero-filled images, the plain
-cross-correlation, has none of these properties and is drawn towards zero displacement.
+of either image, their edges and their blanks. Minimising chi-square over displacement, scale and
+level finds the same point; the plain product of zero-filled images is drawn towards zero.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import Final
 
@@ -19,19 +18,50 @@ import scipy.fft
 from numpy.typing import NDArray
 from scipy.interpolate import RectBivariateSpline
 
-from kspipe.kernels.noise import NoiseTerm
+from kspipe.kernels.noise import NoiseTerm, total_error
 
-__all__ = ["Peak", "displacement_covariance", "find_peak", "lag_correlations", "shift_response"]
+__all__ = ["ImagePair", "Peak", "displacement_covariance", "find_peak", "lag_correlations"]
 
 Array = NDArray[np.float64]
 Bools = NDArray[np.bool_]
+Lag = tuple[int, int]
 
 # Lags at which less than this share of the weight is left say nothing.
 LEAST_OVERLAP: Final = 0.5
 # First derivative by five points: exact to (2 pi k)^4 / 30, one per cent at 8 pixels per period.
 STENCIL: Final = ((-2, 1.0 / 12.0), (-1, -8.0 / 12.0), (1, 8.0 / 12.0), (2, -1.0 / 12.0))
+AXES: Final = (np.array([1, 0]), np.array([0, 1]))
 # The correlation exp(-d^2 / 4 sigma^2) falls to a millionth within this many sigma.
 NOISE_REACH_SIGMA: Final = 7.5
+
+
+@dataclass(frozen=True)
+class ImagePair:
+    """Two images on the same pixels.
+
+    Attributes
+    ----------
+    first, second : (ny, nx) float64 array
+        NaN where not observed.
+    first_noise, second_noise : tuple of NoiseTerm
+        Independent of each other.
+    weight : (ny, nx) float64 array
+        Of the pixels of `first`; zero leaves a pixel out.
+    jacobian_arcsec : (2, 2) float64 array
+        Sky offset (east, north) per pixel step (x, y).
+    """
+
+    first: Array
+    second: Array
+    first_noise: tuple[NoiseTerm, ...]
+    second_noise: tuple[NoiseTerm, ...]
+    weight: Array
+    jacobian_arcsec: Array
+
+    @property
+    def used(self) -> Bools:
+        """Pixels of `first` that count."""
+        return np.isfinite(self.first) & (self.weight > 0)
 
 
 @dataclass(frozen=True)
@@ -43,7 +73,7 @@ class Peak:
     x, y : float
         Displacement of the second image's features against the first's [pixel].
     correlation : float
-        Correlation coefficient there.
+        Correlation coefficient there, of what is not noise; may exceed 1 by its error.
     hessian : (2, 2) float64 array
         Second derivatives on (x, y) [pixel-2]; negative definite.
     """
@@ -53,21 +83,13 @@ class Peak:
     correlation: float
     hessian: Array
 
-    @property
-    def lag(self) -> tuple[int, int]:
-        """Whole pixels (x, y) nearest to it."""
-        return round(self.x), round(self.y)
 
-
-def lag_correlations(first: Array, second: Array, weight: Array, reach_pix: int) -> Array:
+def lag_correlations(pair: ImagePair, reach_pix: int) -> Array:
     """Correlation coefficient of two images at each whole displacement.
 
     Parameters
     ----------
-    first, second : (ny, nx) float64 array
-        NaN where not observed.
-    weight : (ny, nx) float64 array
-        Of the pixels of `first`; zero leaves a pixel out.
+    pair : ImagePair
     reach_pix : int
         Largest displacement along each axis.
 
@@ -75,15 +97,21 @@ def lag_correlations(first: Array, second: Array, weight: Array, reach_pix: int)
     -------
     (2 reach + 1, 2 reach + 1) float64 array
         Entry [reach + j, reach + i] compares first(x, y) with second(x + i, y + j); -1 where too
-        few pixels are common.
+        few pixels are common or nothing but noise is.
+
+    Notes
+    -----
+    The noise variance is taken off the spread of either image: else a displacement that brings
+    more of the bright sky into the common pixels would look like a better one.
     """
-    used, seen = np.isfinite(first) & (weight > 0), np.isfinite(second)
-    w, m = np.where(used, weight, 0.0), seen.astype(float)
-    a = np.where(used, first - _mean(first, used), 0.0)
-    b = np.where(seen, second - _mean(second, seen), 0.0)
-    shape = _room(first.shape, reach_pix)
+    used, seen = pair.used, np.isfinite(pair.second)
+    w, m = np.where(used, pair.weight, 0.0), seen.astype(float)
+    a, b = _about_mean(pair.first, used), _about_mean(pair.second, seen)
+    aa = a**2 - np.where(used, total_error(pair.first_noise), 0.0) ** 2
+    bb = b**2 - np.where(seen, total_error(pair.second_noise), 0.0) ** 2
+    shape = _room(a.shape, reach_pix)
     w0, wa, waa, m0, mb, mbb = (
-        scipy.fft.rfft2(array, s=shape) for array in (w, w * a, w * a**2, m, m * b, m * b**2)
+        scipy.fft.rfft2(array, s=shape) for array in (w, w * a, w * aa, m, b, bb)
     )
 
     def sums(one: Array, other: Array) -> Array:
@@ -93,18 +121,19 @@ def lag_correlations(first: Array, second: Array, weight: Array, reach_pix: int)
     common = total > LEAST_OVERLAP * total[reach_pix, reach_pix]
     with np.errstate(invalid="ignore", divide="ignore"):
         mean_a, mean_b = sums(wa, m0) / total, sums(w0, mb) / total
-        both = sums(wa, mb) / total - mean_a * mean_b
         spread_a = sums(waa, m0) / total - mean_a**2
         spread_b = sums(w0, mbb) / total - mean_b**2
+        both = sums(wa, mb) / total - mean_a * mean_b
         coefficient = both / np.sqrt(spread_a * spread_b)
-    return np.where(common & np.isfinite(coefficient), coefficient, -1.0)
+    is_real = common & (spread_a > 0) & (spread_b > 0)
+    return np.where(is_real, coefficient, -1.0)
 
 
 def find_peak(correlations: Array) -> Peak | None:
     """Find the highest point between the lags, on a quintic spline through them.
 
-    A parabola through three points would be off by up to 0.02 pixel where a beam has three
-    pixels; the spline is exact to 1e-4 pixel there.
+    A parabola through three points is off by up to 0.02 pixel where a beam has three pixels; the
+    spline is exact to a thousandth there.
 
     Returns
     -------
@@ -117,122 +146,195 @@ def find_peak(correlations: Array) -> Peak | None:
         return None
     lags = np.arange(-reach, reach + 1, dtype=float)
     spline = RectBivariateSpline(lags, lags, correlations, kx=5, ky=5)
+    start = np.array([lags[column], lags[row]])
+    at = start.copy()
 
-    def at(dy: int, dx: int) -> float:
-        return float(spline.ev(y, x, dx=dy, dy=dx))
+    def derivative(in_x: int, in_y: int) -> float:
+        return float(spline.ev(at[1], at[0], dx=in_y, dy=in_x))
 
-    y, x = float(lags[row]), float(lags[column])
     for _ in range(20):
-        gradient = np.array([at(0, 1), at(1, 0)])
-        hessian = np.array([[at(0, 2), at(1, 1)], [at(1, 1), at(2, 0)]])
-        if np.max(np.linalg.eigvalsh(hessian)) >= 0:
+        mixed = derivative(1, 1)
+        hessian = np.array([[derivative(2, 0), mixed], [mixed, derivative(0, 2)]])
+        if np.max(np.linalg.eigvalsh(hessian)) >= 0 or np.max(np.abs(at - start)) > 1.0:
             return None
-        step_x, step_y = np.clip(-np.linalg.solve(hessian, gradient), -0.5, 0.5)
-        x, y = x + step_x, y + step_y
-        if max(abs(x - lags[column]), abs(y - lags[row])) > 1.0:
-            return None
-        if math.hypot(step_x, step_y) < 1e-7:
+        gradient = np.array([derivative(1, 0), derivative(0, 1)])
+        step = np.clip(-np.linalg.solve(hessian, gradient), -0.5, 0.5)
+        at += step
+        if np.max(np.abs(step)) < 1e-7:
             break
-    return Peak(x, y, at(0, 0), hessian)
+    return Peak(float(at[0]), float(at[1]), derivative(0, 0), hessian)
 
 
-def shift_response(
-    first: Array, second: Array, weight: Array, lag: tuple[int, int]
-) -> tuple[Array, Array]:
-    """How the gradient of the correlation coefficient answers to each pixel of both images.
-
-    Parameters
-    ----------
-    first, second, weight : (ny, nx) float64 array
-        As in `lag_correlations`.
-    lag : (int, int)
-        Displacement (x, y) nearest to the peak.
+def displacement_covariance(pair: ImagePair, peak: Peak) -> Array:
+    """Covariance of a displacement on (x, y) [pixel2], from the noise of both images.
 
     Returns
     -------
-    to_first, to_second : (2, ny, nx) float64 array
-        Derivative of d(coefficient)/dx and d(coefficient)/dy with respect to the value of each
-        pixel; zero for pixels that do not enter.
+    (2, 2) float64 array
+        NaN where the images are too faint for an error.
 
     Notes
     -----
-    With standardised images A and B the coefficient is the weighted mean of A B; its derivative
-    with respect to a pixel of the first image is w (B - rho A) / (W sigma_A), and likewise for
-    the second. Both are differentiated along the lag.
+    At the peak the gradient of the coefficient is zero. Noise that changes the gradient by g
+    moves the peak by -H^-1 g, with the second derivatives H: good while the error is well below
+    the width of the peak. The gradient answers to each image through the slopes of the other,
+    which are themselves noisy: their noise times noise is thereby counted twice, and taken off
+    once.
     """
-    steps = [(axis, step, factor) for axis in (0, 1) for step, factor in STENCIL]
-    lags = [(lag[0] + step * (axis == 0), lag[1] + step * (axis == 1)) for axis, step, _ in steps]
-    moved = [_moved(second, at, np.nan) for at in lags]
-    used = np.isfinite(first) & (weight > 0) & np.isfinite(moved).all(axis=0)
-    to_first, to_second = np.zeros((2, *first.shape)), np.zeros((2, *first.shape))
-    if not used.any():
-        return to_first, to_second
-    w = np.where(used, weight, 0.0) / float(np.sum(weight[used]))
-    a, sigma_a = _standardised(first, w, used)
-    for (axis, _, factor), at, image in zip(steps, lags, moved, strict=True):
-        b, sigma_b = _standardised(image, w, used)
-        rho = float(np.sum(w * a * b))
-        to_first[axis] += factor * w * (b - rho * a) / sigma_a
-        to_second[axis] += factor * _moved(w * (a - rho * b) / sigma_b, (-at[0], -at[1]), 0.0)
-    return to_first, to_second
-
-
-def displacement_covariance(
-    peak: Peak,
-    responses: Iterable[tuple[Array, tuple[NoiseTerm, ...]]],
-    jacobian_arcsec: Array,
-) -> Array:
-    """Covariance of a displacement on (x, y) [pixel2], from the noise of both images.
-
-    Parameters
-    ----------
-    peak : Peak
-    responses : iterable of (response, noise terms)
-        One for each image.
-    jacobian_arcsec : (2, 2) float64 array
-        Sky offset (east, north) per pixel step (x, y).
-
-    Notes
-    -----
-    The peak is where the gradient is zero. A change g of the gradient moves it by -H^-1 g, with
-    the second derivatives H: first order in the noise, good while the displacement's error is
-    well below the width of the peak.
-    """
+    view = _View.at(pair, peak)
+    if view is None:
+        return np.full((2, 2), np.nan)
     gradient = np.zeros((2, 2))
-    for response, terms in responses:
+    for response, terms in zip(view.responses(pair), _noise_of(pair), strict=True):
         for term in terms:
-            gradient += _response_covariance(response, term, jacobian_arcsec)
+            x, y = (part * np.where(part != 0, term.sigma, 0.0) for part in response)
+            gradient += _sum_of_pairs((x, y), term, pair.jacobian_arcsec)
+    gradient -= view.noise_times_noise(pair)
     inverse = np.linalg.inv(peak.hessian)
-    return np.asarray(inverse @ gradient @ inverse.T)
+    covariance = np.asarray(inverse @ gradient @ inverse.T)
+    is_proper = float(np.min(np.linalg.eigvalsh(covariance))) > 0
+    return covariance if is_proper else np.full((2, 2), np.nan)
 
 
-def _response_covariance(response: Array, term: NoiseTerm, jacobian_arcsec: Array) -> Array:
-    """Covariance of the two sums of response times noise: over all pairs of pixels in reach."""
-    reach = min(_noise_reach_pix(term, jacobian_arcsec), max(response.shape[1:]))
-    shape = _room(response.shape[1:], reach)
-    x, y = (
-        scipy.fft.rfft2(np.where(part != 0, part * term.sigma, 0.0), s=shape) for part in response
-    )
+@dataclass(frozen=True)
+class _View:
+    """Both images at the whole lag nearest to the peak, over the pixels seen at all near lags.
+
+    With standardised images A and B the coefficient is the weighted mean of A B.
+    """
+
+    lag: Lag
+    used: Bools
+    weight: Array
+    a: Array
+    sigma_a: float
+    sigma_b: float
+
+    @classmethod
+    def at(cls, pair: ImagePair, peak: Peak) -> _View | None:
+        """Look at a pair; None where nothing is common or the spread is all noise."""
+        lag = (round(peak.x), round(peak.y))
+        near = [lag, *(_beside(lag, axis, step) for axis in (0, 1) for step, _ in STENCIL)]
+        used = pair.used
+        for one in near:
+            used = used & np.isfinite(_moved(pair.second, one, np.nan))
+        if not used.any():
+            return None
+        weight = np.where(used, pair.weight, 0.0) / float(np.sum(pair.weight[used]))
+        a = _standardised(pair.first, total_error(pair.first_noise), weight)
+        b = _second_at(pair, lag, weight)
+        if a is None or b is None:
+            return None
+        return cls(lag, used, weight, *a, b[1])
+
+    def responses(self, pair: ImagePair) -> tuple[Array, Array]:
+        """Derivatives of the gradient with respect to each pixel of either image, (2, ny, nx).
+
+        The coefficient answers to a pixel of the first image by w (B - rho A) / sigma_A, and to
+        one of the second likewise; both are differentiated along the lag.
+        """
+        to_first, to_second = np.zeros((2, *self.a.shape)), np.zeros((2, *self.a.shape))
+        for axis in (0, 1):
+            for step, factor in STENCIL:
+                lag = _beside(self.lag, axis, step)
+                moved = _second_at(pair, lag, self.weight)
+                if moved is None:
+                    continue
+                b, sigma_b = moved
+                rho = float(np.sum(self.weight * self.a * b))
+                to_first[axis] += factor * self.weight * (b - rho * self.a) / self.sigma_a
+                there = self.weight * (self.a - rho * b) / sigma_b
+                to_second[axis] += factor * _moved(there, (-lag[0], -lag[1]), 0.0)
+        return to_first, to_second
+
+    def noise_times_noise(self, pair: ImagePair) -> Array:
+        """Covariance of the gradient of the weighted mean of one noise times the other."""
+        total = np.zeros((2, 2))
+        scale = self.weight / (self.sigma_a * self.sigma_b)
+        for one in pair.first_noise:
+            for other in pair.second_noise:
+                there = _moved(other.sigma, self.lag, 0.0)
+                part = np.where(self.used, scale * one.sigma * there, 0.0)
+                total += _sum_of_pairs((part, part), one, pair.jacobian_arcsec, slopes_of=other)
+        return total
+
+
+def _noise_of(pair: ImagePair) -> tuple[tuple[NoiseTerm, ...], tuple[NoiseTerm, ...]]:
+    return pair.first_noise, pair.second_noise
+
+
+def _second_at(pair: ImagePair, lag: Lag, weight: Array) -> tuple[Array, float] | None:
+    """The second image read at a lag, standardised."""
+    noise = _moved(total_error(pair.second_noise), lag, np.nan)
+    return _standardised(_moved(pair.second, lag, np.nan), noise, weight)
+
+
+def _standardised(array: Array, noise: Array, weight: Array) -> tuple[Array, float] | None:
+    """Deviation from the weighted mean over the scatter that is not noise, and that scatter.
+
+    None where the scatter is all noise.
+    """
+    used = weight > 0
+    filled = np.where(used, array, 0.0)
+    deviation = np.where(used, filled - float(np.sum(weight * filled)), 0.0)
+    variance = float(np.sum(weight * (deviation**2 - np.where(used, noise, 0.0) ** 2)))
+    if not variance > 0:
+        return None
+    sigma = math.sqrt(variance)
+    return deviation / sigma, sigma
+
+
+def _sum_of_pairs(
+    parts: tuple[Array, Array],
+    term: NoiseTerm,
+    jacobian_arcsec: Array,
+    *,
+    slopes_of: NoiseTerm | None = None,
+) -> Array:
+    """Covariance of two weighted sums of one noise, or of it times the slopes of another."""
+    reach = min(_reach_pix(term, jacobian_arcsec), max(parts[0].shape))
+    shape = _room(parts[0].shape, reach)
+    spectra = [scipy.fft.rfft2(part, s=shape) for part in parts]
     lag = np.arange(-reach, reach + 1, dtype=float)
-    lag_x, lag_y = np.meshgrid(lag, lag)
-    (ex, ey), (nx, ny) = jacobian_arcsec
-    correlation = term.correlation_at(ex * lag_x + ey * lag_y, nx * lag_x + ny * lag_y)
+    lags = np.stack(np.meshgrid(lag, lag))
+    correlation = _correlation(term, lags, jacobian_arcsec)
+    total = np.empty((2, 2))
+    for i in (0, 1):
+        for j in (0, 1):
+            products = correlation * _at_lags(spectra[i], spectra[j], shape, reach)
+            if slopes_of is not None:
+                products *= _slope_correlation(slopes_of, lags, jacobian_arcsec, (i, j))
+            total[i, j] = float(np.sum(products))
+    return total
 
-    def pairs(one: Array, other: Array) -> float:
-        return float(np.sum(correlation * _at_lags(one, other, shape, reach)))
 
-    return np.array([[pairs(x, x), pairs(x, y)], [pairs(y, x), pairs(y, y)]])
+def _correlation(term: NoiseTerm, lags: Array, jacobian_arcsec: Array) -> Array:
+    """Correlation of a noise at pixel lags, (2, ...)."""
+    east, north = np.tensordot(jacobian_arcsec, lags, axes=1)
+    return term.correlation_at(east, north)
 
 
-def _noise_reach_pix(term: NoiseTerm, jacobian_arcsec: Array) -> int:
+def _slope_correlation(
+    term: NoiseTerm, lags: Array, jacobian_arcsec: Array, axes: tuple[int, int]
+) -> Array:
+    """Covariance of the slopes of a noise of unit variance, along two axes, at pixel lags."""
+    total = np.zeros(lags.shape[1:])
+    for step_i, factor_i in STENCIL:
+        for step_j, factor_j in STENCIL:
+            between = step_j * AXES[axes[1]] - step_i * AXES[axes[0]]
+            at = lags + between[:, None, None]
+            total += factor_i * factor_j * _correlation(term, at, jacobian_arcsec)
+    return total
+
+
+def _reach_pix(term: NoiseTerm, jacobian_arcsec: Array) -> int:
     """Pixels beyond which two noise values have nothing to do with each other."""
     pixel = math.sqrt(abs(float(np.linalg.det(jacobian_arcsec))))
-    widest = math.sqrt(max(float(np.max(np.linalg.eigvalsh(term.correlation_arcsec2))), 0.0))
-    reach = NOISE_REACH_SIGMA * widest
     if term.sampled is not None:
         own = math.sqrt(abs(float(np.linalg.det(term.sampled.jacobian_arcsec))))
-        reach = own * (term.sampled.values.shape[0] // 2)
-    return math.ceil(reach / pixel)
+        return math.ceil(own * (term.sampled.values.shape[0] // 2) / pixel)
+    widest = math.sqrt(max(float(np.max(np.linalg.eigvalsh(term.correlation_arcsec2))), 0.0))
+    return math.ceil(NOISE_REACH_SIGMA * widest / pixel)
 
 
 def _room(shape: tuple[int, ...], reach: int) -> tuple[int, int]:
@@ -248,7 +350,12 @@ def _at_lags(one: Array, other: Array, shape: tuple[int, int], reach: int) -> Ar
     return np.asarray(sums[np.ix_(lags % shape[0], lags % shape[1])])
 
 
-def _moved(array: Array, lag: tuple[int, int], fill: float) -> Array:
+def _beside(lag: Lag, axis: int, step: int) -> Lag:
+    x, y = np.array(lag) + step * AXES[axis]
+    return int(x), int(y)
+
+
+def _moved(array: Array, lag: Lag, fill: float) -> Array:
     """The array read at (x, y) + lag, with `fill` beyond its edges."""
     out = np.full(array.shape, fill)
     (ny, nx), (sx, sy) = array.shape, lag
@@ -258,13 +365,7 @@ def _moved(array: Array, lag: tuple[int, int], fill: float) -> Array:
     return out
 
 
-def _mean(array: Array, used: Bools) -> float:
-    return float(np.mean(array[used])) if used.any() else 0.0
-
-
-def _standardised(array: Array, weight: Array, used: Bools) -> tuple[Array, float]:
-    """Deviation from the weighted mean over the weighted scatter, zero where not used."""
-    filled = np.where(used, array, 0.0)
-    deviation = np.where(used, filled - float(np.sum(weight * filled)), 0.0)
-    sigma = math.sqrt(float(np.sum(weight * deviation**2)))
-    return deviation / sigma, sigma
+def _about_mean(array: Array, used: Bools) -> Array:
+    """Deviation from the mean of the used pixels, zero elsewhere."""
+    mean = float(np.mean(array[used])) if used.any() else 0.0
+    return np.where(used, array - mean, 0.0)

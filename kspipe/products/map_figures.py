@@ -16,6 +16,7 @@ from kspipe.products.read import Products
 from kspipe.products.sky import add_landmarks, add_sky_axes, fitted_inches
 from kspipe.products.style import (
     GAS_UNIT,
+    LINE_INCHES,
     SFR_UNIT,
     SIGMA,
     beside_name,
@@ -36,8 +37,8 @@ BELOW: Final = "#56B4E9"
 # Colours begin this many sigma below zero, are linear up to so many above, logarithmic beyond.
 LOWEST_SIGMA: Final = -3.0
 LINEAR_SIGMA: Final = 5.0
-# Ticks of a colour bar are at least this fraction of its length apart.
-TICK_SPACING: Final = 0.09
+# Ticks of a colour bar are at least so far apart.
+TICK_INCHES: Final = 0.21
 
 # The layout in inches.
 LEFT: Final = 0.78
@@ -75,7 +76,9 @@ def draw_surface_densities(products: Products) -> Figure:
     shape = (products.covered.shape[0], products.covered.shape[1])
     width, height = fitted_inches(PANEL, 1.5 * PANEL, shape)
     rows = math.ceil(len(titles) / 2)
-    figure = new_figure(BOTTOM + rows * (height + TITLE) + TOP)
+    marks = beside_name(products.galaxy_text, _marks(products))
+    top = TOP + LINE_INCHES * marks.count("\n")
+    figure = new_figure(BOTTOM + rows * (height + TITLE) + top)
     for place, (name, title) in enumerate(titles.items()):
         row, column = divmod(place, 2)
         left, bottom = LEFT + COLUMN * column, BOTTOM + (rows - 1 - row) * (height + TITLE)
@@ -88,18 +91,18 @@ def draw_surface_densities(products: Products) -> Figure:
         )
         bar = figure.add_axes(in_figure(figure, left + width + 0.06, bottom, 0.1, height))
         _draw_map(figure, axes, bar, products, name, title)
-    _write_head(figure, products)
+    write_name(figure, LEFT, products.galaxy_text, marks)
     return figure
 
 
-def _write_head(figure: Figure, products: Products) -> None:
+def _marks(products: Products) -> str:
+    """What the lines and the ellipse on every map are."""
     marks = [f"contour S/N = {CONTOUR_SNR:g}", f"ellipse: beam, {products.beam_text}"]
     if products.recipe.galaxy.r25 is not None:
         marks.insert(1, "dashed: r$_{25}$")
     if not products.covered.all():
         marks.append("white: not covered")
-    name = products.galaxy_text
-    write_name(figure, LEFT, name, beside_name(name, ";  ".join(marks)))
+    return ";  ".join(marks)
 
 
 def _draw_map(
@@ -119,7 +122,8 @@ def _draw_map(
     )
     _draw_contour(axes, density.snr)
     add_landmarks(axes, products)
-    _finish_bar(figure.colorbar(image, cax=bar, extend="min"))
+    height_inches = bar.get_position().height * figure.get_figheight()
+    _finish_bar(figure.colorbar(image, cax=bar, extend="min"), height_inches)
     unit = SFR_UNIT if name == "sigma_sfr" else GAS_UNIT
     factor = f"10$^{{{power}}}$ " if power else ""
     axes.set_title(f"{title}, {SIGMA[name]} ({factor}{unit})", pad=3)
@@ -138,28 +142,23 @@ def _draw_contour(axes: Any, snr: Array) -> None:
         axes.contour(snr, levels=[CONTOUR_SNR], colors="black", linewidths=0.5)
 
 
-def _finish_bar(bar: Colorbar) -> None:
-    """Round ticks on both sides of zero, none of them crowded."""
-    bar.set_ticks(_ticks(bar.norm), labels=None)
+def _finish_bar(bar: Colorbar, height_inches: float) -> None:
+    """Give a colour bar round ticks on both sides of zero."""
+    bar.set_ticks(_round_ticks(bar.norm, TICK_INCHES / height_inches))
     bar.ax.minorticks_off()
     bar.ax.yaxis.set_major_formatter(lambda value, _: f"{value:g}".replace("-", "−"))
     bar.ax.tick_params(length=2, pad=2)
     bar.outline.set_linewidth(0.6)
 
 
-def _ticks(norm: Any) -> list[float]:
-    decades = range(
-        math.ceil(math.log10(norm.vmax)), math.floor(math.log10(norm.linear_width)) - 2, -1
-    )
-    wanted = [0.0]
-    for lead in (1.0, 3.0, 5.0, 2.0):
-        for decade in decades:
-            wanted += [lead * 10.0**decade, -lead * 10.0**decade]
-    chosen: list[float] = []
+def _round_ticks(norm: Any, spacing: float) -> list[float]:
+    """Zero, then powers of ten, then 3, 5 and 2 times those, as long as none are crowded."""
+    first, last = math.floor(math.log10(norm.linear_width)) - 1, math.ceil(math.log10(norm.vmax))
+    powers = [10.0**power for power in range(last, first - 1, -1)]
+    wanted = [sign * lead * power for lead in (1, 3, 5, 2) for power in powers for sign in (1, -1)]
+    chosen = {0.0: float(norm(0.0))}
     for value in wanted:
         place = float(norm(value))
-        if 0.0 <= place <= 1.0 and all(
-            abs(place - float(norm(other))) >= TICK_SPACING for other in chosen
-        ):
-            chosen.append(value)
+        if 0.0 <= place <= 1.0 and min(abs(place - p) for p in chosen.values()) >= spacing:
+            chosen[value] = place
     return sorted(chosen)

@@ -19,6 +19,7 @@ from kspipe.products.read import Products, Residual
 from kspipe.products.running import running_quantiles
 from kspipe.products.sky import add_hatching, add_landmarks, add_sky_axes, fitted_inches
 from kspipe.products.style import (
+    LINE_INCHES,
     R25_LINE,
     beside_name,
     draw_density,
@@ -51,7 +52,6 @@ PANEL: Final = 2.6
 LEAST_HEIGHT: Final = 1.8
 BOTTOM: Final = 1.38
 TOP: Final = 0.5
-LINE: Final = 0.15
 PROFILE_LEFT: Final = 4.42
 PROFILE_WIDTH: Final = 2.58
 
@@ -89,7 +89,7 @@ def draw_residual(products: Products, name: str) -> Figure:
     shape = (products.covered.shape[0], products.covered.shape[1])
     width, height = fitted_inches(PANEL, 1.5 * PANEL, shape)
     tall = max(height, LEAST_HEIGHT)
-    figure = new_figure(BOTTOM + tall + TOP + LINE * title.count("\n"))
+    figure = new_figure(BOTTOM + tall + TOP + LINE_INCHES * title.count("\n"))
     axes = add_sky_axes(figure, in_figure(figure, LEFT, BOTTOM, width, height), products)
     bar = figure.add_axes(in_figure(figure, LEFT + width + 0.06, BOTTOM, 0.1, height))
     _draw_map(figure, axes, bar, products, shown)

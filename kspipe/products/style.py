@@ -20,6 +20,7 @@ from numpy.typing import NDArray
 __all__ = [
     "GAS_UNIT",
     "HALO",
+    "LINE_INCHES",
     "R25_LINE",
     "SFR_UNIT",
     "SIGMA",
@@ -39,6 +40,8 @@ Array = NDArray[np.float64]
 
 # Width of a page with two columns in the journals of the field.
 WIDE_INCHES: Final = 7.1
+# From one line of small letters to the next.
+LINE_INCHES: Final = 0.15
 PNG_DPI: Final = 200
 # Dense layers inside a PDF are pixels at this density.
 RASTER_DPI: Final = 300
@@ -131,7 +134,8 @@ def relation_look(index: int) -> dict[str, Any]:
 
 def beside_name(name: str, text: str) -> str:
     """Break a text into lines that fit beside the galaxy's name."""
-    return "\n".join(textwrap.wrap(text, max(40, 100 - 2 * len(name))))
+    # A line of small letters has about 108; one of the name's bold letters takes as much as 1.6.
+    return "\n".join(textwrap.wrap(text, max(40, round(108 - 1.6 * len(name)))))
 
 
 def write_name(figure: Figure, left_inches: float, name: str, beside: str) -> None:
