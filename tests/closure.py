@@ -46,8 +46,7 @@ def reduce_painted(seed: int, *, noise: bool, recipe_name: str = "orrinda_short.
         recipe = recipe.model_copy(update={"maps": {**recipe.maps, "co": co}})
     painted = load_demo().paint(seed, noise)
     memory = {
-        name: (painted[STEMS[name][0]], painted.get(STEMS[name][1] or ""))
-        for name in recipe.maps
+        name: (painted[STEMS[name][0]], painted.get(STEMS[name][1] or "")) for name in recipe.maps
     }
     plan = make_plan(recipe, memory)
     matched = {name: match_one(plan, name) for name in plan.sources}

@@ -37,7 +37,7 @@ class Headline:
         Median of log10(observed / predicted) where both are positive; error from a bootstrap
         over the independent samples.
     fraction_without_log : float
-        Share of `n_pixels` that could not enter the median.
+        Share of all covered pixels that could not enter the median.
     """
 
     n_pixels: int
@@ -79,7 +79,7 @@ def headline(
     observed, predicted = float(sfr.value[both].sum()), float(residuals.predicted[both].sum())
     has_log = both & np.isfinite(residuals.ratio_dex)
     in_median = residuals.ratio_dex[has_log]
-    n_pixels = int(both.sum())
+    n_pixels, n_covered = int(both.sum()), int(used.sum())
     return Headline(
         n_pixels=n_pixels,
         n_samples=int(samples.sum()),
@@ -98,7 +98,7 @@ def headline(
         ),
         median_dex=float(np.median(in_median)) if in_median.size else math.nan,
         median_dex_error=median_error(residuals.ratio_dex[has_log & independent], rng),
-        fraction_without_log=1.0 - in_median.size / n_pixels if n_pixels else math.nan,
+        fraction_without_log=1.0 - in_median.size / n_covered if n_covered else math.nan,
     )
 
 

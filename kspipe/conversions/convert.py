@@ -130,7 +130,9 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
     if "HI" in intensity:
         slopes["sigma_atom"] = {"HI": ATOMIC.get(choices.atomic).msun_pc2_per_k_kms * cos_i}
     line = next((tracer for tracer in CO_LINES if tracer in intensity), None)
-    if choices.alpha_co is not None and line is not None:
+    if choices.alpha_co is not None:
+        if line is None:
+            raise KeyError(f"record {choices.alpha_co!r} needs a CO line, none is among the maps")
         alpha = ALPHA_CO.get(choices.alpha_co)(np.asarray(parameters.z_prime, dtype=float))
         slopes["sigma_mol"] = {line: alpha / parameters.line_ratio * cos_i}
     if "sigma_atom" in slopes:

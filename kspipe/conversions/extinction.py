@@ -25,7 +25,11 @@ class Extinction(Record):
 
     def __reduce__(self) -> tuple[object, tuple[str]]:
         """Travel by key."""
-        return EXTINCTION.get, (self.key,)
+        return _by_key, (self.key,)
+
+
+def _by_key(key: str) -> Extinction:
+    return EXTINCTION.get(key)
 
 
 EXTINCTION = Registry[Extinction]("extinction record")

@@ -31,7 +31,11 @@ class StarFormation(Record):
 
     def __reduce__(self) -> tuple[object, tuple[str]]:
         """Travel by key."""
-        return STAR_FORMATION.get, (self.key,)
+        return _by_key, (self.key,)
+
+
+def _by_key(key: str) -> StarFormation:
+    return STAR_FORMATION.get(key)
 
 
 STAR_FORMATION = Registry[StarFormation]("star-formation record")

@@ -43,6 +43,6 @@ HELIUM_FACTOR: Final = 1.36
 OH_SOLAR: Final = 8.69
 
 # H atoms per cm2 for 1 K km/s of optically thin 21 cm emission: (4/3) 8 pi k nu^2 / (h c^3 A10)
-# with A10 = 2.869e-15 /s; the value of the observational papers. The literature spans 1.813 to
-# 1.823e18 (0.6 %), after the A10 adopted.
+# gives 1.8224e18 with A10 = 2.869e-15 /s; the observational papers use 1.823e18. The literature
+# spans 1.813 to 1.823e18 (0.6 %), after the A10 adopted.
 HI_COLUMN_PER_K_KMS: Final = 1.823e18

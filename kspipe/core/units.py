@@ -36,7 +36,6 @@ _ANY_CASE: Final[dict[str, u.UnitBase]] = {
         (u.erg, "erg ergs"),
         (u.s, "sec secs second seconds"),
         (u.Hz, "hz hertz"),
-        (u.MHz, "megahertz"),
         (u.GHz, "ghz"),
         (u.km, "km"),
         (u.cm, "cm"),
@@ -45,7 +44,7 @@ _ANY_CASE: Final[dict[str, u.UnitBase]] = {
         (u.AA, "aa ang angstrom angstroms"),
         (u.K, "kelvin"),
         (u.R, "rayleigh rayleighs"),
-        (0.1 * u.R, "decirayleigh decirayleighs"),
+        (u.Unit("dR"), "decirayleigh decirayleighs"),
         (u.count, "count counts cnt cnts ct cts"),
         (u.count / u.s, "cps"),
         (u.DN, "dn"),
@@ -68,22 +67,22 @@ _ANY_CASE: Final[dict[str, u.UnitBase]] = {
 _EXACT: Final[dict[str, u.UnitBase]] = {
     "K": u.K, "mK": u.mK, "Kkm": u.K * u.km,
     "m": u.m, "mm": u.mm, "s": u.s, "MHz": u.MHz,
-    "W": u.W, "mW": 1e-3 * u.W, "uW": 1e-6 * u.W, "nW": 1e-9 * u.W, "J": u.J,
+    "W": u.W, "mW": u.mW, "uW": u.uW, "nW": u.nW, "J": u.J,
     "A": u.AA,
-    "R": u.R, "mR": 1e-3 * u.R, "kR": 1e3 * u.R, "dR": 0.1 * u.R,
+    "R": u.R, "mR": u.Unit("mR"), "kR": u.Unit("kR"), "dR": u.Unit("dR"),
     "AB": u.AB,
     "H": u.dimensionless_unscaled,
 }  # fmt: skip
 
-# And these are read in a string that has lost its lower case.
+# And these stand alone only in strings that have lost their lower case.
 _CAPITALS: Final[dict[str, u.UnitBase]] = {"M": u.m, "S": u.s, "B": u.beam}
 
 _JANSKY: Final = re.compile(
     r"(?P<prefix>nano|micro|milli|kilo|mega|[numkM]?)(?:jy|janskys?)", re.IGNORECASE
 )
-_JANSKY_PREFIX: Final = {
-    "": 1.0, "n": 1e-9, "nano": 1e-9, "u": 1e-6, "micro": 1e-6, "m": 1e-3, "milli": 1e-3,
-    "k": 1e3, "kilo": 1e3, "M": 1e6, "mega": 1e6,
+_JANSKY_UNITS: Final = {
+    "": u.Jy, "n": u.nJy, "nano": u.nJy, "u": u.uJy, "micro": u.uJy, "m": u.mJy, "milli": u.mJy,
+    "k": u.kJy, "kilo": u.kJy, "M": u.MJy, "mega": u.MJy,
 }  # fmt: skip
 
 _TWO_MEANINGS: Final = frozenset({"MJY", "mjy", "MK", "MM", "MW", "MR"})
@@ -123,7 +122,7 @@ _TOKEN: Final = re.compile(
         10(?:\s*(?:\*\*|\^)\s*(?P<caret>{_INTEGER}) | (?P<signed>[+-]\d++))
       | (?P<number>(?:\d+\.?\d*|\.\d+)(?:[eEdD][+-]?\d+)?+)(?![\d.])
       | (?P<mark>[*./()]|x(?=\s*10))
-      | (?P<word>[A-Za-z_]++)(?P<exponent>\s*(?:\*\*|\^)\s*{_INTEGER}|[+-]?\d++)?+
+      | (?P<word>(?i:deci-)?[A-Za-z_]++)(?P<exponent>\s*(?:\*\*|\^)\s*{_INTEGER}|[+-]?\d++)?+
         (?!\.?\d|\s*\^|\s*\*\*)
     )""",
     re.VERBOSE,
@@ -202,7 +201,7 @@ def _factors(text: str) -> list[u.UnitBase | str]:
             parts.append(_word(match["word"], match["exponent"] or "", text))
             only_numbers = False
         elif only_numbers:
-            parts.append(_number(match) * u.dimensionless_unscaled)
+            parts.append(u.Unit(_number(match)))
         else:
             raise UnitReadingError(
                 f'"{match[0].strip()}" stands behind a unit: neither a factor nor an exponent'
@@ -246,15 +245,16 @@ def _meaning(word: str, text: str) -> u.UnitBase:
         raise UnitReadingError(f'"{word}" may be milli or mega')
     if word in _EXACT:
         return _EXACT[word]
-    if word.lower() in _ANY_CASE:
-        return _ANY_CASE[word.lower()]
-    if word in _CAPITALS and text == text.upper():
+    lower = word.lower().replace("-", "")
+    if lower in _ANY_CASE:
+        return _ANY_CASE[lower]
+    if word in _CAPITALS:
         return _CAPITALS[word]
     jansky = _JANSKY.fullmatch(word)
     if jansky is not None:
         prefix = jansky["prefix"]
-        return _JANSKY_PREFIX[prefix if prefix == "M" else prefix.lower()] * u.Jy
-    near = difflib.get_close_matches(word.lower(), _ANY_CASE, n=1, cutoff=0.7)
+        return _JANSKY_UNITS[prefix if prefix == "M" else prefix.lower()]
+    near = difflib.get_close_matches(lower, _ANY_CASE, n=1, cutoff=0.7)
     meant = f'; did you mean "{near[0]}"?' if near else ""
     raise UnitReadingError(f'"{word}" is not a known unit{meant}')
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Final
@@ -14,15 +15,20 @@ from numpy.typing import NDArray
 __all__ = [
     "Padded",
     "correlated_noise_gain",
+    "filtered",
     "gaussian_reach",
     "gaussian_smooth",
+    "spline_samples",
     "white_noise_gain",
 ]
 
 Array = NDArray[np.float64]
+Transfer = NDArray[np.float64] | NDArray[np.complex128]
 
 # A Gaussian falls to 1.5e-8 of its peak within this many sigma.
 REACH_SIGMA: Final = 6.0
+# A kernel narrower than a pixel rings: its tails fall with the square of the distance only.
+LEAST_ROOM: Final = 64
 
 
 @dataclass(frozen=True)
@@ -44,16 +50,26 @@ class Padded:
 def _transfer(shape: tuple[int, int], cxx: float, cxy: float, cyy: float, as_spline: bool) -> Array:
     """Fourier transform of a unit Gaussian on the half plane of a real FFT.
 
-    The tiles of one map share it, and it costs as much as the transform itself. A cubic B-spline
-    has the samples 1/6, 4/6, 1/6; dividing by their transform turns values into coefficients.
+    The tiles of one map share it, and it costs as much as the transform itself.
     """
     ky = np.fft.fftfreq(shape[0])[:, None]
     kx = np.fft.rfftfreq(shape[1])[None, :]
     exponent = cxx * kx**2 + 2.0 * cxy * kx * ky + cyy * ky**2
     transfer = np.exp(-2.0 * math.pi**2 * exponent)
     if as_spline:
-        transfer /= (2.0 + np.cos(2 * math.pi * ky)) / 3.0 * (2.0 + np.cos(2 * math.pi * kx)) / 3.0
+        transfer /= spline_samples(shape)
     return np.asarray(transfer)
+
+
+def spline_samples(shape: tuple[int, int]) -> Array:
+    """Fourier transform of the samples of a cubic B-spline, 1/6, 4/6, 1/6, on the half plane.
+
+    Dividing by it turns values into coefficients of the spline through them.
+    """
+    ky = np.fft.fftfreq(shape[0])[:, None]
+    kx = np.fft.rfftfreq(shape[1])[None, :]
+    along_y = (2.0 + np.cos(2 * math.pi * ky)) / 3.0
+    return np.asarray(along_y * (2.0 + np.cos(2 * math.pi * kx)) / 3.0)
 
 
 def gaussian_reach(covariance_pix2: Array) -> int:
@@ -99,16 +115,50 @@ def gaussian_smooth(
     margin = max(reach, 2) if margin is None else margin
     if not np.any(covariance_pix2) and not as_spline:
         return Padded(np.pad(array, margin), margin)
+    (cxx, cxy), (_, cyy) = np.asarray(covariance_pix2).tolist()
+
+    def transfer(shape: tuple[int, int]) -> Transfer:
+        return _transfer(shape, cxx, cxy, cyy, as_spline)
+
+    return filtered(array, transfer, reach=reach, margin=margin, workers=workers)
+
+
+def filtered(
+    array: Array,
+    transfer: Callable[[tuple[int, int]], Transfer],
+    *,
+    reach: int,
+    margin: int,
+    workers: int = 1,
+) -> Padded:
+    """Multiply an array by a transfer function in Fourier space; zero beyond the edges.
+
+    Parameters
+    ----------
+    array : (ny, nx) float64 array
+        Finite everywhere.
+    transfer : callable
+        Gives the transfer function on the half plane of a real FFT of a shape.
+    reach : int
+        Pixels to which the kernel spreads a point.
+    margin : int
+        Pixels of the output kept around the input.
+    workers : int
+        Threads of the FFT.
+
+    Returns
+    -------
+    Padded
+    """
     ny, nx = array.shape
     # Twice the reach must fit beyond the far edge, or the tail would wrap into the margin.
-    room = margin + max(reach, margin)
+    room = margin + max(reach, margin, LEAST_ROOM)
     shape = (
-        scipy.fft.next_fast_len(ny + room, real=True),
-        scipy.fft.next_fast_len(nx + room, real=True),
+        scipy.fft.next_fast_len(max(ny + room, 2 * reach + 1), real=True),
+        scipy.fft.next_fast_len(max(nx + room, 2 * reach + 1), real=True),
     )
     spectrum = scipy.fft.rfft2(array, s=shape, workers=workers)
-    (cxx, cxy), (_, cyy) = np.asarray(covariance_pix2).tolist()
-    spectrum *= _transfer(shape, cxx, cxy, cyy, as_spline)
+    spectrum *= transfer(shape)
     smooth = scipy.fft.irfft2(spectrum, s=shape, workers=workers, overwrite_x=True)
     rows = np.arange(-margin, ny + margin) % shape[0]
     columns = np.arange(-margin, nx + margin) % shape[1]

@@ -62,7 +62,7 @@ def beam_axes(covariance_arcsec2: Array) -> tuple[float, float, float]:
     if major - minor <= 1e-9 * max(major, 1e-300):
         return float(major), float(minor), 0.0
     east, north = vectors[:, 1]
-    return float(major), float(minor), math.degrees(math.atan2(east, north)) % 180.0
+    return float(major), float(minor), math.degrees(math.atan2(east, north)) % 180.0 % 180.0
 
 
 def beam_area(covariance: Array) -> float:
@@ -187,8 +187,12 @@ def hexagonal_lattice(
     -------
     (ny, nx) bool array
     """
-    half = math.ceil(math.ceil(spacing_pix) / 2)
-    rows_apart = max(1, math.ceil(math.sqrt(max(spacing_pix**2 - half**2, 0.0))))
+    # The last bit of a product such as 1.5 x 13.4 / 2.01 must not widen the lattice by a pixel.
+    spacing = round(spacing_pix, 9)
+    half = math.ceil(math.ceil(spacing) / 2)
+    next_row = math.sqrt(max(spacing**2 - half**2, 0.0))
+    # Two rows on, samples stand above each other again.
+    rows_apart = max(1, math.ceil(max(next_row, spacing / 2)))
     y, x = np.indices(shape)
     dy, dx = y - round(centre[1]), x - round(centre[0])
     row, on_row = np.divmod(dy, rows_apart)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import Final
 
 import numpy as np
@@ -74,28 +75,34 @@ def interpolation_noise_gain(x: Array, y: Array, correlation_pix2: Array) -> Arr
     Returns
     -------
     float64 array
-        1 on pixel centres and for well-sampled noise; as low as 0.3 half-way between the pixels
-        of white noise.
+        1 on pixel centres and for well-sampled noise; 0.57 half-way between four pixels of white
+        noise.
 
     Notes
     -----
-    The variance of a weighted sum is w^T R w, with the noise correlation
-    R = exp(-d^T C^-1 d / 4) between pixels at a distance d. It is tabulated over the position
-    within a pixel.
+    The variance of a weighted sum is w^T R w, with R the correlation of the noise on pixels: the
+    inverse transform of the squared transfer function over the frequencies that pixels hold. It
+    is tabulated over the position within a pixel.
     """
     if float(np.min(np.linalg.eigvalsh(correlation_pix2))) > 1.0:
         return np.ones(np.shape(x))
-    inverse = np.linalg.inv(correlation_pix2 + 1e-6 * np.eye(2))
     weights = _spline_weights()
-    lag = np.arange(-2 * _REACH, 2 * _REACH + 1)
-    dx, dy = np.meshgrid(lag, lag)
-    correlation = np.exp(
-        -0.25 * (inverse[0, 0] * dx**2 + 2 * inverse[0, 1] * dx * dy + inverse[1, 1] * dy**2)
-    )
+    correlation = _pixel_correlation(correlation_pix2)
     # w^T R w with separable weights is the sum of R over lags times both autocorrelations.
     auto = np.array([np.correlate(w, w, mode="full") for w in weights])
     table = np.einsum("py,qx,yx->pq", auto, auto, correlation)
     steps = _PHASES - 1
-    return np.asarray(
-        ndimage.map_coordinates(table, [(y % 1.0) * steps, (x % 1.0) * steps], order=1)
-    )
+    phases = [np.atleast_1d(np.asarray(p) % 1.0) * steps for p in (y, x)]
+    gain = ndimage.map_coordinates(table, phases, order=1)
+    return np.asarray(gain, dtype=float).reshape(np.shape(x))
+
+
+def _pixel_correlation(correlation_pix2: Array) -> Array:
+    """Correlation between pixels at whole lags up to twice the reach of the weights."""
+    n = 64
+    ky, kx = np.meshgrid(np.fft.fftfreq(n), np.fft.fftfreq(n), indexing="ij")
+    (a, b), (_, d) = correlation_pix2
+    power = np.exp(-4.0 * math.pi**2 * (a * kx**2 + 2.0 * b * kx * ky + d * ky**2))
+    correlation = np.fft.ifft2(power).real
+    lags = np.arange(-2 * _REACH, 2 * _REACH + 1) % n
+    return np.asarray(correlation[np.ix_(lags, lags)] / correlation[0, 0])

@@ -1,10 +1,17 @@
-"""The door: from the unit that a file is stored in to the canonical intensity of its tracer."""
+"""The door: from the unit that a file is stored in to the canonical intensity of its tracer.
+
+Fluxes per beam, per pixel or per count become intensities here. A unit that could be read in two
+ways, or that is another quantity than the tracer's, stops with the units that would fit.
+"""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Final
 
 import astropy.units as u
+import numpy as np
+from numpy.typing import NDArray
 
 from kspipe.core.constants import (
     ARCSEC2_SR,
@@ -16,15 +23,47 @@ from kspipe.core.constants import (
 )
 from kspipe.core.errors import Fault, UnitError
 from kspipe.core.tracers import Tracer
-from kspipe.core.units import UnitReadingError, read_unit
+from kspipe.core.units import StoredUnit, UnitReadingError, read_unit
 
-__all__ = ["Door", "UnitReading", "examples", "open_door", "read_stored_unit"]
+__all__ = [
+    "Door",
+    "UnitReading",
+    "examples",
+    "linear_door",
+    "open_door",
+    "read_stored_unit",
+    "refuse_unused_counts",
+]
+
+Array = NDArray[np.float64]
 
 _EXAMPLES = {
     "K km/s": "'K km/s', 'Jy/beam km/s', 'Jy/beam m/s'",
-    "MJy/sr": "'MJy/sr', 'Jy/pixel', 'Jy/beam'",
+    "MJy/sr": "'MJy/sr', 'Jy/pixel', 'Jy/beam', 'erg/s/cm2/A/pixel', 'mag(AB)/arcsec2'",
     "erg/s/cm2/sr": "'erg/s/cm2/arcsec2', 'erg/s/cm2/sr', 'Rayleigh', '0.1 Rayleigh'",
 }
+
+_SPEED: Final = u.km / u.s
+_COUNTS: Final = (u.count, u.DN, u.adu, u.electron)
+_LINE_FLUX: Final = u.erg / u.s / u.cm**2
+_FLUX_PER_ANGSTROM: Final = _LINE_FLUX / u.AA
+
+_NO_SOLID_ANGLE: Final = "a flux without a solid angle (per beam, pixel, sr or arcsec2?)"
+# What a refused unit is, beams and pixels taken as steradians; the first that fits is told.
+_KINDS: Final = (
+    (u.K, "a temperature that is not integrated over velocity"),
+    (u.Jy / u.sr, "an intensity per frequency, not integrated over a line"),
+    (_FLUX_PER_ANGSTROM / u.sr, "an intensity per wavelength, not integrated over a line"),
+    (_LINE_FLUX / u.sr, "an intensity integrated over frequency"),
+    (u.Jy, _NO_SOLID_ANGLE),
+    (u.Jy * _SPEED, _NO_SOLID_ANGLE),
+    (_LINE_FLUX, _NO_SOLID_ANGLE),
+    (_FLUX_PER_ANGSTROM, _NO_SOLID_ANGLE),
+    (u.Msun / u.pc**2, "a surface density, which is made from an intensity, not read"),
+    (u.cm**-2, "a column density, which is read for HI only"),
+    (u.mag, "a magnitude of an unsaid system and without a solid angle"),
+    (u.mag / u.sr, "a magnitude of an unsaid system (AB is written mag(AB)/arcsec2)"),
+)
 
 
 @dataclass(frozen=True)
@@ -37,44 +76,81 @@ class UnitReading:
         As stored or typed.
     origin : str
         ``header BUNIT`` or ``recipe``.
-    unit : astropy.units.UnitBase
+    unit : astropy.units.UnitBase or astropy.units.MagUnit
+    key : str
+        What to type in the recipe for another reading.
     """
 
     text: str
     origin: str
-    unit: u.UnitBase
+    unit: StoredUnit
+    key: str
 
     @property
-    def needs_beam(self) -> bool:
-        """Whether the unit counts per beam."""
-        return u.beam in self.unit.decompose().bases
+    def is_magnitude(self) -> bool:
+        """Whether the stored numbers are AB magnitudes."""
+        return isinstance(self.unit, u.MagUnit)
+
+    @property
+    def linear(self) -> u.UnitBase:
+        """The unit; for magnitudes that of the flux at magnitude zero."""
+        return self.unit.physical_unit if self.is_magnitude else self.unit
+
+    @property
+    def counted(self) -> u.UnitBase | None:
+        """What the stored numbers count: photons or steps of a detector; None for a flux."""
+        return next((one for one in _COUNTS if one in self.linear.bases), None)
 
     @property
     def needs_frequency(self) -> bool:
         """Whether flux density must become brightness temperature."""
-        per_speed = (self.unit * u.beam * u.pix / (u.km / u.s)).decompose()
-        return not any(base in per_speed.bases for base in (u.K,)) and u.beam in (
-            self.unit.decompose().bases
-        )
+        return bool(_per_steradian(self.linear).is_equivalent(u.Jy / u.sr * _SPEED))
 
 
 @dataclass(frozen=True)
 class Door:
-    """The factor from stored numbers to the canonical intensity, and why.
+    """The way from stored numbers to the canonical intensity, and why.
 
     Attributes
     ----------
     factor : float
-        Canonical intensity for a stored value of one at `pixel_area_arcsec2`.
+        Canonical intensity for a stored value of one, or at magnitude zero, in a pixel at the
+        galaxy's centre.
     per_pixel : bool
         Whether the stored number counts per pixel, so that the factor goes with 1 / pixel area.
     reason : str
         One line for the history.
+    is_magnitude : bool
+        Whether the stored numbers are magnitudes: -2.5 log10 of the intensity over `factor`.
     """
 
     factor: float
     per_pixel: bool
     reason: str
+    is_magnitude: bool = False
+
+    def intensity(self, stored: Array, relative_area: Array | float = 1.0) -> Array:
+        """Turn stored numbers into the canonical intensity, in place.
+
+        Parameters
+        ----------
+        stored : (ny, nx) float64 array
+            Overwritten.
+        relative_area : (ny, nx) float64 array or float
+            Area of each pixel over that of the pixel at the galaxy's centre.
+
+        Returns
+        -------
+        (ny, nx) float64 array
+            NaN where `stored` is NaN.
+        """
+        if self.is_magnitude:
+            stored *= -0.4
+            np.power(10.0, stored, out=stored)
+        stored *= self.factor
+        if self.per_pixel:
+            stored /= relative_area
+        return stored
 
 
 def examples(tracer: Tracer) -> str:
@@ -84,25 +160,48 @@ def examples(tracer: Tracer) -> str:
 
 
 def read_stored_unit(
-    bunit: object, override: str | None, tracer: Tracer, where: str
+    bunit: object, override: str | None, tracer: Tracer, where: str, *, key: str = ""
 ) -> UnitReading:
     """Read the unit of a map from the recipe or else from its header.
+
+    Parameters
+    ----------
+    bunit : object
+        The header's card; None where there is none.
+    override : str or None
+        The recipe's word.
+    tracer : Tracer
+    where : str
+        For messages: the map, and after a comma its file.
+    key : str, optional
+        What to type in the recipe; the map's ``unit`` by default.
 
     Raises
     ------
     UnitError
         If there is no unit, or it cannot be read in exactly one way.
     """
+    key = key or f"{where.partition(',')[0]}.unit"
     text, origin = (override, "recipe") if override is not None else (bunit, "header BUNIT")
-    fix = f"type unit = ... for this map; for {tracer.key}: {examples(tracer)}"
     if not isinstance(text, str) or not text.strip():
-        raise UnitError(Fault(where, f"the map has no unit (BUNIT is {bunit!r})", fix))
+        raise UnitError(
+            Fault(where, f"the map has no unit (BUNIT is {bunit!r})", _what_to_type(key, tracer))
+        )
+    text = text.strip()
     try:
-        return UnitReading(text.strip(), origin, read_unit(text))
+        return UnitReading(text, origin, read_unit(text), key)
     except UnitReadingError as error:
         raise UnitError(
-            Fault(where, f"the unit {text.strip()!r} ({origin}) cannot be read: {error}", fix)
+            Fault(
+                where,
+                f"the unit {text!r} ({origin}) cannot be read: {error}",
+                _what_to_type(key, tracer),
+            )
         ) from error
+
+
+def _what_to_type(key: str, tracer: Tracer) -> str:
+    return f"type {key} = ...; for {tracer.key}: {examples(tracer)}"
 
 
 def open_door(
@@ -113,6 +212,10 @@ def open_door(
     beam_area_arcsec2: float | None,
     pixel_area_arcsec2: float,
     where: str,
+    frequency_note: str = "",
+    counts: str | None = None,
+    zero_point: float | None = None,
+    wavelength_um: float | None = None,
 ) -> Door:
     """Work out the factor from the stored unit to the canonical intensity.
 
@@ -125,7 +228,16 @@ def open_door(
     beam_area_arcsec2, pixel_area_arcsec2 : float
         Solid angles of the beam and of one pixel.
     where : str
-        For messages.
+        For messages: the map, and after a comma its file.
+    frequency_note : str, optional
+        Where the frequency comes from.
+    counts : str, optional
+        What one stored count (per second) is worth: a number and the unit of a flux, taken per
+        pixel, or of an intensity.
+    zero_point : float, optional
+        AB magnitude of one stored count (per second) in a pixel.
+    wavelength_um : float, optional
+        For units per wavelength; the effective wavelength of the tracer by default.
 
     Returns
     -------
@@ -136,7 +248,9 @@ def open_door(
     UnitError
         If the unit is not one of this tracer's intensities.
     """
-    unit, notes = reading.unit, []
+    unit, notes = reading.linear, []
+    if reading.counted is not None:
+        unit = _weigh_counts(reading, tracer, counts, zero_point, where, notes)
     per_pixel = u.pix in unit.bases
     if u.beam in unit.bases:
         if beam_area_arcsec2 is None:
@@ -146,45 +260,208 @@ def open_door(
     if per_pixel:
         unit = u.Unit(unit * u.pix / (pixel_area_arcsec2 * ARCSEC2_SR * u.sr))
         notes.append(f"pixel of {pixel_area_arcsec2:.6g} arcsec2")
-    factor = _factor(unit, tracer, frequency_ghz, notes)
+    if tracer.unit == "K km/s":
+        factor = _line_temperature(unit, tracer, frequency_ghz, frequency_note, notes)
+    elif tracer.unit == "MJy/sr":
+        factor = _band_intensity(unit, tracer, wavelength_um, notes)
+    else:
+        factor = _line_intensity(unit, notes)
     if factor is None:
+        raise UnitError(_wrong_kind(reading, unit, tracer, where, notes))
+    one = "magnitude 0" if reading.is_magnitude else "1 stored unit"
+    because = f" ({', '.join(notes)})" if notes else ""
+    reason = (
+        f"unit {reading.text!r} from {reading.origin} read as {reading.unit.to_string()!r}; "
+        f"{one} = {factor:.8g} {tracer.unit}{because}"
+    )
+    return Door(factor, per_pixel, reason, reading.is_magnitude)
+
+
+def linear_door(door: Door, tracer: Tracer, where: str) -> Door:
+    """Refuse an error in magnitudes, and let any other pass.
+
+    Raises
+    ------
+    UnitError
+        If the door is one for magnitudes.
+    """
+    if door.is_magnitude:
+        raise UnitError(
+            Fault(
+                where,
+                "an error in magnitudes is a share of each pixel's own flux, and magnitudes have "
+                "no blank sky around zero: a noise or zero level can be stated as an intensity "
+                "only",
+                f'type {where} = "... {tracer.unit}"',
+            )
+        )
+    return door
+
+
+def refuse_unused_counts(
+    reading: UnitReading, counts: str | None, zero_point: float | None, where: str
+) -> None:
+    """Refuse a worth of counts for a map that is not in counts.
+
+    Raises
+    ------
+    UnitError
+        If there is one.
+    """
+    if reading.counted is None and (counts is not None or zero_point is not None):
+        name, key = _table(where), "zero_point" if counts is None else "counts"
+        raise UnitError(
+            Fault(
+                f"{name}.{key}, {where}",
+                f"the unit {reading.text!r} ({reading.origin}) reads as "
+                f"{reading.unit.to_string()!r}, which counts nothing",
+                f'remove {name}.{key}, or type {name}.unit = "counts/s"',
+            )
+        )
+
+
+def _table(where: str) -> str:
+    """``maps.NAME`` of a place in that table."""
+    return ".".join(where.partition(",")[0].split(".")[:2])
+
+
+def _wrong_kind(
+    reading: UnitReading, unit: u.UnitBase, tracer: Tracer, where: str, notes: list[str]
+) -> Fault:
+    """Say what the unit (per steradian in `unit`) is instead of an intensity of the tracer."""
+    kind = next((f" but {words}" for one, words in _KINDS if unit.is_equivalent(one)), "")
+    weighed = f"; {notes[0]}" if reading.counted is not None else ""
+    return Fault(
+        where,
+        f"the unit {reading.text!r} ({reading.origin}) reads as {reading.unit.to_string()!r}, "
+        f"which is not an intensity of {tracer.key}{kind}{weighed}",
+        _what_to_type(reading.key, tracer),
+    )
+
+
+def _power(unit: u.UnitBase, base: u.UnitBase) -> float:
+    return float(dict(zip(unit.bases, unit.powers, strict=True)).get(base, 0))
+
+
+def _per_steradian(unit: u.UnitBase) -> u.UnitBase:
+    """The unit with steradians in the place of beams and pixels, to compare kinds."""
+    for angle in (u.beam, u.pix):
+        unit = unit * (u.sr / angle) ** _power(unit, angle)
+    return unit
+
+
+def _weigh_counts(
+    reading: UnitReading,
+    tracer: Tracer,
+    counts: str | None,
+    zero_point: float | None,
+    where: str,
+    notes: list[str],
+) -> u.UnitBase:
+    """Put what one count (per second) is worth in the place of the count.
+
+    Counts are numbers of one pixel; a worth that is a flux is therefore per pixel, unless the
+    counts themselves are stored per solid angle.
+    """
+    name = _table(where)
+    if counts is not None and zero_point is not None:
+        raise UnitError(
+            Fault(
+                f"{name}, {where}",
+                f"counts = {counts!r} and zero_point = {zero_point:g} mag both say what one "
+                f"{reading.counted} is worth",
+                "remove one of them",
+            )
+        )
+    if zero_point is not None:
+        worth = u.Unit(10.0 ** (-0.4 * zero_point) * u.AB)
+        told = f"AB magnitude {zero_point:g} (recipe zero_point)"
+    elif counts is not None:
+        try:
+            worth = read_unit(counts)
+        except UnitReadingError as error:
+            raise UnitError(
+                Fault(
+                    f"{name}.counts",
+                    f"{counts!r} cannot be read: {error}",
+                    f'type {name}.counts = "1e-15 erg/s/cm2/A", for example',
+                )
+            ) from error
+        told = f"{counts} (recipe counts)"
+    else:
         raise UnitError(
             Fault(
                 where,
                 f"the unit {reading.text!r} ({reading.origin}) reads as "
-                f"{reading.unit.to_string()!r}, which is not an intensity of {tracer.key}",
-                f"type unit = ... for this map; for {tracer.key}: {examples(tracer)}",
+                f"{reading.unit.to_string()!r}, which is not an intensity of {tracer.key} without "
+                f"what one {reading.counted} is worth",
+                f'type {name}.counts = "... erg/s/cm2/A" (what one is worth in a pixel) or '
+                f'{name}.zero_point = "... mag" (its AB magnitude), or {reading.key} = ...; for '
+                f"{tracer.key}: {examples(tracer)}",
             )
         )
-    because = f" ({', '.join(notes)})" if notes else ""
-    reason = (
-        f"unit {reading.text!r} from {reading.origin} read as {reading.unit.to_string()!r}; "
-        f"1 stored unit = {factor:.8g} {tracer.unit}{because}"
-    )
-    return Door(factor, per_pixel, reason)
+    number = reading.linear / reading.counted
+    is_rate = _power(number, u.s) == -1
+    if is_rate:
+        number = number * u.s
+    if _has_solid_angle(worth):
+        number = number * u.pix ** (-_power(number, u.pix))
+    elif not _has_solid_angle(number):
+        number = number / u.pix
+    weighed = u.Unit(number * worth)
+    one = f"{reading.counted}{'/s' if is_rate else ''}{' of a pixel' * (u.pix in weighed.bases)}"
+    notes.append(f"1 {one} is {told}")
+    return weighed
 
 
-def _factor(
-    unit: u.UnitBase, tracer: Tracer, frequency_ghz: float | None, notes: list[str]
+def _has_solid_angle(unit: u.UnitBase) -> bool:
+    return u.rad in unit.decompose().bases or any(one in unit.bases for one in (u.beam, u.pix))
+
+
+def _line_temperature(
+    unit: u.UnitBase,
+    tracer: Tracer,
+    frequency_ghz: float | None,
+    frequency_note: str,
+    notes: list[str],
 ) -> float | None:
-    """Factor from a unit free of beams and pixels to the tracer's canonical unit, or None."""
-    speed = u.km / u.s
-    if tracer.unit == "K km/s":
-        if unit.is_equivalent(u.K * speed):
-            return float(unit.to(u.K * speed))
-        if unit.is_equivalent(u.cm**-2) and tracer.key == "HI":
-            notes.append(f"{HI_COLUMN_PER_K_KMS:.4g} H atoms per cm2 for 1 K km/s, optically thin")
-            return float(unit.to(u.cm**-2)) / HI_COLUMN_PER_K_KMS
-        if unit.is_equivalent(u.Jy / u.sr * speed) and frequency_ghz is not None:
-            notes.append(f"Rayleigh-Jeans at {frequency_ghz:.8g} GHz observed")
-            kelvin = u.brightness_temperature(frequency_ghz * u.GHz)
-            per_speed = unit.to(u.Jy / u.sr * speed)
-            return float((per_speed * u.Jy / u.sr).to_value(u.K, kelvin))
-        return None
-    target = u.MJy / u.sr if tracer.unit == "MJy/sr" else u.erg / u.s / u.cm**2 / u.sr
-    if unit.is_equivalent(target):
-        return float(unit.to(target))
-    if tracer.unit == "erg/s/cm2/sr" and unit.is_equivalent(u.R):
+    """Brightness temperature over velocity [K km/s] for one `unit`, or None."""
+    if unit.is_equivalent(u.K * _SPEED):
+        return float(unit.to(u.K * _SPEED))
+    if unit.is_equivalent(u.cm**-2) and tracer.key == "HI":
+        notes.append(f"{HI_COLUMN_PER_K_KMS:.4g} H atoms per cm2 for 1 K km/s, optically thin")
+        return float(unit.to(u.cm**-2)) / HI_COLUMN_PER_K_KMS
+    if unit.is_equivalent(u.Jy / u.sr * _SPEED) and frequency_ghz is not None:
+        origin = f" from {frequency_note}" if frequency_note else ""
+        notes.append(f"Rayleigh-Jeans at {frequency_ghz:.8g} GHz observed{origin}")
+        kelvin = u.brightness_temperature(frequency_ghz * u.GHz)
+        per_speed = unit.to(u.Jy / u.sr * _SPEED)
+        return float((per_speed * u.Jy / u.sr).to_value(u.K, kelvin))
+    return None
+
+
+def _band_intensity(
+    unit: u.UnitBase, tracer: Tracer, wavelength_um: float | None, notes: list[str]
+) -> float | None:
+    """Specific intensity [MJy/sr] for one `unit`, or None."""
+    if unit.is_equivalent(u.MJy / u.sr):
+        return float(unit.to(u.MJy / u.sr))
+    if unit.is_equivalent(_FLUX_PER_ANGSTROM / u.sr):
+        if wavelength_um is None:
+            wavelength, origin = C_CM_S / (tracer.frequency_ghz * 1e9) * u.cm, tracer.source
+        else:
+            wavelength, origin = wavelength_um * u.um, "recipe wavelength"
+        notes.append(f"lambda^2 / c at {wavelength.to_value(u.AA):.6g} Angstrom: {origin}")
+        per_frequency = (1.0 * unit) * wavelength**2 / (C_CM_S * u.cm / u.s)
+        return float(per_frequency.to_value(u.MJy / u.sr))
+    return None
+
+
+def _line_intensity(unit: u.UnitBase, notes: list[str]) -> float | None:
+    """Intensity of H-alpha [erg/s/cm2/sr] for one `unit`, or None."""
+    if unit.is_equivalent(_LINE_FLUX / u.sr):
+        return float(unit.to(_LINE_FLUX / u.sr))
+    if unit.is_equivalent(u.R):
         notes.append("photons of 6562.8 A")
         photon_erg = H_ERG_S * C_CM_S / HALPHA_CM
         return float(unit.to(u.R)) * RAYLEIGH_PHOTONS_S_CM2_SR * photon_erg

@@ -47,20 +47,17 @@ def load_map(source: MapSource) -> SkyMap:
     if not np.isfinite(value).any():
         raise MapError(Fault(where, "no pixel of the map is finite"))
 
-    scale: Array | float = source.door.factor
-    if source.door.per_pixel:
-        areas = pixel_areas_arcsec2(source.wcs, value.shape)
-        scale = scale * float(abs(np.linalg.det(source.jacobian_arcsec))) / areas
-    value *= scale
+    relative_area = _relative_area(source, value.shape)
+    value = source.door.intensity(value, relative_area)
     history += [source.door.reason, f"beam {source.beam} from {source.beam.origin}"]
 
     noise: tuple[NoiseTerm, ...] = ()
     if request.noise.kind != "measure":
-        sigma, note = _stated_sigma(source, value, where)
+        sigma, note = _stated_sigma(source, value, relative_area, where)
         correlated = request.noise.correlated != "none"
         term = NoiseTerm(
             source=request.name,
-            sigma=sigma * (scale / source.door.factor),
+            sigma=sigma,
             correlation_arcsec2=source.beam_arcsec2 if correlated else np.zeros((2, 2)),
         )
         unobserved = np.isfinite(value) & ~np.isfinite(sigma)
@@ -111,17 +108,28 @@ def _zeros(value: Array, source: MapSource, where: str) -> list[str]:
     return []
 
 
-def _stated_sigma(source: MapSource, value: Array, where: str) -> tuple[Array, str]:
-    """1-sigma error per pixel in the canonical unit at the galaxy's centre."""
-    noise = source.request.noise
+def _relative_area(source: MapSource, shape: tuple[int, ...]) -> Array | float:
+    """Area of each pixel over that at the galaxy's centre; one where no unit counts per pixel."""
+    if not (source.door.per_pixel or source.noise_door.per_pixel):
+        return 1.0
+    at_centre = abs(float(np.linalg.det(source.jacobian_arcsec)))
+    return pixel_areas_arcsec2(source.wcs, shape) / at_centre
+
+
+def _stated_sigma(
+    source: MapSource, value: Array, relative_area: Array | float, where: str
+) -> tuple[Array, str]:
+    """1-sigma error per pixel in the canonical unit."""
+    noise, door = source.request.noise, source.noise_door
+    read_as = "" if door is source.door else f"; {door.reason}"
     if noise.kind == "value" or source.noise_image is None:
-        level = np.full(value.shape, noise.value * source.noise_factor)
+        level = door.intensity(np.full(value.shape, noise.value), relative_area)
         note = f"noise {noise.value:g} {noise.unit or source.unit.text} from the recipe"
         relative = relative_noise(source)
         if relative is not None:
             level *= relative
             note += f" where its shape ({noise.shape_is}) is one"
-        return level, f"{note}, correlated like: {noise.correlated}"
+        return level, f"{note}, correlated like: {noise.correlated}{read_as}"
     sigma = source.noise_image.read()
     observed = np.isfinite(value) & np.isfinite(sigma)
     if not observed.any():
@@ -143,9 +151,11 @@ def _stated_sigma(source: MapSource, value: Array, where: str) -> tuple[Array, s
     if noise.stated != "sigma":
         with np.errstate(invalid="ignore", divide="ignore"):
             sigma = sigma ** (0.5 if noise.stated == "variance" else -0.5)
-    sigma *= source.noise_factor
     note = f"noise from {source.noise_image}, read as {noise.stated}"
-    return sigma, f"{note}, correlated like: {noise.correlated}"
+    return (
+        door.intensity(sigma, relative_area),
+        f"{note}, correlated like: {noise.correlated}{read_as}",
+    )
 
 
 def relative_noise(source: MapSource) -> Array | None:

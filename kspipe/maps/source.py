@@ -28,7 +28,14 @@ from kspipe.maps.header import (
     observed_frequency_ghz,
     pixel_jacobian,
 )
-from kspipe.maps.intensity import Door, UnitReading, open_door, read_stored_unit
+from kspipe.maps.intensity import (
+    Door,
+    UnitReading,
+    linear_door,
+    open_door,
+    read_stored_unit,
+    refuse_unused_counts,
+)
 
 __all__ = ["MapRequest", "MapSource", "NoiseRequest", "StoredImage"]
 
@@ -260,8 +267,9 @@ class MapSource:
     unit : UnitReading
     door : Door
         From stored numbers to the canonical intensity.
-    noise_factor : float
-        From stored noise numbers (as sigma) to the canonical intensity.
+    noise_door : Door
+        From stored noise numbers (as sigma) to the canonical intensity; that of the map where
+        the noise is in its unit.
     pedestal : float
         1-sigma error of the zero level, canonical intensity.
     jacobian_arcsec : (2, 2) float64 array
@@ -277,7 +285,7 @@ class MapSource:
     beam: Beam
     unit: UnitReading
     door: Door
-    noise_factor: float
+    noise_door: Door
     pedestal: float
     jacobian_arcsec: Array
     beam_arcsec2: Array
@@ -331,34 +339,35 @@ class MapSource:
         own, jacobian = pixel_jacobian(wcs, x, y, icrs=False), pixel_jacobian(wcs, x, y)
         pixel_area = abs(float(np.linalg.det(own)))
         _check_beam(beam, math.sqrt(pixel_area), image, where)
-        frequency = None
-        note = ""
-        if unit.needs_frequency and tracer.unit == "K km/s":
-            frequency, note = observed_frequency_ghz(
-                tracer, image.header, velocity_kms, velocity_convention, f"{where}, {image}"
-            )
+        refuse_unused_counts(unit, request.counts, request.zero_point, f"{where}, {image}")
 
-        def through(reading: UnitReading) -> Door:
+        def through(reading: UnitReading, at: str) -> Door:
+            frequency, note = None, ""
+            if reading.needs_frequency and tracer.unit == "K km/s":
+                frequency, note = observed_frequency_ghz(
+                    tracer, image.header, velocity_kms, velocity_convention, at
+                )
             return open_door(
                 reading,
                 tracer,
                 frequency_ghz=frequency,
+                frequency_note=note,
                 beam_area_arcsec2=beam_area(beam.covariance_arcsec2),
                 pixel_area_arcsec2=pixel_area,
-                where=f"{where}, {image}",
+                counts=request.counts,
+                zero_point=request.zero_point,
+                wavelength_um=request.wavelength_um,
+                where=at,
             )
 
-        door = through(unit)
-        if note:
-            door = Door(door.factor, door.per_pixel, f"{door.reason}; frequency from {note}")
-        noise_image, noise_factor = _noise(request, image, tracer, door, through, memory)
+        door = through(unit, f"{where}, {image}")
+        noise_image, noise_door = _noise(request, image, tracer, door, through, memory)
         pedestal = 0.0
         if request.pedestal_error is not None:
             level, text = request.pedestal_error
-            pedestal = (
-                level
-                * through(read_stored_unit(None, text, tracer, f"{where}.pedestal_error")).factor
-            )
+            at = f"{where}.pedestal_error"
+            reading = read_stored_unit(None, text, tracer, at, key=at)
+            pedestal = level * linear_door(through(reading, at), tracer, at).factor
         to_icrs = jacobian @ np.linalg.inv(own)
         return cls(
             request=request,
@@ -368,7 +377,7 @@ class MapSource:
             beam=beam,
             unit=unit,
             door=door,
-            noise_factor=noise_factor,
+            noise_door=noise_door,
             pedestal=pedestal,
             jacobian_arcsec=jacobian,
             beam_arcsec2=to_icrs @ beam.covariance_arcsec2 @ to_icrs.T,
@@ -419,18 +428,20 @@ def _noise(
     image: StoredImage,
     tracer: Tracer,
     door: Door,
-    through: Callable[[UnitReading], Door],
+    through: Callable[[UnitReading, str], Door],
     memory: tuple[fits.PrimaryHDU, fits.PrimaryHDU | None] | None,
-) -> tuple[StoredImage | None, float]:
-    """Find the noise image, check its shape, and work out its factor."""
+) -> tuple[StoredImage | None, Door]:
+    """Find the noise image, check its shape, and open its door."""
     where = f"maps.{request.name}.noise"
     noise = request.noise
+    if noise.gain is not None or noise.kind == "measure":
+        linear_door(door, tracer, where)
     if noise.kind == "measure":
-        return None, 1.0
+        return None, door
     if noise.kind == "value":
-        if not noise.unit:
-            return None, door.factor
-        return None, through(read_stored_unit(None, noise.unit, tracer, where)).factor
+        if noise.unit:
+            door = through(read_stored_unit(None, noise.unit, tracer, where, key=where), where)
+        return None, linear_door(door, tracer, where)
     if noise.file is None:
         raise MapError(Fault(where, "no file is given"))
     found = StoredImage.find(noise.file, noise.hdu, memory[1] if memory else None)
@@ -443,12 +454,9 @@ def _noise(
                 "give a noise map on the pixels of the map",
             )
         )
-    bunit = found.header.get("BUNIT")
-    if (
-        noise.stated == "sigma"
-        and request.unit is None
-        and isinstance(bunit, str)
-        and bunit.strip()
-    ):
-        return found, through(read_stored_unit(bunit, None, tracer, f"{where}, {found}")).factor
-    return found, door.factor
+    # A unit typed for the map holds for its noise too where both files carry the same card.
+    cards = [str(one.header.get("BUNIT") or "").strip() for one in (found, image)]
+    if noise.stated == "sigma" and cards[0] and cards[0] != cards[1]:
+        at = f"{where}, {found}"
+        door = through(read_stored_unit(cards[0], None, tracer, at), at)
+    return found, linear_door(door, tracer, where)

@@ -112,7 +112,8 @@ def match_map(
     flags |= np.where(bridged, int(Flag.BRIDGED), 0)
     fluxes = flux_within(sky.value, sky.wcs, grid), flux_on_grid(value, grid)
     how = (
-        f"by cubic spline, coordinates exact to {coordinate_error:.0e} of the map's pixels"
+        "by cubic spline, coordinates "
+        + (f"splined, off by {coordinate_error:.0e} pixel" if coordinate_error else "in full")
         if method == "spline"
         else "by area-weighted means: the map's and the grid's pixels widen the beam"
     )

@@ -95,11 +95,11 @@ def krumholz2009_sfr(inputs: Mapping[str, Array], parameters: Mapping[str, float
     dln_s_dln_z = _dln_s_dln_z(z)
     dln_z_doh = np.log(10.0)
     df_doh = df_dln_s * dln_s_dln_z * dln_z_doh
-    zero = sigma == 0
+    zero = (sigma == 0) & np.isfinite(z)
     low_z, high_z = LAW_RANGES["z_prime"]
     return Prediction(
         sigma_sfr=np.where(zero, 0.0, sfr),
-        f_mol=f,
+        f_mol=np.where(np.isfinite(z), f, np.nan),
         derivatives={
             "sigma_sfr": {
                 "sigma_gas": np.where(zero, 0.0, dsfr_dsigma),

@@ -89,7 +89,12 @@ def paint(folder: Path, size: int) -> Path:
     for name, (tracer, unit, pixel, beam, share) in MAPS.items():
         n = round(size * share)
         cards = header(pixel, n)
-        cards["BUNIT"], cards["BMAJ"], cards["BMIN"], cards["BPA"] = unit, beam / 3600, beam / 3600, 0.0
+        cards["BUNIT"], cards["BMAJ"], cards["BMIN"], cards["BPA"] = (
+            unit,
+            beam / 3600,
+            beam / 3600,
+            0.0,
+        )
         r2 = ((np.indices((n, n)) - (n - 1) / 2) ** 2).sum(axis=0) * pixel**2
         data = 100 * np.exp(-r2 / 2 / 400**2) + rng.normal(size=(n, n))
         fits.PrimaryHDU(data.astype("f4"), cards).writeto(folder / f"{name}.fits")

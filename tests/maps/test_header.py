@@ -103,7 +103,9 @@ def test_jacobian_of_turned_and_flipped_grids(rotation, flip, centre) -> None:
     wcs = make_wcs((40, 50), 2.0, centre=centre, rotation_deg=rotation, flip=flip)
     # At the reference point of a zenithal projection the steps are the CD matrix (Calabretta &
     # Greisen 2002, A&A 395, 1077, section 2).
-    np.testing.assert_allclose(pixel_jacobian(wcs, 24.5, 19.5), wcs.pixel_scale_matrix * 3600, atol=1e-6)
+    np.testing.assert_allclose(
+        pixel_jacobian(wcs, 24.5, 19.5), wcs.pixel_scale_matrix * 3600, atol=1e-6
+    )
     # Elsewhere: great-circle distance and position angle between neighbouring pixels.
     x, y = 3.0, 35.0
     for axis, (dx, dy) in enumerate([(0.5, 0.0), (0.0, 0.5)]):

@@ -214,6 +214,20 @@ def test_flat_map_with_blanks_stays_flat(geometry, minimum) -> None:
     assert not matched.flags[expected > 0.951].any()
 
 
+@pytest.mark.parametrize("target", [8.0, 8.05, 8.5, 10.0])
+@pytest.mark.parametrize("geometry", [{}, {"rotation_deg": 40.0}], ids=["aligned", "turned"])
+def test_flat_map_stays_flat_however_narrow_the_kernel(geometry, target) -> None:
+    """Also next to blanks, and also where the beam needs no smoothing at all."""
+    value = holed()
+    wcs = make_wcs(value.shape, 3.0, **geometry)
+    sky = make_sky(value, wcs=wcs, beam_arcsec2=round_beam(8.0))
+    matched = match_map(sky, round_beam(target), plain_grid((71, 71), 2.7))
+    seen = np.isfinite(matched.value)
+    assert 0.8 < seen.mean() < 1
+    np.testing.assert_allclose(matched.value[seen], 7.0, rtol=1e-4)
+    assert matched.coverage.max() <= 1.0
+
+
 def test_coverage_at_a_straight_edge() -> None:
     # Closed form: a Gaussian of sigma s at a distance d inside a half plane holds
     # (1 + erf(d / (s sqrt 2))) / 2 of its weight.
@@ -270,10 +284,24 @@ def test_a_map_is_never_sharpened(target) -> None:
         match_map(sky, round_beam(target), plain_grid((21, 21), 4.0))
 
 
-def test_too_few_pixels_per_beam_are_refused() -> None:
-    sky = make_sky(np.ones((41, 41)), wcs=make_wcs((41, 41), 9.0), beam_arcsec2=round_beam(8.0))
-    with pytest.raises(GridError, match=r"maps\.probe.*1\.67 pixels"):
-        match_map(sky, round_beam(15.0), plain_grid((21, 21), 5.0))
+def test_too_few_pixels_per_beam_are_not_interpolated() -> None:
+    """15 arcsec on pixels of 9: averaged over areas, or refused where a spline is asked for."""
+    side = 61
+    wcs = make_wcs((side, side), 9.0, rotation_deg=20.0)
+    flat = make_sky(np.full((side, side), 3.0), wcs=wcs, beam_arcsec2=round_beam(12.0))
+    grid = plain_grid((61, 61), 5.0)
+    with pytest.raises(GridError, match=r"maps\.probe\.regrid.*1\.67 pixels"):
+        match_map(flat, round_beam(15.0), grid, regrid="spline")
+    matched = match_map(flat, round_beam(15.0), grid)
+    np.testing.assert_allclose(matched.value, 3.0, rtol=1e-4)
+    assert any("area" in step for step in matched.history)
+    # The flux of a point source survives, whatever becomes of its shape.
+    image = pixel_mean(wcs, (side, side), POSITION, round_beam(12.0))
+    source = make_sky(image, wcs=wcs, beam_arcsec2=round_beam(12.0), averages_pixels=True)
+    matched = match_map(source, round_beam(17.9), grid)
+    total = np.nansum(matched.value * matched_areas(matched))
+    expected = math.pi / (4 * math.log(2)) * 12.0**2
+    assert total == pytest.approx(expected, rel=0.002)
 
 
 # --- One sky, many grids -----------------------------------------------------------------------
