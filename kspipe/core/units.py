@@ -85,7 +85,7 @@ _JANSKY_UNITS: Final = {
     "k": u.kJy, "kilo": u.kJy, "M": u.MJy, "mega": u.MJy,
 }  # fmt: skip
 
-_TWO_MEANINGS: Final = frozenset({"MJY", "mjy", "MK", "MM", "MW", "MR"})
+_TWO_MEANINGS: Final = frozenset({"MK", "MM", "MW", "MR"})
 # Megajansky is only ever used for continuum maps per steradian, and millijansky never.
 _PER_STERADIAN: Final = re.compile(r"/\s*(?:SR|STER)|SR\s*(?:\^|\*\*)?\s*\(?-1")
 
@@ -241,22 +241,27 @@ def _word(word: str, exponent: str, text: str) -> u.UnitBase:
 
 
 def _meaning(word: str, text: str) -> u.UnitBase:
-    if word in _TWO_MEANINGS and not (word == "MJY" and _PER_STERADIAN.search(text)):
-        raise UnitReadingError(f'"{word}" may be milli or mega')
-    if word in _EXACT:
-        return _EXACT[word]
     lower = word.lower().replace("-", "")
-    if lower in _ANY_CASE:
-        return _ANY_CASE[lower]
-    if word in _CAPITALS:
-        return _CAPITALS[word]
+    for known, name in ((_EXACT, word), (_ANY_CASE, lower), (_CAPITALS, word)):
+        if name in known:
+            return known[name]
     jansky = _JANSKY.fullmatch(word)
-    if jansky is not None:
+    if word in _TWO_MEANINGS or (jansky and _has_lost_its_case(jansky, text)):
+        raise UnitReadingError(f'"{word}" may be milli or mega')
+    if jansky:
         prefix = jansky["prefix"]
         return _JANSKY_UNITS[prefix if prefix == "M" else prefix.lower()]
     near = difflib.get_close_matches(lower, _ANY_CASE, n=1, cutoff=0.7)
     meant = f'; did you mean "{near[0]}"?' if near else ""
     raise UnitReadingError(f'"{word}" is not a known unit{meant}')
+
+
+def _has_lost_its_case(jansky: re.Match[str], text: str) -> bool:
+    """Whether the M in ``MJY`` or ``mjy`` can be milli or mega."""
+    word = jansky[0]
+    return jansky["prefix"] in ("m", "M") and (
+        word.islower() or (word.isupper() and not _PER_STERADIAN.search(text))
+    )
 
 
 def _product(parts: deque[u.UnitBase | str], *, in_bracket: bool = False) -> u.UnitBase:

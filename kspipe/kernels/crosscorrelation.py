@@ -28,6 +28,8 @@ Lag = tuple[int, int]
 
 # Lags at which less than this share of the weight is left say nothing.
 LEAST_OVERLAP: Final = 0.5
+# An image whose spread is not more than this share of the noise variance holds nothing to align.
+LEAST_SPREAD: Final = 0.25
 # First derivative by five points: exact to (2 pi k)^4 / 30, one per cent at 8 pixels per period.
 STENCIL: Final = ((-2, 1.0 / 12.0), (-1, -8.0 / 12.0), (1, 8.0 / 12.0), (2, -1.0 / 12.0))
 AXES: Final = (np.array([1, 0]), np.array([0, 1]))
@@ -107,11 +109,12 @@ def lag_correlations(pair: ImagePair, reach_pix: int) -> Array:
     used, seen = pair.used, np.isfinite(pair.second)
     w, m = np.where(used, pair.weight, 0.0), seen.astype(float)
     a, b = _about_mean(pair.first, used), _about_mean(pair.second, seen)
-    aa = a**2 - np.where(used, total_error(pair.first_noise), 0.0) ** 2
-    bb = b**2 - np.where(seen, total_error(pair.second_noise), 0.0) ** 2
+    noise_a = np.where(used, total_error(pair.first_noise), 0.0) ** 2
+    noise_b = np.where(seen, total_error(pair.second_noise), 0.0) ** 2
     shape = _room(a.shape, reach_pix)
-    w0, wa, waa, m0, mb, mbb = (
-        scipy.fft.rfft2(array, s=shape) for array in (w, w * a, w * aa, m, b, bb)
+    w0, wa, waa, wna, m0, mb, mbb, mnb = (
+        scipy.fft.rfft2(array, s=shape)
+        for array in (w, w * a, w * a**2, w * noise_a, m, b, b**2, noise_b)
     )
 
     def sums(one: Array, other: Array) -> Array:
@@ -121,12 +124,13 @@ def lag_correlations(pair: ImagePair, reach_pix: int) -> Array:
     common = total > LEAST_OVERLAP * total[reach_pix, reach_pix]
     with np.errstate(invalid="ignore", divide="ignore"):
         mean_a, mean_b = sums(wa, m0) / total, sums(w0, mb) / total
-        spread_a = sums(waa, m0) / total - mean_a**2
-        spread_b = sums(w0, mbb) / total - mean_b**2
+        var_a, var_b = sums(wna, m0) / total, sums(w0, mnb) / total
+        spread_a = sums(waa, m0) / total - mean_a**2 - var_a
+        spread_b = sums(w0, mbb) / total - mean_b**2 - var_b
         both = sums(wa, mb) / total - mean_a * mean_b
         coefficient = both / np.sqrt(spread_a * spread_b)
-    is_real = common & (spread_a > 0) & (spread_b > 0)
-    return np.where(is_real, coefficient, -1.0)
+    is_real = (spread_a > LEAST_SPREAD * var_a) & (spread_b > LEAST_SPREAD * var_b)
+    return np.where(common & is_real, coefficient, -1.0)
 
 
 def find_peak(correlations: Array) -> Peak | None:

@@ -16,8 +16,9 @@ __all__ = ["ZeroPoint", "fit_zero_point", "log_likelihood"]
 
 Array = NDArray[np.float64]
 
-_NODES: Final = 161
+_LEGENDRE: Final = np.polynomial.legendre.leggauss(48)
 _REACH: Final = 6.0
+LN10: Final = math.log(10.0)
 # Below this the scatter is not told from zero on a grid of double precision.
 LEAST_SCATTER_DEX: Final = 1e-3
 
@@ -72,24 +73,37 @@ def log_likelihood(
     s_y2, s_p2, cov = variance_terms
     sigma = np.sqrt(s_y2 + scale**2 * s_p2 - 2.0 * scale * cov)
     centre = np.log10(predicted) + offset_dex
-    low, high = centre - _REACH * scatter_dex, centre + _REACH * scatter_dex
-    with np.errstate(invalid="ignore", divide="ignore"):
-        sharp_low = np.where(y > _REACH * sigma, np.log10(y - _REACH * sigma), -np.inf)
-    sharp_high = np.log10(np.maximum(y, 0.0) + _REACH * sigma)
-    start, stop = np.maximum(low, sharp_low), np.minimum(high, sharp_high)
-    # A point that neither factor reaches is integrated between them, where the product peaks.
-    start, stop = np.minimum(start, stop), np.maximum(start, stop)
-    stop = np.maximum(stop, start + 1e-6 * scatter_dex)
-    t = start + (stop - start) * np.linspace(0.0, 1.0, _NODES)[:, None]
+    t, weights = _nodes(centre, scatter_dex, y, sigma)
     log_terms = (
         -0.5 * ((t - centre) / scatter_dex) ** 2
-        - 0.5 * ((y - 10.0**t) / sigma) ** 2
+        - 0.5 * ((y - np.exp(t * LN10)) / sigma) ** 2
         - np.log(2.0 * math.pi * scatter_dex * sigma)
     )
-    weights = np.full(_NODES, 1.0)
-    weights[[0, -1]] = 0.5
-    step = (stop - start) / (_NODES - 1)
-    return float(np.sum(logsumexp(log_terms, b=weights[:, None], axis=0) + np.log(step)))
+    return float(np.sum(logsumexp(log_terms, b=weights, axis=0)))
+
+
+def _nodes(centre: Array, scatter_dex: float, y: Array, sigma: Array) -> tuple[Array, Array]:
+    """Gauss-Legendre nodes in t = log10(true) and their weights, (nodes, points).
+
+    The ends of what the intrinsic scatter reaches and of what the noise reaches cut the axis into
+    three pieces; the product lives in the middle one, which is their overlap or, for an outlier
+    that neither reaches, the gap between them. Below a tenth of the noise the measurement no
+    longer tells.
+    """
+    cuts = np.sort(
+        [
+            centre - _REACH * scatter_dex,
+            centre + _REACH * scatter_dex,
+            np.log10(np.maximum(y - _REACH * sigma, 0.1 * sigma)),
+            np.log10(np.maximum(y, 0.0) + _REACH * sigma),
+        ],
+        axis=0,
+    )
+    half = 0.5 * np.diff(cuts, axis=0)[:, None, :]
+    middle = 0.5 * (cuts[1:] + cuts[:-1])[:, None, :]
+    t = middle + half * _LEGENDRE[0][None, :, None]
+    weights = half * _LEGENDRE[1][None, :, None]
+    return t.reshape(-1, y.size), weights.reshape(-1, y.size)
 
 
 def fit_zero_point(y: Array, predicted: Array, variance_terms: Array) -> ZeroPoint | None:

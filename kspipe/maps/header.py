@@ -1,10 +1,9 @@
-"""Reading the sky coordinates, the beam and the observed frequency off a header."""
+"""Reading the sky coordinates and the observed frequency off a header."""
 
 from __future__ import annotations
 
 import math
 import warnings
-from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
@@ -14,15 +13,12 @@ from astropy.wcs.utils import pixel_to_skycoord
 from numpy.typing import NDArray
 
 from kspipe.core.constants import C_KM_S, DEG_ARCSEC
-from kspipe.core.errors import BeamError, Fault, GridError
+from kspipe.core.errors import Fault, GridError
 from kspipe.core.tracers import Tracer
 from kspipe.kernels.coarse import evaluate_smoothly
-from kspipe.kernels.geometry import beam_covariance
 
 __all__ = [
-    "Beam",
     "celestial_wcs",
-    "header_beam",
     "header_frequency_ghz",
     "observed_frequency_ghz",
     "pixel_area_at",
@@ -35,34 +31,6 @@ Array = NDArray[np.float64]
 
 # Header and galaxy velocity may differ by a rotation curve, not by more.
 VELOCITY_TOLERANCE: Final = 0.002
-
-
-@dataclass(frozen=True)
-class Beam:
-    """A Gaussian beam and where it was read.
-
-    Attributes
-    ----------
-    major_arcsec, minor_arcsec, pa_deg : float
-        Full widths at half maximum and position angle, north through east.
-    origin : str
-        ``header BMAJ, BMIN, BPA`` or ``recipe``.
-    """
-
-    major_arcsec: float
-    minor_arcsec: float
-    pa_deg: float
-    origin: str
-
-    @property
-    def covariance_arcsec2(self) -> Array:
-        """Covariance on (east, north)."""
-        return beam_covariance(self.major_arcsec, self.minor_arcsec, self.pa_deg)
-
-    def __str__(self) -> str:
-        if math.isclose(self.major_arcsec, self.minor_arcsec, rel_tol=1e-9):
-            return f"{self.major_arcsec:.4g} arcsec"
-        return f"{self.major_arcsec:.4g} x {self.minor_arcsec:.4g} arcsec, pa {self.pa_deg:.4g} deg"
 
 
 def celestial_wcs(header: fits.Header, where: str) -> WCS:
@@ -159,39 +127,6 @@ def pixel_area_at(wcs: WCS, x: Array, y: Array) -> Array:
     h = 0.5
     cross = np.cross(corner(h, h) - corner(-h, -h), corner(h, -h) - corner(-h, h))
     return np.asarray(0.5 * np.linalg.norm(cross, axis=-1) * (180.0 / math.pi * DEG_ARCSEC) ** 2)
-
-
-def header_beam(header: fits.Header, where: str) -> Beam | None:
-    """Read BMAJ, BMIN, BPA (degrees); None where there is no BMAJ.
-
-    Raises
-    ------
-    BeamError
-        If BMAJ or BMIN is not a positive number.
-    """
-    if "BMAJ" not in header:
-        return None
-    cards = {key: header.get(key) for key in ("BMAJ", "BMIN", "BPA")}
-    major = cards["BMAJ"]
-    minor = cards["BMIN"] if cards["BMIN"] is not None else major
-    angle = cards["BPA"] if cards["BPA"] is not None else 0.0
-    try:
-        major, minor, angle = float(major), float(minor), float(angle)
-    except (TypeError, ValueError):
-        major = math.nan
-    if not (major > 0 and minor > 0 and math.isfinite(major * minor)):
-        raise BeamError(
-            Fault(
-                where,
-                f"BMAJ, BMIN, BPA are {cards['BMAJ']!r}, {cards['BMIN']!r}, {cards['BPA']!r}; "
-                "expected positive numbers in degrees",
-                'type beam = "... arcsec" for this map',
-            )
-        )
-    read = ", ".join(key for key, card in cards.items() if card is not None)
-    if minor > major:
-        major, minor, angle = minor, major, angle + 90.0
-    return Beam(major * DEG_ARCSEC, minor * DEG_ARCSEC, angle % 180.0, f"header {read}")
 
 
 def header_frequency_ghz(header: fits.Header) -> float | None:

@@ -142,11 +142,13 @@ class Door:
         Returns
         -------
         (ny, nx) float64 array
-            NaN where `stored` is NaN.
+            NaN where `stored` is NaN, or stands for a blank as a magnitude beyond all numbers.
         """
         if self.is_magnitude:
             stored *= -0.4
-            np.power(10.0, stored, out=stored)
+            with np.errstate(over="ignore"):
+                np.power(10.0, stored, out=stored)
+            stored[np.isinf(stored)] = np.nan
         stored *= self.factor
         if self.per_pixel:
             stored /= relative_area
@@ -248,7 +250,8 @@ def open_door(
     UnitError
         If the unit is not one of this tracer's intensities.
     """
-    unit, notes = reading.linear, []
+    notes: list[str] = []
+    unit = reading.linear
     if reading.counted is not None:
         unit = _weigh_counts(reading, tracer, counts, zero_point, where, notes)
     per_pixel = u.pix in unit.bases
@@ -377,16 +380,7 @@ def _weigh_counts(
         worth = u.Unit(10.0 ** (-0.4 * zero_point) * u.AB)
         told = f"AB magnitude {zero_point:g} (recipe zero_point)"
     elif counts is not None:
-        try:
-            worth = read_unit(counts)
-        except UnitReadingError as error:
-            raise UnitError(
-                Fault(
-                    f"{name}.counts",
-                    f"{counts!r} cannot be read: {error}",
-                    f'type {name}.counts = "1e-15 erg/s/cm2/A", for example',
-                )
-            ) from error
+        worth = _worth(counts, name)
         told = f"{counts} (recipe counts)"
     else:
         raise UnitError(
@@ -412,6 +406,24 @@ def _weigh_counts(
     one = f"{reading.counted}{'/s' if is_rate else ''}{' of a pixel' * (u.pix in weighed.bases)}"
     notes.append(f"1 {one} is {told}")
     return weighed
+
+
+def _worth(counts: str, name: str) -> u.UnitBase:
+    """Read ``1.40e-15 erg/s/cm2/A`` as a unit."""
+    number, _, text = counts.strip().partition(" ")
+    try:
+        unit = read_unit(text)
+        if isinstance(unit, u.MagUnit) or not float(number) > 0:
+            raise UnitReadingError("a positive number and the unit of a flux or intensity are due")
+        return u.Unit(float(number) * unit)
+    except ValueError as error:
+        raise UnitError(
+            Fault(
+                f"{name}.counts",
+                f"{counts!r} cannot be read: {error}",
+                f'type {name}.counts = "1.40e-15 erg/s/cm2/A", for example',
+            )
+        ) from error
 
 
 def _has_solid_angle(unit: u.UnitBase) -> bool:

@@ -16,7 +16,8 @@ __all__ = ["load_map", "relative_noise", "with_photon_noise"]
 
 Array = NDArray[np.float64]
 
-# More pixels at exactly zero than this are a mask, not a measurement.
+# More pixels at exactly zero than this are a mask, not a measurement. A magnitude of zero is no
+# galaxy's.
 MOST_ZEROS: Final = 0.01
 
 
@@ -47,7 +48,7 @@ def load_map(source: MapSource) -> SkyMap:
     if not np.isfinite(value).any():
         raise MapError(Fault(where, "no pixel of the map is finite"))
 
-    relative_area = _relative_area(source, value.shape)
+    relative_area = _relative_area(source)
     value = source.door.intensity(value, relative_area)
     history += [source.door.reason, f"beam {source.beam} from {source.beam.origin}"]
 
@@ -96,7 +97,8 @@ def _zeros(value: Array, source: MapSource, where: str) -> list[str]:
     if source.request.zeros == "blank":
         value[zero] = np.nan
         return [f"{int(zero.sum())} pixels at exactly zero taken as not observed (recipe)"]
-    if source.request.zeros is None and finite and zero.sum() > MOST_ZEROS * finite:
+    most = 0.0 if source.door.is_magnitude else MOST_ZEROS * finite
+    if source.request.zeros is None and finite and zero.sum() > most:
         raise MapError(
             Fault(
                 where,
@@ -108,12 +110,12 @@ def _zeros(value: Array, source: MapSource, where: str) -> list[str]:
     return []
 
 
-def _relative_area(source: MapSource, shape: tuple[int, ...]) -> Array | float:
+def _relative_area(source: MapSource) -> Array | float:
     """Area of each pixel over that at the galaxy's centre; one where no unit counts per pixel."""
     if not (source.door.per_pixel or source.noise_door.per_pixel):
         return 1.0
     at_centre = abs(float(np.linalg.det(source.jacobian_arcsec)))
-    return pixel_areas_arcsec2(source.wcs, shape) / at_centre
+    return pixel_areas_arcsec2(source.wcs, source.image.shape) / at_centre
 
 
 def _stated_sigma(

@@ -21,13 +21,8 @@ from numpy.typing import NDArray
 from kspipe.core.errors import BeamError, Fault, MapError, ShapeError
 from kspipe.core.tracers import TRACERS, Tracer
 from kspipe.kernels.geometry import beam_area
-from kspipe.maps.header import (
-    Beam,
-    celestial_wcs,
-    header_beam,
-    observed_frequency_ghz,
-    pixel_jacobian,
-)
+from kspipe.maps.beams import Beam, BeamTable, beam_table, find_beam
+from kspipe.maps.header import celestial_wcs, observed_frequency_ghz, pixel_jacobian
 from kspipe.maps.intensity import (
     Door,
     UnitReading,
@@ -165,6 +160,8 @@ class StoredImage:
         Rows and columns without degenerate axes.
     memory : HDU or None
         Read from here instead of the file.
+    beams : BeamTable or None
+        The file's table of beams.
     """
 
     file: Path
@@ -172,6 +169,7 @@ class StoredImage:
     header: fits.Header
     shape: tuple[int, int]
     memory: fits.PrimaryHDU | None = None
+    beams: BeamTable | None = None
 
     def __str__(self) -> str:
         return f"{self.file}" + (f"[{self.index}]" if self.index else "")
@@ -205,7 +203,8 @@ class StoredImage:
                 raise MapError(Fault(str(file), what, "type hdu = N for this map"))
             index = images[0] if hdu is None else hdu
             header = hdus[index].header.copy()
-        return cls(file, index, header, _plane(header, f"{file}[{index}]"))
+            beams = beam_table(hdus)
+        return cls(file, index, header, _plane(header, f"{file}[{index}]"), beams=beams)
 
     def read(self) -> Array:
         """Read the pixels, degenerate axes dropped, as a fresh (ny, nx) float64 array."""
@@ -385,14 +384,14 @@ class MapSource:
 
 
 def _beam(request: MapRequest, image: StoredImage, where: str) -> Beam:
-    if request.beam is not None:
-        return Beam(*request.beam, origin="recipe")
-    beam = header_beam(image.header, f"{where}, {image}")
+    beam = find_beam(
+        image.header, image.beams, typed=request.beam, name=request.name, where=f"{where}, {image}"
+    )
     if beam is None:
         raise BeamError(
             Fault(
                 f"{where}, {image}",
-                "the header has no beam (no BMAJ)",
+                "the header has no beam (no BMAJ, no table BEAMS, none in HISTORY)",
                 'type beam = "... arcsec" for this map',
             )
         )

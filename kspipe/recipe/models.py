@@ -23,6 +23,7 @@ from kspipe.conversions import ALPHA_CO, EXTINCTION, STAR_FORMATION
 from kspipe.core.errors import nearest
 from kspipe.core.registry import Registry
 from kspipe.core.tracers import TRACERS
+from kspipe.core.units import read_unit
 from kspipe.maps import MapRequest, NoiseRequest
 from kspipe.recipe.quantity import Measured, Position, parse_centre, parse_measured, parse_percent
 
@@ -217,6 +218,22 @@ def _level(typed: Any) -> Any:
     return typed
 
 
+def _stated(example: str) -> Any:
+    """Check a positive number with a unit that depends on the map."""
+
+    def check(typed: Any) -> str:
+        try:
+            read_unit(noise_value(str(typed))[1])
+        except ValueError:
+            raise ValueError(
+                f"{typed!r} is not a positive number with its unit; expected, for example, "
+                f"{example}"
+            ) from None
+        return str(typed)
+
+    return BeforeValidator(check)
+
+
 Level = Annotated[str, BeforeValidator(_level)]
 
 
@@ -301,9 +318,9 @@ class MapTable(Table):
     beam: Annotated[tuple[float, float, float] | None, BeforeValidator(_beam_typed)] = None
     averages_pixels: bool | None = None
     calibration_error: Percent = NO_ERROR
-    pedestal_error: Level | None = None
+    pedestal_error: Annotated[str | None, _stated('"0.005 MJy/sr"')] = None
     zeros: Literal["flux", "blank"] | None = None
-    counts: Level | None = None
+    counts: Annotated[str | None, _stated('"1.40e-15 erg/s/cm2/A"')] = None
     zero_point: Magnitude | None = None
     wavelength: Wavelength | None = None
     psf: Path | None = None

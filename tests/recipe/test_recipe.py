@@ -18,6 +18,7 @@ from kspipe.recipe import Recipe, load_recipe, parse_recipe
 from kspipe.stages.plan import make_plan
 
 HA = {"tracer": "Halpha", "file": "halpha.fits", "noise": "1.5e-17 erg/s/cm2/arcsec2"}
+LAW, LAW_KEY = "relations__shielding_kpc", "relations.shielding_kpc"
 W4 = {"tracer": "22um", "file": "mir24.fits", "noise": "0.08 MJy/sr"}
 
 
@@ -381,7 +382,6 @@ def test_files_in_memory_may_be_missing(good, folder) -> None:
         ({"maps__hi__beam": "12 x 10 arcsec"}, "maps.hi.beam", "not a beam"),
         ({"maps__hi__beam": "-5 arcsec"}, "maps.hi.beam", "not a beam"),
         ({"maps__hi__hdu": "first"}, "maps.hi.hdu", "'first'"),
-        ({"maps": {}}, "maps", "no map"),
         ({"maps__hi": "hi.fits"}, "maps.hi", "not a table"),
         # The galaxy.
         ({"galaxy__distance": "0 Mpc"}, "galaxy.distance", "positive distance"),
@@ -421,39 +421,15 @@ def test_files_in_memory_may_be_missing(good, folder) -> None:
         ({"star_formation__maps": []}, "star_formation.maps", "none"),
         ({"star_formation__maps": "fuv"}, "star_formation.maps", "fuv"),
         # Relations.
-        ({"relations__shielding_kpc__law": ...}, "relations.shielding_kpc.law", "missing"),
-        (
-            {"relations__shielding_kpc__clumping": ...},
-            "relations.shielding_kpc.clumping",
-            "missing",
-        ),
-        (
-            {"relations__shielding_kpc__clumping": 0.9},
-            "relations.shielding_kpc.clumping",
-            "1 and 100",
-        ),
-        (
-            {"relations__shielding_kpc__clumping": 101},
-            "relations.shielding_kpc.clumping",
-            "1 and 100",
-        ),
-        ({"relations__shielding_kpc__clumping": "5"}, "relations.shielding_kpc.clumping", "'5'"),
-        ({"relations__shielding_kpc__clumping": True}, "relations.shielding_kpc.clumping", "True"),
-        (
-            {"relations__shielding_kpc__clumping": float("nan")},
-            "relations.shielding_kpc.clumping",
-            "nan",
-        ),
-        (
-            {"relations__shielding_kpc__anchor_oh": 7.0},
-            "relations.shielding_kpc.anchor_oh",
-            "8 and 9.5",
-        ),
-        (
-            {"relations": {"a-b": {"law": "krumholz2009", "clumping": 5}}},
-            "relations.a-b",
-            "letters",
-        ),
+        ({f"{LAW}__law": ...}, f"{LAW_KEY}.law", "missing"),
+        ({f"{LAW}__clumping": ...}, f"{LAW_KEY}.clumping", "missing"),
+        ({f"{LAW}__clumping": 0.9}, f"{LAW_KEY}.clumping", "1 and 100"),
+        ({f"{LAW}__clumping": 101}, f"{LAW_KEY}.clumping", "1 and 100"),
+        ({f"{LAW}__clumping": "5"}, f"{LAW_KEY}.clumping", "'5'"),
+        ({f"{LAW}__clumping": True}, f"{LAW_KEY}.clumping", "True"),
+        ({f"{LAW}__clumping": float("nan")}, f"{LAW_KEY}.clumping", "nan"),
+        ({f"{LAW}__anchor_oh": 7.0}, f"{LAW_KEY}.anchor_oh", "8 and 9.5"),
+        ({"relations": {"a-b": {"law": "krumholz2009"}}}, "relations.a-b", "letters"),
         ({"relations": []}, "relations", "not a table"),
         ({"seed": -1}, "seed", "-1"),
         ({"seed": 1.5}, "seed", "1.5"),
@@ -468,9 +444,15 @@ def test_single_faults(good, folder, changes, key, why) -> None:
     assert why in faults[key]
 
 
+@pytest.mark.parametrize("maps", [{}, [], "hi.fits", 1, ...])
+def test_a_recipe_without_maps(good, folder, maps) -> None:
+    with pytest.raises(RecipeError, match=r"\[maps\] no map is listed"):
+        parse_recipe(changed(good, maps=maps), folder=folder)
+
+
 def test_a_bound_of_a_relation_is_allowed(good, folder) -> None:
     for clumping in (1, 100):
-        parse_recipe(changed(good, relations__shielding_kpc__clumping=clumping), folder=folder)
+        parse_recipe(changed(good, **{f"{LAW}__clumping": clumping}), folder=folder)
 
 
 def test_one_map_per_tracer(good, folder) -> None:
