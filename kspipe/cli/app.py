@@ -26,6 +26,9 @@ OutOption = Annotated[Path, typer.Option("--out", metavar="DIR", help="Product f
 OverwriteOption = Annotated[
     bool, typer.Option("--overwrite", help="Replace products made from something else.")
 ]
+StepsOption = Annotated[
+    bool, typer.Option("--steps", help="Print what each step did to each map (DIR/steps.ecsv).")
+]
 QuietOption = Annotated[bool, typer.Option("--quiet", help="No progress, no log.")]
 DebugOption = Annotated[bool, typer.Option("--debug", help="Show where an error arose.")]
 
@@ -50,17 +53,20 @@ def reduce_command(
     recipe: RecipeArgument,
     out: OutOption,
     overwrite: OverwriteOption = False,
+    steps: StepsOption = False,
     quiet: QuietOption = False,
     debug: DebugOption = False,
 ) -> None:
-    """Bring all maps to one beam and grid; write matched/, maps/ and recipe.toml."""
-    from kspipe.cli.session import session
+    """Bring all maps to one beam and grid; write matched/, maps/, steps.ecsv and recipe.toml."""
+    from kspipe.cli.session import print_steps, session
 
     with session(quiet=quiet, debug=debug) as progress:
         from kspipe.recipe import load_recipe
         from kspipe.stages.reduce import reduce_maps
 
         made = reduce_maps(load_recipe(recipe), out, overwrite=overwrite, progress=progress)
+    if steps:
+        print_steps(out)
     typer.echo(f"{'written' if made else 'unchanged, reused'}: {out / 'maps'}")
 
 
@@ -103,11 +109,12 @@ def run_command(
     recipe: RecipeArgument,
     out: OutOption,
     overwrite: OverwriteOption = False,
+    steps: StepsOption = False,
     quiet: QuietOption = False,
     debug: DebugOption = False,
 ) -> None:
     """Reduce, compare and draw: the whole job."""
-    from kspipe.cli.session import print_summary, session
+    from kspipe.cli.session import print_steps, print_summary, session
 
     with session(quiet=quiet, debug=debug) as progress:
         from kspipe.products import draw_figures
@@ -118,6 +125,8 @@ def run_command(
         reduce_maps(load_recipe(recipe), out, overwrite=overwrite, progress=progress)
         compare_relations(out, overwrite=overwrite, progress=progress)
         draw_figures(out, overwrite=overwrite, progress=progress)
+    if steps:
+        print_steps(out)
     print_summary(out)
 
 

@@ -13,15 +13,16 @@ from typing import Any
 
 import typer
 from rich.console import Console
+from rich.markup import escape
 from rich.progress import BarColumn, Progress, SpinnerColumn, TextColumn, TimeElapsedColumn
 from rich.table import Table
 
 from kspipe.core.errors import KspipeError, KspipeWarning
 from kspipe.core.progress import Progress as ProgressCall
 from kspipe.core.progress import no_progress
-from kspipe.core.report import relation_rows, total_rows
+from kspipe.core.report import noted_lines, relation_rows, total_rows
 
-__all__ = ["print_summary", "session"]
+__all__ = ["print_steps", "print_summary", "session"]
 
 
 @contextmanager
@@ -93,6 +94,17 @@ def _bar(console: Console, *, quiet: bool) -> Iterator[ProgressCall]:
         yield update
 
 
+def print_steps(folder: Path) -> None:
+    """Print what each step did to each map on stdout."""
+    from kspipe.stages.steps import step_cells, step_table
+
+    console = Console(highlight=False, width=None if sys.stdout.isatty() else 160)
+    table = Table("map", "step", "what", "from", "flux [unit sr]", "noise", "pixels", box=None)
+    for cells in step_cells(step_table(folder)):
+        table.add_row(*(escape(cell) for cell in cells))
+    console.print(table)
+
+
 def print_summary(folder: Path) -> None:
     """Print totals and headline numbers of a comparison on stdout."""
     summary: dict[str, Any] = json.loads((folder / "summary.json").read_text(encoding="utf-8"))
@@ -123,4 +135,6 @@ def print_summary(folder: Path) -> None:
         "flagged: " + (", ".join(f"{n} {name}" for name, n in counted.items()) or "none"),
         markup=False,
     )
+    for line in noted_lines(summary):
+        console.print(f"note: {line}", markup=False)
     console.print(f"products in {folder}", markup=False)

@@ -46,6 +46,7 @@ CITATIONS = _citations(
     Citation(
         "cardelli1989", "Cardelli, Clayton & Mathis 1989", "ApJ 345, 245", "1989ApJ...345..245C"
     ),
+    Citation("engelbracht2007", "Engelbracht et al. 2007", "PASP 119, 994"),
     Citation(
         "krumholz2009", "Krumholz, McKee & Tumlinson 2009", "ApJ 699, 850", "2009ApJ...699..850K"
     ),
@@ -58,7 +59,9 @@ CITATIONS = _citations(
     Citation("leroy2008", "Leroy et al. 2008", "AJ 136, 2782", "2008AJ....136.2782L"),
     Citation("leroy2012", "Leroy et al. 2012", "AJ 144, 3", "2012AJ....144....3L"),
     Citation("leroy2022", "Leroy et al. 2022", "ApJ 927, 149", "2022ApJ...927..149L"),
+    Citation("morrissey2007", "Morrissey et al. 2007", "ApJS 173, 682"),
     Citation("sun2020", "Sun et al. 2020", "ApJ 892, 148"),
+    Citation("wright2010", "Wright et al. 2010", "AJ 140, 1868"),
     Citation("wyder2007", "Wyder et al. 2007", "ApJS 173, 293"),
 )
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from typing import Any
 
-__all__ = ["measured", "relation_rows", "total_rows"]
+__all__ = ["measured", "noted_lines", "relation_rows", "total_rows"]
 
 _NAMES = {
     "mass_atom": "atomic gas",
@@ -29,6 +29,23 @@ def measured(value: float | None, error: float | None, digits: int = 2) -> str:
         return f"({measured(value / 10**power, error / 10**power, digits)})e{power}"
     decimals = max(0, digits - 1 - math.floor(math.log10(error)))
     return f"{value:.{decimals}f} +- {error:.{decimals}f}"
+
+
+def noted_lines(summary: dict[str, Any]) -> list[str]:
+    """What the reader should know of each map, one line for each thing; empty for nothing."""
+    lines = []
+    for name, entry in summary["maps"].items():
+        registration, negative = entry.get("registration", {}), entry.get("negative") or {}
+        spacings = entry.get("short_spacings", {})
+        if registration.get("proposal"):
+            text = f"{registration['text']}; {registration['proposal']} would undo it"
+            lines.append(f"maps.{name}: {text}")
+        if negative.get("count"):
+            masked = "; taken as not observed" if negative["masked"] else ""
+            lines.append(f"maps.{name}: {negative['text']}{masked}")
+        if spacings.get("systematic"):
+            lines.append(f"maps.{name}: {spacings['text']}")
+    return lines
 
 
 def total_rows(summary: dict[str, Any]) -> list[tuple[str, str, str]]:

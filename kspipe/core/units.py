@@ -154,9 +154,9 @@ def read_unit(text: str) -> StoredUnit:
     Examples
     --------
     >>> read_unit("JY/BEAM*M/S").to_string()
-    'm Jy / (s beam)'
+    'Jy m / (beam s)'
     >>> read_unit("K.KM/S").to_string()
-    'km K / s'
+    'K km / s'
     >>> read_unit("AB mag arcsec^-2").to_string()
     'mag(AB / arcsec2)'
     """

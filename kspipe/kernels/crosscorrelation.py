@@ -30,6 +30,8 @@ Lag = tuple[int, int]
 LEAST_OVERLAP: Final = 0.5
 # An image whose spread is not more than this share of the noise variance holds nothing to align.
 LEAST_SPREAD: Final = 0.25
+# A quintic spline needs six points.
+LEAST_REACH_PIX: Final = 3
 # First derivative by five points: exact to (2 pi k)^4 / 30, one per cent at 8 pixels per period.
 STENCIL: Final = ((-2, 1.0 / 12.0), (-1, -8.0 / 12.0), (1, 8.0 / 12.0), (2, -1.0 / 12.0))
 AXES: Final = (np.array([1, 0]), np.array([0, 1]))
@@ -97,9 +99,10 @@ def lag_correlations(pair: ImagePair, reach_pix: int) -> Array:
 
     Returns
     -------
-    (2 reach + 1, 2 reach + 1) float64 array
-        Entry [reach + j, reach + i] compares first(x, y) with second(x + i, y + j); -1 where too
-        few pixels are common or nothing but noise is.
+    (2 r + 1, 2 r + 1) float64 array
+        Entry [r + j, r + i] compares first(x, y) with second(x + i, y + j). The reach r is less
+        than asked for, at worst zero, where farther lags have too few pixels in common or hold
+        nothing but noise.
 
     Notes
     -----
@@ -129,8 +132,8 @@ def lag_correlations(pair: ImagePair, reach_pix: int) -> Array:
         spread_b = sums(w0, mbb) / total - mean_b**2 - var_b
         both = sums(wa, mb) / total - mean_a * mean_b
         coefficient = both / np.sqrt(spread_a * spread_b)
-    is_real = (spread_a > LEAST_SPREAD * var_a) & (spread_b > LEAST_SPREAD * var_b)
-    return np.where(common & is_real, coefficient, -1.0)
+        is_real = (spread_a > LEAST_SPREAD * var_a) & (spread_b > LEAST_SPREAD * var_b)
+    return _within_square(coefficient, common & is_real)
 
 
 def find_peak(correlations: Array) -> Peak | None:
@@ -145,6 +148,8 @@ def find_peak(correlations: Array) -> Peak | None:
         None where the highest lag lies on the edge, or the top is not curved.
     """
     reach = correlations.shape[0] // 2
+    if reach < LEAST_REACH_PIX:
+        return None
     row, column = np.unravel_index(int(np.argmax(correlations)), correlations.shape)
     if not (0 < row < 2 * reach and 0 < column < 2 * reach):
         return None
@@ -336,7 +341,8 @@ def _reach_pix(term: NoiseTerm, jacobian_arcsec: Array) -> int:
     pixel = math.sqrt(abs(float(np.linalg.det(jacobian_arcsec))))
     if term.sampled is not None:
         own = math.sqrt(abs(float(np.linalg.det(term.sampled.jacobian_arcsec))))
-        return math.ceil(own * (term.sampled.values.shape[0] // 2) / pixel)
+        lags: int = term.sampled.values.shape[0] // 2
+        return math.ceil(own * lags / pixel)
     widest = math.sqrt(max(float(np.max(np.linalg.eigvalsh(term.correlation_arcsec2))), 0.0))
     return math.ceil(NOISE_REACH_SIGMA * widest / pixel)
 
@@ -352,6 +358,15 @@ def _at_lags(one: Array, other: Array, shape: tuple[int, int], reach: int) -> Ar
     lags = np.arange(-reach, reach + 1)
     sums = scipy.fft.irfft2(np.conj(one) * other, s=shape)
     return np.asarray(sums[np.ix_(lags % shape[0], lags % shape[1])])
+
+
+def _within_square(lags: Array, good: Bools) -> Array:
+    """Cut out the largest square about lag zero in which all is good."""
+    reach = lags.shape[0] // 2
+    away = np.abs(np.arange(-reach, reach + 1))
+    bad = np.maximum(away[:, None], away[None, :])[~good]
+    r = min(reach, max(int(bad.min(initial=reach + 1)) - 1, 0))
+    return lags[reach - r : reach + r + 1, reach - r : reach + r + 1]
 
 
 def _beside(lag: Lag, axis: int, step: int) -> Lag:

@@ -6,10 +6,12 @@ import math
 import warnings
 from typing import Final
 
+import astropy.units as u
 import numpy as np
+from astropy.coordinates import SkyCoord
 from astropy.io import fits
 from astropy.wcs import WCS, FITSFixedWarning
-from astropy.wcs.utils import pixel_to_skycoord
+from astropy.wcs.utils import pixel_to_skycoord, skycoord_to_pixel
 from numpy.typing import NDArray
 
 from kspipe.core.constants import C_KM_S, DEG_ARCSEC
@@ -24,6 +26,7 @@ __all__ = [
     "pixel_area_at",
     "pixel_areas_arcsec2",
     "pixel_jacobian",
+    "shifted_wcs",
     "sky_of_pixels",
 ]
 
@@ -78,6 +81,39 @@ def celestial_wcs(header: fits.Header, where: str) -> WCS:
             )
         )
     return wcs
+
+
+def shifted_wcs(
+    wcs: WCS, shift_arcsec: tuple[float, float], centre_deg: tuple[float, float]
+) -> WCS:
+    """Add an offset to the sky positions of a map.
+
+    Parameters
+    ----------
+    wcs : astropy.wcs.WCS
+        Celestial, any frame.
+    shift_arcsec : (float, float)
+        East and north on ICRS.
+    centre_deg : (float, float)
+        Where the offset is exact, ICRS.
+
+    Returns
+    -------
+    astropy.wcs.WCS
+
+    Notes
+    -----
+    The reference pixel is moved, not the reference value: another reference value also turns a
+    map about a point that may be far away, in an all-sky projection a quarter of the sky.
+    """
+    centre = SkyCoord(*centre_deg, unit="deg")
+    before = centre.spherical_offsets_by(*(-offset * u.arcsec for offset in shift_arcsec))
+    # Mode "wcs" is what the reference pixel counts in, behind any distortion.
+    now, then = (np.array(skycoord_to_pixel(at, wcs, mode="wcs")) for at in (centre, before))
+    moved = wcs.deepcopy()
+    moved.wcs.crpix = wcs.wcs.crpix - (now - then)
+    moved.wcs.set()
+    return moved
 
 
 def pixel_jacobian(wcs: WCS, x: float, y: float, *, icrs: bool = True) -> Array:

@@ -6,6 +6,7 @@ ways, or that is another quantity than the tracer's, stops with the units that w
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import Final
 
@@ -257,7 +258,13 @@ def open_door(
     per_pixel = u.pix in unit.bases
     if u.beam in unit.bases:
         if beam_area_arcsec2 is None:
-            raise UnitError(Fault(where, f"the unit {reading.text!r} needs a beam"))
+            raise UnitError(
+                Fault(
+                    where,
+                    f"the unit {reading.text!r} needs a beam",
+                    'type beam = "... arcsec" for this map',
+                )
+            )
         unit = u.Unit(unit * u.beam / (beam_area_arcsec2 * ARCSEC2_SR * u.sr))
         notes.append(f"beam of {beam_area_arcsec2:.6g} arcsec2")
     if per_pixel:
@@ -315,7 +322,7 @@ def refuse_unused_counts(
         name, key = _table(where), "zero_point" if counts is None else "counts"
         raise UnitError(
             Fault(
-                f"{name}.{key}, {where}",
+                f"{name}.{key}",
                 f"the unit {reading.text!r} ({reading.origin}) reads as "
                 f"{reading.unit.to_string()!r}, which counts nothing",
                 f'remove {name}.{key}, or type {name}.unit = "counts/s"',
@@ -370,10 +377,10 @@ def _weigh_counts(
     if counts is not None and zero_point is not None:
         raise UnitError(
             Fault(
-                f"{name}, {where}",
+                where,
                 f"counts = {counts!r} and zero_point = {zero_point:g} mag both say what one "
                 f"{reading.counted} is worth",
-                "remove one of them",
+                f"remove {name}.counts or {name}.zero_point",
             )
         )
     if zero_point is not None:
@@ -413,7 +420,7 @@ def _worth(counts: str, name: str) -> u.UnitBase:
     number, _, text = counts.strip().partition(" ")
     try:
         unit = read_unit(text)
-        if isinstance(unit, u.MagUnit) or not float(number) > 0:
+        if isinstance(unit, u.MagUnit) or not 0 < float(number) < math.inf:
             raise UnitReadingError("a positive number and the unit of a flux or intensity are due")
         return u.Unit(float(number) * unit)
     except ValueError as error:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import json
 import textwrap
+import unicodedata
 import warnings
 from collections.abc import Iterable, Mapping
 from pathlib import Path
@@ -17,7 +19,7 @@ from kspipe.core.constants import DEG_ARCSEC
 from kspipe.kernels.correlation import SampledCorrelation
 from kspipe.kernels.geometry import beam_axes, beam_covariance
 from kspipe.kernels.noise import NoiseTerm
-from kspipe.maps.skymap import CommonError, Flag, SkyMap
+from kspipe.maps.skymap import CommonError, Flag, SkyMap, Step
 
 __all__ = ["read_image", "read_matched", "write_matched", "write_product"]
 
@@ -41,6 +43,7 @@ def write_product(
     extensions: Mapping[str, tuple[Array | NDArray[np.int32], str]],
     history: Iterable[str],
     cards: Mapping[str, tuple[Any, str]] | None = None,
+    tables: Iterable[fits.BinTableHDU] = (),
 ) -> None:
     """Write one product file.
 
@@ -59,6 +62,8 @@ def write_product(
         One HISTORY entry each.
     cards : mapping of str to (value, comment), optional
         Further cards of the primary header.
+    tables : iterable of BinTableHDU
+        Put behind the images.
     """
     sky = _sky_header(wcs, beam_arcsec2)
     primary = fits.PrimaryHDU(value.astype(np.float32), header=sky)
@@ -66,7 +71,7 @@ def write_product(
     for key, (card, comment) in (cards or {}).items():
         primary.header[key] = (card, comment)
     for entry in history:
-        for line in textwrap.wrap(entry, 70, subsequent_indent="  "):
+        for line in textwrap.wrap(_ascii(entry), 70, subsequent_indent="  "):
             primary.header.add_history(line)
     hdus = [primary]
     for name, (array, extension_unit) in extensions.items():
@@ -79,7 +84,14 @@ def write_product(
             for meaning, bit in Flag.meanings().items():
                 image.header[f"FLAG{bit}"] = (meaning, "meaning of this bit")
         hdus.append(image)
-    fits.HDUList(hdus).writeto(path)
+    fits.HDUList([*hdus, *tables]).writeto(path)
+
+
+def _ascii(text: str) -> str:
+    """Write a text in the letters that FITS knows; accents are dropped, the rest is escaped."""
+    plain = unicodedata.normalize("NFKD", text.replace("±", "+-"))
+    letters = "".join(c for c in plain if not unicodedata.combining(c))
+    return letters.encode("ascii", "backslashreplace").decode()
 
 
 def _sky_header(wcs: WCS, beam_arcsec2: Array) -> fits.Header:
@@ -115,6 +127,7 @@ def write_matched(path: Path, sky: SkyMap) -> None:
         "MAPNAME": (sky.name, "name in the recipe"),
         "CALERR": (sky.common.calibration, "fractional flux-scale error, all pixels"),
         "PEDERR": (sky.common.pedestal, "zero-level error, all pixels"),
+        "MATCHERR": (sky.common.matching, "fractional error of a PSF read as Gaussian"),
     }
     for i, term in enumerate(sky.noise, 1):
         cards[f"NSRC{i}"] = (term.source, f"source of NOISE{i}")
@@ -135,6 +148,42 @@ def write_matched(path: Path, sky: SkyMap) -> None:
         extensions=extensions,
         history=sky.history,
         cards=cards,
+        tables=[_steps_table(sky.steps)] if sky.steps else [],
+    )
+
+
+_STEP_TEXTS = ("step", "what", "origin")
+_STEP_NUMBERS = {"flux": "D", "noise": "D", "n_pixels": "K"}
+
+
+def _steps_table(steps: tuple[Step, ...]) -> fits.BinTableHDU:
+    """Write steps as a table; a FITS table holds ASCII only."""
+    texts = {
+        key: [getattr(step, key).encode("ascii", "backslashreplace").decode() for step in steps]
+        for key in _STEP_TEXTS
+    }
+    texts["detail"] = [json.dumps(step.detail) for step in steps]
+    columns = [
+        fits.Column(key, f"{max(1, *map(len, column))}A", array=np.array(column))
+        for key, column in texts.items()
+    ]
+    columns += [
+        fits.Column(key, kind, array=np.array([getattr(step, key) for step in steps]))
+        for key, kind in _STEP_NUMBERS.items()
+    ]
+    return fits.BinTableHDU.from_columns(columns, name="STEPS")
+
+
+def _read_steps(table: NDArray[Any]) -> tuple[Step, ...]:
+    return tuple(
+        Step(
+            **{key: row[key].decode() for key in _STEP_TEXTS},
+            flux=float(row["flux"]),
+            noise=float(row["noise"]),
+            n_pixels=int(row["n_pixels"]),
+            detail=json.loads(row["detail"]),
+        )
+        for row in table
     )
 
 
@@ -169,8 +218,11 @@ def read_matched(path: Path) -> SkyMap:
         wcs=wcs,
         beam_arcsec2=beam,
         averages_pixels=False,
-        common=CommonError(float(header["CALERR"]), float(header["PEDERR"])),
+        common=CommonError(
+            *(float(header.get(key, 0.0)) for key in ("CALERR", "PEDERR", "MATCHERR"))
+        ),
         history=tuple(str(line) for line in header.get("HISTORY", [])),
+        steps=_read_steps(arrays["STEPS"]) if "STEPS" in arrays else (),
     )
 
 

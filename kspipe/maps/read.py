@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from kspipe.core.errors import Fault, MapError, ShapeError
 from kspipe.maps.header import pixel_areas_arcsec2
+from kspipe.maps.psf_records import psf_record
 from kspipe.maps.skymap import CommonError, NoiseTerm, SkyMap
 from kspipe.maps.source import MapSource, StoredImage
 
@@ -50,7 +51,8 @@ def load_map(source: MapSource) -> SkyMap:
 
     relative_area = _relative_area(source)
     value = source.door.intensity(value, relative_area)
-    history += [source.door.reason, f"beam {source.beam} from {source.beam.origin}"]
+    record = psf_record(request.tracer, source.beam_arcsec2) if source.psf is None else None
+    history += [source.door.reason, source.beam.story, *([str(record)] if record else [])]
 
     noise: tuple[NoiseTerm, ...] = ()
     if request.noise.kind != "measure":
@@ -78,7 +80,10 @@ def load_map(source: MapSource) -> SkyMap:
         wcs=source.wcs,
         beam_arcsec2=source.beam_arcsec2,
         averages_pixels=request.averages_pixels,
-        common=CommonError(request.calibration_error, source.pedestal),
+        psf=source.psf,
+        common=CommonError(
+            request.calibration_error, source.pedestal, record.matching_error if record else 0.0
+        ),
         history=tuple(history),
         facts={
             "file": str(source.image),
@@ -86,6 +91,7 @@ def load_map(source: MapSource) -> SkyMap:
             "beam": f"{source.beam} from {source.beam.origin}",
             "pixel_arcsec": source.pixel_arcsec,
             "blank_pixels": int(np.isnan(value).sum()),
+            **({"matching_error": record.matching_error} if record else {}),
         },
     )
 

@@ -4,14 +4,16 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
 from enum import IntFlag
+from typing import Any
 
 import numpy as np
 from astropy.wcs import WCS
 from numpy.typing import NDArray
 
 from kspipe.kernels.noise import NoiseTerm, total_error
+from kspipe.maps.psf import PsfImage
 
-__all__ = ["CommonError", "Flag", "NoiseTerm", "SkyMap"]
+__all__ = ["CommonError", "Flag", "NoiseTerm", "SkyMap", "Step"]
 
 Array = NDArray[np.float64]
 
@@ -44,10 +46,40 @@ class CommonError:
         Fractional 1-sigma error of the flux scale.
     pedestal : float
         1-sigma error of the zero level, in the map's unit.
+    matching : float
+        Fractional 1-sigma error of a band whose PSF is no Gaussian but is read as one.
     """
 
     calibration: float = 0.0
     pedestal: float = 0.0
+    matching: float = 0.0
+
+
+@dataclass(frozen=True)
+class Step:
+    """What one step did to a map, and what it left.
+
+    Attributes
+    ----------
+    step, what, origin : str
+        Its name, what was read or done, and who said so.
+    flux : float
+        On the grid's sky [unit of the map times sr].
+    noise : float
+        Median random 1-sigma error there [unit of the map].
+    n_pixels : int
+        Observed pixels there.
+    detail : dict
+        Further plain values for the summary.
+    """
+
+    step: str
+    what: str
+    origin: str
+    flux: float
+    noise: float
+    n_pixels: int
+    detail: dict[str, Any] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)
@@ -74,9 +106,13 @@ class SkyMap:
     averages_pixels : bool
         Whether a value is the mean over its pixel on top of the beam (detectors) or the intensity
         at the pixel's centre (radio).
+    psf : PsfImage or None
+        Point-spread function that stands for the beam, of a map on its own pixels.
     common : CommonError
     history : tuple of str
         Every step, in order.
+    steps : tuple of Step
+        The steps that are shown in a table, with the flux and noise that each left.
     facts : dict
         Numbers worth showing: flux before and after, origins of unit, beam and noise.
     """
@@ -91,8 +127,10 @@ class SkyMap:
     wcs: WCS
     beam_arcsec2: Array
     averages_pixels: bool
+    psf: PsfImage | None = None
     common: CommonError = CommonError()
     history: tuple[str, ...] = ()
+    steps: tuple[Step, ...] = ()
     facts: dict[str, object] = field(default_factory=dict)
 
     @property

@@ -22,7 +22,12 @@ from kspipe.core.errors import BeamError, Fault, MapError, ShapeError
 from kspipe.core.tracers import TRACERS, Tracer
 from kspipe.kernels.geometry import beam_area
 from kspipe.maps.beams import Beam, BeamTable, beam_table, find_beam
-from kspipe.maps.header import celestial_wcs, observed_frequency_ghz, pixel_jacobian
+from kspipe.maps.header import (
+    celestial_wcs,
+    observed_frequency_ghz,
+    pixel_jacobian,
+    shifted_wcs,
+)
 from kspipe.maps.intensity import (
     Door,
     UnitReading,
@@ -31,6 +36,7 @@ from kspipe.maps.intensity import (
     read_stored_unit,
     refuse_unused_counts,
 )
+from kspipe.maps.psf import PsfImage, read_psf
 
 __all__ = ["MapRequest", "MapSource", "NoiseRequest", "StoredImage"]
 
@@ -261,7 +267,7 @@ class MapSource:
     image : StoredImage
     noise_image : StoredImage or None
     wcs : astropy.wcs.WCS
-        Celestial part.
+        Celestial part, with the recipe's shift.
     beam : Beam
     unit : UnitReading
     door : Door
@@ -275,6 +281,8 @@ class MapSource:
         ICRS offset (east, north) per pixel step at the galaxy's centre.
     beam_arcsec2 : (2, 2) float64 array
         Beam covariance on ICRS axes.
+    psf : PsfImage or None
+        What the map is smoothed from instead of the beam.
     """
 
     request: MapRequest
@@ -288,6 +296,7 @@ class MapSource:
     pedestal: float
     jacobian_arcsec: Array
     beam_arcsec2: Array
+    psf: PsfImage | None = None
 
     @property
     def tracer(self) -> Tracer:
@@ -330,13 +339,17 @@ class MapSource:
         tracer = TRACERS[request.tracer]
         image = StoredImage.find(request.file, request.hdu, memory[0] if memory else None)
         wcs = celestial_wcs(image.header, f"{where}, {image}")
+        if any(request.shift_arcsec):
+            wcs = shifted_wcs(wcs, request.shift_arcsec, centre_deg)
         unit = read_stored_unit(
             image.header.get("BUNIT"), request.unit, tracer, f"{where}, {image}"
         )
-        beam = _beam(request, image, where)
         x, y = _centre_pixel(wcs, image.shape, centre_deg)
         own, jacobian = pixel_jacobian(wcs, x, y, icrs=False), pixel_jacobian(wcs, x, y)
+        to_icrs = jacobian @ np.linalg.inv(own)
         pixel_area = abs(float(np.linalg.det(own)))
+        psf = _psf(request, jacobian, where)
+        beam, is_stated = _beam(request, image, psf, np.linalg.inv(to_icrs), where)
         _check_beam(beam, math.sqrt(pixel_area), image, where)
         refuse_unused_counts(unit, request.counts, request.zero_point, f"{where}, {image}")
 
@@ -351,7 +364,8 @@ class MapSource:
                 tracer,
                 frequency_ghz=frequency,
                 frequency_note=note,
-                beam_area_arcsec2=beam_area(beam.covariance_arcsec2),
+                # A PSF image has no solid angle that a unit could count by.
+                beam_area_arcsec2=beam_area(beam.covariance_arcsec2) if is_stated else None,
                 pixel_area_arcsec2=pixel_area,
                 counts=request.counts,
                 zero_point=request.zero_point,
@@ -367,7 +381,6 @@ class MapSource:
             at = f"{where}.pedestal_error"
             reading = read_stored_unit(None, text, tracer, at, key=at)
             pedestal = level * linear_door(through(reading, at), tracer, at).factor
-        to_icrs = jacobian @ np.linalg.inv(own)
         return cls(
             request=request,
             image=image,
@@ -380,22 +393,38 @@ class MapSource:
             pedestal=pedestal,
             jacobian_arcsec=jacobian,
             beam_arcsec2=to_icrs @ beam.covariance_arcsec2 @ to_icrs.T,
+            psf=psf,
         )
 
 
-def _beam(request: MapRequest, image: StoredImage, where: str) -> Beam:
+def _psf(request: MapRequest, jacobian_arcsec: Array, where: str) -> PsfImage | None:
+    if request.psf is None:
+        return None
+    image = StoredImage.find(request.psf, None)
+    return read_psf(
+        image.read(), image.header, jacobian_arcsec, str(image), f"{where}.psf, {image}"
+    )
+
+
+def _beam(
+    request: MapRequest, image: StoredImage, psf: PsfImage | None, to_own: Array, where: str
+) -> tuple[Beam, bool]:
+    """Find the Gaussian beam, or that of the PSF image's core; and say whether it was stated."""
     beam = find_beam(
         image.header, image.beams, typed=request.beam, name=request.name, where=f"{where}, {image}"
     )
-    if beam is None:
-        raise BeamError(
-            Fault(
-                f"{where}, {image}",
-                "the header has no beam (no BMAJ, no table BEAMS, none in HISTORY)",
-                'type beam = "... arcsec" for this map',
-            )
+    if beam is not None:
+        return beam, True
+    if psf is not None:
+        core = to_own @ psf.core_arcsec2 @ to_own.T
+        return Beam.from_covariance(core, f"the core of the {psf.origin}"), False
+    raise BeamError(
+        Fault(
+            f"{where}, {image}",
+            "the header has no beam (no BMAJ, no table BEAMS, none in HISTORY)",
+            'type beam = "... arcsec" for this map, or psf = "file.fits"',
         )
-    return beam
+    )
 
 
 def _check_beam(beam: Beam, pixel_arcsec: float, image: StoredImage, where: str) -> None:

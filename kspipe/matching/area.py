@@ -5,9 +5,9 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.kernels.fourier import gaussian_smooth
 from kspipe.maps.skymap import SkyMap
 from kspipe.matching.grid import Grid
+from kspipe.matching.smoothing import Smoothing
 
 __all__ = ["area_weighted"]
 
@@ -15,7 +15,7 @@ Array = NDArray[np.float64]
 
 
 def area_weighted(
-    sky: SkyMap, kernel_pix2: Array, gains: list[float], grid: Grid, map_pixel_arcsec: float
+    sky: SkyMap, smoothing: Smoothing, grid: Grid
 ) -> tuple[Array, Array, tuple[Array, ...]]:
     """Smooth a map and average it over the pixels of the grid, by exact overlap on the sphere.
 
@@ -25,13 +25,8 @@ def area_weighted(
     Parameters
     ----------
     sky : SkyMap
-    kernel_pix2 : (2, 2) float64 array
-        Smoothing kernel on the map's pixels.
-    gains : list of float
-        Share of each noise term's variance that smoothing leaves.
+    smoothing : Smoothing
     grid : Grid
-    map_pixel_arcsec : float
-        Side of the map's pixels.
 
     Returns
     -------
@@ -46,15 +41,16 @@ def area_weighted(
     observed = np.isfinite(sky.value)
 
     def onto_grid(array: Array) -> Array:
-        smooth = gaussian_smooth(array, kernel_pix2, margin=0).array
+        smooth = smoothing.smooth(array)
         mean, share = reproject_exact((smooth, sky.wcs), grid.wcs, shape_out=grid.shape)
         # Where the map ends its share of the pixel is its weight.
         return np.asarray(np.nan_to_num(mean) * np.nan_to_num(share))
 
-    mean_of = min(1.0, (map_pixel_arcsec / grid.pixel_arcsec) ** 2)
+    map_pixel_arcsec2 = abs(float(np.linalg.det(smoothing.jacobian)))
+    mean_of = min(1.0, map_pixel_arcsec2 / grid.pixel_arcsec**2)
     variances = tuple(
-        onto_grid(np.where(observed, term.sigma**2, 0.0)) * gain * mean_of
-        for term, gain in zip(sky.noise, gains, strict=True)
+        onto_grid(np.where(observed, term.sigma**2, 0.0)) * smoothing.noise_gain(term) * mean_of
+        for term in sky.noise
     )
     weight = onto_grid(observed.astype(float))
     value = onto_grid(np.where(observed, sky.value, 0.0))

@@ -13,7 +13,7 @@ from kspipe.core.constants import ARCSEC2_SR
 from kspipe.maps.header import pixel_area_at
 from kspipe.matching.grid import Grid
 
-__all__ = ["flux_on_grid", "flux_within"]
+__all__ = ["flux_on_grid", "flux_within", "pixels_within"]
 
 Array = NDArray[np.float64]
 
@@ -41,6 +41,16 @@ def flux_within(value: Array, wcs: WCS, grid: Grid) -> float:
         moments = np.nan_to_num(value[row, columns]) @ in_x[columns]
         total += float(in_y[row] @ coefficients @ moments)
     return total * ARCSEC2_SR
+
+
+def pixels_within(shape: tuple[int, int], wcs: WCS, grid: Grid) -> NDArray[np.bool_]:
+    """Pixels of a map whose centres lie on the sky that the grid covers."""
+    x, y = _outline(grid, wcs)
+    if not (np.isfinite(x).all() and np.isfinite(y).all()):
+        return np.zeros(shape, dtype=bool)
+    first, last = _spans(x, y, shape)
+    columns = np.arange(shape[1])
+    return (columns >= first[:, None]) & (columns < last[:, None])
 
 
 def _outline(grid: Grid, wcs: WCS) -> tuple[Array, Array]:

@@ -68,14 +68,16 @@ class Grid:
             If the maps do not overlap, or the galaxy's centre is outside one of them.
         """
         wcs = _tangent(centre_deg, pixel_arcsec)
-        low, high = np.array([-math.inf, -math.inf]), np.array([math.inf, math.inf])
-        boxes = {}
-        for source in sources:
-            edge = _outline(source, wcs)
-            boxes[source.request.name] = edge
-            low, high = np.maximum(low, edge.min(axis=0)), np.minimum(high, edge.max(axis=0))
-        if np.any(low > 0) or np.any(high < 0):
-            raise _not_there(boxes, pixel_arcsec)
+        edges = [_outline(source, wcs) for source in sources]
+        faults = [
+            fault
+            for source, edge in zip(sources, edges, strict=True)
+            if (fault := _elsewhere(source.request.name, edge, pixel_arcsec)) is not None
+        ]
+        if faults:
+            raise GridError(*faults)
+        low = np.max([edge.min(axis=0) for edge in edges], axis=0)
+        high = np.min([edge.max(axis=0) for edge in edges], axis=0)
         if size_arcsec is not None:
             half = size_arcsec / 2 / pixel_arcsec
             low, high = np.maximum(low, -half), np.minimum(high, half)
@@ -168,19 +170,17 @@ def _outline(source: MapSource, wcs: WCS) -> Array:
     return np.asarray(edge[np.isfinite(edge).all(axis=1)])
 
 
-def _not_there(boxes: dict[str, Array], pixel_arcsec: float) -> GridError:
-    """Say where each map lies relative to the galaxy's centre."""
-    faults = []
-    for name, edge in boxes.items():
-        (west, south), (east, north) = edge.min(axis=0), edge.max(axis=0)
-        if west > 0 or south > 0 or east < 0 or north < 0:
-            away = np.hypot(*edge.mean(axis=0)) * pixel_arcsec / 60
-            faults.append(
-                Fault(
-                    f"maps.{name}",
-                    f"the map does not reach the galaxy's centre: its middle is {away:.4g} arcmin "
-                    "away, so the maps do not overlap there",
-                    "check galaxy.centre and the file",
-                )
-            )
-    return GridError(*faults)
+def _elsewhere(name: str, edge: Array, pixel_arcsec: float) -> Fault | None:
+    """Say where a map lies whose box does not hold the galaxy's centre; None where it does."""
+    if not len(edge):
+        away = "more than 90 degrees"
+    elif np.all(edge.min(axis=0) <= 0) and np.all(edge.max(axis=0) >= 0):
+        return None
+    else:
+        away = f"{np.hypot(*edge.mean(axis=0)) * pixel_arcsec / 60:.4g} arcmin"
+    return Fault(
+        f"maps.{name}",
+        f"the map does not reach the galaxy's centre: its middle is {away} away, so the maps do "
+        "not overlap there",
+        "check galaxy.centre and the file",
+    )

@@ -3,32 +3,20 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from functools import partial
 from typing import Final, Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.core.errors import BeamError, Fault, GridError
-from kspipe.kernels.fourier import (
-    correlated_noise_gain,
-    gaussian_reach,
-    gaussian_smooth,
-    white_noise_gain,
-)
-from kspipe.kernels.geometry import (
-    beam_axes,
-    pixel_covariance,
-    subtract_covariance,
-    transform_covariance,
-)
+from kspipe.core.errors import Fault, GridError
+from kspipe.kernels.geometry import beam_axes, transform_covariance
 from kspipe.kernels.regrid import interpolation_noise_gain, sample_cubic, sample_linear
 from kspipe.kernels.tiles import cut_tiles
-from kspipe.maps.header import pixel_jacobian
-from kspipe.maps.skymap import Flag, NoiseTerm, SkyMap
+from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching.area import area_weighted
 from kspipe.matching.flux import flux_on_grid, flux_within
 from kspipe.matching.grid import Grid
+from kspipe.matching.smoothing import Smoothing, choose_smoothing
 
 __all__ = ["match_map"]
 
@@ -81,30 +69,34 @@ def match_map(
     Raises
     ------
     BeamError
-        If the map's beam is wider than the target.
+        If the target is sharper than the map's beam, or than its PSF image.
     GridError
         If a spline is asked for where the target beam spans too few of the map's pixels.
     """
     x, y, coordinate_error = grid.pixels_in(sky.wcs)
-    kernel = _kernel(sky, target_arcsec2, float(np.nanmedian(x)), float(np.nanmedian(y)))
-    method = _choose_regrid(sky, kernel, target_arcsec2, regrid)
+    # At the galaxy's centre, where the target was found legal.
+    centre = (float(p) for p in grid.positions_in(sky.wcs, *map(np.asarray, grid.centre_pixel)))
+    smoothing = choose_smoothing(sky, target_arcsec2, *centre)
+    method = _choose_regrid(sky, smoothing, target_arcsec2, regrid)
     if method == "area":
-        smoothed = _smooth_and_average(sky, kernel, grid, x, y)
+        smoothed = _smooth_and_average(sky, smoothing, grid, x, y)
     else:
-        smoothed = _smooth_and_sample(sky, kernel, x, y, workers)
+        smoothed = _smooth_and_sample(sky, smoothing, x, y, workers)
 
     coverage = np.clip(smoothed.weight, 0.0, 1.0)
     kept = coverage >= minimum_coverage
     with np.errstate(invalid="ignore", divide="ignore"):
-        value = np.where(kept, smoothed.value / coverage, np.nan)
+        # Not by the coverage: a kernel with negative lobes weighs more than one beside a hole.
+        value = np.where(kept, smoothed.value / smoothed.weight, np.nan)
     terms = []
     for term, variance in zip(sky.noise, smoothed.variances, strict=True):
-        after = _after(term, kernel)
+        after = smoothing.after(term)
         gain: Array | float = 1.0
         if method == "spline":
-            gain = interpolation_noise_gain(x, y, _smoothness_pix2(after, kernel))
+            as_smooth = transform_covariance(after.correlation_arcsec2, smoothing.jacobian)
+            gain = interpolation_noise_gain(x, y, as_smooth)
         with np.errstate(invalid="ignore", divide="ignore"):
-            sigma = np.sqrt(variance * gain) / coverage
+            sigma = np.sqrt(variance * gain) / smoothed.weight
         terms.append(after.with_sigma(np.where(kept, sigma, np.nan)))
 
     bridged = kept & smoothed.on_blank
@@ -118,8 +110,10 @@ def match_map(
         else "by area-weighted means: the map's and the grid's pixels widen the beam"
     )
     filled = f"{int((~kept).sum())} of {kept.size} pixels blank, {int(bridged.sum())} bridged"
+    rows, columns = grid.shape
     steps = (
-        *_steps(sky, kernel, grid),
+        smoothing.story,
+        f"regridded to {columns} x {rows} pixels of {grid.pixel_arcsec:.4g} arcsec",
         f"{how} ({'recipe' if regrid else 'chosen by its sampling'})",
         f"coverage limit {minimum_coverage:g}: {filled}",
         f"flux on the grid's sky {fluxes[0]:.6g}, after matching {fluxes[1]:.6g} ({sky.unit} sr)",
@@ -133,36 +127,22 @@ def match_map(
         wcs=grid.wcs,
         beam_arcsec2=target_arcsec2,
         averages_pixels=False,
+        psf=None,
         history=(*sky.history, *steps),
-        facts={**sky.facts, "flux_before": fluxes[0], "flux_after": fluxes[1]},
+        facts={
+            **sky.facts,
+            **smoothing.facts,
+            "flux_before": fluxes[0],
+            "flux_after": fluxes[1],
+        },
     )
 
 
-@dataclass(frozen=True)
-class _Kernel:
-    """What turns a map's beam into the target, on the sky and on the map's pixels."""
-
-    arcsec2: Array
-    pix2: Array
-    jacobian: Array
-
-
-def _kernel(sky: SkyMap, target_arcsec2: Array, x: float, y: float) -> _Kernel:
-    """Work out the kernel at one pixel of the map; refuse what cannot be done."""
-    where = f"maps.{sky.name}"
-    jacobian = pixel_jacobian(sky.wcs, x, y)
-    beam = sky.beam_arcsec2 + (pixel_covariance(jacobian) if sky.averages_pixels else 0.0)
-    kernel = subtract_covariance(target_arcsec2, beam)
-    if kernel is None:
-        raise BeamError(Fault(where, "the map's beam is wider than the target beam"))
-    return _Kernel(kernel, transform_covariance(kernel, jacobian), jacobian)
-
-
 def _choose_regrid(
-    sky: SkyMap, kernel: _Kernel, target_arcsec2: Array, wanted: Regrid | None
+    sky: SkyMap, smoothing: Smoothing, target_arcsec2: Array, wanted: Regrid | None
 ) -> Regrid:
     """Interpolate what is sampled well enough, average what is not."""
-    fwhm_pix = beam_axes(transform_covariance(target_arcsec2, kernel.jacobian))[1]
+    fwhm_pix = beam_axes(transform_covariance(target_arcsec2, smoothing.jacobian))[1]
     is_sampled = fwhm_pix >= LEAST_PIXELS_PER_BEAM
     if wanted == "spline" and not is_sampled:
         raise GridError(
@@ -174,17 +154,6 @@ def _choose_regrid(
             )
         )
     return wanted or ("spline" if is_sampled else "area")
-
-
-def _steps(sky: SkyMap, kernel: _Kernel, grid: Grid) -> tuple[str, ...]:
-    """Say how the map was smoothed and where it was put, for the history."""
-    major, minor, pa = beam_axes(kernel.arcsec2)
-    smoothed = f"smoothed with a Gaussian of {major:.4f} x {minor:.4f} arcsec FWHM, pa {pa:.2f} deg"
-    if sky.averages_pixels:
-        smoothed += ", detector pixel counted in the beam"
-    rows, columns = grid.shape
-    put = f"regridded to {columns} x {rows} pixels of {grid.pixel_arcsec:.4g} arcsec"
-    return smoothed, put
 
 
 @dataclass(frozen=True)
@@ -200,11 +169,11 @@ class _Smoothed:
     on_blank: NDArray[np.bool_]
 
 
-def _smooth_and_average(sky: SkyMap, kernel: _Kernel, grid: Grid, x: Array, y: Array) -> _Smoothed:
+def _smooth_and_average(
+    sky: SkyMap, smoothing: Smoothing, grid: Grid, x: Array, y: Array
+) -> _Smoothed:
     """The way of an under-sampled map."""
-    gains = [_noise_gain(term, kernel) for term in sky.noise]
-    side = float(np.sqrt(abs(np.linalg.det(kernel.jacobian))))
-    value, weight, variances = area_weighted(sky, kernel.pix2, gains, grid, side)
+    value, weight, variances = area_weighted(sky, smoothing, grid)
     ny, nx = sky.value.shape
     row, column = np.rint(y).astype(int), np.rint(x).astype(int)
     inside = (row >= 0) & (row < ny) & (column >= 0) & (column < nx)
@@ -212,7 +181,9 @@ def _smooth_and_average(sky: SkyMap, kernel: _Kernel, grid: Grid, x: Array, y: A
     return _Smoothed(value, weight, variances, ~(inside & seen))
 
 
-def _smooth_and_sample(sky: SkyMap, kernel: _Kernel, x: Array, y: Array, workers: int) -> _Smoothed:
+def _smooth_and_sample(
+    sky: SkyMap, smoothing: Smoothing, x: Array, y: Array, workers: int
+) -> _Smoothed:
     """Smooth a map tile by tile and interpolate each tile where the grid's pixels fall on it.
 
     A tile is read with a margin of the kernel's reach and of the spline's, so that tiles give
@@ -225,7 +196,7 @@ def _smooth_and_sample(sky: SkyMap, kernel: _Kernel, x: Array, y: Array, workers
         variances=tuple(np.zeros(x.shape) for _ in sky.noise),
         on_blank=np.ones(x.shape, dtype=bool),
     )
-    margin = gaussian_reach(kernel.pix2) + SPLINE_MARGIN
+    margin = smoothing.reach + SPLINE_MARGIN
     ny, nx = sky.value.shape
     # Beyond the kernel's reach from the map's edge there is nothing to sample.
     near = (x > -margin) & (x < nx - 1 + margin) & (y > -margin) & (y < ny - 1 + margin)
@@ -234,7 +205,7 @@ def _smooth_and_sample(sky: SkyMap, kernel: _Kernel, x: Array, y: Array, workers
     wanted = tuple(
         slice(int(np.floor(p[near].min())), int(np.floor(p[near].max())) + 1) for p in (y, x)
     )
-    gains = [_noise_gain(term, kernel) for term in sky.noise]
+    gains = [smoothing.noise_gain(term) for term in sky.noise]
     for tile in cut_tiles((ny, nx), margin, (wanted[0], wanted[1])):
         rows, columns = tile.core
         here = (
@@ -246,46 +217,16 @@ def _smooth_and_sample(sky: SkyMap, kernel: _Kernel, x: Array, y: Array, workers
         value = tile.cut(sky.value)
         observed = tile.cut(np.isfinite(sky.value[tile.section]), is_section=True) > 0
         out.on_blank[here] = ~observed[np.rint(ty).astype(int), np.rint(tx).astype(int)]
-        smooth = partial(gaussian_smooth, margin=0, workers=workers)
-        spline = smooth(np.where(observed, value, 0.0), kernel.pix2, as_spline=True)
-        out.value[here] = sample_cubic(spline.array, tx, ty, is_spline=True)
+        seen = np.where(observed, value, 0.0)
+        spline = smoothing.smooth(seen, workers=workers, as_spline=True)
+        out.value[here] = sample_cubic(spline, tx, ty, is_spline=True)
         if observed.all():
             out.weight[here] = 1.0
         else:
-            spline = smooth(observed.astype(float), kernel.pix2, as_spline=True)
-            out.weight[here] = sample_cubic(spline.array, tx, ty, is_spline=True)
+            spline = smoothing.smooth(observed.astype(float), workers=workers, as_spline=True)
+            out.weight[here] = sample_cubic(spline, tx, ty, is_spline=True)
         for term, gain, variance in zip(sky.noise, gains, out.variances, strict=True):
             squared = np.where(observed, tile.cut(term.sigma) ** 2, 0.0) * gain
-            spread = smooth(squared, kernel.pix2 / 2.0).array
+            spread = smoothing.spread(squared, workers=workers)
             variance[here] = np.maximum(sample_linear(spread, tx, ty), 0.0)
     return out
-
-
-def _noise_gain(term: NoiseTerm, kernel: _Kernel) -> float:
-    """Share of a noise term's variance that smoothing leaves, before coverage.
-
-    A Gaussian kernel of covariance K applied to noise exp(-d^T C^-1 d / 4) of slowly varying
-    sigma gives the variance sqrt(det C / det(C + K)) times sigma^2 averaged with a Gaussian of
-    covariance K/2: the square of the kernel. White noise has its own gain, the sum of the
-    squared kernel.
-    """
-    if not np.any(kernel.arcsec2):
-        return 1.0
-    if term.sampled is not None:
-        return term.sampled.smoothed(kernel.pix2)[0]
-    if np.any(term.correlation_arcsec2):
-        return correlated_noise_gain(term.correlation_arcsec2, kernel.arcsec2)
-    return white_noise_gain(kernel.pix2)
-
-
-def _after(term: NoiseTerm, kernel: _Kernel) -> NoiseTerm:
-    """The term's correlation after smoothing."""
-    sampled = term.sampled.smoothed(kernel.pix2)[1] if term.sampled is not None else None
-    return replace(
-        term, correlation_arcsec2=term.correlation_arcsec2 + kernel.arcsec2, sampled=sampled
-    )
-
-
-def _smoothness_pix2(term: NoiseTerm, kernel: _Kernel) -> Array:
-    """Covariance, in the map's pixels, of the Gaussian that the noise is as smooth as."""
-    return transform_covariance(term.correlation_arcsec2, kernel.jacobian)

@@ -191,7 +191,7 @@ def check_relation(name: str, raw: object, faults: list[Fault]) -> RelationTable
             Fault(f"{where}.law", "the key is missing", f"known: {', '.join(LAWS.keys())}")
         )
         return None
-    if raw["law"] not in LAWS:
+    if not isinstance(raw["law"], str) or raw["law"] not in LAWS:
         faults.append(Fault(f"{where}.law", LAWS.unknown(str(raw["law"]))))
         return None
     law = LAWS.get(raw["law"])

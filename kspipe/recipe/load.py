@@ -236,8 +236,14 @@ def _map(table: object, where: str, faults: list[Fault]) -> MapTable | None:
 
 
 def _locate(file: Path, folder: Path, where: str, faults: list[Fault]) -> Path:
-    located = (folder / file.expanduser()).resolve()
-    if not located.is_file():
+    try:
+        located = (folder / file.expanduser()).resolve()
+        exists = located.is_file()
+    except (OSError, RuntimeError, ValueError) as error:
+        # No such user, a name that is too long, a zero byte.
+        faults.append(Fault(where, f"{str(file)[:80]!r} is not a path ({error})"))
+        return file
+    if not exists:
         faults.append(
             Fault(
                 where, f"{located} does not exist", "relative paths count from the recipe's folder"

@@ -74,7 +74,7 @@ def _key_of(registry: Registry[Any]) -> Any:
 
 
 def _tracer(typed: Any) -> str:
-    if typed not in TRACERS:
+    if not isinstance(typed, str) or typed not in TRACERS:
         raise ValueError(f'tracer "{typed}" is not known; {nearest(str(typed), TRACERS)}')
     return str(typed)
 
@@ -203,7 +203,7 @@ def noise_value(typed: str) -> tuple[float, str]:
         value = float(number)
     except ValueError:
         value = math.nan
-    if not value > 0 or not unit.strip():
+    if not 0 < value < math.inf or not unit.strip():
         raise ValueError(f"{typed!r} is not a noise; {_NOISE_EXAMPLE}")
     return value, unit.strip()
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any, Final
 
 import astropy.units as u
@@ -28,12 +28,12 @@ class Measured:
     value, error : float
         Error zero where none was typed.
     text : str
-        As typed.
+        As typed; two ways to type one value are equal.
     """
 
     value: float
     error: float
-    text: str
+    text: str = field(compare=False)
 
     def __str__(self) -> str:
         return self.text
@@ -62,7 +62,7 @@ def parse_measured(typed: Any, unit: str, example: str) -> Measured:
     if match is None:
         raise ValueError(f"{typed!r} cannot be read; expected, for example, {example}")
     value, error = float(match["value"]), float(match["error"] or 0.0)
-    if not math.isfinite(value) or error < 0:
+    if not math.isfinite(value) or not math.isfinite(error) or error < 0:
         raise ValueError(f"{typed!r} is not finite or has a negative error")
     given = match["unit"]
     if bool(given) != bool(unit):
@@ -88,9 +88,10 @@ def parse_percent(typed: Any) -> Measured:
         If there is no percent sign or the number is negative.
     """
     match = _PERCENT.match(typed) if isinstance(typed, str) else None
-    if match is None or float(match["value"]) < 0:
+    value = float(match["value"]) / 100.0 if match else math.nan
+    if not 0 <= value < math.inf:
         raise ValueError(f'{typed!r} is not a percentage; expected, for example, "5 %"')
-    return Measured(float(match["value"]) / 100.0, 0.0, typed)
+    return Measured(value, 0.0, typed)
 
 
 @dataclass(frozen=True)

@@ -102,4 +102,7 @@ def _value(value: Any) -> str:
         if major == minor:
             return _value(f"{major!r} arcsec")
         return _value(f"{major!r} x {minor!r} arcsec, pa {pa!r} deg")
+    if isinstance(value, tuple) and len(value) == 2 and isinstance(value[0], float):
+        east, north = value
+        return _value(f"{east!r} {north!r} arcsec")
     return "[" + ", ".join(_value(entry) for entry in value) + "]"

@@ -27,6 +27,7 @@ from kspipe.relations import LAWS
 from kspipe.stages.folder import ProductFolder
 from kspipe.stages.pixels import pixel_table, write_pixels
 from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
+from kspipe.stages.steps import read_findings
 from kspipe.stages.summary import make_summary, summary_text
 from kspipe.stages.surface import surfaces_of
 
@@ -109,7 +110,10 @@ def compare_relations(
         write_pixels(
             pixel_table(disc, residuals, used, independent, grid, meta), staging / "pixels.ecsv"
         )
-        summary = make_summary(plan, disc, headlines, residuals, used, independent, matched)
+        findings = read_findings(out)
+        summary = make_summary(
+            plan, disc, headlines, residuals, used, independent, matched, findings
+        )
         (staging / "summary.json").write_text(summary_text(summary), encoding="utf-8")
     return True
 
@@ -166,7 +170,7 @@ def _write_residuals(
     write_product(
         path,
         r.ratio_dex,
-        "dex",
+        "",
         grid.wcs,
         beam,
         extensions={
@@ -179,7 +183,7 @@ def _write_residuals(
         history=[
             f"{law.key} ({law.cite}, {law.where}): {law.formula}",
             f"parameters: {', '.join(f'{k} = {v:g}' for k, v in table.parameters.items())}",
-            f"primary image: log10(observed / predicted); a {law.statistic} is predicted",
+            f"primary image: log10(observed / predicted) in dex; a {law.statistic} is predicted",
             f"predicted error: random; integrated over the noise in {r.n_integrated} pixels",
         ],
     )

@@ -8,7 +8,7 @@ import shutil
 import tempfile
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields, is_dataclass
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any, Final
@@ -29,8 +29,15 @@ def file_checksum(path: Path) -> str:
 
 def fingerprint(parts: Mapping[str, Any]) -> str:
     """SHA-256 of a nested structure of plain values, independent of the order of keys."""
-    text = json.dumps(parts, sort_keys=True, default=str)
+    text = json.dumps(parts, sort_keys=True, default=_as_plain)
     return hashlib.sha256(text.encode()).hexdigest()
+
+
+def _as_plain(value: Any) -> Any:
+    """Values, not the way they were typed: ``9`` and ``"9.0"`` are one number."""
+    if is_dataclass(value) and not isinstance(value, type):
+        return {f.name: getattr(value, f.name) for f in fields(value) if f.compare}
+    return str(value)
 
 
 @dataclass

@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 from astropy.io import fits
 from numpy.typing import NDArray
+from pydantic import BaseModel
 
 from kspipe import __version__
 from kspipe.conversions import ALPHA_CO, ATOMIC, EXTINCTION, STAR_FORMATION, Choices
@@ -206,17 +207,22 @@ def records_of(recipe: Recipe) -> list[Any]:
     return [*records, *(EXTINCTION.get(key) for key in sorted(keys))]
 
 
+def _values(table: BaseModel, *left_out: str) -> dict[str, Any]:
+    """Values of a recipe's table, as they are and not as they were typed."""
+    return {key: getattr(table, key) for key in type(table).model_fields if key not in left_out}
+
+
 def convert_print(recipe: Recipe, match_prints: Mapping[str, str]) -> str:
     """Fingerprint of the surface densities."""
     return fingerprint(
         {
             "matched": {k: v for k, v in match_prints.items() if k.startswith("match.")},
-            "galaxy": recipe.galaxy.model_dump(),
-            "metallicity": recipe.metallicity.model_dump(exclude={"map"}),
+            "galaxy": _values(recipe.galaxy),
+            "metallicity": _values(recipe.metallicity, "map"),
             "metallicity map": recipe.metallicity.map and file_checksum(recipe.metallicity.map),
-            "foreground": recipe.foreground.model_dump(),
-            "gas": recipe.gas if isinstance(recipe.gas, str) else recipe.gas.model_dump(),
-            "star formation": recipe.star_formation.model_dump(),
+            "foreground": _values(recipe.foreground),
+            "gas": recipe.gas if isinstance(recipe.gas, str) else _values(recipe.gas),
+            "star formation": _values(recipe.star_formation),
             "ratios": {n: [t.nii_ratio, t.as_24um] for n, t in recipe.maps.items()},
             "low_snr": recipe.comparison.low_snr,
             "records": [f"{r.key}: {r.formula}" for r in records_of(recipe)],
@@ -229,9 +235,9 @@ def compare_print(recipe: Recipe, reduction_print: str) -> str:
     return fingerprint(
         {
             "reduction": reduction_print,
-            "relations": {n: t.model_dump() for n, t in recipe.relations.items()},
+            "relations": {n: _values(t, "defaults") for n, t in recipe.relations.items()},
             "laws": [LAWS.get(t.law).formula for t in recipe.relations.values()],
-            "comparison": recipe.comparison.model_dump(),
+            "comparison": _values(recipe.comparison),
             "seed": recipe.seed,
         }
     )

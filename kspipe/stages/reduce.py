@@ -22,6 +22,14 @@ from kspipe.recipe import Recipe
 from kspipe.recipe.resolved import resolved_recipe
 from kspipe.stages.folder import ProductFolder
 from kspipe.stages.plan import InMemory, Plan, make_plan, records_of
+from kspipe.stages.steps import (
+    STEPS_FILE,
+    judge_maps,
+    note_shift,
+    note_steps,
+    read_totals,
+    write_steps,
+)
 from kspipe.stages.surface import Disc, surfaces_of
 
 __all__ = ["PRODUCT_UNITS", "match_one", "reduce_maps"]
@@ -56,7 +64,7 @@ def reduce_maps(
     ----------
     recipe : Recipe
     out : Path
-        Product folder; ``matched/``, ``maps/`` and ``recipe.toml`` are written.
+        Product folder; ``matched/``, ``maps/``, ``steps.ecsv`` and ``recipe.toml`` are written.
     overwrite : bool
         Whether products made from something else may be replaced.
     memory : mapping of str to (HDU, HDU or None), optional
@@ -74,6 +82,7 @@ def reduce_maps(
         One of its kinds; nothing was written then.
     """
     plan = make_plan(recipe, memory)
+    totals = read_totals(plan)
     folder = ProductFolder.open(out)
     stale = folder.check(plan.prints, overwrite=overwrite)
     if not stale:
@@ -102,6 +111,7 @@ def reduce_maps(
         disc = surfaces_of(recipe, matched, plan.grid)
         (staging / "maps").mkdir()
         _write_maps(staging / "maps", plan, disc)
+        write_steps(staging / STEPS_FILE, matched, judge_maps(plan, matched, totals))
         (staging / "recipe.toml").write_text(
             resolved_recipe(recipe, _found(plan)), encoding="utf-8"
         )
@@ -116,7 +126,7 @@ def _is_gone(stage: str, plan: Plan) -> bool:
 def match_one(plan: Plan, name: str) -> SkyMap:
     """Read one map, measure its noise if asked, and bring it to the target beam and grid."""
     source, recipe = plan.sources[name], plan.recipe
-    sky = load_map(source)
+    sky = note_shift(load_map(source), source)
     stated = source.request.noise
     if stated.kind == "measure" or stated.correlated == "measure":
         outside = _outside_galaxy(sky, recipe)
@@ -132,7 +142,7 @@ def match_one(plan: Plan, name: str) -> SkyMap:
     if stated.gain is not None:
         sky = with_photon_noise(sky, source)
     log.info("match %s: %d pixels observed", name, int(np.isfinite(sky.value).sum()))
-    return match_map(
+    matched = match_map(
         sky,
         plan.target_arcsec2,
         plan.grid,
@@ -140,6 +150,7 @@ def match_one(plan: Plan, name: str) -> SkyMap:
         regrid=source.request.regrid,
         workers=os.cpu_count() or 1,
     )
+    return note_steps(sky, matched, plan)
 
 
 def _outside_galaxy(sky: SkyMap, recipe: Recipe) -> NDArray[np.bool_]:

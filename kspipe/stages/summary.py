@@ -33,6 +33,7 @@ def make_summary(
     used: NDArray[np.bool_],
     independent: NDArray[np.bool_],
     matched: dict[str, SkyMap],
+    findings: dict[str, dict[str, Any]],
 ) -> dict[str, Any]:
     """Sum up a comparison as nested plain values.
 
@@ -45,6 +46,8 @@ def make_summary(
     used, independent : (ny, nx) bool array
         Covered pixels, and the lattice of independent samples.
     matched : dict of str to SkyMap
+    findings : dict of str to dict
+        By map, what was found about it.
     """
     recipe, grid = plan.recipe, plan.grid
     beam = next(iter(matched.values())).beam_arcsec2
@@ -75,7 +78,10 @@ def make_summary(
             }
             for name, result in headlines.items()
         },
-        "maps": {name: {"history": list(sky.history)} for name, sky in matched.items()},
+        "maps": {
+            name: {"history": list(sky.history), **findings.get(name, {})}
+            for name, sky in matched.items()
+        },
         "sources": {key: str(cite(key)) for key in cited},
     }
 
@@ -83,7 +89,7 @@ def make_summary(
 def _totals(
     recipe: Recipe, disc: Disc, used: NDArray[np.bool_], grid: Grid
 ) -> dict[str, dict[str, float | str]]:
-    """Sums over the covered sky, with random and calibration errors."""
+    """Sums over the covered sky, with random errors and those that all pixels share."""
     areas = grid.areas_arcsec2()
     pc2 = recipe.galaxy.pc_per_arcsec**2 / recipe.galaxy.cos_i
     # Face-on surface densities times the area in the plane of the disc.
@@ -105,7 +111,7 @@ def _totals(
         totals[name] = {
             "value": float(np.sum((surface.value * areas)[used])) * weights[product],
             "random_error": random * pixel,
-            "calibration_error": _common_error(disc, product, used, areas) * weights[product],
+            **_common_errors(disc, product, used, areas * weights[product]),
             "unit": unit,
         }
     total = {name: float(entry["value"]) for name, entry in totals.items()}
@@ -120,18 +126,19 @@ def _over(top: float, bottom: float) -> float:
     return top / bottom if bottom > 0 else math.nan
 
 
-def _common_error(
+def _common_errors(
     disc: Disc, product: str, used: NDArray[np.bool_], areas: NDArray[np.float64]
-) -> float:
-    """Error of a sum from flux scales and zero levels, which all pixels of a map share."""
-    variance = 0.0
+) -> dict[str, float]:
+    """Errors of a sum that all pixels of a map share: flux scale and zero level, and matching."""
+    calibration, matching = 0.0, 0.0
     for tracer, slope in disc.surfaces[product].slopes.items():
         sky = disc.intensity[tracer]
         per_scale = float(np.sum((slope * sky.value * areas)[used]))
         per_level = float(np.sum((slope * areas)[used]))
-        variance += (sky.common.calibration * per_scale) ** 2
-        variance += (sky.common.pedestal * per_level) ** 2
-    return math.sqrt(variance)
+        calibration += (sky.common.calibration * per_scale) ** 2
+        calibration += (sky.common.pedestal * per_level) ** 2
+        matching += (sky.common.matching * per_scale) ** 2
+    return {"calibration_error": math.sqrt(calibration), "matching_error": math.sqrt(matching)}
 
 
 def summary_text(summary: dict[str, Any]) -> str:

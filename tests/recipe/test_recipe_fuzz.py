@@ -48,7 +48,7 @@ VALUES = st.recursive(
     max_leaves=12,
 )
 
-fuzz = settings(derandomize=True, deadline=None, max_examples=300)
+fuzz = settings(derandomize=True, deadline=None, max_examples=150)
 
 
 def check(raw: dict[str, Any], folder: Path) -> None:
@@ -128,7 +128,7 @@ def test_values_of_another_kind(good, folder, path, value) -> None:
         parse_recipe(raw, folder=folder)
 
 
-@fuzz
+@settings(fuzz, max_examples=40)
 @given(key=st.text(min_size=1, max_size=10))
 @example(key="")
 @example(key="a.b")

@@ -1,0 +1,238 @@
+"""What brings a map's beam to the target: a Gaussian, or a kernel made for its PSF image."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from functools import cached_property
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kspipe.core.errors import BeamError, Fault
+from kspipe.kernels.correlation import SampledCorrelation
+from kspipe.kernels.fourier import (
+    correlated_noise_gain,
+    gaussian_reach,
+    gaussian_smooth,
+    white_noise_gain,
+)
+from kspipe.kernels.geometry import (
+    beam_axes,
+    pixel_covariance,
+    subtract_covariance,
+    transform_covariance,
+)
+from kspipe.kernels.sampled import kernel_noise, kernel_smooth
+from kspipe.maps.header import pixel_jacobian
+from kspipe.maps.skymap import NoiseTerm, SkyMap
+from kspipe.matching.psf import MatchingKernel, matching_kernel
+
+__all__ = ["GaussianSmoothing", "PsfSmoothing", "Smoothing", "choose_smoothing"]
+
+Array = NDArray[np.float64]
+
+
+class Smoothing(Protocol):
+    """How a map, its coverage and its noise are smoothed on the map's pixels."""
+
+    @property
+    def jacobian(self) -> Array:
+        """Sky offset (east, north) [arcsec] per step of the map's pixels."""
+
+    @property
+    def reach(self) -> int:
+        """Pixels to which a point is spread."""
+
+    @property
+    def story(self) -> str:
+        """One line for the history."""
+
+    @property
+    def facts(self) -> dict[str, object]:
+        """Numbers worth showing."""
+
+    def smooth(self, array: Array, *, workers: int = 1, as_spline: bool = False) -> Array:
+        """Smooth values, or coverage; zero beyond the edges."""
+
+    def spread(self, variance: Array, *, workers: int = 1) -> Array:
+        """Average variances with the square of the kernel."""
+
+    def noise_gain(self, term: NoiseTerm) -> float:
+        """Share of a noise term's variance that is left, before coverage."""
+
+    def after(self, term: NoiseTerm) -> NoiseTerm:
+        """The term with the correlation that it has after smoothing."""
+
+
+def choose_smoothing(sky: SkyMap, target_arcsec2: Array, x: float, y: float) -> Smoothing:
+    """Work out what brings a map to the target, at one of its pixels.
+
+    Raises
+    ------
+    BeamError
+        If the target is sharper than the map.
+    """
+    where = f"maps.{sky.name}"
+    jacobian = pixel_jacobian(sky.wcs, x, y)
+    if sky.psf is not None:
+        kernel = matching_kernel(
+            sky.psf, target_arcsec2, jacobian, averages_pixels=sky.averages_pixels
+        )
+        if kernel.why_not:
+            what = f"the target beam is sharper than the map's {sky.psf.origin}: {kernel.why_not}"
+            raise BeamError(Fault(where, what))
+        return PsfSmoothing(kernel, jacobian, sky.psf.origin)
+    beam = sky.beam_arcsec2 + (pixel_covariance(jacobian) if sky.averages_pixels else 0.0)
+    difference = subtract_covariance(target_arcsec2, beam)
+    if difference is None:
+        raise BeamError(Fault(where, "the map's beam is wider than the target beam"))
+    return GaussianSmoothing(difference, jacobian, has_pixel=sky.averages_pixels)
+
+
+@dataclass(frozen=True)
+class GaussianSmoothing:
+    """A Gaussian kernel, by its exact transfer function.
+
+    Attributes
+    ----------
+    arcsec2 : (2, 2) float64 array
+        Its covariance on (east, north).
+    jacobian : (2, 2) float64 array
+    has_pixel : bool
+        Whether the map's detector pixel was counted in its beam.
+    """
+
+    arcsec2: Array
+    jacobian: Array
+    has_pixel: bool = False
+
+    @cached_property
+    def pix2(self) -> Array:
+        """Its covariance on the map's pixels."""
+        return transform_covariance(self.arcsec2, self.jacobian)
+
+    @property
+    def reach(self) -> int:
+        """Pixels to which a point is spread."""
+        return gaussian_reach(self.pix2)
+
+    @property
+    def story(self) -> str:
+        """One line for the history."""
+        major, minor, pa = beam_axes(self.arcsec2)
+        counted = ", detector pixel counted in the beam" if self.has_pixel else ""
+        axes = f"{major:.4f} x {minor:.4f} arcsec FWHM, pa {pa:.2f} deg"
+        return f"smoothed with a Gaussian of {axes}{counted}"
+
+    @property
+    def facts(self) -> dict[str, object]:
+        """Nothing: a Gaussian costs nothing."""
+        return {}
+
+    def smooth(self, array: Array, *, workers: int = 1, as_spline: bool = False) -> Array:
+        """Smooth values, or coverage; zero beyond the edges."""
+        smooth = gaussian_smooth(array, self.pix2, margin=0, workers=workers, as_spline=as_spline)
+        return smooth.array
+
+    def spread(self, variance: Array, *, workers: int = 1) -> Array:
+        """Average variances with the square of the kernel: a Gaussian of half the covariance."""
+        return gaussian_smooth(variance, self.pix2 / 2.0, margin=0, workers=workers).array
+
+    def noise_gain(self, term: NoiseTerm) -> float:
+        """Share of a noise term's variance that is left, before coverage.
+
+        A Gaussian kernel of covariance K applied to noise exp(-d^T C^-1 d / 4) of slowly varying
+        sigma gives the variance sqrt(det C / det(C + K)) times sigma^2 averaged with a Gaussian of
+        covariance K/2: the square of the kernel. White noise has its own gain, the sum of the
+        squared kernel.
+        """
+        if not np.any(self.arcsec2):
+            return 1.0
+        if term.sampled is not None:
+            return term.sampled.smoothed(self.pix2)[0]
+        if np.any(term.correlation_arcsec2):
+            return correlated_noise_gain(term.correlation_arcsec2, self.arcsec2)
+        return white_noise_gain(self.pix2)
+
+    def after(self, term: NoiseTerm) -> NoiseTerm:
+        """The term with the correlation that it has after smoothing."""
+        sampled = term.sampled.smoothed(self.pix2)[1] if term.sampled is not None else None
+        return replace(
+            term, correlation_arcsec2=term.correlation_arcsec2 + self.arcsec2, sampled=sampled
+        )
+
+
+@dataclass(frozen=True)
+class PsfSmoothing:
+    """A kernel made for the map's PSF image, sampled on the map's pixels.
+
+    Attributes
+    ----------
+    kernel : MatchingKernel
+    jacobian : (2, 2) float64 array
+    origin : str
+        The PSF image.
+    """
+
+    kernel: MatchingKernel
+    jacobian: Array
+    origin: str
+
+    @property
+    def reach(self) -> int:
+        """Pixels to which a point is spread."""
+        return len(self.kernel.values) // 2
+
+    @property
+    def story(self) -> str:
+        """One line for the history."""
+        return f"smoothed with a kernel from {self.origin} to the Gaussian: {self.kernel}"
+
+    @property
+    def facts(self) -> dict[str, object]:
+        """What the kernel costs."""
+        return {
+            "psf_residual": self.kernel.residual,
+            "psf_negative_weight": self.kernel.negative_weight,
+            "psf_noise_gain": self.kernel.noise_gain,
+        }
+
+    def smooth(self, array: Array, *, workers: int = 1, as_spline: bool = False) -> Array:
+        """Smooth values, or coverage; zero beyond the edges."""
+        return kernel_smooth(array, self.kernel.values, workers=workers, as_spline=as_spline).array
+
+    def spread(self, variance: Array, *, workers: int = 1) -> Array:
+        """Average variances with the square of the kernel."""
+        squared = self.kernel.values**2
+        return kernel_smooth(variance, squared / float(np.sum(squared)), workers=workers).array
+
+    def noise_gain(self, term: NoiseTerm) -> float:
+        """Share of a noise term's variance that is left, before coverage."""
+        return kernel_noise(self.kernel.values, self._correlation(term))[0]
+
+    def after(self, term: NoiseTerm) -> NoiseTerm:
+        """The term with the correlation that it has after smoothing, lag by lag.
+
+        The Gaussian that goes with it has the noise gain of the kernel on independent pixels.
+        """
+        correlation = kernel_noise(self.kernel.values, self._correlation(term))[1]
+        like_pix2 = np.eye(2) / (4.0 * np.pi * self.kernel.noise_gain**2)
+        like_arcsec2 = self.jacobian @ like_pix2 @ self.jacobian.T
+        return replace(
+            term,
+            correlation_arcsec2=term.correlation_arcsec2 + like_arcsec2,
+            sampled=SampledCorrelation(correlation, self.jacobian),
+        )
+
+    def _correlation(self, term: NoiseTerm) -> Array:
+        """Correlation of a term at whole lags of the map's pixels."""
+        if term.sampled is not None:
+            reach = term.sampled.values.shape[0] // 2
+        else:
+            in_pixels = transform_covariance(term.correlation_arcsec2, self.jacobian)
+            reach = gaussian_reach(2.0 * in_pixels)
+        lag = np.arange(-reach, reach + 1.0)
+        dx, dy = np.meshgrid(lag, lag)
+        (ex, ey), (nx, ny) = self.jacobian
+        return term.correlation_at(ex * dx + ey * dy, nx * dx + ny * dy)
