@@ -16,7 +16,13 @@ from scipy import ndimage
 
 from kspipe.kernels.fourier import gaussian_reach, gaussian_smooth
 
-__all__ = ["SampledCorrelation", "gaussian_correlation", "measure_correlation"]
+__all__ = [
+    "SampledCorrelation",
+    "gaussian_correlation",
+    "interpolated_correlation",
+    "measure_correlation",
+    "pixel_correlation",
+]
 
 Array = NDArray[np.float64]
 
@@ -70,6 +76,63 @@ def gaussian_correlation(
     (a, b), (_, d) = np.linalg.inv(covariance_arcsec2)
     square = a * east_arcsec**2 + 2 * b * east_arcsec * north_arcsec + d * north_arcsec**2
     return np.asarray(np.exp(-0.25 * square))
+
+
+def pixel_correlation(covariance_pix2: Array, reach_pix: int) -> Array:
+    """Correlation at whole lags of white noise on pixels, smoothed with a narrow Gaussian.
+
+    It is the inverse transform of the squared transfer function over the frequencies that pixels
+    hold; the Gaussian of `gaussian_correlation` is its limit for kernels wider than a pixel.
+
+    Returns
+    -------
+    (2 reach + 1, 2 reach + 1) float64 array
+    """
+    n = 64
+    ky, kx = np.meshgrid(np.fft.fftfreq(n), np.fft.fftfreq(n), indexing="ij")
+    (a, b), (_, d) = covariance_pix2
+    power = np.exp(-4.0 * math.pi**2 * (a * kx**2 + 2.0 * b * kx * ky + d * ky**2))
+    correlation = np.fft.ifft2(power).real
+    lags = np.arange(-reach_pix, reach_pix + 1) % n
+    return np.asarray(correlation[np.ix_(lags, lags)] / correlation[0, 0])
+
+
+def interpolated_correlation(covariance_pix2: Array, *, fine: int) -> tuple[Array, int]:
+    """Correlation of narrow noise between interpolated positions, averaged over where they fall.
+
+    Interpolation passes each frequency by its own response and lets images through: a cubic
+    spline by (sinc^4 / samples)^2, the finer sampling of `gaussian_smooth` nearly like a
+    rectangle.
+
+    Parameters
+    ----------
+    covariance_pix2 : (2, 2) float64 array
+        Covariance of the Gaussian that white noise on pixels was smoothed with.
+    fine : int
+        Samples per pixel before the spline.
+
+    Returns
+    -------
+    values : (n, n) float64 array
+        1 at the centre.
+    per_pixel : int
+        Lags per pixel.
+    """
+    window, per_pixel = 32, 4
+    n = window * per_pixel
+    k = np.fft.fftfreq(n) * per_pixel
+    ky, kx = np.meshgrid(k, k, indexing="ij")
+    # What the pixels hold repeats at every whole frequency.
+    by, bx = (f - np.round(f) for f in (ky, kx))
+    (a, b), (_, d) = covariance_pix2
+    power = np.exp(-4.0 * math.pi**2 * (a * bx**2 + 2.0 * b * bx * by + d * by**2))
+    if fine > 1:
+        response = (np.abs(k) < 0.5).astype(float)
+    else:
+        response = (np.sinc(k) ** 4 * 3.0 / (2.0 + np.cos(2.0 * math.pi * k))) ** 2
+    correlation = np.fft.fftshift(np.fft.ifft2(power * response * response[:, None]).real)
+    odd = correlation[1:, 1:]
+    return np.asarray(odd / odd[n // 2 - 1, n // 2 - 1]), per_pixel
 
 
 def measure_correlation(values: Array, used: NDArray[np.bool_], reach_pix: int) -> Array:

@@ -190,15 +190,17 @@ def displacement_covariance(pair: ImagePair, peak: Peak) -> Array:
     which are themselves noisy: their noise times noise is thereby counted twice, and taken off
     once.
     """
-    view = _View.at(pair, peak)
-    if view is None:
+    lag = (round(peak.x), round(peak.y))
+    middle = _Aligned.at(pair, lag)
+    responses = _responses(pair, lag)
+    if middle is None or responses is None:
         return np.full((2, 2), np.nan)
     gradient = np.zeros((2, 2))
-    for response, terms in zip(view.responses(pair), _noise_of(pair), strict=True):
+    for response, terms in zip(responses, (pair.first_noise, pair.second_noise), strict=True):
         for term in terms:
             x, y = (part * np.where(part != 0, term.sigma, 0.0) for part in response)
             gradient += _sum_of_pairs((x, y), term, pair.jacobian_arcsec)
-    gradient -= view.noise_times_noise(pair)
+    gradient -= _noise_times_noise(pair, lag, middle)
     inverse = np.linalg.inv(peak.hessian)
     covariance = np.asarray(inverse @ gradient @ inverse.T)
     is_proper = float(np.min(np.linalg.eigvalsh(covariance))) > 0
@@ -206,76 +208,66 @@ def displacement_covariance(pair: ImagePair, peak: Peak) -> Array:
 
 
 @dataclass(frozen=True)
-class _View:
-    """Both images at the whole lag nearest to the peak, over the pixels seen at all near lags.
+class _Aligned:
+    """Two images at one lag, standardised over their common pixels; zero elsewhere.
 
-    With standardised images A and B the coefficient is the weighted mean of A B.
+    The correlation coefficient is the weighted mean of a b.
     """
 
-    lag: Lag
-    used: Bools
     weight: Array
     a: Array
+    b: Array
     sigma_a: float
     sigma_b: float
 
+    @property
+    def rho(self) -> float:
+        """Correlation coefficient at this lag."""
+        return float(np.sum(self.weight * self.a * self.b))
+
     @classmethod
-    def at(cls, pair: ImagePair, peak: Peak) -> _View | None:
-        """Look at a pair; None where nothing is common or the spread is all noise."""
-        lag = (round(peak.x), round(peak.y))
-        near = [lag, *(_beside(lag, axis, step) for axis in (0, 1) for step, _ in STENCIL)]
-        used = pair.used
-        for one in near:
-            used = used & np.isfinite(_moved(pair.second, one, np.nan))
-        if not used.any():
+    def at(cls, pair: ImagePair, lag: Lag) -> _Aligned | None:
+        """Align a pair; None where nothing is common or the scatter of either is all noise."""
+        second = _moved(pair.second, lag, np.nan)
+        weight = np.where(pair.used & np.isfinite(second), pair.weight, 0.0)
+        if not weight.any():
             return None
-        weight = np.where(used, pair.weight, 0.0) / float(np.sum(pair.weight[used]))
+        weight = weight / float(np.sum(weight))
+        noise = _moved(total_error(pair.second_noise), lag, np.nan)
         a = _standardised(pair.first, total_error(pair.first_noise), weight)
-        b = _second_at(pair, lag, weight)
-        if a is None or b is None:
-            return None
-        return cls(lag, used, weight, *a, b[1])
-
-    def responses(self, pair: ImagePair) -> tuple[Array, Array]:
-        """Derivatives of the gradient with respect to each pixel of either image, (2, ny, nx).
-
-        The coefficient answers to a pixel of the first image by w (B - rho A) / sigma_A, and to
-        one of the second likewise; both are differentiated along the lag.
-        """
-        to_first, to_second = np.zeros((2, *self.a.shape)), np.zeros((2, *self.a.shape))
-        for axis in (0, 1):
-            for step, factor in STENCIL:
-                lag = _beside(self.lag, axis, step)
-                moved = _second_at(pair, lag, self.weight)
-                if moved is None:
-                    continue
-                b, sigma_b = moved
-                rho = float(np.sum(self.weight * self.a * b))
-                to_first[axis] += factor * self.weight * (b - rho * self.a) / self.sigma_a
-                there = self.weight * (self.a - rho * b) / sigma_b
-                to_second[axis] += factor * _moved(there, (-lag[0], -lag[1]), 0.0)
-        return to_first, to_second
-
-    def noise_times_noise(self, pair: ImagePair) -> Array:
-        """Covariance of the gradient of the weighted mean of one noise times the other."""
-        total = np.zeros((2, 2))
-        scale = self.weight / (self.sigma_a * self.sigma_b)
-        for one in pair.first_noise:
-            for other in pair.second_noise:
-                there = _moved(other.sigma, self.lag, 0.0)
-                part = np.where(self.used, scale * one.sigma * there, 0.0)
-                total += _sum_of_pairs((part, part), one, pair.jacobian_arcsec, slopes_of=other)
-        return total
+        b = _standardised(second, noise, weight)
+        return None if a is None or b is None else cls(weight, a[0], b[0], a[1], b[1])
 
 
-def _noise_of(pair: ImagePair) -> tuple[tuple[NoiseTerm, ...], tuple[NoiseTerm, ...]]:
-    return pair.first_noise, pair.second_noise
+def _responses(pair: ImagePair, lag: Lag) -> tuple[Array, Array] | None:
+    """Derivatives of the gradient with respect to each pixel of either image, (2, ny, nx) each.
+
+    The coefficient answers to a pixel of the first image by w (b - rho a) / sigma_a, and to one of
+    the second likewise; both are differentiated along the lag.
+    """
+    to_first, to_second = np.zeros((2, *pair.first.shape)), np.zeros((2, *pair.first.shape))
+    for axis in (0, 1):
+        for step, factor in STENCIL:
+            beside = _beside(lag, axis, step)
+            here = _Aligned.at(pair, beside)
+            if here is None:
+                return None
+            to_first[axis] += factor * here.weight * (here.b - here.rho * here.a) / here.sigma_a
+            there = here.weight * (here.a - here.rho * here.b) / here.sigma_b
+            to_second[axis] += factor * _moved(there, (-beside[0], -beside[1]), 0.0)
+    return to_first, to_second
 
 
-def _second_at(pair: ImagePair, lag: Lag, weight: Array) -> tuple[Array, float] | None:
-    """The second image read at a lag, standardised."""
-    noise = _moved(total_error(pair.second_noise), lag, np.nan)
-    return _standardised(_moved(pair.second, lag, np.nan), noise, weight)
+def _noise_times_noise(pair: ImagePair, lag: Lag, here: _Aligned) -> Array:
+    """Covariance of the gradient of the weighted mean of one noise times the other."""
+    total = np.zeros((2, 2))
+    scale = here.weight / (here.sigma_a * here.sigma_b)
+    for one in pair.first_noise:
+        for other in pair.second_noise:
+            sigmas = one.sigma * _moved(other.sigma, lag, 0.0)
+            part = np.where(here.weight > 0, scale * sigmas, 0.0)
+            total += _sum_of_pairs((part, part), one, pair.jacobian_arcsec, slopes_of=other)
+    return total
 
 
 def _standardised(array: Array, noise: Array, weight: Array) -> tuple[Array, float] | None:

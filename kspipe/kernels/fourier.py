@@ -47,27 +47,29 @@ class Padded:
 
 
 @lru_cache(maxsize=4)
-def _transfer(shape: tuple[int, int], cxx: float, cxy: float, cyy: float, as_spline: bool) -> Array:
+def _transfer(shape: tuple[int, int], cxx: float, cxy: float, cyy: float, spline: int) -> Array:
     """Fourier transform of a unit Gaussian on the half plane of a real FFT.
 
-    The tiles of one map share it, and it costs as much as the transform itself.
+    The tiles of one map share it, and it costs as much as the transform itself. With `spline` it
+    gives coefficients of the spline through that many samples per pixel.
     """
     ky = np.fft.fftfreq(shape[0])[:, None]
     kx = np.fft.rfftfreq(shape[1])[None, :]
     exponent = cxx * kx**2 + 2.0 * cxy * kx * ky + cyy * ky**2
     transfer = np.exp(-2.0 * math.pi**2 * exponent)
-    if as_spline:
-        transfer /= spline_samples(shape)
+    if spline:
+        transfer /= spline_samples(shape, spline)
     return np.asarray(transfer)
 
 
-def spline_samples(shape: tuple[int, int]) -> Array:
+def spline_samples(shape: tuple[int, int], fine: int = 1) -> Array:
     """Fourier transform of the samples of a cubic B-spline, 1/6, 4/6, 1/6, on the half plane.
 
-    Dividing by it turns values into coefficients of the spline through them.
+    Dividing by it turns values into coefficients of the spline through them, or through `fine`
+    samples per pixel.
     """
-    ky = np.fft.fftfreq(shape[0])[:, None]
-    kx = np.fft.rfftfreq(shape[1])[None, :]
+    ky = np.fft.fftfreq(shape[0])[:, None] / fine
+    kx = np.fft.rfftfreq(shape[1])[None, :] / fine
     along_y = (2.0 + np.cos(2 * math.pi * ky)) / 3.0
     return np.asarray(along_y * (2.0 + np.cos(2 * math.pi * kx)) / 3.0)
 
@@ -85,6 +87,7 @@ def gaussian_smooth(
     margin: int | None = None,
     workers: int = 1,
     as_spline: bool = False,
+    fine: int = 1,
 ) -> Padded:
     """Convolve with a Gaussian whose transfer function is exact; zero beyond the edges.
 
@@ -101,6 +104,9 @@ def gaussian_smooth(
     as_spline : bool
         Return the coefficients of the cubic B-spline through the smoothed values instead of the
         values: the spline's prefilter is one more division in Fourier space.
+    fine : int
+        Samples of the result per pixel, by zeros at high frequencies: exact for what the pixels
+        hold. For maps whose final beam spans few pixels.
 
     Returns
     -------
@@ -113,14 +119,14 @@ def gaussian_smooth(
     """
     reach = gaussian_reach(covariance_pix2)
     margin = max(reach, 2) if margin is None else margin
-    if not np.any(covariance_pix2) and not as_spline:
+    if not np.any(covariance_pix2) and not as_spline and fine == 1:
         return Padded(np.pad(array, margin), margin)
     (cxx, cxy), (_, cyy) = np.asarray(covariance_pix2).tolist()
 
     def transfer(shape: tuple[int, int]) -> Transfer:
-        return _transfer(shape, cxx, cxy, cyy, as_spline)
+        return _transfer(shape, cxx, cxy, cyy, fine if as_spline else 0)
 
-    return filtered(array, transfer, reach=reach, margin=margin, workers=workers)
+    return filtered(array, transfer, reach=reach, margin=margin, workers=workers, fine=fine)
 
 
 def filtered(
@@ -130,6 +136,7 @@ def filtered(
     reach: int,
     margin: int,
     workers: int = 1,
+    fine: int = 1,
 ) -> Padded:
     """Multiply an array by a transfer function in Fourier space; zero beyond the edges.
 
@@ -145,6 +152,8 @@ def filtered(
         Pixels of the output kept around the input.
     workers : int
         Threads of the FFT.
+    fine : int
+        Samples of the result per pixel; the margin then counts in samples, too.
 
     Returns
     -------
@@ -159,10 +168,30 @@ def filtered(
     )
     spectrum = scipy.fft.rfft2(array, s=shape, workers=workers)
     spectrum *= transfer(shape)
+    if fine > 1:
+        spectrum = _widened(spectrum, shape, fine)
+        shape = (shape[0] * fine, shape[1] * fine)
+        ny, nx, margin = ny * fine, nx * fine, margin * fine
     smooth = scipy.fft.irfft2(spectrum, s=shape, workers=workers, overwrite_x=True)
     rows = np.arange(-margin, ny + margin) % shape[0]
     columns = np.arange(-margin, nx + margin) % shape[1]
     return Padded(np.ascontiguousarray(smooth[np.ix_(rows, columns)]), margin)
+
+
+def _widened(spectrum: Transfer, shape: tuple[int, int], fine: int) -> Transfer:
+    """Put zeros at frequencies that the pixels do not hold; Nyquist is shared by both signs."""
+    ny, nx = shape
+    wide = np.zeros((ny * fine, nx * fine // 2 + 1), dtype=complex)
+    half = ny // 2
+    columns = spectrum.shape[1]
+    wide[: half + 1, :columns] = spectrum[: half + 1]
+    wide[ny * fine - (ny - half - 1) :, :columns] = spectrum[half + 1 :]
+    if ny % 2 == 0:
+        wide[ny * fine - half, :columns] = 0.5 * wide[half, :columns]
+        wide[half, :columns] *= 0.5
+    if nx % 2 == 0:
+        wide[:, columns - 1] *= 0.5
+    return np.asarray(wide * fine**2)
 
 
 def white_noise_gain(covariance_pix2: Array) -> float:

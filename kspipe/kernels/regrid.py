@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-import math
 from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage
+
+from kspipe.kernels.correlation import pixel_correlation
 
 __all__ = ["interpolation_noise_gain", "sample_cubic", "sample_linear"]
 
@@ -87,7 +88,7 @@ def interpolation_noise_gain(x: Array, y: Array, correlation_pix2: Array) -> Arr
     if float(np.min(np.linalg.eigvalsh(correlation_pix2))) > 1.0:
         return np.ones(np.shape(x))
     weights = _spline_weights()
-    correlation = _pixel_correlation(correlation_pix2)
+    correlation = pixel_correlation(correlation_pix2, 2 * _REACH)
     # w^T R w with separable weights is the sum of R over lags times both autocorrelations.
     auto = np.array([np.correlate(w, w, mode="full") for w in weights])
     table = np.einsum("py,qx,yx->pq", auto, auto, correlation)
@@ -95,14 +96,3 @@ def interpolation_noise_gain(x: Array, y: Array, correlation_pix2: Array) -> Arr
     phases = [np.atleast_1d(np.asarray(p) % 1.0) * steps for p in (y, x)]
     gain = ndimage.map_coordinates(table, phases, order=1)
     return np.asarray(gain, dtype=float).reshape(np.shape(x))
-
-
-def _pixel_correlation(correlation_pix2: Array) -> Array:
-    """Correlation between pixels at whole lags up to twice the reach of the weights."""
-    n = 64
-    ky, kx = np.meshgrid(np.fft.fftfreq(n), np.fft.fftfreq(n), indexing="ij")
-    (a, b), (_, d) = correlation_pix2
-    power = np.exp(-4.0 * math.pi**2 * (a * kx**2 + 2.0 * b * kx * ky + d * ky**2))
-    correlation = np.fft.ifft2(power).real
-    lags = np.arange(-2 * _REACH, 2 * _REACH + 1) % n
-    return np.asarray(correlation[np.ix_(lags, lags)] / correlation[0, 0])

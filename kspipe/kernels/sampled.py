@@ -19,7 +19,13 @@ NEGLIGIBLE: Final = 1e-3
 
 
 def kernel_smooth(
-    array: Array, kernel: Array, *, margin: int = 0, workers: int = 1, as_spline: bool = False
+    array: Array,
+    kernel: Array,
+    *,
+    margin: int = 0,
+    workers: int = 1,
+    as_spline: bool = False,
+    fine: int = 1,
 ) -> Padded:
     """Convolve with an image; zero beyond the edges.
 
@@ -35,6 +41,8 @@ def kernel_smooth(
         Threads of the FFT; the result does not depend on them.
     as_spline : bool
         Return the coefficients of the cubic B-spline through the smoothed values instead.
+    fine : int
+        Samples of the result per pixel.
 
     Returns
     -------
@@ -47,9 +55,9 @@ def kernel_smooth(
         whole[: kernel.shape[0], : kernel.shape[1]] = kernel
         centred = np.roll(whole, (-reach, -reach), axis=(0, 1))
         spectrum = scipy.fft.rfft2(centred, workers=workers)
-        return np.asarray(spectrum / spline_samples(shape) if as_spline else spectrum)
+        return np.asarray(spectrum / spline_samples(shape, fine) if as_spline else spectrum)
 
-    return filtered(array, transfer, reach=reach, margin=margin, workers=workers)
+    return filtered(array, transfer, reach=reach, margin=margin, workers=workers, fine=fine)
 
 
 def kernel_noise(kernel: Array, correlation: Array) -> tuple[float, Array]:

@@ -41,17 +41,16 @@ def area_weighted(
     observed = np.isfinite(sky.value)
 
     def onto_grid(array: Array) -> Array:
-        smooth = smoothing.smooth(array)
-        mean, share = reproject_exact((smooth, sky.wcs), grid.wcs, shape_out=grid.shape)
+        mean, share = reproject_exact((array, sky.wcs), grid.wcs, shape_out=grid.shape)
         # Where the map ends its share of the pixel is its weight.
         return np.asarray(np.nan_to_num(mean) * np.nan_to_num(share))
 
     map_pixel_arcsec2 = abs(float(np.linalg.det(smoothing.jacobian)))
     mean_of = min(1.0, map_pixel_arcsec2 / grid.pixel_arcsec**2)
     variances = tuple(
-        onto_grid(np.where(observed, term.sigma**2, 0.0)) * smoothing.noise_gain(term) * mean_of
+        onto_grid(smoothing.variance(term, np.where(observed, term.sigma, 0.0))) * mean_of
         for term in sky.noise
     )
-    weight = onto_grid(observed.astype(float))
-    value = onto_grid(np.where(observed, sky.value, 0.0))
+    weight = onto_grid(smoothing.smooth(observed.astype(float)))
+    value = onto_grid(smoothing.smooth(np.where(observed, sky.value, 0.0)))
     return value, weight, variances

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import partial
 from typing import Final, Literal
 
 import numpy as np
@@ -24,9 +25,13 @@ Array = NDArray[np.float64]
 Regrid = Literal["spline", "area"]
 
 # Fewer pixels per FWHM of the final beam cannot be interpolated faithfully.
-LEAST_PIXELS_PER_BEAM: Final = 2.0
+LEAST_PIXELS_PER_BEAM: Final = 2.5
+# From here on a cubic spline through the pixels is good to a part in a thousand.
+WELL_SAMPLED: Final = 4.0
 # The cubic B-spline's prefilter forgets a pixel by 0.27 for each pixel of distance.
 SPLINE_MARGIN: Final = 14
+# A kernel narrower than a pixel would ring from the edge of a tile, which therefore fades out.
+FADE: Final = 32
 # Coverage below this, though above the limit, is flagged.
 FULL_COVERAGE: Final = 0.95
 
@@ -78,10 +83,12 @@ def match_map(
     centre = (float(p) for p in grid.positions_in(sky.wcs, *map(np.asarray, grid.centre_pixel)))
     smoothing = choose_smoothing(sky, target_arcsec2, *centre)
     method = _choose_regrid(sky, smoothing, target_arcsec2, regrid)
+    # A map that its final beam spans narrowly is sampled more finely before the spline.
+    fine = 2 if _fwhm_pix(target_arcsec2, smoothing) < WELL_SAMPLED else 1
     if method == "area":
         smoothed = _smooth_and_average(sky, smoothing, grid, x, y)
     else:
-        smoothed = _smooth_and_sample(sky, smoothing, x, y, workers)
+        smoothed = _smooth_and_sample(sky, smoothing, x, y, fine, workers)
 
     coverage = np.clip(smoothed.weight, 0.0, 1.0)
     kept = coverage >= minimum_coverage
@@ -90,9 +97,9 @@ def match_map(
         value = np.where(kept, smoothed.value / smoothed.weight, np.nan)
     terms = []
     for term, variance in zip(sky.noise, smoothed.variances, strict=True):
-        after = smoothing.after(term)
+        after = smoothing.after(term, fine=fine)
         gain: Array | float = 1.0
-        if method == "spline":
+        if method == "spline" and fine == 1:
             as_smooth = transform_covariance(after.correlation_arcsec2, smoothing.jacobian)
             gain = interpolation_noise_gain(x, y, as_smooth)
         with np.errstate(invalid="ignore", divide="ignore"):
@@ -142,7 +149,7 @@ def _choose_regrid(
     sky: SkyMap, smoothing: Smoothing, target_arcsec2: Array, wanted: Regrid | None
 ) -> Regrid:
     """Interpolate what is sampled well enough, average what is not."""
-    fwhm_pix = beam_axes(transform_covariance(target_arcsec2, smoothing.jacobian))[1]
+    fwhm_pix = _fwhm_pix(target_arcsec2, smoothing)
     is_sampled = fwhm_pix >= LEAST_PIXELS_PER_BEAM
     if wanted == "spline" and not is_sampled:
         raise GridError(
@@ -154,6 +161,11 @@ def _choose_regrid(
             )
         )
     return wanted or ("spline" if is_sampled else "area")
+
+
+def _fwhm_pix(target_arcsec2: Array, smoothing: Smoothing) -> float:
+    """Narrowest width of the target beam in the map's pixels."""
+    return beam_axes(transform_covariance(target_arcsec2, smoothing.jacobian))[1]
 
 
 @dataclass(frozen=True)
@@ -182,7 +194,7 @@ def _smooth_and_average(
 
 
 def _smooth_and_sample(
-    sky: SkyMap, smoothing: Smoothing, x: Array, y: Array, workers: int
+    sky: SkyMap, smoothing: Smoothing, x: Array, y: Array, fine: int, workers: int
 ) -> _Smoothed:
     """Smooth a map tile by tile and interpolate each tile where the grid's pixels fall on it.
 
@@ -196,7 +208,7 @@ def _smooth_and_sample(
         variances=tuple(np.zeros(x.shape) for _ in sky.noise),
         on_blank=np.ones(x.shape, dtype=bool),
     )
-    margin = smoothing.reach + SPLINE_MARGIN
+    margin = smoothing.reach + SPLINE_MARGIN + (FADE if fine > 1 else 0)
     ny, nx = sky.value.shape
     # Beyond the kernel's reach from the map's edge there is nothing to sample.
     near = (x > -margin) & (x < nx - 1 + margin) & (y > -margin) & (y < ny - 1 + margin)
@@ -205,7 +217,6 @@ def _smooth_and_sample(
     wanted = tuple(
         slice(int(np.floor(p[near].min())), int(np.floor(p[near].max())) + 1) for p in (y, x)
     )
-    gains = [smoothing.noise_gain(term) for term in sky.noise]
     for tile in cut_tiles((ny, nx), margin, (wanted[0], wanted[1])):
         rows, columns = tile.core
         here = (
@@ -217,16 +228,26 @@ def _smooth_and_sample(
         value = tile.cut(sky.value)
         observed = tile.cut(np.isfinite(sky.value[tile.section]), is_section=True) > 0
         out.on_blank[here] = ~observed[np.rint(ty).astype(int), np.rint(tx).astype(int)]
-        seen = np.where(observed, value, 0.0)
-        spline = smoothing.smooth(seen, workers=workers, as_spline=True)
-        out.value[here] = sample_cubic(spline, tx, ty, is_spline=True)
+        fade: Array | float = _fade(value.shape) if fine > 1 else 1.0
+        seen = np.where(observed, value, 0.0) * fade
+        smooth = partial(smoothing.smooth, workers=workers, as_spline=True, fine=fine)
+        out.value[here] = sample_cubic(smooth(seen), tx * fine, ty * fine, is_spline=True)
         if observed.all():
             out.weight[here] = 1.0
         else:
-            spline = smoothing.smooth(observed.astype(float), workers=workers, as_spline=True)
-            out.weight[here] = sample_cubic(spline, tx, ty, is_spline=True)
-        for term, gain, variance in zip(sky.noise, gains, out.variances, strict=True):
-            squared = np.where(observed, tile.cut(term.sigma) ** 2, 0.0) * gain
-            spread = smoothing.spread(squared, workers=workers)
+            weight = smooth(np.where(observed, fade, 0.0))
+            out.weight[here] = sample_cubic(weight, tx * fine, ty * fine, is_spline=True)
+        for term, variance in zip(sky.noise, out.variances, strict=True):
+            sigma = np.where(observed, tile.cut(term.sigma), 0.0)
+            spread = smoothing.variance(term, sigma, workers=workers)
             variance[here] = np.maximum(sample_linear(spread, tx, ty), 0.0)
     return out
+
+
+def _fade(shape: tuple[int, ...]) -> Array:
+    """One inside, falling to zero over the outermost pixels; value and weight fade alike."""
+    along = []
+    for n in shape:
+        from_edge = np.minimum(np.arange(n), np.arange(n)[::-1]) + 0.5
+        along.append(0.5 - 0.5 * np.cos(np.pi * np.clip(from_edge / FADE, 0.0, 1.0)))
+    return np.asarray(along[0][:, None] * along[1][None, :])

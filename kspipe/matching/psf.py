@@ -3,7 +3,8 @@
 The kernel K that turns the PSF S into the target T is their ratio in Fourier space, kept from
 exploding where S holds nothing by a Wiener term: K = T S* / (|S|^2 + 1e-4), so that it stops
 where the PSF transmits less than 1 %. No routine that makes such a kernel says when the target
-is sharper than the source; three numbers do, and each has its limit:
+is sharper than the source. A target narrower than the core along any direction is; beyond that
+three numbers tell, and each has its limit:
 
 - the *residual*, sum |S * K - T| / sum T: what the Wiener term and the size of the image cost;
 - the *negative weight*, the sum of the kernel's negative values: to sharpen is to subtract
@@ -26,7 +27,12 @@ from numpy.typing import NDArray
 
 from kspipe.core.errors import BeamError, Fault
 from kspipe.kernels.fourier import gaussian_reach
-from kspipe.kernels.geometry import beam_axes, beam_covariance, transform_covariance
+from kspipe.kernels.geometry import (
+    beam_axes,
+    beam_covariance,
+    subtract_covariance,
+    transform_covariance,
+)
 from kspipe.maps.psf import PsfImage
 
 __all__ = ["MatchingKernel", "matching_kernel", "smallest_psf_fwhm"]
@@ -60,24 +66,29 @@ class MatchingKernel:
         Sum of the kernel's negative values, sign reversed.
     noise_gain : float
         What it leaves of the standard deviation of independent pixels.
+    holds_core : bool
+        Whether the target is as wide as the core of the PSF in all directions.
     """
 
     values: Array
     residual: float
     negative_weight: float
     noise_gain: float
+    holds_core: bool
 
     @property
     def why_not(self) -> str:
         """What forbids the kernel; empty where nothing does."""
         limits = (
-            ("its residual", self.residual, MOST_RESIDUAL),
+            ("the kernel's residual", self.residual, MOST_RESIDUAL),
             ("its negative weight", self.negative_weight, MOST_NEGATIVE),
             ("its noise gain", self.noise_gain, MOST_NOISE_GAIN),
         )
-        return ", ".join(
-            f"{name} {is_:.3g} (at most {most:g})" for name, is_, most in limits if is_ > most
-        )
+        reasons = [] if self.holds_core else ["the core is wider"]
+        reasons += [
+            f"{what} {value:.3g} (at most {most:g})" for what, value, most in limits if value > most
+        ]
+        return ", ".join(reasons)
 
     def __str__(self) -> str:
         return (
@@ -120,6 +131,7 @@ def matching_kernel(
         residual=_residual(source, kernel, target),
         negative_weight=-float(np.sum(kernel[kernel < 0])),
         noise_gain=math.sqrt(float(np.sum(kernel**2))),
+        holds_core=subtract_covariance(target_arcsec2, psf.core_arcsec2) is not None,
     )
 
 

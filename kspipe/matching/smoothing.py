@@ -4,13 +4,13 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 from functools import cached_property
-from typing import Protocol
+from typing import Final, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from kspipe.core.errors import BeamError, Fault
-from kspipe.kernels.correlation import SampledCorrelation
+from kspipe.kernels.correlation import SampledCorrelation, interpolated_correlation
 from kspipe.kernels.fourier import (
     correlated_noise_gain,
     gaussian_reach,
@@ -32,6 +32,9 @@ __all__ = ["GaussianSmoothing", "PsfSmoothing", "Smoothing", "choose_smoothing"]
 
 Array = NDArray[np.float64]
 
+# Noise whose Gaussian has less variance than this, in pixel2, feels the pixels.
+NARROW_PIX2: Final = 1.0
+
 
 class Smoothing(Protocol):
     """How a map, its coverage and its noise are smoothed on the map's pixels."""
@@ -52,17 +55,16 @@ class Smoothing(Protocol):
     def facts(self) -> dict[str, object]:
         """Numbers worth showing."""
 
-    def smooth(self, array: Array, *, workers: int = 1, as_spline: bool = False) -> Array:
+    def smooth(
+        self, array: Array, *, workers: int = 1, as_spline: bool = False, fine: int = 1
+    ) -> Array:
         """Smooth values, or coverage; zero beyond the edges."""
 
-    def spread(self, variance: Array, *, workers: int = 1) -> Array:
-        """Average variances with the square of the kernel."""
+    def variance(self, term: NoiseTerm, sigma: Array, *, workers: int = 1) -> Array:
+        """Variance of a smoothed noise term, `sigma` zero where blank, before coverage."""
 
-    def noise_gain(self, term: NoiseTerm) -> float:
-        """Share of a noise term's variance that is left, before coverage."""
-
-    def after(self, term: NoiseTerm) -> NoiseTerm:
-        """The term with the correlation that it has after smoothing."""
+    def after(self, term: NoiseTerm, *, fine: int = 1) -> NoiseTerm:
+        """The term with the correlation that it has after smoothing and interpolation."""
 
 
 def choose_smoothing(sky: SkyMap, target_arcsec2: Array, x: float, y: float) -> Smoothing:
@@ -130,37 +132,60 @@ class GaussianSmoothing:
         """Nothing: a Gaussian costs nothing."""
         return {}
 
-    def smooth(self, array: Array, *, workers: int = 1, as_spline: bool = False) -> Array:
+    def smooth(
+        self, array: Array, *, workers: int = 1, as_spline: bool = False, fine: int = 1
+    ) -> Array:
         """Smooth values, or coverage; zero beyond the edges."""
-        smooth = gaussian_smooth(array, self.pix2, margin=0, workers=workers, as_spline=as_spline)
-        return smooth.array
+        return gaussian_smooth(
+            array, self.pix2, margin=0, workers=workers, as_spline=as_spline, fine=fine
+        ).array
 
-    def spread(self, variance: Array, *, workers: int = 1) -> Array:
-        """Average variances with the square of the kernel: a Gaussian of half the covariance."""
-        return gaussian_smooth(variance, self.pix2 / 2.0, margin=0, workers=workers).array
+    def variance(self, term: NoiseTerm, sigma: Array, *, workers: int = 1) -> Array:
+        """Variance of a smoothed noise term, `sigma` zero where blank, before coverage.
 
-    def noise_gain(self, term: NoiseTerm) -> float:
-        """Share of a noise term's variance that is left, before coverage.
-
-        A Gaussian kernel of covariance K applied to noise exp(-d^T C^-1 d / 4) of slowly varying
-        sigma gives the variance sqrt(det C / det(C + K)) times sigma^2 averaged with a Gaussian of
-        covariance K/2: the square of the kernel. White noise has its own gain, the sum of the
-        squared kernel.
+        Noise of correlation C is white noise W under a Gaussian of covariance C, times sigma. A
+        kernel K over it is, for each point of W, a Gaussian of covariance
+        H = K - K (K + C)^-1 K over sigma, seen from a distance that the square of the remaining
+        Gaussian spreads by M = K (K + C)^-1 K / 2. So the variance is the noise gain times
+        G_M * (G_H * sigma)^2: exact also where sigma varies within the kernel or ends at a
+        blank. For white noise H is zero and M is K/2, the square of the kernel.
         """
         if not np.any(self.arcsec2):
-            return 1.0
+            return np.asarray(sigma**2)
+        kernel = self.pix2
+        inner = np.zeros((2, 2))
+        if np.any(term.correlation_arcsec2):
+            correlation = transform_covariance(term.correlation_arcsec2, self.jacobian)
+            inner = kernel - kernel @ np.linalg.inv(kernel + correlation) @ kernel
+            inner = 0.5 * (inner + inner.T)
+        seen = gaussian_smooth(sigma, inner, margin=0, workers=workers).array
+        spread = gaussian_smooth(seen**2, (kernel - inner) / 2.0, margin=0, workers=workers)
+        return np.asarray(spread.array * self._noise_gain(term))
+
+    def _noise_gain(self, term: NoiseTerm) -> float:
+        """Share of the variance that is left where sigma is constant and all is observed."""
         if term.sampled is not None:
             return term.sampled.smoothed(self.pix2)[0]
         if np.any(term.correlation_arcsec2):
             return correlated_noise_gain(term.correlation_arcsec2, self.arcsec2)
         return white_noise_gain(self.pix2)
 
-    def after(self, term: NoiseTerm) -> NoiseTerm:
-        """The term with the correlation that it has after smoothing."""
-        sampled = term.sampled.smoothed(self.pix2)[1] if term.sampled is not None else None
-        return replace(
-            term, correlation_arcsec2=term.correlation_arcsec2 + self.arcsec2, sampled=sampled
-        )
+    def after(self, term: NoiseTerm, *, fine: int = 1) -> NoiseTerm:
+        """The term with the correlation that it has after smoothing and interpolation.
+
+        White noise under a kernel narrower than a pixel is no Gaussian: its correlation is
+        carried lag by lag.
+        """
+        correlation = term.correlation_arcsec2 + self.arcsec2
+        in_pixels = transform_covariance(correlation, self.jacobian)
+        if term.sampled is not None:
+            sampled: SampledCorrelation | None = term.sampled.smoothed(self.pix2)[1]
+        elif float(np.min(np.linalg.eigvalsh(in_pixels))) < NARROW_PIX2:
+            values, per_pixel = interpolated_correlation(in_pixels, fine=fine)
+            sampled = SampledCorrelation(values, self.jacobian / per_pixel)
+        else:
+            sampled = None
+        return replace(term, correlation_arcsec2=correlation, sampled=sampled)
 
 
 @dataclass(frozen=True)
@@ -198,20 +223,21 @@ class PsfSmoothing:
             "psf_noise_gain": self.kernel.noise_gain,
         }
 
-    def smooth(self, array: Array, *, workers: int = 1, as_spline: bool = False) -> Array:
+    def smooth(
+        self, array: Array, *, workers: int = 1, as_spline: bool = False, fine: int = 1
+    ) -> Array:
         """Smooth values, or coverage; zero beyond the edges."""
-        return kernel_smooth(array, self.kernel.values, workers=workers, as_spline=as_spline).array
+        values = self.kernel.values
+        return kernel_smooth(array, values, workers=workers, as_spline=as_spline, fine=fine).array
 
-    def spread(self, variance: Array, *, workers: int = 1) -> Array:
-        """Average variances with the square of the kernel."""
+    def variance(self, term: NoiseTerm, sigma: Array, *, workers: int = 1) -> Array:
+        """Variance of a smoothed noise term, averaged with the square of the kernel."""
         squared = self.kernel.values**2
-        return kernel_smooth(variance, squared / float(np.sum(squared)), workers=workers).array
+        gain = kernel_noise(self.kernel.values, self._correlation(term))[0]
+        kernel = squared * (gain / float(np.sum(squared)))
+        return kernel_smooth(sigma**2, kernel, workers=workers).array
 
-    def noise_gain(self, term: NoiseTerm) -> float:
-        """Share of a noise term's variance that is left, before coverage."""
-        return kernel_noise(self.kernel.values, self._correlation(term))[0]
-
-    def after(self, term: NoiseTerm) -> NoiseTerm:
+    def after(self, term: NoiseTerm, *, fine: int = 1) -> NoiseTerm:  # noqa: ARG002 - lags suffice
         """The term with the correlation that it has after smoothing, lag by lag.
 
         The Gaussian that goes with it has the noise gain of the kernel on independent pixels.

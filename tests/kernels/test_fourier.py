@@ -12,6 +12,7 @@ from hypothesis import strategies as st
 from scipy import ndimage
 
 from kspipe.kernels.fourier import correlated_noise_gain, gaussian_smooth, white_noise_gain
+from kspipe.kernels.regrid import sample_cubic
 
 Array = np.ndarray
 fixed = settings(derandomize=True, deadline=None, max_examples=40)
@@ -235,3 +236,22 @@ def test_noise_gain_does_not_rise() -> None:
     assert np.all(np.diff(gains) < 0)
     assert gains[0] == pytest.approx(1.0, rel=1e-12)
     assert correlated_noise_gain(ROUND, np.zeros((2, 2))) == 1.0
+
+
+@pytest.mark.parametrize("shape", [(61, 61), (60, 64), (61, 64)])
+def test_finer_samples_interpolate_what_pixels_hold(shape) -> None:
+    """A Gaussian of 2.9 px FWHM between the pixels: analytic truth, odd and even shapes."""
+    rng = np.random.default_rng(1)
+    y, x = np.indices(shape)
+    sigma2, kernel = 1.21, 0.3
+    image = np.exp(-((x - 30.3) ** 2 + (y - 29.8) ** 2) / 2 / sigma2)
+    tx, ty = rng.uniform(15, 45, (2, 200))
+    wide = sigma2 + kernel
+    truth = sigma2 / wide * np.exp(-((tx - 30.3) ** 2 + (ty - 29.8) ** 2) / 2 / wide)
+    errors = {}
+    for fine in (1, 2):
+        spline = gaussian_smooth(image, kernel * np.eye(2), margin=0, as_spline=True, fine=fine)
+        sampled = sample_cubic(spline.array, tx * fine, ty * fine, is_spline=True)
+        errors[fine] = np.abs(sampled - truth).max() / truth.max()
+    assert errors[2] < 2e-3
+    assert errors[2] < 0.3 * errors[1]

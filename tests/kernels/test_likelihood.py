@@ -33,8 +33,7 @@ def brute_force(offset: float, scatter: float, y: float, predicted: float, error
     peak = (math.log10(max(y, 1e-3 * error) / predicted) - offset) / scatter
     edges = sorted({-30.0, 30.0, *np.clip([peak - 3, peak, peak + 3, -3, 0, 3], -29, 29)})
     pieces = [
-        quad(integrand, a, b, limit=500, epsabs=0, epsrel=1e-10)[0]
-        for a, b in pairwise(edges)
+        quad(integrand, a, b, limit=500, epsabs=0, epsrel=1e-10)[0] for a, b in pairwise(edges)
     ]
     return math.log(sum(pieces))
 
