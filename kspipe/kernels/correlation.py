@@ -48,8 +48,9 @@ class SampledCorrelation:
         middle = self.values.shape[0] // 2
         x = a * east_arcsec + b * north_arcsec + middle
         y = c * east_arcsec + d * north_arcsec + middle
+        y, x = np.atleast_1d(y), np.atleast_1d(x)
         sampled = ndimage.map_coordinates(self.values, [y, x], order=3, mode="constant")
-        return np.asarray(sampled, dtype=float)
+        return np.asarray(sampled, dtype=float).reshape(np.shape(east_arcsec))
 
     def smoothed(self, kernel_pix2: Array) -> tuple[float, SampledCorrelation]:
         """What Gaussian smoothing leaves of the variance, and the correlation afterwards.

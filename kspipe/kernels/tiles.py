@@ -10,7 +10,7 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["Tile", "cut_tiles"]
+__all__ = ["TILE", "Tile", "cut_tiles"]
 
 # A tile of this side, with its margin, stays in the cache of a small machine.
 TILE: Final = 1024

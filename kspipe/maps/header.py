@@ -11,7 +11,7 @@ import numpy as np
 from astropy.coordinates import SkyCoord
 from astropy.io import fits
 from astropy.wcs import WCS, FITSFixedWarning
-from astropy.wcs.utils import pixel_to_skycoord, skycoord_to_pixel
+from astropy.wcs.utils import pixel_to_skycoord, skycoord_to_pixel, wcs_to_celestial_frame
 from numpy.typing import NDArray
 
 from kspipe.core.constants import C_KM_S, DEG_ARCSEC
@@ -44,31 +44,35 @@ def celestial_wcs(header: fits.Header, where: str) -> WCS:
     GridError
         If the header has no celestial axes, no pixel size, or an absurd one.
     """
-    if not any(
-        key in header for key in ("CDELT1", "CD1_1", "PC1_1", "CD1_2", "CD2_1", "PC1_2", "CROTA2")
-    ):
+    if not _has_pixel_size(header):
         raise GridError(
             Fault(
                 where,
-                "the header has no pixel size (no CDELT, CD or PC card)",
+                "the header has no pixel size (CDELT1 and CDELT2, or a CD matrix)",
                 "add CDELT1 and CDELT2 to a copy of the file",
             )
         )
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", FITSFixedWarning)
         try:
-            wcs = WCS(header).celestial
+            whole = WCS(header)
+            wcs = whole.celestial
             has_sky = wcs.has_celestial and wcs.naxis == 2
+            if has_sky:
+                wcs_to_celestial_frame(wcs)
         except Exception as error:  # astropy raises many kinds for malformed cards
             raise GridError(Fault(where, f"the sky coordinates cannot be read: {error}")) from error
-    if not has_sky:
-        kinds = [header.get(f"CTYPE{i}", "absent") for i in (1, 2)]
+    kinds = [header.get(f"CTYPE{i}", "absent") for i in (1, 2)]
+    if not has_sky or (whole.wcs.lng, whole.wcs.lat) != (0, 1):
+        swapped = has_sky and (whole.wcs.lng, whole.wcs.lat) == (1, 0)
         raise GridError(
             Fault(
                 where,
                 f"no sky coordinates: CTYPE1 and CTYPE2 are {kinds[0]!r} and {kinds[1]!r}; "
-                "expected a pair such as 'RA---TAN' and 'DEC--TAN'",
-                "give a map with a celestial WCS",
+                "expected a pair such as 'RA---TAN' and 'DEC--TAN' on axes 1 and 2",
+                "exchange the axes of a copy of the map"
+                if swapped
+                else "give a map with a celestial WCS",
             )
         )
     scale_arcsec = math.sqrt(abs(float(np.linalg.det(wcs.pixel_scale_matrix)))) * DEG_ARCSEC
@@ -81,6 +85,12 @@ def celestial_wcs(header: fits.Header, where: str) -> WCS:
             )
         )
     return wcs
+
+
+def _has_pixel_size(header: fits.Header) -> bool:
+    """Whether the size is said for both axes; the standard's default is one degree."""
+    by_step = all(isinstance(header.get(f"CDELT{axis}"), int | float) for axis in (1, 2))
+    return by_step or any(f"CD{i}_{j}" in header for i in (1, 2) for j in (1, 2))
 
 
 def shifted_wcs(

@@ -139,6 +139,8 @@ def _stated_sigma(
             note += f" where its shape ({noise.shape_is}) is one"
         return level, f"{note}, correlated like: {noise.correlated}{read_as}"
     sigma = source.noise_image.read()
+    # An infinite error, and an infinite weight, are no measurement.
+    sigma[~np.isfinite(sigma)] = np.nan
     observed = np.isfinite(value) & np.isfinite(sigma)
     if not observed.any():
         raise MapError(

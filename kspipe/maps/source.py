@@ -217,7 +217,11 @@ class StoredImage:
         if self.memory is not None:
             return np.array(self.memory.data, dtype=float).reshape(self.shape)
         with _open(self.file) as hdus:
-            return np.array(hdus[self.index].data, dtype=float).reshape(self.shape)
+            try:
+                return np.array(hdus[self.index].data, dtype=float).reshape(self.shape)
+            except (OSError, TypeError, ValueError) as error:
+                what = f"the pixels cannot be read; is the file cut off? ({error})"
+                raise MapError(Fault(str(self), what)) from error
 
 
 def _long_axes(header: fits.Header) -> list[int]:

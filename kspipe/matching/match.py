@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 from functools import partial
 from typing import Final, Literal
@@ -12,7 +13,8 @@ from numpy.typing import NDArray
 from kspipe.core.errors import Fault, GridError
 from kspipe.kernels.geometry import beam_axes, transform_covariance
 from kspipe.kernels.regrid import interpolation_noise_gain, sample_cubic, sample_linear
-from kspipe.kernels.tiles import cut_tiles
+from kspipe.kernels.tiles import TILE, cut_tiles
+from kspipe.maps.header import pixel_jacobian
 from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching.area import area_weighted
 from kspipe.matching.flux import flux_on_grid, flux_within
@@ -28,6 +30,8 @@ Regrid = Literal["spline", "area"]
 LEAST_PIXELS_PER_BEAM: Final = 2.5
 # From here on a cubic spline through the pixels is good to a part in a thousand.
 WELL_SAMPLED: Final = 4.0
+# A pixel's size on the sky may change by this much before a map gets more than one kernel.
+STEADY_SCALE: Final = 5e-4
 # The cubic B-spline's prefilter forgets a pixel by 0.27 for each pixel of distance.
 SPLINE_MARGIN: Final = 14
 # A kernel narrower than a pixel would ring from the edge of a tile, which therefore fades out.
@@ -88,7 +92,7 @@ def match_map(
     if method == "area":
         smoothed = _smooth_and_average(sky, smoothing, grid, x, y)
     else:
-        smoothed = _smooth_and_sample(sky, smoothing, x, y, fine, workers)
+        smoothed = _smooth_and_sample(sky, smoothing, target_arcsec2, x, y, fine, workers)
 
     coverage = np.clip(smoothed.weight, 0.0, 1.0)
     kept = coverage >= minimum_coverage
@@ -163,6 +167,25 @@ def _choose_regrid(
     return wanted or ("spline" if is_sampled else "area")
 
 
+def _tile_size(sky: SkyMap, smoothing: Smoothing, wanted: tuple[slice, slice]) -> int:
+    """Side of the tiles: such that a pixel's size on the sky is one number within each."""
+    rows, columns = wanted
+    scale = float(np.linalg.norm(smoothing.jacobian))
+    change = 0.0
+    for x in (columns.start, columns.stop):
+        for y in (rows.start, rows.stop):
+            corner = pixel_jacobian(sky.wcs, x, y)
+            if not np.isfinite(corner).all():
+                return TILE
+            change = max(change, float(np.linalg.norm(np.abs(corner) - np.abs(smoothing.jacobian))))
+    if sky.psf is not None or change < STEADY_SCALE * scale:
+        return TILE
+    widest = max(rows.stop - rows.start, columns.stop - columns.start)
+    # The scale changes with the square of the distance from the tangent point.
+    parts = min(12, math.ceil(2 * math.sqrt(change / scale / STEADY_SCALE)))
+    return int(max(64, widest // parts))
+
+
 def _fwhm_pix(target_arcsec2: Array, smoothing: Smoothing) -> float:
     """Narrowest width of the target beam in the map's pixels."""
     return beam_axes(transform_covariance(target_arcsec2, smoothing.jacobian))[1]
@@ -194,13 +217,20 @@ def _smooth_and_average(
 
 
 def _smooth_and_sample(
-    sky: SkyMap, smoothing: Smoothing, x: Array, y: Array, fine: int, workers: int
+    sky: SkyMap,
+    smoothing: Smoothing,
+    target_arcsec2: Array,
+    x: Array,
+    y: Array,
+    fine: int,
+    workers: int,
 ) -> _Smoothed:
     """Smooth a map tile by tile and interpolate each tile where the grid's pixels fall on it.
 
     A tile is read with a margin of the kernel's reach and of the spline's, so that tiles give
     what the whole map would, and only what the grid needs is smoothed. Where a tile is observed
-    in full its coverage is one without any smoothing.
+    in full its coverage is one without any smoothing. Over a field of degrees pixels change
+    their size on the sky: tiles are then small, and each has a kernel of its own.
     """
     out = _Smoothed(
         value=np.zeros(x.shape),
@@ -217,8 +247,12 @@ def _smooth_and_sample(
     wanted = tuple(
         slice(int(np.floor(p[near].min())), int(np.floor(p[near].max())) + 1) for p in (y, x)
     )
-    for tile in cut_tiles((ny, nx), margin, (wanted[0], wanted[1])):
+    size = _tile_size(sky, smoothing, (wanted[0], wanted[1]))
+    for tile in cut_tiles((ny, nx), margin, (wanted[0], wanted[1]), size):
         rows, columns = tile.core
+        if size < TILE:
+            middle = ((c.start + c.stop - 1) / 2 for c in (columns, rows))
+            smoothing = choose_smoothing(sky, target_arcsec2, *middle)
         here = (
             near & (y >= rows.start) & (y < rows.stop) & (x >= columns.start) & (x < columns.stop)
         )

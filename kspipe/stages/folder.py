@@ -72,7 +72,9 @@ class ProductFolder:
             return cls(path)
         try:
             stages = json.loads(manifest.read_text(encoding="utf-8"))["stages"]
-        except (OSError, ValueError, KeyError, TypeError) as error:
+            for record in stages.values():
+                _ = record["fingerprint"], record["outputs"].items()
+        except (OSError, ValueError, KeyError, TypeError, AttributeError) as error:
             raise OutputError(
                 Fault(str(manifest), f"cannot be read ({error})", "type another --out")
             ) from None
@@ -153,7 +155,7 @@ class ProductFolder:
         OutputError
             If the folder cannot be written.
         """
-        created = not self.path.exists()
+        created = [p for p in (self.path, *self.path.parents) if not p.exists()]
         try:
             self.path.mkdir(parents=True, exist_ok=True)
             for left_over in self.path.glob(".unfinished-*"):
@@ -170,8 +172,9 @@ class ProductFolder:
             raise OutputError(Fault(str(self.path), f"cannot be written ({error})")) from error
         finally:
             shutil.rmtree(staging, ignore_errors=True)
-            if created and not any(self.path.iterdir()):
-                self.path.rmdir()
+            for folder in created:
+                if folder.is_dir() and not any(folder.iterdir()):
+                    folder.rmdir()
 
     def _move(self, staging: Path, prints: Mapping[str, str], drop: tuple[str, ...]) -> None:
         written = sorted(p.relative_to(staging) for p in staging.rglob("*") if p.is_file())

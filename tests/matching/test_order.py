@@ -27,7 +27,8 @@ def folder(tmp_path_factory) -> Path:
 
 @pytest.fixture(scope="module")
 def raw(folder) -> dict:
-    return demo_recipe(folder)
+    # Half the beams of the shipped recipe: coarse and quick.
+    return demo_recipe(folder, grid={"beam": "30 arcsec"})
 
 
 @pytest.fixture(scope="module")

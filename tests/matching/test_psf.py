@@ -7,6 +7,7 @@ import math
 import re
 import warnings
 from pathlib import Path
+from types import SimpleNamespace
 from typing import Any
 
 import numpy as np
@@ -35,10 +36,11 @@ from kspipe.kernels.geometry import beam_axes
 from kspipe.maps.product import read_matched, write_matched
 from kspipe.maps.psf import PsfImage, read_psf
 from kspipe.maps.psf_records import PSF_RECORDS
-from kspipe.maps.skymap import NoiseTerm, SkyMap
+from kspipe.maps.skymap import CommonError, NoiseTerm, SkyMap
 from kspipe.matching import Grid, choose_beam, match_map
 from kspipe.matching.psf import matching_kernel, smallest_psf_fwhm
 from kspipe.matching.target import smallest_legal_fwhm
+from kspipe.stages.summary import _common_errors
 
 fixed = settings(derandomize=True, deadline=None, max_examples=50)
 
@@ -291,14 +293,14 @@ def test_a_psf_beside_the_middle_of_its_image_moves_nothing(tmp_path) -> None:
 def test_a_finer_psf_is_averaged_over_the_detector_pixel(tmp_path, averages) -> None:
     """A PSF on pixels of 0.5 arcsec without the detector's 4: the map holds means over those."""
     side, pixel = 61, 4.0
-    wcs, beam, target = make_wcs((side, side), pixel), round_beam(7.0), round_beam(14.0)
+    wcs, beam, target = make_wcs((side, side), pixel), round_beam(8.0), round_beam(16.0)
     nodes, weights = np.polynomial.legendre.leggauss(5)
     image = np.zeros((side, side))
     east, north = offsets(wcs, (side, side))
     for i, j in np.ndindex(5, 5):
         shift = (pixel / 2 * nodes[i], pixel / 2 * nodes[j]) if averages else (0.0, 0.0)
         image += weights[i] * weights[j] / 4 * gaussian(east + shift[0], north + shift[1], beam)
-    hdu = make_hdu(image, wcs=wcs, unit="MJy/sr", beam_arcsec=7.0)
+    hdu = make_hdu(image, wcs=wcs, unit="MJy/sr", beam_arcsec=8.0)
     psf = psf_file(
         tmp_path, lambda e, n: gaussian(e, n, beam), side=101, pixel=0.5, cards={"PIXSCALE": 0.5}
     )
@@ -307,7 +309,7 @@ def test_a_finer_psf_is_averaged_over_the_detector_pixel(tmp_path, averages) -> 
     truth = gaussian(east, north, target)
     inner = np.s_[5:-5, 5:-5]
     assert_maps_close(matched.value[inner], truth[inner], rtol=0, atol=1e-3 * truth.max())
-    # Taken the other way it is off by the variance 1/12 pixel2 of 2 (14 arcsec)^2 / (8 ln 2).
+    # Taken the other way the peak is off by the variance of the pixel over that of the target.
     wrong = read_map(hdu, **(read | {"averages_pixels": not averages}))
     peak = match_map(wrong, target, grid_on(wcs, side, pixel)).value[30, 30] / truth.max()
     sign = -1 if averages else 1
@@ -685,6 +687,18 @@ def test_a_band_known_not_to_be_gaussian_says_so(tmp_path, tracer, fwhm) -> None
     write_matched(tmp_path / "probe.fits", matched)
     assert fits.getval(tmp_path / "probe.fits", "MATCHERR") == record.matching_error
     assert read_matched(tmp_path / "probe.fits").common == matched.common == sky.common
+
+
+def test_the_summary_lists_it_beside_the_error_of_the_flux_scale() -> None:
+    value, areas = np.array([[1.0, 2.0], [3.0, np.nan]]), np.full((2, 2), 4.0)
+    used = np.isfinite(value)
+    sky = make_sky(value, wcs=make_wcs((2, 2)), beam_arcsec2=round_beam(15.0))
+    sky = sky.with_step("common errors", common=CommonError(0.05, 0.0, 0.1))
+    surface = SimpleNamespace(slopes={"24um": np.full((2, 2), 2.0)})
+    disc = SimpleNamespace(surfaces={"sigma_sfr": surface}, intensity={"24um": sky})
+    errors = _common_errors(disc, "sigma_sfr", used, areas)
+    # 2 x (1 + 2 + 3) x 4 = 48: 5 % of it and 10 % of it.
+    assert errors == pytest.approx({"calibration_error": 2.4, "matching_error": 4.8})
 
 
 def test_other_beams_and_bands_carry_no_matching_error(tmp_path) -> None:

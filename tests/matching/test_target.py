@@ -19,7 +19,7 @@ from kspipe.maps import MapSource
 from kspipe.matching import choose_beam
 from kspipe.matching.target import effective_beam, smallest_legal_fwhm
 
-fixed = settings(derandomize=True, deadline=None, max_examples=80)
+fixed = settings(derandomize=True, deadline=None, max_examples=30)
 
 
 def source_with(beam, *, name="probe", pixel=2.0, averages=False) -> MapSource:

@@ -48,7 +48,7 @@ VALUES = st.recursive(
     max_leaves=12,
 )
 
-fuzz = settings(derandomize=True, deadline=None, max_examples=150)
+fuzz = settings(derandomize=True, deadline=None, max_examples=80)
 
 
 def check(raw: dict[str, Any], folder: Path) -> None:
