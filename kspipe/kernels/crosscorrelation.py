@@ -296,35 +296,38 @@ def _sum_of_pairs(
     reach = min(_reach_pix(term, jacobian_arcsec), max(parts[0].shape))
     shape = _room(parts[0].shape, reach)
     spectra = [scipy.fft.rfft2(part, s=shape) for part in parts]
-    lag = np.arange(-reach, reach + 1, dtype=float)
-    lags = np.stack(np.meshgrid(lag, lag))
-    correlation = _correlation(term, lags, jacobian_arcsec)
+    correlation = _correlation(term, reach, jacobian_arcsec)
+    slopes = np.ones((2, 2, 1, 1))
+    if slopes_of is not None:
+        slopes = _slope_covariance(slopes_of, reach, jacobian_arcsec)
     total = np.empty((2, 2))
     for i in (0, 1):
         for j in (0, 1):
-            products = correlation * _at_lags(spectra[i], spectra[j], shape, reach)
-            if slopes_of is not None:
-                products *= _slope_correlation(slopes_of, lags, jacobian_arcsec, (i, j))
-            total[i, j] = float(np.sum(products))
+            products = _at_lags(spectra[i], spectra[j], shape, reach)
+            total[i, j] = float(np.sum(products * correlation * slopes[i, j]))
     return total
 
 
-def _correlation(term: NoiseTerm, lags: Array, jacobian_arcsec: Array) -> Array:
-    """Correlation of a noise at pixel lags, (2, ...)."""
-    east, north = np.tensordot(jacobian_arcsec, lags, axes=1)
-    return term.correlation_at(east, north)
+def _correlation(term: NoiseTerm, reach: int, jacobian_arcsec: Array) -> Array:
+    """Correlation of a noise at all whole lags within the reach."""
+    lag = np.arange(-reach, reach + 1, dtype=float)
+    lag_x, lag_y = np.meshgrid(lag, lag)
+    (ex, ey), (nx, ny) = jacobian_arcsec
+    return term.correlation_at(ex * lag_x + ey * lag_y, nx * lag_x + ny * lag_y)
 
 
-def _slope_correlation(
-    term: NoiseTerm, lags: Array, jacobian_arcsec: Array, axes: tuple[int, int]
-) -> Array:
-    """Covariance of the slopes of a noise of unit variance, along two axes, at pixel lags."""
-    total = np.zeros(lags.shape[1:])
-    for step_i, factor_i in STENCIL:
-        for step_j, factor_j in STENCIL:
-            between = step_j * AXES[axes[1]] - step_i * AXES[axes[0]]
-            at = lags + between[:, None, None]
-            total += factor_i * factor_j * _correlation(term, at, jacobian_arcsec)
+def _slope_covariance(term: NoiseTerm, reach: int, jacobian_arcsec: Array) -> Array:
+    """Covariance of the slopes of a noise of unit variance, by axes and lag, (2, 2, n, n)."""
+    margin = 2 * max(step for step, _ in STENCIL)
+    wide = _correlation(term, reach + margin, jacobian_arcsec)
+    inner = np.arange(margin, wide.shape[0] - margin)
+    total = np.zeros((2, 2, inner.size, inner.size))
+    for i in (0, 1):
+        for j in (0, 1):
+            for step_i, factor_i in STENCIL:
+                for step_j, factor_j in STENCIL:
+                    dx, dy = step_j * AXES[j] - step_i * AXES[i]
+                    total[i, j] += factor_i * factor_j * wide[np.ix_(inner + dy, inner + dx)]
     return total
 
 

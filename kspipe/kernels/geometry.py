@@ -92,13 +92,17 @@ def transform_covariance(covariance: Array, jacobian: Array) -> Array:
     return np.asarray(inverse @ covariance @ inverse.T)
 
 
-def subtract_covariance(target: Array, source: Array) -> Array | None:
+def subtract_covariance(
+    target: Array, source: Array, *, rounding: float = ROUNDING
+) -> Array | None:
     """Kernel that turns the source beam into the target beam.
 
     Parameters
     ----------
     target, source : (2, 2) float64 array
         Beam covariances in one unit.
+    rounding : float
+        Share of the target's trace by which the source may be wider and still be no wider.
 
     Returns
     -------
@@ -108,7 +112,7 @@ def subtract_covariance(target: Array, source: Array) -> Array | None:
     """
     difference = np.asarray(target) - np.asarray(source)
     values, vectors = np.linalg.eigh(difference)
-    if values[0] < -ROUNDING * float(np.trace(target)):
+    if values[0] < -rounding * float(np.trace(target)):
         return None
     return np.asarray((vectors * np.clip(values, 0.0, None)) @ vectors.T)
 

@@ -37,9 +37,9 @@ BeamTable = Mapping[str, tuple[Array, str]]
 # Beams whose widths differ by less along every direction are one beam, written with few digits.
 SAME_BEAM: Final = 0.01
 
-_NUMBER: Final = r"\s*([-+]?[\d.]+(?:[EeDd][-+]?\d+)?)"
+_NUMBER: Final = r"\s*([-+]?(?:\d+\.?\d*|\.\d+)(?:[EeDd][-+]?\d+)?)"
 # How programs that restore an image leave the beam in its HISTORY, and what they count widths in.
-# Only the first of these words its lines alike for beams in other units, without CLEAN.
+# BMAJ= without CLEAN is not read: such lines are about other images, and in arcsec.
 _WORDINGS: Final = (
     (rf"CLEAN\s+BMAJ\s*={_NUMBER}\s+BMIN\s*={_NUMBER}\s+BPA\s*={_NUMBER}", DEG_ARCSEC),
     (rf"restoration:{_NUMBER} by{_NUMBER} \(arcsec\)\s+at pa{_NUMBER} \(deg\)", 1.0),

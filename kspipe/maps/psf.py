@@ -16,6 +16,7 @@ from scipy import ndimage
 from kspipe.core.constants import DEG_ARCSEC
 from kspipe.core.errors import BeamError, Fault
 from kspipe.core.units import UnitReadingError, read_unit
+from kspipe.kernels.geometry import beam_axes
 from kspipe.maps.header import celestial_wcs, pixel_jacobian
 
 __all__ = ["PsfImage", "read_psf"]
@@ -66,6 +67,12 @@ class PsfImage:
     def core_arcsec2(self) -> Array:
         """Covariance of the Gaussian through the core, on (east, north)."""
         return np.asarray(self.jacobian_arcsec @ self.core_pix2 @ self.jacobian_arcsec.T)
+
+    @property
+    def story(self) -> str:
+        """One line for the history."""
+        major, minor, _ = beam_axes(self.core_arcsec2)
+        return f"{self.origin}: core of {major:.4g} x {minor:.4g} arcsec FWHM"
 
     @property
     def reach_arcsec(self) -> float:

@@ -52,7 +52,9 @@ def load_map(source: MapSource) -> SkyMap:
     relative_area = _relative_area(source)
     value = source.door.intensity(value, relative_area)
     record = psf_record(request.tracer, source.beam_arcsec2) if source.psf is None else None
-    history += [source.door.reason, source.beam.story, *([str(record)] if record else [])]
+    history += [source.door.reason, source.beam.story]
+    history += [source.psf.story] if source.psf else []
+    history += [str(record)] if record else []
 
     noise: tuple[NoiseTerm, ...] = ()
     if request.noise.kind != "measure":

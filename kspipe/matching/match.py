@@ -252,7 +252,7 @@ def _smooth_and_sample(
         rows, columns = tile.core
         if size < TILE:
             middle = ((c.start + c.stop - 1) / 2 for c in (columns, rows))
-            smoothing = choose_smoothing(sky, target_arcsec2, *middle)
+            smoothing = choose_smoothing(sky, target_arcsec2, *middle, was_legal=True)
         here = (
             near & (y >= rows.start) & (y < rows.stop) & (x >= columns.start) & (x < columns.stop)
         )

@@ -18,6 +18,7 @@ from kspipe.kernels.fourier import (
     white_noise_gain,
 )
 from kspipe.kernels.geometry import (
+    ROUNDING,
     beam_axes,
     pixel_covariance,
     subtract_covariance,
@@ -32,6 +33,8 @@ __all__ = ["GaussianSmoothing", "PsfSmoothing", "Smoothing", "choose_smoothing"]
 
 Array = NDArray[np.float64]
 
+# Over a map's field its pixels differ by less than this share of the target's variance.
+WIDER_PIXELS: Final = 0.1
 # Noise whose Gaussian has less variance than this, in pixel2, feels the pixels.
 NARROW_PIX2: Final = 1.0
 
@@ -67,8 +70,20 @@ class Smoothing(Protocol):
         """The term with the correlation that it has after smoothing and interpolation."""
 
 
-def choose_smoothing(sky: SkyMap, target_arcsec2: Array, x: float, y: float) -> Smoothing:
+def choose_smoothing(
+    sky: SkyMap, target_arcsec2: Array, x: float, y: float, *, was_legal: bool = False
+) -> Smoothing:
     """Work out what brings a map to the target, at one of its pixels.
+
+    Parameters
+    ----------
+    sky : SkyMap
+    target_arcsec2 : (2, 2) float64 array
+    x, y : float
+        The pixel.
+    was_legal : bool
+        Whether the target was found legal elsewhere on the map: pixels that are a little wider
+        here do not make it illegal.
 
     Raises
     ------
@@ -81,12 +96,13 @@ def choose_smoothing(sky: SkyMap, target_arcsec2: Array, x: float, y: float) -> 
         kernel = matching_kernel(
             sky.psf, target_arcsec2, jacobian, averages_pixels=sky.averages_pixels
         )
-        if kernel.why_not:
+        if kernel.why_not and not was_legal:
             what = f"the target beam is sharper than the map's {sky.psf.origin}: {kernel.why_not}"
             raise BeamError(Fault(where, what))
         return PsfSmoothing(kernel, jacobian, sky.psf.origin)
     beam = sky.beam_arcsec2 + (pixel_covariance(jacobian) if sky.averages_pixels else 0.0)
-    difference = subtract_covariance(target_arcsec2, beam)
+    rounding = WIDER_PIXELS if was_legal else ROUNDING
+    difference = subtract_covariance(target_arcsec2, beam, rounding=rounding)
     if difference is None:
         raise BeamError(Fault(where, "the map's beam is wider than the target beam"))
     return GaussianSmoothing(difference, jacobian, has_pixel=sky.averages_pixels)

@@ -106,8 +106,8 @@ def with_history(*lines: str, **cards: Any) -> fits.Header:
 @pytest.mark.parametrize(
     "line",
     [
-        "AIPS   CLEAN BMAJ=  1.2000E-03 BMIN=  9.0000E-04 BPA=  35.00",
-        "IMAGR CLEAN BMAJ=1.2D-03 BMIN=9.0D-04 BPA=35.0 NITER= 1000",
+        "TASK   CLEAN BMAJ=  1.2000E-03 BMIN=  9.0000E-04 BPA=  35.00",
+        "IMAGE CLEAN BMAJ=1.2D-03 BMIN=9.0D-04 BPA=35.0 NITER= 1000",
         "CLEAN BMAJ = 0.0012 BMIN = .0009 BPA = -145.0",
         "> restoration: 4.32 by 3.24 (arcsec) at pa 35 (deg)",
         "RESTOR: Beam =  4.320E+00 x  3.240E+00 arcsec, pa =  3.500E+01 degrees",
@@ -115,14 +115,14 @@ def with_history(*lines: str, **cards: Any) -> fits.Header:
 )
 def test_wordings_of_history(line) -> None:
     # 0.0012 deg = 4.32 arcsec, 0.0009 deg = 3.24 arcsec.
-    assert_is(found_in(with_history("UVLOD", line, "PUTHEAD")), reference(4.32, 3.24, 35.0))
+    assert_is(found_in(with_history("loaded", line, "written")), reference(4.32, 3.24, 35.0))
 
 
 def test_the_last_of_history_counts() -> None:
-    lines = [f"AIPS CLEAN BMAJ= {a:.4E} BMIN= 9.0E-04 BPA= 0.0" for a in (2e-3, 3e-3, 1e-3)]
+    lines = [f"TASK CLEAN BMAJ= {a:.4E} BMIN= 9.0E-04 BPA= 0.0" for a in (2e-3, 3e-3, 1e-3)]
     assert found_in(with_history(*lines)).major_arcsec == pytest.approx(3.6)
     # An image that was not restored has zeros: they are no beam.
-    zeros = "AIPS CLEAN BMAJ= 0.0000E+00 BMIN= 0.0000E+00 BPA= 0.00"
+    zeros = "TASK CLEAN BMAJ= 0.0000E+00 BMIN= 0.0000E+00 BPA= 0.00"
     assert found_in(with_history(*lines, zeros)).major_arcsec == pytest.approx(3.6)
     assert found_in(with_history(zeros)) is None
     assert found_in(with_history("CLEAN BMAJ and BMIN not known", "BPA= 3")) is None

@@ -120,6 +120,8 @@ def test_a_foreign_header_is_read_or_refused(name) -> None:
         for changes in ({}, {"unit": "MJy/sr"}):
             with contextlib.suppress(MapError):
                 open_source(hdu, tracer="24um", **changes)
+        if "/maps/1904-66" in name:
+            continue  # matched in full by matching/test_projections.py
         try:
             source, result = matched(hdu)
         except MapError as error:
@@ -171,7 +173,7 @@ VALUES = st.one_of(
 )
 
 
-@settings(derandomize=True, deadline=None, max_examples=120)
+@settings(derandomize=True, deadline=None, max_examples=80)
 @given(st.dictionaries(st.sampled_from(KEYS), VALUES, min_size=1, max_size=3))
 def test_broken_cards_give_a_map_or_a_message(cards) -> None:
     hdu = make_hdu(np.ones((20, 20)), unit="Jy/beam km/s", pixel_arcsec=4.0, beam_arcsec=12.0)

@@ -39,7 +39,7 @@ from kspipe.maps.psf_records import PSF_RECORDS
 from kspipe.maps.skymap import CommonError, NoiseTerm, SkyMap
 from kspipe.matching import Grid, choose_beam, match_map
 from kspipe.matching.psf import matching_kernel, smallest_psf_fwhm
-from kspipe.matching.target import smallest_legal_fwhm
+from kspipe.matching.target import effective_beam, smallest_legal_fwhm
 from kspipe.stages.summary import _common_errors
 
 fixed = settings(derandomize=True, deadline=None, max_examples=50)
@@ -516,6 +516,7 @@ def test_pixels_of_the_psf(tmp_path, cards, arcsec, told) -> None:
     # The beam is that of the core, for all that needs a Gaussian.
     assert source.beam.major_arcsec == pytest.approx(6.0 * arcsec / 2.0, rel=0.03)
     assert source.beam.origin.startswith("the core of the PSF image")
+    assert f"core of {6.0 * arcsec / 2.0:.1f}" in source.psf.story
 
 
 def test_the_core_is_that_of_the_gaussian_wherever_it_lies() -> None:
@@ -643,6 +644,20 @@ def test_the_common_beam_of_any_maps_is_legal_for_all() -> None:
                 averages_pixels=averages,
             )
             match_map(sky, target, plain_grid(5, 6.0), minimum_coverage=0.1)
+
+
+def test_equal_beams_over_a_field_of_degrees() -> None:
+    """Off the tangent point pixels are a little wider on the sky than at the galaxy's centre."""
+    shape = (240, 240)
+    wcs = make_wcs(shape, 120.0)
+    hdu = make_hdu(np.full(shape, 3.0), wcs=wcs, unit="MJy/sr", beam_arcsec=300.0)
+    source = open_source(hdu, tracer="24um", averages_pixels=True)
+    width = beam_axes(effective_beam(source))[0]
+    sky = make_sky(hdu.data, wcs=wcs, beam_arcsec2=source.beam_arcsec2, averages_pixels=True)
+    for target in (width, width * (1 + 1e-7)):
+        matched = match_map(sky, choose_beam([source], target), plain_grid(61, 360.0))
+        # Observers' list, section 4, test 2: constant to 1e-4.
+        np.testing.assert_allclose(matched.value, 3.0, rtol=1e-4)
 
 
 def test_equal_beams_leave_the_map_as_it_is() -> None:
