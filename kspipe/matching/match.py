@@ -31,7 +31,7 @@ LEAST_PIXELS_PER_BEAM: Final = 2.5
 # From here on a cubic spline through the pixels is good to a part in a thousand.
 WELL_SAMPLED: Final = 4.0
 # A pixel's size on the sky may change by this much before a map gets more than one kernel.
-STEADY_SCALE: Final = 5e-4
+STEADY_SCALE: Final = 2e-4
 # The cubic B-spline's prefilter forgets a pixel by 0.27 for each pixel of distance.
 SPLINE_MARGIN: Final = 14
 # A kernel narrower than a pixel would ring from the edge of a tile, which therefore fades out.
@@ -170,20 +170,22 @@ def _choose_regrid(
 def _tile_size(sky: SkyMap, smoothing: Smoothing, wanted: tuple[slice, slice]) -> int:
     """Side of the tiles: such that a pixel's size on the sky is one number within each."""
     rows, columns = wanted
-    scale = float(np.linalg.norm(smoothing.jacobian))
+    # Lengths and angles between a pixel's sides; that north turns over the field is no change.
+    form = smoothing.jacobian.T @ smoothing.jacobian
     change = 0.0
     for x in (columns.start, columns.stop):
         for y in (rows.start, rows.stop):
             corner = pixel_jacobian(sky.wcs, x, y)
             if not np.isfinite(corner).all():
                 return TILE
-            change = max(change, float(np.linalg.norm(np.abs(corner) - np.abs(smoothing.jacobian))))
-    if sky.psf is not None or change < STEADY_SCALE * scale:
+            difference = float(np.linalg.norm(corner.T @ corner - form))
+            change = max(change, 0.5 * difference / float(np.linalg.norm(form)))
+    if sky.psf is not None or change < STEADY_SCALE:
         return TILE
     widest = max(rows.stop - rows.start, columns.stop - columns.start)
     # The scale changes with the square of the distance from the tangent point.
-    parts = min(12, math.ceil(2 * math.sqrt(change / scale / STEADY_SCALE)))
-    return int(max(64, widest // parts))
+    parts = min(12, math.ceil(2 * math.sqrt(change / STEADY_SCALE)))
+    return int(max(32, widest // parts))
 
 
 def _fwhm_pix(target_arcsec2: Array, smoothing: Smoothing) -> float:

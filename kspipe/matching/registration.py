@@ -95,11 +95,14 @@ class Registration:
         Astrometric only between maps of one emission process.
     offset : Offset or None
         None where it could not be measured.
+    applied_arcsec : (float, float)
+        East and north by which the recipe has moved the map already.
     """
 
     reference: str | None
     kind: str
     offset: Offset | None
+    applied_arcsec: tuple[float, float] = (0.0, 0.0)
 
     def __str__(self) -> str:
         if self.reference is None:
@@ -114,7 +117,9 @@ class Registration:
         """Text of the recipe's key that would undo an astrometric offset; empty for none."""
         if self.kind != "astrometric" or self.offset is None or not self.offset.is_significant:
             return ""
-        return f'shift = "{-self.offset.east_arcsec:.2f} {-self.offset.north_arcsec:.2f} arcsec"'
+        east = self.applied_arcsec[0] - self.offset.east_arcsec
+        north = self.applied_arcsec[1] - self.offset.north_arcsec
+        return f'shift = "{east:.2f} {north:.2f} arcsec"'
 
     def as_plain(self) -> dict[str, Any]:
         """Plain values for the summary."""
@@ -127,12 +132,17 @@ class Registration:
             "north_arcsec": offset.north_arcsec if offset else None,
             "north_error_arcsec": offset.north_error_arcsec if offset else None,
             "correlation": offset.correlation if offset else None,
+            "applied_shift_arcsec": list(self.applied_arcsec),
             "proposal": self.proposal,
             "text": str(self),
         }
 
 
-def register_maps(matched: Mapping[str, SkyMap], grid: Grid) -> dict[str, Registration]:
+def register_maps(
+    matched: Mapping[str, SkyMap],
+    grid: Grid,
+    applied_arcsec: Mapping[str, tuple[float, float]] | None = None,
+) -> dict[str, Registration]:
     """Measure where every map lies against a reference.
 
     The reference of a map is the one of highest signal-to-noise ratio among maps of the same
@@ -144,6 +154,8 @@ def register_maps(matched: Mapping[str, SkyMap], grid: Grid) -> dict[str, Regist
     matched : mapping of str to SkyMap
         On the grid, with one beam, by the recipe's names.
     grid : Grid
+    applied_arcsec : mapping of str to (float, float), optional
+        East and north by which the recipe has moved each map already.
 
     Returns
     -------
@@ -154,12 +166,13 @@ def register_maps(matched: Mapping[str, SkyMap], grid: Grid) -> dict[str, Regist
     for name, sky in matched.items():
         alike = [one for one in ranking if _process(matched[one]) == _process(sky)]
         reference = alike[0] if alike[0] != name else ranking[0]
+        applied = (applied_arcsec or {}).get(name, (0.0, 0.0))
         if reference == name:
-            registrations[name] = Registration(None, "reference", None)
+            registrations[name] = Registration(None, "reference", None, applied)
             continue
         kind = "astrometric" if reference in alike else "offset of emission"
         offset = measure_offset(sky, matched[reference], grid.jacobian_arcsec())
-        registrations[name] = Registration(reference, kind, offset)
+        registrations[name] = Registration(reference, kind, offset, applied)
     return registrations
 
 
@@ -197,9 +210,9 @@ def measure_offset(sky: SkyMap, reference: SkyMap, jacobian_arcsec: Array) -> Of
     The displacement of highest correlation coefficient is taken, each pixel weighted by the
     inverse noise variance of the difference of the two maps on one scale. The error holds the
     noise of both maps, correlations included; it knows nothing of how unlike two tracers are. On
-    mock pairs of one sky it is right to 15 % down to a peak signal-to-noise ratio of about 8. Of
-    two maps that are both noisy and both of white noise (native beams that are the target beam)
-    it is up to 30 % too small.
+    mock pairs of one sky the pulls have a width of 0.95 to 1.04 and a mean below 0.04, from a peak
+    signal-to-noise ratio of 100 down to about 8. Where the noise of both maps is white on the
+    grid it is too small by 20 % at a ratio of 30 and 40 % at 20.
     """
     fwhm_pix = beam_axes(sky.beam_arcsec2)[0] / math.sqrt(abs(np.linalg.det(jacobian_arcsec)))
     pair = ImagePair(

@@ -235,14 +235,12 @@ def judge_maps(
         By map: ``registration``, ``negative`` and, for lines in the radio, ``short_spacings``.
     """
     kpc = plan.recipe.galaxy.pc_per_arcsec / 1e3
+    applied = {name: source.request.shift_arcsec for name, source in plan.sources.items()}
     findings: Findings = {}
-    for name, registration in register_maps(matched, plan.grid).items():
-        sky, request = matched[name], plan.sources[name].request
+    for name, registration in register_maps(matched, plan.grid, applied).items():
+        sky = matched[name]
         found: dict[str, Any] = {
-            "registration": {
-                **registration.as_plain(),
-                "applied_shift_arcsec": list(request.shift_arcsec),
-            },
+            "registration": registration.as_plain(),
             "negative": next((s.detail for s in sky.steps if s.step == "negative"), None),
         }
         spacings = _short_spacings(sky, plan, totals[name])

@@ -125,6 +125,7 @@ def test_second_run_reuses_and_third_refuses(made, tmp_path):
     assert "Traceback" not in refused.stderr
 
 
+@pytest.mark.slow
 def test_resolved_recipe_gives_identical_numbers(made, tmp_path):
     out, _ = made
     copy = tmp_path / "again"
@@ -166,6 +167,7 @@ def test_compare_refuses_a_touched_reduction(made, tmp_path):
     assert "co" in result.stderr
 
 
+@pytest.mark.slow
 def test_editing_relations_needs_no_new_reduction(made, tmp_path):
     out, _ = made
     folder = tmp_path / "copy"

@@ -67,6 +67,7 @@ def mock(rng: np.random.Generator, offset: float, scatter: float, n: int = 80):
     return y, predicted, np.array([np.full(n, 1e-6), np.zeros(n), np.zeros(n)])
 
 
+@pytest.mark.slow
 def test_fit_recovers_zero_point_and_scatter():
     """Half of the values are below S/N 1, many negative; nothing is left out."""
     rng = np.random.default_rng(8)

@@ -97,6 +97,7 @@ def grid() -> Grid:
 KINDS = ("white", "beam", "sidelobes")
 
 
+@pytest.mark.slow
 @pytest.mark.parametrize("kind", KINDS)
 def test_pixel_error_is_the_scatter_of_draws(kind):
     target, rng = grid(), np.random.default_rng(11)
@@ -147,6 +148,7 @@ def test_region_sums_have_the_error_of_draws(kind):
     assert np.abs(ratios - 1).max() < 0.08
 
 
+@pytest.mark.slow
 def test_measured_correlation_gives_the_error_of_sums():
     """A map that says nothing of its correlation: measured on blank sky, then used."""
     target, rng = grid(), np.random.default_rng(13)

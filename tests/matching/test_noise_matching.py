@@ -123,6 +123,7 @@ def draws(name: str) -> tuple[np.ndarray, SkyMap]:
     return np.array(values), match_map(stated, round_beam(case.target), grid)
 
 
+@pytest.mark.slow
 @every_case
 @pytest.mark.parametrize("where", ["inside", "near blanks and edges", "everywhere"])
 def test_stated_error_is_the_scatter(name, where) -> None:

@@ -596,6 +596,7 @@ def test_an_undersampled_map_is_averaged_and_keeps_its_flux(tmp_path) -> None:
 # --- Rounding ----------------------------------------------------------------------------------
 
 
+@pytest.mark.slow
 @fixed
 @given(
     major=st.floats(4.0, 30.0),
@@ -613,11 +614,13 @@ def test_rounding_a_beam_up_to_its_major_axis_always_works(major, ratio, pa, hai
     term = NoiseTerm("probe", np.ones((41, 41)), source.beam_arcsec2)
     sky = make_sky(np.full((41, 41), 3.0), wcs=wcs, beam_arcsec2=source.beam_arcsec2, noise=(term,))
     matched = match_map(sky, target, plain_grid(7, major / 3), minimum_coverage=0.1)
-    np.testing.assert_allclose(matched.value, 3.0, rtol=1e-9)
+    # The spline forgets what lies beyond a tile's margin of 14 pixels by 0.268^14 = 1e-8.
+    np.testing.assert_allclose(matched.value, 3.0, rtol=1e-7)
     assert (matched.error <= 1.0 / matched.coverage + 1e-9).all()
     assert (matched.error > 0).all()
 
 
+@pytest.mark.slow
 def test_the_common_beam_of_any_maps_is_legal_for_all() -> None:
     generator = np.random.default_rng(2)
     for _ in range(30):

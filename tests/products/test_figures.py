@@ -81,6 +81,7 @@ def test_second_call_reuses(drawn):
     assert before == {path: path.stat().st_mtime_ns for path in (drawn / "figures").iterdir()}
 
 
+@pytest.mark.slow
 def test_same_bytes_without_input_maps_and_under_other_settings(drawn, copied):
     recipe = copied / "recipe.toml"
     recipe.write_text(recipe.read_text().replace("demo_maps", "nowhere"))

@@ -14,6 +14,7 @@ def test_noise_free_sky_is_recovered(recipe):
         assert -0.5 < p1 <= p99 < 0.5, name
 
 
+@pytest.mark.slow
 def test_errors_hold_the_truth_as_often_as_they_say():
     """Pooled over 20 noise seeds, per product and separately by S/N.
 

@@ -18,6 +18,7 @@ from demo import load_demo
 from helpers import ARCSEC2_SR, demo_recipe
 
 from kspipe.core.errors import KspipeWarning, MapError, OutputError
+from kspipe.core.report import noted_lines
 from kspipe.maps.product import read_matched
 from kspipe.recipe import load_recipe
 from kspipe.recipe.load import parse_recipe
@@ -145,6 +146,10 @@ def test_a_typed_shift_removes_it_and_is_told(raw, plain, tmp_path) -> None:
     assert after["shift"].flux == pytest.approx(after["match"].flux, rel=1e-3)
     history = " ".join(fits.getheader(out / "matched" / "nuv.fits")["HISTORY"])
     assert "moved by -2.4 arcsec east" in " ".join(history.split())
+    # A shift in the wrong direction doubles the offset; what is proposed then counts from zero.
+    wrong = reduced(raw, tmp_path / "wrong", nuv={"shift": "2.4 -1.3 arcsec"})
+    east, north = read_findings(wrong)["nuv"]["registration"]["proposal"].split('"')[1].split()[:2]
+    assert (float(east), float(north)) == pytest.approx((-OFF[0], -OFF[1]), abs=0.15)
     # The resolved recipe shifts again.
     assert load_recipe(out / "recipe.toml").maps["nuv"].shift == (-OFF[0], -OFF[1])
 
@@ -219,6 +224,8 @@ def test_everything_is_in_the_summary(plain) -> None:
     assert summary["ir"]["negative"]["count"] == 0
     assert summary["hi"]["short_spacings"]["stated"] is None
     assert "short_spacings" not in summary["ir"]
+    (line,) = noted_lines({"maps": summary})
+    assert line.startswith("maps.nuv: astrometric offset from fuv")
 
 
 def test_the_file_is_a_table_with_descriptions(plain) -> None:
@@ -235,6 +242,7 @@ def test_a_folder_without_it_says_what_to_do(tmp_path) -> None:
         step_table(tmp_path)
 
 
+@pytest.mark.slow
 def test_the_command_prints_it(plain, tmp_path) -> None:
     command = [sys.executable, "-m", "kspipe", "reduce", str(plain / "recipe.toml")]
     command += ["--out", str(tmp_path / "out"), "--quiet"]
