@@ -31,7 +31,7 @@ LEAST_PIXELS_PER_BEAM: Final = 2.5
 # From here on a cubic spline through the pixels is good to a part in a thousand.
 WELL_SAMPLED: Final = 4.0
 # A pixel's size on the sky may change by this much before a map gets more than one kernel.
-STEADY_SCALE: Final = 2e-4
+STEADY_SCALE: Final = 1e-4
 # The cubic B-spline's prefilter forgets a pixel by 0.27 for each pixel of distance.
 SPLINE_MARGIN: Final = 14
 # A kernel narrower than a pixel would ring from the edge of a tile, which therefore fades out.
