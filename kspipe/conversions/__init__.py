@@ -1,26 +1,34 @@
 """Published conversions from intensity to surface density, one record each."""
 
+from kspipe.conversions import alpha_co_density, alpha_co_metallicity  # noqa: F401 - fill the shelf
 from kspipe.conversions.alpha_co import ALPHA_CO, AlphaCO
 from kspipe.conversions.atomic import ATOMIC, AtomicGas
 from kspipe.conversions.convert import Choices, Converted, Parameters, convert
 from kspipe.conversions.extinction import EXTINCTION, Extinction
+from kspipe.conversions.inputs import INPUTS, Input
 from kspipe.conversions.metallicity import oh_from_gradient, z_prime
+from kspipe.conversions.record import Range, Record
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
-from kspipe.conversions.surface import Surface, make_surface
+from kspipe.conversions.surface import Surface, carry_noise, make_surface
 
 __all__ = [
     "ALPHA_CO",
     "ATOMIC",
     "EXTINCTION",
+    "INPUTS",
     "STAR_FORMATION",
     "AlphaCO",
     "AtomicGas",
     "Choices",
     "Converted",
     "Extinction",
+    "Input",
     "Parameters",
+    "Range",
+    "Record",
     "StarFormation",
     "Surface",
+    "carry_noise",
     "convert",
     "make_surface",
     "oh_from_gradient",

@@ -15,7 +15,9 @@ from numpy.typing import NDArray
 from kspipe.conversions.alpha_co import ALPHA_CO
 from kspipe.conversions.atomic import ATOMIC
 from kspipe.conversions.extinction import EXTINCTION
+from kspipe.conversions.molecular import molecular_gas
 from kspipe.conversions.star_formation import STAR_FORMATION
+from kspipe.core.constants import OH_SOLAR
 from kspipe.core.tracers import CO_LINES
 
 __all__ = ["NII_DOUBLET", "Choices", "Converted", "Parameters", "convert"]
@@ -63,8 +65,8 @@ class Parameters:
     ----------
     cos_i : array_like
         Cosine of the inclination; enters every surface density exactly once.
-    z_prime : array_like
-        Metallicity, 10^(12+log(O/H) - 8.69).
+    oh : array_like
+        Metallicity, 12 + log10(O/H).
     line_ratio : array_like
         Brightness of the CO line used over CO(1-0); 1 for CO(1-0).
     ebv : array_like
@@ -73,14 +75,21 @@ class Parameters:
         [NII]6583 / Halpha in the H-alpha map; 0 where it is free of [NII].
     as_24um : array_like
         24 um over 22 um intensity, where a 22 um map stands for 24 um.
+    sigma_star : array_like or None
+        Stellar surface density [Msun/pc2], face-on, at the beam of the maps.
+    ms_offset_dex, g0_over_n : array_like or None
+        As in `kspipe.conversions.inputs.INPUTS`; only some alpha_CO records need them.
     """
 
     cos_i: Array | float
-    z_prime: Array | float = 1.0
+    oh: Array | float = OH_SOLAR
     line_ratio: Array | float = 1.0
     ebv: Array | float = 0.0
     nii_ratio: Array | float = 0.0
     as_24um: Array | float = 1.0
+    sigma_star: Array | float | None = None
+    ms_offset_dex: Array | float | None = None
+    g0_over_n: Array | float | None = None
 
 
 @dataclass(frozen=True)
@@ -94,10 +103,17 @@ class Converted:
         ``sigma_sfr`` [Msun/yr/kpc2, face-on]; molecular entries are absent without CO.
     derivatives : dict of str to dict of str to float64 array
         Per product and tracer, in the product's unit per canonical intensity.
+    by_parameter : dict of str to dict of str to float64 array
+        The same for surface densities given as parameters: ``["sigma_mol"]["sigma_star"]``.
+    flags : dict of str to bool array
+        ``negative_co`` (alpha_CO was taken at zero CO) and ``outside_range`` (an input of the
+        alpha_CO record), where they can occur.
     """
 
     values: dict[str, Array]
     derivatives: dict[str, dict[str, Array]]
+    by_parameter: dict[str, dict[str, Array]] = field(default_factory=dict)
+    flags: dict[str, NDArray[np.bool_]] = field(default_factory=dict)
 
 
 def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parameters) -> Converted:
@@ -118,7 +134,7 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
     Raises
     ------
     KeyError
-        If a record is not known or a tracer that it needs is absent.
+        If a record is not known or a tracer or parameter that it needs is absent.
 
     References
     ----------
@@ -126,28 +142,77 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
     .. [2] bolatto2013, Eq. 2: Sigma_mol = alpha_CO I_CO(1-0).
     """
     cos_i = np.asarray(parameters.cos_i, dtype=float)
-    slopes: dict[str, dict[str, Array]] = {}
+    made = _Products()
     if "HI" in intensity:
-        slopes["sigma_atom"] = {"HI": ATOMIC.get(choices.atomic).msun_pc2_per_k_kms * cos_i}
-    line = next((tracer for tracer in CO_LINES if tracer in intensity), None)
+        per_hi = ATOMIC.get(choices.atomic).msun_pc2_per_k_kms * cos_i
+        made.add("sigma_atom", per_hi * intensity["HI"], {"HI": per_hi})
     if choices.alpha_co is not None:
-        if line is None:
-            raise KeyError(f"record {choices.alpha_co!r} needs a CO line, none is among the maps")
-        alpha = ALPHA_CO.get(choices.alpha_co)(np.asarray(parameters.z_prime, dtype=float))
-        slopes["sigma_mol"] = {line: alpha / parameters.line_ratio * cos_i}
-    if "sigma_atom" in slopes:
-        slopes["sigma_gas"] = {**slopes["sigma_atom"], **slopes.get("sigma_mol", {})}
-    slopes["sigma_sfr"] = _sfr_slopes(intensity, choices, parameters, cos_i)
+        _add_molecular(made, intensity, choices, parameters)
+    if "sigma_atom" in made.values:
+        _add_gas(made)
+    slopes = _sfr_slopes(intensity, choices, parameters, cos_i)
+    terms = [slopes[tracer] * intensity[tracer] for tracer in slopes]
+    made.add("sigma_sfr", sum(terms[1:], terms[0]), slopes)
+    return Converted(made.values, made.derivatives, made.by_parameter, made.flags)
 
-    values, derivatives = {}, {}
-    for product, by_tracer in slopes.items():
-        terms = [by_tracer[tracer] * intensity[tracer] for tracer in by_tracer]
-        values[product] = np.asarray(sum(terms[1:], terms[0]), dtype=float)
-        derivatives[product] = {
-            tracer: np.broadcast_to(slope, values[product].shape)
-            for tracer, slope in by_tracer.items()
+
+@dataclass
+class _Products:
+    """What has been converted so far."""
+
+    values: dict[str, Array] = field(default_factory=dict)
+    derivatives: dict[str, dict[str, Array]] = field(default_factory=dict)
+    by_parameter: dict[str, dict[str, Array]] = field(default_factory=dict)
+    flags: dict[str, NDArray[np.bool_]] = field(default_factory=dict)
+
+    def add(self, product: str, value: Array, slopes: Mapping[str, Array]) -> None:
+        self.values[product] = np.asarray(value, dtype=float)
+        shape = self.values[product].shape
+        self.derivatives[product] = {
+            tracer: np.broadcast_to(slope, shape) for tracer, slope in slopes.items()
         }
-    return Converted(values, derivatives)
+
+
+def _add_molecular(
+    made: _Products, intensity: Mapping[str, Array], choices: Choices, parameters: Parameters
+) -> None:
+    """Molecular gas of the one CO line, with its slopes by tracer."""
+    record = ALPHA_CO.get(str(choices.alpha_co))
+    line = next((tracer for tracer in CO_LINES if tracer in intensity), None)
+    if line is None:
+        raise KeyError(f"record {record.key!r} needs a CO line, none is among the maps")
+    cos_i = np.asarray(parameters.cos_i, dtype=float)
+    given = {
+        name: np.asarray(value, dtype=float)
+        for name in ("oh", "sigma_star", "ms_offset_dex", "g0_over_n")
+        if (value := getattr(parameters, name)) is not None
+    }
+    face_on = cos_i / parameters.line_ratio * intensity[line]
+    gas = molecular_gas(record, face_on, made.values.get("sigma_atom"), given)
+    slopes = {line: gas.per_line / parameters.line_ratio * cos_i}
+    value = gas.alpha_co / parameters.line_ratio * cos_i * intensity[line]
+    if gas.per_atom is not None:
+        slopes["HI"] = gas.per_atom * made.derivatives["sigma_atom"]["HI"]
+    made.add("sigma_mol", value, slopes)
+    shape = made.values["sigma_mol"].shape
+    if gas.per_star is not None:
+        made.by_parameter["sigma_mol"] = {"sigma_star": np.broadcast_to(gas.per_star, shape)}
+    if gas.negative_co is not None:
+        made.flags["negative_co"] = np.broadcast_to(gas.negative_co, shape)
+    made.flags["outside_range"] = np.broadcast_to(gas.outside_range, shape)
+
+
+def _add_gas(made: _Products) -> None:
+    """Total gas: the sum of both phases, in values and in slopes."""
+    value = made.values["sigma_atom"]
+    slopes = dict(made.derivatives["sigma_atom"])
+    if "sigma_mol" in made.values:
+        value = value + made.values["sigma_mol"]
+        for tracer, slope in made.derivatives["sigma_mol"].items():
+            slopes[tracer] = slopes[tracer] + slope if tracer in slopes else slope
+        if "sigma_mol" in made.by_parameter:
+            made.by_parameter["sigma_gas"] = made.by_parameter["sigma_mol"]
+    made.add("sigma_gas", value, slopes)
 
 
 def _sfr_slopes(

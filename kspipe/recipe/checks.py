@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import math
 from collections import Counter
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from typing import Any, Final
 
-from kspipe.conversions import STAR_FORMATION
+from kspipe.conversions import ALPHA_CO, INPUTS, STAR_FORMATION
 from kspipe.core.errors import Fault, nearest
 from kspipe.core.tracers import CO_LINES
 from kspipe.recipe.models import (
@@ -111,7 +111,46 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
             )
         if lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
             faults.append(Fault("gas.line_ratio", "CO(1-0) takes no line ratio", "remove the key"))
+        faults += _alpha_co_faults(gas)
     return faults
+
+
+# Keys of [gas] that stand for an input of alpha_CO records.
+_GAS_INPUTS: Final = {"ms_offset": "ms_offset_dex", "g0_over_n": "g0_over_n"}
+
+
+def _alpha_co_faults(gas: GasTable) -> list[Fault]:
+    """What an alpha_CO record needs and the recipe does not give, and the other way round."""
+    record = ALPHA_CO.get(gas.alpha_co)
+    needs = set(record.needs)
+    if "sigma_total" in needs:
+        needs = needs - {"sigma_total"} | {"sigma_star"}
+    given = {"oh"} | {_GAS_INPUTS[key] for key in _GAS_INPUTS if getattr(gas, key) is not None}
+    faults = [
+        Fault(
+            f"gas.{key}",
+            f'"{record.key}" takes no {INPUTS[name].meaning}',
+            f"remove the key; it belongs to {_listed(k.key for k in ALPHA_CO if name in k.needs)}",
+        )
+        for key, name in _GAS_INPUTS.items()
+        if name in given - needs
+    ]
+    for name in sorted(needs - given):
+        do_without = _listed(other.key for other in ALPHA_CO if set(other.needs) <= given)
+        faults.append(
+            Fault(
+                "gas.alpha_co",
+                f'"{record.key}" needs the {INPUTS[name].meaning}, which the recipe does not give',
+                "; ".join(
+                    filter(None, (INPUTS[name].do, f"records that do without: {do_without}"))
+                ),
+            )
+        )
+    return faults
+
+
+def _listed(keys: Iterable[str]) -> str:
+    return ", ".join(sorted(keys))
 
 
 def _map_extras(maps: Mapping[str, MapTable]) -> list[Fault]:

@@ -113,6 +113,12 @@ Ratio = Annotated[
 RatioOrZero = Annotated[
     Measured, _measured("", '0.3 or "0.3 +- 0.1"'), _between(0, 10, "a ratio, 0 or 0 to 10")
 ]
+Offset = Annotated[Measured, _measured("dex", '"0.2 +- 0.1 dex"')]
+FieldOverDensity = Annotated[
+    Measured,
+    _measured("", "0.01"),
+    _between(0, math.inf, "a positive ratio of radiation field to density"),
+]
 Speed = Annotated[Measured, _measured("km/s", '"640 km/s"')]
 Percent = Annotated[Measured, BeforeValidator(parse_percent)]
 Arcsec = Annotated[
@@ -432,6 +438,8 @@ class GasTable(Table):
 
     alpha_co: Annotated[str, _key_of(ALPHA_CO)]
     line_ratio: Ratio | None = None
+    ms_offset: Offset | None = None
+    g0_over_n: FieldOverDensity | None = None
 
 
 class StarFormationTable(Table):

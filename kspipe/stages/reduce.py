@@ -164,7 +164,7 @@ def _outside_galaxy(sky: SkyMap, recipe: Recipe) -> NDArray[np.bool_]:
 
 def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
     """Write the surface densities, ratios, metallicity and radius."""
-    lines = [f"{r.key} ({r.cite}, {r.where}): {r.formula}" for r in records_of(plan.recipe)]
+    lines = [record.sentence for record in records_of(plan.recipe)]
     galaxy = plan.recipe.galaxy
     lines.append(
         f"face-on, helium included (1.36), cos i = {galaxy.cos_i:.5f} applied once; distance "

@@ -76,6 +76,10 @@ def make_summary(
             for name, result in headlines.items()
         },
         "maps": {name: {"history": list(sky.history)} for name, sky in matched.items()},
+        "records": {
+            record.key: {"formula": record.formula, "certainty": record.certainty}
+            for record in [*records_of(recipe), *laws]
+        },
         "sources": {key: str(cite(key)) for key in cited},
     }
 

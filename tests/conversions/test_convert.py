@@ -46,6 +46,12 @@ all_choices = pytest.mark.parametrize(
     CHOICES,
     ids=lambda c: "-".join([c.calibration, str(c.alpha_co), *c.extinction.values()]),
 )
+LINEAR = [c for c in CHOICES if not (c.alpha_co and ALPHA_CO.get(c.alpha_co).is_self_consistent)]
+linear_choices = pytest.mark.parametrize(
+    "choices",
+    LINEAR,
+    ids=lambda c: "-".join([c.calibration, str(c.alpha_co), *c.extinction.values()]),
+)
 TYPICAL = {"HI": 300.0, "CO(2-1)": 5.0, "FUV": 0.05, "24um": 1.0, "Halpha": 1e-5}
 
 
@@ -65,11 +71,14 @@ def parameters(shape: tuple[int, ...] = ()) -> Parameters:
     rng = np.random.default_rng(2)
     return Parameters(
         cos_i=rng.uniform(0.3, 1.0, shape),
-        z_prime=rng.uniform(0.3, 1.5, shape),
+        oh=rng.uniform(8.2, 8.85, shape),
         line_ratio=rng.uniform(0.5, 0.9, shape),
         ebv=rng.uniform(0.0, 0.3, shape),
         nii_ratio=rng.uniform(0.0, 0.5, shape),
         as_24um=rng.uniform(0.9, 1.2, shape),
+        sigma_star=rng.lognormal(5.0, 1.0, shape),
+        ms_offset_dex=rng.uniform(-0.5, 0.5, shape),
+        g0_over_n=rng.uniform(0.001, 0.1, shape),
     )
 
 
@@ -83,7 +92,8 @@ def assert_same(got: Converted, expected: Converted, rel: float = 1e-12) -> None
 
 
 def at(given: Parameters, index: tuple[int, ...]) -> Parameters:
-    return Parameters(**{f.name: np.asarray(getattr(given, f.name))[index] for f in fields(given)})
+    stated = {f.name: value for f in fields(given) if (value := getattr(given, f.name)) is not None}
+    return Parameters(**{name: np.asarray(value)[index] for name, value in stated.items()})
 
 
 # --- contracts -----------------------------------------------------------------------------------
@@ -99,12 +109,17 @@ def test_products(choices: Choices) -> None:
         assert value.shape == SHAPE
         assert value.dtype == np.float64
         assert all(slope.shape == SHAPE for slope in got.derivatives[product].values())
-        assert all(np.all(slope > 0) for slope in got.derivatives[product].values())
+        for tracer, slope in got.derivatives[product].items():
+            if product == "sigma_mol" and tracer == "HI":
+                # More atoms, a deeper potential, a lower alpha_CO: what CO gives is nearer zero.
+                assert np.all(slope * value <= 0)
+            else:
+                assert np.all(slope > 0)
     gas = got.values["sigma_atom"] + got.values.get("sigma_mol", 0.0)
     np.testing.assert_allclose(got.values["sigma_gas"], gas, rtol=1e-14)
 
 
-@all_choices
+@linear_choices
 def test_derivatives_are_differences(choices: Choices) -> None:
     maps, given = sky(choices), parameters()
     base = convert(maps, choices, given)
@@ -131,7 +146,8 @@ def test_signs_and_blanks_are_kept(choices: Choices) -> None:
     base = convert(maps, choices, parameters())
     for product, value in base.values.items():
         assert value.flat[0] < 0
-        np.testing.assert_array_equal(flipped.values[product], -value)
+        if choices in LINEAR or product == "sigma_sfr":
+            np.testing.assert_array_equal(flipped.values[product], -value)
     for tracer in maps:
         holed = {**maps, tracer: maps[tracer].copy()}
         holed[tracer][1, 1] = np.nan
@@ -198,7 +214,7 @@ def test_choices_and_results_travel(choices: Choices) -> None:
 # --- inclination, and what belongs to single bands ------------------------------------------------
 
 
-@all_choices
+@linear_choices
 def test_inclination_enters_exactly_once(choices: Choices) -> None:
     # C911: applied twice at 60 degrees it would be 0.30103 dex, as much as forgotten.
     maps, given = sky(choices), parameters()
@@ -221,7 +237,7 @@ def test_inclination_enters_exactly_once(choices: Choices) -> None:
     [
         ("ebv", 0.2, {("sigma_sfr", "FUV"), ("sigma_sfr", "Halpha")}),
         ("nii_ratio", 0.4, {("sigma_sfr", "Halpha")}),
-        ("z_prime", 0.5, {("sigma_mol", "CO(2-1)"), ("sigma_gas", "CO(2-1)")}),
+        ("oh", 8.4, {("sigma_mol", "CO(2-1)"), ("sigma_gas", "CO(2-1)")}),
         ("line_ratio", 0.65, {("sigma_mol", "CO(2-1)"), ("sigma_gas", "CO(2-1)")}),
         ("as_24um", 1.1, {("sigma_sfr", "22um")}),
     ],

@@ -414,6 +414,16 @@ def test_files_in_memory_may_be_missing(good, folder) -> None:
             "metallicity.gradient",
             "r25",
         ),
+        # What an alpha_CO record needs, and what it does not.
+        ({"gas__alpha_co": "accurso2017"}, "gas.alpha_co", 'ms_offset = "0.2 dex"'),
+        ({"gas__alpha_co": "accurso2017"}, "gas.alpha_co", "do without: amorin2016"),
+        ({"gas__alpha_co": "wolfire2010"}, "gas.alpha_co", "g0_over_n = 0.01"),
+        ({"gas__alpha_co": "bolatto2013_eq31"}, "gas.alpha_co", "stellar surface density"),
+        ({"gas__alpha_co": "schinnerer2024"}, "gas.alpha_co", "do without: amorin2016"),
+        ({"gas__ms_offset": "0.2 dex"}, "gas.ms_offset", "belongs to accurso2017"),
+        ({"gas__g0_over_n": 0.01}, "gas.g0_over_n", "belongs to wolfire2010"),
+        ({"gas__alpha_co": "wolfire2010", "gas__g0_over_n": 0}, "gas.g0_over_n", "positive"),
+        ({"gas__alpha_co": "accurso2017", "gas__ms_offset": 0.2}, "gas.ms_offset", "no unit"),
         # Star formation.
         ({"star_formation__maps": ["fuv"]}, "star_formation.maps", "takes FUV and 24um"),
         ({"star_formation__maps": ["fuv", "fuv"]}, "star_formation.maps", "takes FUV and 24um"),

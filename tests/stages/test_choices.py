@@ -1,0 +1,79 @@
+"""What a recipe chooses reaches the pixels, the histories and the summary."""
+
+from __future__ import annotations
+
+import json
+import math
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+from astropy.io import fits
+from helpers import demo_recipe
+
+from kspipe.maps.product import read_image
+from kspipe.recipe import parse_recipe
+from kspipe.stages.compare import compare_relations
+from kspipe.stages.reduce import reduce_maps
+
+OH, SLOPE = 8.75, -0.045
+
+
+@pytest.fixture(scope="module")
+def out(tmp_path_factory) -> Path:
+    return tmp_path_factory.mktemp("choices")
+
+
+def reduced(out: Path, **changes: Any) -> Path:
+    """Reduce the demo; the matched maps of an earlier choice are reused."""
+    reduce_maps(parse_recipe(demo_recipe(out, **changes), folder=out), out / "run", overwrite=True)
+    return out / "run" / "maps"
+
+
+def image(folder: Path, name: str) -> np.ndarray:
+    return read_image(folder / f"{name}.fits")[0].astype(float)
+
+
+@pytest.mark.parametrize(
+    ("gas", "alpha"),
+    [
+        # Accurso et al. 2017 and Wolfire et al. 2010, both from memory, written out.
+        (
+            {"alpha_co": "accurso2017", "ms_offset": "0.3 dex"},
+            lambda oh: 10 ** (14.752 - 1.623 * oh + 0.062 * 0.3),
+        ),
+        (
+            {"alpha_co": "wolfire2010", "g0_over_n": 0.02},
+            lambda oh: (
+                4.35
+                * np.exp(
+                    0.5
+                    * (0.53 - 0.045 * math.log(0.02) - 0.097 * math.log(10) * (oh - 8.69))
+                    / 10 ** (oh - 8.69)
+                    - 0.5 * (0.53 - 0.045 * math.log(0.02))
+                )
+            ),
+        ),
+        ({"alpha_co": "schruba2012"}, lambda oh: 8 * 10 ** (-2 * (oh - 8.7))),
+    ],
+    ids=["accurso2017", "wolfire2010", "schruba2012"],
+)
+def test_alpha_co_in_the_pixels(out, gas, alpha) -> None:
+    galactic = image(reduced(out), "sigma_mol") / 4.35
+    folder = reduced(out, gas={"line_ratio": 0.65, **gas})
+    got, oh = image(folder, "sigma_mol"), image(folder, "metallicity")
+    seen = np.isfinite(got)
+    np.testing.assert_allclose(got[seen], (galactic * alpha(oh))[seen], rtol=1e-5)
+
+
+def test_doubt_is_written_down(out) -> None:
+    gas = {"line_ratio": 0.65, "alpha_co": "amorin2016"}
+    folder = reduced(out, gas=gas)
+    history = " ".join(fits.getheader(folder / "sigma_mol.fits")["HISTORY"])
+    assert "log10 alpha_CO = 0.68" in history
+    assert "coefficients from memory" in history
+    compare_relations(out / "run", overwrite=True)
+    summary = json.loads((out / "run" / "summary.json").read_text())
+    assert summary["records"]["amorin2016"]["certainty"] == "from memory"
+    assert summary["records"]["leroy2008_thin"]["certainty"] == "verified"
