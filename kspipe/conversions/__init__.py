@@ -6,6 +6,7 @@ from kspipe.conversions.atomic import ATOMIC, AtomicGas
 from kspipe.conversions.convert import Choices, Converted, Parameters, convert
 from kspipe.conversions.extinction import EXTINCTION, Extinction
 from kspipe.conversions.inputs import INPUTS, Input
+from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
 from kspipe.conversions.metallicity import oh_from_gradient, z_prime
 from kspipe.conversions.record import Range, Record
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
@@ -16,6 +17,7 @@ __all__ = [
     "ATOMIC",
     "EXTINCTION",
     "INPUTS",
+    "LINE_RATIO",
     "STAR_FORMATION",
     "AlphaCO",
     "AtomicGas",
@@ -23,6 +25,7 @@ __all__ = [
     "Converted",
     "Extinction",
     "Input",
+    "LineRatio",
     "Parameters",
     "Range",
     "Record",

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from kspipe.conversions.alpha_co import ALPHA_CO
 from kspipe.conversions.atomic import ATOMIC
 from kspipe.conversions.extinction import EXTINCTION
+from kspipe.conversions.line_ratio import LINE_RATIO
 from kspipe.conversions.molecular import molecular_gas
 from kspipe.conversions.star_formation import STAR_FORMATION
 from kspipe.core.constants import OH_SOLAR
@@ -39,6 +40,8 @@ class Choices:
         Star-formation record.
     alpha_co : str or None
         alpha_CO record; None for atomic gas only.
+    line_ratio : str or None
+        Line-ratio record; None where the ratio is a number among the parameters.
     atomic : str
         Atomic gas record.
     extinction : mapping of str to str
@@ -48,6 +51,7 @@ class Choices:
     calibration: str
     alpha_co: str | None = None
     atomic: str = "leroy2008_thin"
+    line_ratio: str | None = None
     extinction: Mapping[str, str] = field(
         default_factory=lambda: {
             "FUV": "bianchi2017",
@@ -146,13 +150,14 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
     if "HI" in intensity:
         per_hi = ATOMIC.get(choices.atomic).msun_pc2_per_k_kms * cos_i
         made.add("sigma_atom", per_hi * intensity["HI"], {"HI": per_hi})
+    # First, because a line ratio may depend on it.
+    slopes = _sfr_slopes(intensity, choices, parameters, cos_i)
+    terms = [slopes[tracer] * intensity[tracer] for tracer in slopes]
+    made.add("sigma_sfr", sum(terms[1:], terms[0]), slopes)
     if choices.alpha_co is not None:
         _add_molecular(made, intensity, choices, parameters)
     if "sigma_atom" in made.values:
         _add_gas(made)
-    slopes = _sfr_slopes(intensity, choices, parameters, cos_i)
-    terms = [slopes[tracer] * intensity[tracer] for tracer in slopes]
-    made.add("sigma_sfr", sum(terms[1:], terms[0]), slopes)
     return Converted(made.values, made.derivatives, made.by_parameter, made.flags)
 
 
@@ -187,12 +192,17 @@ def _add_molecular(
         for name in ("oh", "sigma_star", "ms_offset_dex", "g0_over_n")
         if (value := getattr(parameters, name)) is not None
     }
-    face_on = cos_i / parameters.line_ratio * intensity[line]
+    ratio, ratio_log_slope = _line_ratio(line, choices, parameters, made.values["sigma_sfr"])
+    face_on = cos_i / ratio * intensity[line]
     gas = molecular_gas(record, face_on, made.values.get("sigma_atom"), given)
-    slopes = {line: gas.per_line / parameters.line_ratio * cos_i}
-    value = gas.alpha_co / parameters.line_ratio * cos_i * intensity[line]
+    slopes = {line: gas.per_line / ratio * cos_i}
+    value = gas.alpha_co / ratio * cos_i * intensity[line]
     if gas.per_atom is not None:
         slopes["HI"] = gas.per_atom * made.derivatives["sigma_atom"]["HI"]
+    if ratio_log_slope is not None:
+        per_sfr = -gas.per_line * face_on * ratio_log_slope
+        for tracer, slope in made.derivatives["sigma_sfr"].items():
+            slopes[tracer] = per_sfr * slope
     made.add("sigma_mol", value, slopes)
     shape = made.values["sigma_mol"].shape
     if gas.per_star is not None:
@@ -200,6 +210,23 @@ def _add_molecular(
     if gas.negative_co is not None:
         made.flags["negative_co"] = np.broadcast_to(gas.negative_co, shape)
     made.flags["outside_range"] = np.broadcast_to(gas.outside_range, shape)
+
+
+def _line_ratio(
+    line: str, choices: Choices, parameters: Parameters, sigma_sfr: Array
+) -> tuple[Array, Array | None]:
+    """Ratio to CO(1-0), and its logarithmic slope with Sigma_SFR where it has one."""
+    if choices.line_ratio is None:
+        return np.asarray(parameters.line_ratio, dtype=float), None
+    record = LINE_RATIO.get(choices.line_ratio)
+    if (record.upper, record.lower) != (line, "CO(1-0)"):
+        raise KeyError(
+            f"record {record.key!r} is {record.upper} over {record.lower}; {line} over CO(1-0) is "
+            "needed"
+        )
+    if not record.needs:
+        return np.asarray(record.value), None
+    return record(sigma_sfr)
 
 
 def _add_gas(made: _Products) -> None:

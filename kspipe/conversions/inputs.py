@@ -59,6 +59,14 @@ INPUTS: Final = {
             6000.0,
         ),
         Input(
+            "sigma_sfr",
+            "Sigma_SFR",
+            "star-formation rate surface density, face-on [Msun/yr/kpc2]",
+            0.01,
+            1e-4,
+            1.0,
+        ),
+        Input(
             "ms_offset_dex",
             "log Delta(MS)",
             "specific star-formation rate of the galaxy over that of the main sequence [dex]",

@@ -48,6 +48,7 @@ CITATIONS = _citations(
     Citation(
         "cardelli1989", "Cardelli, Clayton & Mathis 1989", "ApJ 345, 245", "1989ApJ...345..245C"
     ),
+    Citation("denbrok2021", "Den Brok et al. 2021", "MNRAS 504, 3221", "2021MNRAS.504.3221D"),
     Citation("genzel2012", "Genzel et al. 2012", "ApJ 746, 69", "2012ApJ...746...69G"),
     Citation("genzel2015", "Genzel et al. 2015", "ApJ 800, 20", "2015ApJ...800...20G"),
     Citation("hunt2015", "Hunt et al. 2015", "A&A 583, A114"),
@@ -63,11 +64,13 @@ CITATIONS = _citations(
     Citation("leroy2008", "Leroy et al. 2008", "AJ 136, 2782", "2008AJ....136.2782L"),
     Citation("leroy2012", "Leroy et al. 2012", "AJ 144, 3", "2012AJ....144....3L"),
     Citation("leroy2022", "Leroy et al. 2022", "ApJ 927, 149", "2022ApJ...927..149L"),
+    Citation("saintonge2017", "Saintonge et al. 2017", "ApJS 233, 22"),
     Citation("schinnerer2024", "Schinnerer & Leroy 2024", "ARA&A 62, 369"),
     Citation("schruba2012", "Schruba et al. 2012", "AJ 143, 138"),
     Citation("sun2020", "Sun et al. 2020", "ApJ 892, 148"),
     Citation("wolfire2010", "Wolfire, Hollenbach & McKee 2010", "ApJ 716, 1191"),
     Citation("wyder2007", "Wyder et al. 2007", "ApJS 173, 293"),
+    Citation("yajima2021", "Yajima et al. 2021", "PASJ 73, 257"),
 )
 
 

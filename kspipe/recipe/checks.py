@@ -7,7 +7,7 @@ from collections import Counter
 from collections.abc import Iterable, Mapping
 from typing import Any, Final
 
-from kspipe.conversions import ALPHA_CO, INPUTS, STAR_FORMATION
+from kspipe.conversions import ALPHA_CO, INPUTS, LINE_RATIO, STAR_FORMATION
 from kspipe.core.errors import Fault, nearest
 from kspipe.core.tracers import CO_LINES
 from kspipe.recipe.models import (
@@ -106,13 +106,30 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
                 Fault(
                     "gas.line_ratio",
                     f"{lines[0]} needs its ratio to CO(1-0)",
-                    "type line_ratio, for example 0.65 for CO(2-1) (Leroy et al. 2022: 0.50-0.83)",
+                    "type line_ratio, for example 0.65 for CO(2-1) (Leroy et al. 2022: 0.50-0.83), "
+                    f"or the key of a record: {_listed(LINE_RATIO.keys())}",
                 )
             )
-        if lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
+        if lines and isinstance(gas.line_ratio, str):
+            faults += _line_ratio_faults(lines[0], gas.line_ratio)
+        elif lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
             faults.append(Fault("gas.line_ratio", "CO(1-0) takes no line ratio", "remove the key"))
         faults += _alpha_co_faults(gas)
     return faults
+
+
+def _line_ratio_faults(line: str, key: str) -> list[Fault]:
+    record = LINE_RATIO.get(key)
+    if (record.upper, record.lower) == (line, "CO(1-0)"):
+        return []
+    fit = [k.key for k in LINE_RATIO if (k.upper, k.lower) == (line, "CO(1-0)")]
+    return [
+        Fault(
+            "gas.line_ratio",
+            f'"{key}" is {record.upper} over {record.lower}; the map is {line}',
+            f"records for it: {_listed(fit)}" if fit else "remove the key",
+        )
+    ]
 
 
 # Keys of [gas] that stand for an input of alpha_CO records.

@@ -19,7 +19,7 @@ from pydantic import (
     model_validator,
 )
 
-from kspipe.conversions import ALPHA_CO, EXTINCTION, STAR_FORMATION
+from kspipe.conversions import ALPHA_CO, EXTINCTION, LINE_RATIO, STAR_FORMATION
 from kspipe.core.errors import nearest
 from kspipe.core.registry import Registry
 from kspipe.core.tracers import TRACERS
@@ -433,11 +433,28 @@ class ForegroundTable(Table):
     halpha: Annotated[str, _key_of(EXTINCTION)] = "cardelli1989"
 
 
+def _line_ratio(typed: Any) -> Measured | str | None:
+    """Read ``0.65 +- 0.08``, or the key of a record."""
+    if isinstance(typed, str) and typed[:1].isalpha():
+        if typed not in LINE_RATIO:
+            raise ValueError(f"{LINE_RATIO.unknown(typed)}; or a number such as 0.65")
+        return typed
+    return None if typed is None else parse_measured(typed, "", '0.65 or "0.65 +- 0.08"')
+
+
+def _line_ratio_bounds(ratio: Measured | str | None) -> Measured | str | None:
+    if isinstance(ratio, Measured) and not 0 < ratio.value < 10:
+        raise ValueError(f"{ratio.text!r}: expected a ratio between 0 and 10")
+    return ratio
+
+
 class GasTable(Table):
     """From lines to atomic and molecular gas."""
 
     alpha_co: Annotated[str, _key_of(ALPHA_CO)]
-    line_ratio: Ratio | None = None
+    line_ratio: Annotated[
+        Measured | str | None, BeforeValidator(_line_ratio), AfterValidator(_line_ratio_bounds)
+    ] = None
     ms_offset: Offset | None = None
     g0_over_n: FieldOverDensity | None = None
 

@@ -14,7 +14,7 @@ from astropy.io import fits
 from numpy.typing import NDArray
 
 from kspipe import __version__
-from kspipe.conversions import ALPHA_CO, ATOMIC, EXTINCTION, STAR_FORMATION, Choices
+from kspipe.conversions import ALPHA_CO, ATOMIC, EXTINCTION, LINE_RATIO, STAR_FORMATION, Choices
 from kspipe.core.errors import Fault, KspipeWarning, MapError
 from kspipe.kernels.geometry import beam_axes
 from kspipe.maps import MapSource
@@ -183,9 +183,11 @@ def _checksum(image: Any) -> str:
 
 def choices_of(recipe: Recipe) -> Choices:
     """Pick the records that a recipe names, by key."""
+    gas = None if isinstance(recipe.gas, str) else recipe.gas
     return Choices(
         calibration=recipe.star_formation.calibration,
-        alpha_co=None if isinstance(recipe.gas, str) else recipe.gas.alpha_co,
+        alpha_co=gas.alpha_co if gas else None,
+        line_ratio=gas.line_ratio if gas and isinstance(gas.line_ratio, str) else None,
         extinction={
             "FUV": recipe.foreground.uv,
             "NUV": recipe.foreground.uv,
@@ -200,6 +202,8 @@ def records_of(recipe: Recipe) -> list[Any]:
     records: list[Any] = [ATOMIC.get(choices.atomic)]
     if choices.alpha_co is not None:
         records.append(ALPHA_CO.get(choices.alpha_co))
+    if choices.line_ratio is not None:
+        records.append(LINE_RATIO.get(choices.line_ratio))
     calibration = STAR_FORMATION.get(choices.calibration)
     records.append(calibration)
     keys = {choices.extinction[t] for t in calibration.tracers if t in choices.extinction}

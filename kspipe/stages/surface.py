@@ -25,6 +25,7 @@ from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.maps.source import StoredImage
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe
+from kspipe.recipe.quantity import Measured
 from kspipe.stages.plan import choices_of
 
 __all__ = ["Disc", "parameters_of", "surfaces_of"]
@@ -119,7 +120,7 @@ def parameters_of(recipe: Recipe, oh: Array) -> Parameters:
     return Parameters(
         cos_i=recipe.galaxy.cos_i,
         oh=oh,
-        line_ratio=ratio.value if ratio else 1.0,
+        line_ratio=ratio.value if isinstance(ratio, Measured) else 1.0,
         ebv=recipe.foreground.ebv.value,
         nii_ratio=nii.value if nii else 0.0,
         as_24um=as_24um.value if as_24um else 1.0,

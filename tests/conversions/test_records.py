@@ -7,7 +7,16 @@ from typing import get_args
 import numpy as np
 import pytest
 
-from kspipe.conversions import ALPHA_CO, ATOMIC, EXTINCTION, INPUTS, STAR_FORMATION, AlphaCO
+from kspipe.conversions import (
+    ALPHA_CO,
+    ATOMIC,
+    EXTINCTION,
+    INPUTS,
+    LINE_RATIO,
+    STAR_FORMATION,
+    AlphaCO,
+    LineRatio,
+)
 from kspipe.conversions.record import Certainty, Range, Record
 from kspipe.core.citations import cite
 from kspipe.core.constants import HELIUM_FACTOR
@@ -18,6 +27,7 @@ FAMILIES = {
     "atomic": ATOMIC,
     "alpha_co": ALPHA_CO,
     "extinction": EXTINCTION,
+    "line_ratio": LINE_RATIO,
     "star_formation": STAR_FORMATION,
     "relations": LAWS,
 }
@@ -72,7 +82,7 @@ def test_a_record_cannot_be_changed(record) -> None:
 @every_conversion
 def test_conventions_are_stated(record: Record) -> None:
     assert record.helium_factor in (None, HELIUM_FACTOR)
-    assert (record.helium_factor is None) == (record in [*EXTINCTION, *STAR_FORMATION])
+    assert (record.helium_factor is None) == (record in [*EXTINCTION, *LINE_RATIO, *STAR_FORMATION])
     assert (record.imf is None) == (record not in list(STAR_FORMATION))
     assert record.scatter_dex is None or 0 < record.scatter_dex < 1
     for limits in record.ranges:
@@ -175,6 +185,21 @@ def test_alpha_is_flagged_outside_its_range(record: AlphaCO) -> None:
                 assert not record.outside({allowed.name: np.array(edge)})
                 assert record.outside({allowed.name: np.array(edge * beyond)})
         assert not record.outside({allowed.name: np.array(np.nan)})
+
+
+@pytest.mark.parametrize("record", list(LINE_RATIO), ids=lambda record: record.key)
+def test_line_ratios_on_arrays(record: LineRatio) -> None:
+    sfr = drawn(("sigma_sfr",), (5, 8))["sigma_sfr"]
+    ratio, log_slope = record(sfr)
+    assert ratio.shape == log_slope.shape == (5, 8)
+    assert np.all((record.low <= ratio) & (ratio <= record.high))
+    # CO(3-2) to CO(1-0): the higher the line, the fainter, in discs.
+    assert 0 < record.low < record.value <= 1.0
+    for index in np.ndindex(sfr.shape):
+        assert float(record(sfr[index])[0]) == pytest.approx(ratio[index], rel=1e-12)
+    assert np.isnan(record(np.array(np.nan))[0]) == bool(record.needs)
+    printed = numbers(record.formula)
+    assert {record.value, record.low, record.high} <= set(printed)
 
 
 @every_alpha

@@ -424,6 +424,18 @@ def test_files_in_memory_may_be_missing(good, folder) -> None:
         ({"gas__g0_over_n": 0.01}, "gas.g0_over_n", "belongs to wolfire2010"),
         ({"gas__alpha_co": "wolfire2010", "gas__g0_over_n": 0}, "gas.g0_over_n", "positive"),
         ({"gas__alpha_co": "accurso2017", "gas__ms_offset": 0.2}, "gas.ms_offset", "no unit"),
+        # Line ratios by key.
+        ({"gas__line_ratio": "leroy2022"}, "gas.line_ratio", 'mean "leroy2022_r'),
+        ({"gas__line_ratio": "leroy2022_r31"}, "gas.line_ratio", "records for it: denbrok2021"),
+        ({"gas__line_ratio": "leroy2022_r32"}, "gas.line_ratio", "CO(3-2) over CO(2-1)"),
+        ({"gas__line_ratio": 0}, "gas.line_ratio", "between 0 and 10"),
+        ({"gas__line_ratio": "0.65 K"}, "gas.line_ratio", "has the unit"),
+        ({"gas__line_ratio": ...}, "gas.line_ratio", "schinnerer2024_r21"),
+        (
+            {"maps__co__tracer": "CO(1-0)", "gas__line_ratio": "leroy2022_r21"},
+            "gas.line_ratio",
+            "remove the key",
+        ),
         # Star formation.
         ({"star_formation__maps": ["fuv"]}, "star_formation.maps", "takes FUV and 24um"),
         ({"star_formation__maps": ["fuv", "fuv"]}, "star_formation.maps", "takes FUV and 24um"),

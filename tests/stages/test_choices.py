@@ -77,3 +77,21 @@ def test_doubt_is_written_down(out) -> None:
     summary = json.loads((out / "run" / "summary.json").read_text())
     assert summary["records"]["amorin2016"]["certainty"] == "from memory"
     assert summary["records"]["leroy2008_thin"]["certainty"] == "verified"
+
+
+def test_a_line_ratio_by_key(out) -> None:
+    base = reduced(out)
+    co = image(base, "sigma_mol") * 0.65
+    folder = reduced(
+        out, gas={"alpha_co": "bolatto2013_galactic", "line_ratio": "schinnerer2024_r21"}
+    )
+    got, sfr = image(folder, "sigma_mol"), image(folder, "sigma_sfr")
+    seen = np.isfinite(got)
+    # Schinnerer & Leroy 2024, Table 1.
+    ratio = np.clip(0.65 * (np.maximum(sfr, 0) / 1.8e-2) ** 0.125, 0.35, 1.0)
+    np.testing.assert_allclose(got[seen], (co / ratio)[seen], rtol=1e-5)
+    assert "schinnerer2024_r21" in " ".join(fits.getheader(folder / "sigma_mol.fits")["HISTORY"])
+    text = (out / "run" / "recipe.toml").read_text()
+    assert 'line_ratio = "schinnerer2024_r21"' in text
+    # The written recipe is a recipe.
+    compare_relations(out / "run", overwrite=True)
