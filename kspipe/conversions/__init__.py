@@ -1,10 +1,17 @@
 """Published conversions from intensity to surface density, one record each."""
 
-from kspipe.conversions import alpha_co_density, alpha_co_metallicity  # noqa: F401 - fill the shelf
+from kspipe.conversions import (  # noqa: F401 - fill the shelves
+    alpha_co_density,
+    alpha_co_metallicity,
+    star_formation_hybrid,
+    star_formation_single,
+)
 from kspipe.conversions.alpha_co import ALPHA_CO, AlphaCO
 from kspipe.conversions.atomic import ATOMIC, AtomicGas
-from kspipe.conversions.convert import Choices, Converted, Parameters, convert
+from kspipe.conversions.choices import Choices, Parameters
+from kspipe.conversions.convert import Converted, convert
 from kspipe.conversions.extinction import EXTINCTION, Extinction
+from kspipe.conversions.imf import IMFS, Imf, imf_factor
 from kspipe.conversions.inputs import INPUTS, Input
 from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
 from kspipe.conversions.metallicity import oh_from_gradient, z_prime
@@ -16,6 +23,7 @@ __all__ = [
     "ALPHA_CO",
     "ATOMIC",
     "EXTINCTION",
+    "IMFS",
     "INPUTS",
     "LINE_RATIO",
     "STAR_FORMATION",
@@ -24,6 +32,7 @@ __all__ = [
     "Choices",
     "Converted",
     "Extinction",
+    "Imf",
     "Input",
     "LineRatio",
     "Parameters",
@@ -33,6 +42,7 @@ __all__ = [
     "Surface",
     "carry_noise",
     "convert",
+    "imf_factor",
     "make_surface",
     "oh_from_gradient",
     "z_prime",

@@ -14,86 +14,17 @@ from numpy.typing import NDArray
 
 from kspipe.conversions.alpha_co import ALPHA_CO
 from kspipe.conversions.atomic import ATOMIC
-from kspipe.conversions.extinction import EXTINCTION
+from kspipe.conversions.choices import Choices, Parameters
+from kspipe.conversions.corrections import apply, corrections_of
+from kspipe.conversions.imf import imf_factor
 from kspipe.conversions.line_ratio import LINE_RATIO
 from kspipe.conversions.molecular import molecular_gas
 from kspipe.conversions.star_formation import STAR_FORMATION
-from kspipe.core.constants import OH_SOLAR
 from kspipe.core.tracers import CO_LINES
 
-__all__ = ["NII_DOUBLET", "Choices", "Converted", "Parameters", "convert"]
+__all__ = ["Converted", "convert"]
 
 Array = NDArray[np.float64]
-
-# [NII]6548 + [NII]6583 over [NII]6583: transition probabilities give 6583/6548 = 3.05 (common
-# practice).
-NII_DOUBLET = 1.0 + 1.0 / 3.05
-
-
-@dataclass(frozen=True)
-class Choices:
-    """Which records are used, by key, so that a choice travels between processes.
-
-    Attributes
-    ----------
-    calibration : str
-        Star-formation record.
-    alpha_co : str or None
-        alpha_CO record; None for atomic gas only.
-    line_ratio : str or None
-        Line-ratio record; None where the ratio is a number among the parameters.
-    atomic : str
-        Atomic gas record.
-    extinction : mapping of str to str
-        Extinction record of each tracer that needs one.
-    """
-
-    calibration: str
-    alpha_co: str | None = None
-    atomic: str = "leroy2008_thin"
-    line_ratio: str | None = None
-    extinction: Mapping[str, str] = field(
-        default_factory=lambda: {
-            "FUV": "bianchi2017",
-            "NUV": "bianchi2017",
-            "Halpha": "cardelli1989",
-        }
-    )
-
-
-@dataclass(frozen=True)
-class Parameters:
-    """Numbers that are not records; each a float or an array that broadcasts with the maps.
-
-    Attributes
-    ----------
-    cos_i : array_like
-        Cosine of the inclination; enters every surface density exactly once.
-    oh : array_like
-        Metallicity, 12 + log10(O/H).
-    line_ratio : array_like
-        Brightness of the CO line used over CO(1-0); 1 for CO(1-0).
-    ebv : array_like
-        Foreground E(B-V) [mag].
-    nii_ratio : array_like
-        [NII]6583 / Halpha in the H-alpha map; 0 where it is free of [NII].
-    as_24um : array_like
-        24 um over 22 um intensity, where a 22 um map stands for 24 um.
-    sigma_star : array_like or None
-        Stellar surface density [Msun/pc2], face-on, at the beam of the maps.
-    ms_offset_dex, g0_over_n : array_like or None
-        As in `kspipe.conversions.inputs.INPUTS`; only some alpha_CO records need them.
-    """
-
-    cos_i: Array | float
-    oh: Array | float = OH_SOLAR
-    line_ratio: Array | float = 1.0
-    ebv: Array | float = 0.0
-    nii_ratio: Array | float = 0.0
-    as_24um: Array | float = 1.0
-    sigma_star: Array | float | None = None
-    ms_offset_dex: Array | float | None = None
-    g0_over_n: Array | float | None = None
 
 
 @dataclass(frozen=True)
@@ -110,8 +41,9 @@ class Converted:
     by_parameter : dict of str to dict of str to float64 array
         The same for surface densities given as parameters: ``["sigma_mol"]["sigma_star"]``.
     flags : dict of str to bool array
-        ``negative_co`` (alpha_CO was taken at zero CO) and ``outside_range`` (an input of the
-        alpha_CO record), where they can occur.
+        ``negative_co`` (alpha_CO was taken at zero CO), ``outside_range`` (an input of the
+        alpha_CO record) and ``no_solution`` (a power law of a pixel at or below zero), where they
+        can occur.
     """
 
     values: dict[str, Array]
@@ -151,9 +83,7 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
         per_hi = ATOMIC.get(choices.atomic).msun_pc2_per_k_kms * cos_i
         made.add("sigma_atom", per_hi * intensity["HI"], {"HI": per_hi})
     # First, because a line ratio may depend on it.
-    slopes = _sfr_slopes(intensity, choices, parameters, cos_i)
-    terms = [slopes[tracer] * intensity[tracer] for tracer in slopes]
-    made.add("sigma_sfr", sum(terms[1:], terms[0]), slopes)
+    _add_sfr(made, intensity, choices, parameters)
     if choices.alpha_co is not None:
         _add_molecular(made, intensity, choices, parameters)
     if "sigma_atom" in made.values:
@@ -242,24 +172,31 @@ def _add_gas(made: _Products) -> None:
     made.add("sigma_gas", value, slopes)
 
 
-def _sfr_slopes(
-    intensity: Mapping[str, Array], choices: Choices, parameters: Parameters, cos_i: Array
-) -> dict[str, Array]:
-    """Sigma_SFR per stored intensity of each tracer: calibration times corrections times cos i."""
+def _add_sfr(
+    made: _Products, intensity: Mapping[str, Array], choices: Choices, parameters: Parameters
+) -> None:
+    """Star formation: the terms of the calibration, each with its slope."""
     record = STAR_FORMATION.get(choices.calibration)
-    slopes = {}
-    for tracer, coefficient in record.coefficients.items():
-        slope = np.asarray(coefficient * cos_i)
-        if tracer in choices.extinction:
-            extinction = EXTINCTION.get(choices.extinction[tracer]).coefficients[tracer]
-            slope = slope * 10.0 ** (0.4 * extinction * np.asarray(parameters.ebv, dtype=float))
-        if tracer == "Halpha":
-            slope = slope / (1.0 + NII_DOUBLET * np.asarray(parameters.nii_ratio, dtype=float))
-        stands_in = tracer == "24um" and "24um" not in intensity
-        if stands_in:
-            slope = slope * parameters.as_24um
-        source = "22um" if stands_in else tracer
-        if source not in intensity:
-            raise KeyError(f"record {record.key!r} needs {tracer}, which is not among the maps")
-        slopes[source] = slope
-    return slopes
+    per_intensity = corrections_of(record, intensity, choices, parameters)
+    cos_i = np.asarray(parameters.cos_i, dtype=float)
+    imf = imf_factor(str(record.imf), choices.imf)
+    terms, slopes = [], {}
+    for tracer, (source, corrections) in per_intensity.items():
+        coefficient, power = record.coefficients[tracer], record.powers.get(tracer)
+        if imf != 1.0:
+            coefficient *= imf
+        stored = intensity[source]
+        if power is None:
+            slopes[source] = apply(np.asarray(coefficient * cos_i), corrections)
+            terms.append(slopes[source] * stored)
+            continue
+        positive = np.where(stored > 0, stored, np.nan)
+        face_on = apply(cos_i, corrections) * positive
+        terms.append(coefficient * face_on**power)
+        slopes[source] = power * terms[-1] / positive
+        unsolved = made.flags.get("no_solution", np.zeros((), dtype=bool))
+        made.flags["no_solution"] = unsolved | (stored <= 0)
+    made.add("sigma_sfr", sum(terms[1:], terms[0]), slopes)
+    if "no_solution" in made.flags:
+        shape = made.values["sigma_sfr"].shape
+        made.flags["no_solution"] = np.broadcast_to(made.flags["no_solution"], shape)

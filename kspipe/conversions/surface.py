@@ -8,7 +8,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.conversions.convert import Choices, Converted, Parameters, convert
+from kspipe.conversions.choices import Choices, Parameters
+from kspipe.conversions.convert import Converted, convert
 from kspipe.kernels.noise import NoiseTerm, propagate, total_error
 
 __all__ = ["Surface", "carry_noise", "make_surface"]

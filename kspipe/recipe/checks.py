@@ -4,12 +4,18 @@ from __future__ import annotations
 
 import math
 from collections import Counter
-from collections.abc import Iterable, Mapping
+from collections.abc import Mapping
 from typing import Any, Final
 
-from kspipe.conversions import ALPHA_CO, INPUTS, LINE_RATIO, STAR_FORMATION
+from kspipe.conversions import LINE_RATIO, STAR_FORMATION
 from kspipe.core.errors import Fault, nearest
 from kspipe.core.tracers import CO_LINES
+from kspipe.recipe.check_records import (
+    alpha_co_faults,
+    convention_faults,
+    line_ratio_faults,
+    listed,
+)
 from kspipe.recipe.models import (
     GalaxyTable,
     GasTable,
@@ -36,6 +42,9 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
     faults += _map_extras(maps)
     if isinstance(tables["star_formation"], StarFormationTable):
         faults += _star_formation_faults(tables["star_formation"], tables["maps"])
+        faults += convention_faults(
+            tables["star_formation"], tables["foreground"], tables["relations"]
+        )
     galaxy, metallicity = tables["galaxy"], tables["metallicity"]
     if isinstance(galaxy, GalaxyTable):
         per_r25 = isinstance(metallicity, MetallicityTable) and metallicity.slope[1] == "r25"
@@ -107,67 +116,15 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
                     "gas.line_ratio",
                     f"{lines[0]} needs its ratio to CO(1-0)",
                     "type line_ratio, for example 0.65 for CO(2-1) (Leroy et al. 2022: 0.50-0.83), "
-                    f"or the key of a record: {_listed(LINE_RATIO.keys())}",
+                    f"or the key of a record: {listed(LINE_RATIO.keys())}",
                 )
             )
         if lines and isinstance(gas.line_ratio, str):
-            faults += _line_ratio_faults(lines[0], gas.line_ratio)
+            faults += line_ratio_faults(lines[0], gas.line_ratio)
         elif lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
             faults.append(Fault("gas.line_ratio", "CO(1-0) takes no line ratio", "remove the key"))
-        faults += _alpha_co_faults(gas)
+        faults += alpha_co_faults(gas)
     return faults
-
-
-def _line_ratio_faults(line: str, key: str) -> list[Fault]:
-    record = LINE_RATIO.get(key)
-    if (record.upper, record.lower) == (line, "CO(1-0)"):
-        return []
-    fit = [k.key for k in LINE_RATIO if (k.upper, k.lower) == (line, "CO(1-0)")]
-    return [
-        Fault(
-            "gas.line_ratio",
-            f'"{key}" is {record.upper} over {record.lower}; the map is {line}',
-            f"records for it: {_listed(fit)}" if fit else "remove the key",
-        )
-    ]
-
-
-# Keys of [gas] that stand for an input of alpha_CO records.
-_GAS_INPUTS: Final = {"ms_offset": "ms_offset_dex", "g0_over_n": "g0_over_n"}
-
-
-def _alpha_co_faults(gas: GasTable) -> list[Fault]:
-    """What an alpha_CO record needs and the recipe does not give, and the other way round."""
-    record = ALPHA_CO.get(gas.alpha_co)
-    needs = set(record.needs)
-    if "sigma_total" in needs:
-        needs = needs - {"sigma_total"} | {"sigma_star"}
-    given = {"oh"} | {_GAS_INPUTS[key] for key in _GAS_INPUTS if getattr(gas, key) is not None}
-    faults = [
-        Fault(
-            f"gas.{key}",
-            f'"{record.key}" takes no {INPUTS[name].meaning}',
-            f"remove the key; it belongs to {_listed(k.key for k in ALPHA_CO if name in k.needs)}",
-        )
-        for key, name in _GAS_INPUTS.items()
-        if name in given - needs
-    ]
-    for name in sorted(needs - given):
-        do_without = _listed(other.key for other in ALPHA_CO if set(other.needs) <= given)
-        faults.append(
-            Fault(
-                "gas.alpha_co",
-                f'"{record.key}" needs the {INPUTS[name].meaning}, which the recipe does not give',
-                "; ".join(
-                    filter(None, (INPUTS[name].do, f"records that do without: {do_without}"))
-                ),
-            )
-        )
-    return faults
-
-
-def _listed(keys: Iterable[str]) -> str:
-    return ", ".join(sorted(keys))
 
 
 def _map_extras(maps: Mapping[str, MapTable]) -> list[Fault]:

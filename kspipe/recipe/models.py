@@ -431,6 +431,7 @@ class ForegroundTable(Table):
     ebv: Reddening
     uv: Annotated[str, _key_of(EXTINCTION)] = "bianchi2017"
     halpha: Annotated[str, _key_of(EXTINCTION)] = "cardelli1989"
+    ebv_scale: Literal["SFD", "SF11"] | None = None
 
 
 def _line_ratio(typed: Any) -> Measured | str | None:
@@ -464,6 +465,7 @@ class StarFormationTable(Table):
 
     calibration: Annotated[str, _key_of(STAR_FORMATION)]
     maps: tuple[str, ...]
+    imf: Literal["Kroupa", "Salpeter", "Chabrier"] = "Kroupa"
 
 
 class RelationTable(Table):

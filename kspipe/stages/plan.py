@@ -187,6 +187,8 @@ def choices_of(recipe: Recipe) -> Choices:
     return Choices(
         calibration=recipe.star_formation.calibration,
         alpha_co=gas.alpha_co if gas else None,
+        imf=recipe.star_formation.imf,
+        ebv_scale=recipe.foreground.ebv_scale,
         line_ratio=gas.line_ratio if gas and isinstance(gas.line_ratio, str) else None,
         extinction={
             "FUV": recipe.foreground.uv,

@@ -4,19 +4,22 @@ from __future__ import annotations
 
 import logging
 import os
+import warnings
 from pathlib import Path
 from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
 
+from kspipe.conversions import STAR_FORMATION, imf_factor
+from kspipe.core.errors import KspipeWarning
 from kspipe.core.progress import Progress, no_progress
 from kspipe.kernels.coarse import evaluate_smoothly
 from kspipe.kernels.geometry import disc_radius, position_offsets
 from kspipe.maps.header import sky_of_pixels
 from kspipe.maps.product import read_matched, write_matched, write_product
 from kspipe.maps.read import load_map, relative_noise, with_photon_noise
-from kspipe.maps.skymap import SkyMap
+from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import match_map, measure_noise, measure_noise_correlation
 from kspipe.recipe import Recipe
 from kspipe.recipe.resolved import resolved_recipe
@@ -100,6 +103,7 @@ def reduce_maps(
             for name in plan.sources
         }
         disc = surfaces_of(recipe, matched, plan.grid)
+        _warn_unsolved(recipe, disc)
         (staging / "maps").mkdir()
         _write_maps(staging / "maps", plan, disc)
         (staging / "recipe.toml").write_text(
@@ -166,6 +170,7 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
     """Write the surface densities, ratios, metallicity and radius."""
     lines = [record.sentence for record in records_of(plan.recipe)]
     galaxy = plan.recipe.galaxy
+    lines += _imf_lines(plan.recipe)
     lines.append(
         f"face-on, helium included (1.36), cos i = {galaxy.cos_i:.5f} applied once; distance "
         f"{galaxy.distance.text}"
@@ -205,6 +210,29 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
             extensions={"COVERAGE": (everywhere, ""), "FLAGS": (disc.flags, "")},
             history=[note],
         )
+
+
+def _warn_unsolved(recipe: Recipe, disc: Disc) -> None:
+    n = int(np.sum((disc.flags & int(Flag.NO_SOLUTION)) != 0))
+    if n:
+        warnings.warn(
+            f'star_formation.calibration: "{recipe.star_formation.calibration}" is a power law, '
+            f"and {n} pixels are at or below zero: NaN, flagged no_solution. What is left is "
+            "biased towards bright pixels",
+            KspipeWarning,
+            stacklevel=2,
+        )
+
+
+def _imf_lines(recipe: Recipe) -> list[str]:
+    """Say what a change of initial mass function did; nothing where there was none."""
+    given = str(STAR_FORMATION.get(recipe.star_formation.calibration).imf)
+    wanted = recipe.star_formation.imf
+    if given == wanted:
+        return []
+    factor = imf_factor(given, wanted)
+    change = f"{given} to {wanted}, star formation x {factor:.5f}"
+    return [f"initial mass function: {change} (same number of stars of 30 Msun)"]
 
 
 def _found(plan: Plan) -> dict[str, dict[str, str]]:

@@ -22,7 +22,7 @@ from kspipe.relations import LAWS
 from kspipe.stages.plan import Plan, records_of
 from kspipe.stages.surface import Disc
 
-__all__ = ["make_summary", "summary_text"]
+__all__ = ["left_out", "make_summary", "summary_text"]
 
 
 def make_summary(
@@ -61,6 +61,7 @@ def make_summary(
         "n_pixels": int(used.sum()),
         "n_independent": independent_beams(int(used.sum()), pixel_area, beam),
         "n_samples": int((used & independent).sum()),
+        "n_left_out": left_out(disc, used),
         "gas": recipe.gas if isinstance(recipe.gas, str) else "atomic and molecular",
         "totals": _totals(recipe, disc, used, grid),
         "flags": {
@@ -82,6 +83,12 @@ def make_summary(
         },
         "sources": {key: str(cite(key)) for key in cited},
     }
+
+
+def left_out(disc: Disc, used: NDArray[np.bool_]) -> int:
+    """Count covered pixels with gas but, at or below zero, no star formation by a power law."""
+    unsolved = (disc.flags & int(Flag.NO_SOLUTION)) != 0
+    return int(np.sum(np.isfinite(disc.surfaces["sigma_gas"].value) & ~used & unsolved))
 
 
 def _totals(

@@ -11,11 +11,14 @@ from kspipe.conversions import (
     ALPHA_CO,
     ATOMIC,
     EXTINCTION,
+    IMFS,
     INPUTS,
     LINE_RATIO,
     STAR_FORMATION,
     AlphaCO,
+    Extinction,
     LineRatio,
+    StarFormation,
 )
 from kspipe.conversions.record import Certainty, Range, Record
 from kspipe.core.citations import cite
@@ -27,6 +30,7 @@ FAMILIES = {
     "atomic": ATOMIC,
     "alpha_co": ALPHA_CO,
     "extinction": EXTINCTION,
+    "imf": IMFS,
     "line_ratio": LINE_RATIO,
     "star_formation": STAR_FORMATION,
     "relations": LAWS,
@@ -82,8 +86,10 @@ def test_a_record_cannot_be_changed(record) -> None:
 @every_conversion
 def test_conventions_are_stated(record: Record) -> None:
     assert record.helium_factor in (None, HELIUM_FACTOR)
-    assert (record.helium_factor is None) == (record in [*EXTINCTION, *LINE_RATIO, *STAR_FORMATION])
-    assert (record.imf is None) == (record not in list(STAR_FORMATION))
+    assert (record.helium_factor is None) == (
+        record in [*EXTINCTION, *LINE_RATIO, *STAR_FORMATION, *IMFS]
+    )
+    assert (record.imf is None) == (record not in [*STAR_FORMATION, *IMFS])
     assert record.scatter_dex is None or 0 < record.scatter_dex < 1
     for limits in record.ranges:
         assert limits.low < limits.high
@@ -96,11 +102,51 @@ def numbers(text: str) -> list[float]:
 
 @pytest.mark.parametrize("record", [*EXTINCTION, *STAR_FORMATION], ids=lambda record: record.key)
 def test_the_printed_formula_holds_the_coefficients(record) -> None:
+    # As printed, or to the five digits of what follows from constants per luminosity.
     printed = numbers(record.formula)
-    assert set(record.coefficients.values()) <= set(printed)
+    for tracer, coefficient in record.coefficients.items():
+        if tracer not in getattr(record, "powers", {}):
+            assert any(coefficient == pytest.approx(n, rel=5e-5) for n in printed)
+    assert set(getattr(record, "powers", {}).values()) <= set(printed)
     assert set(record.coefficients) <= set(TRACERS)
     with pytest.raises(TypeError):
         record.coefficients["FUV"] = 0.0
+
+
+@pytest.mark.parametrize("record", list(STAR_FORMATION), ids=lambda record: record.key)
+def test_a_calibration_states_its_family(record: StarFormation) -> None:
+    assert record.family
+    assert record.imf in {imf.name for imf in IMFS}
+    assert record.is_linear == (not record.luminosity_powers)
+    assert set(record.luminosity) <= set(record.tracers)
+    assert set(record.powers) | set(record.luminosity_powers) <= set(record.tracers)
+    luminosities = {tracer: np.array([1e40, np.nan, -1e40]) for tracer in record.tracers}
+    if not record.luminosity:
+        with pytest.raises(KeyError, match=f"{record.key}.*surface brightness only"):
+            record.rate(luminosities)
+        return
+    rate = record.rate(luminosities)
+    assert rate[0] > 0
+    assert np.isnan(rate[1])
+    # A straight line keeps its sign, a power law has no value.
+    assert rate[2] == -rate[0] if record.is_linear else np.isnan(rate[2])
+
+
+@pytest.mark.parametrize("record", list(EXTINCTION), ids=lambda record: record.key)
+def test_an_extinction_on_both_scales(record: Extinction) -> None:
+    for tracer in record.coefficients:
+        own = record.magnitudes(tracer, np.array([0.0, 0.1, np.nan]))
+        assert own[0] == 0
+        assert own[1] > 0
+        assert np.isnan(own[2])
+        np.testing.assert_array_equal(
+            own, record.magnitudes(tracer, np.array([0.0, 0.1, np.nan]), record.ebv_scale)
+        )
+        # Schlafly & Finkbeiner 2011 (from memory): their E(B-V) is 0.86 of the older one.
+        same_sky = record.magnitudes(tracer, np.array(0.1), "SFD")
+        assert float(record.magnitudes(tracer, np.array(0.086), "SF11")) == pytest.approx(
+            float(same_sky), rel=1e-12
+        )
 
 
 @pytest.mark.parametrize("record", list(ATOMIC), ids=lambda record: record.key)

@@ -442,6 +442,11 @@ def test_files_in_memory_may_be_missing(good, folder) -> None:
         ({"star_formation__maps": ["fuv", "hi"]}, "star_formation.maps", "takes FUV and 24um"),
         ({"star_formation__maps": []}, "star_formation.maps", "none"),
         ({"star_formation__maps": "fuv"}, "star_formation.maps", "fuv"),
+        # Conventions of star formation and foreground.
+        ({"star_formation__imf": "Scalo"}, "star_formation.imf", "'Kroupa'"),
+        ({"star_formation__imf": "Salpeter"}, "star_formation.imf", "Kroupa IMF, not Salpeter"),
+        ({"foreground__uv": "odonnell1994"}, "foreground.uv", "records for it: bianchi2017"),
+        ({"foreground__ebv_scale": "sfd"}, "foreground.ebv_scale", "'SFD' or 'SF11'"),
         # Relations.
         ({"relations__shielding_kpc__law": ...}, "relations.shielding_kpc.law", "missing"),
         (

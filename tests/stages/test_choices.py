@@ -12,6 +12,7 @@ import pytest
 from astropy.io import fits
 from helpers import demo_recipe
 
+from kspipe.core.errors import KspipeWarning
 from kspipe.maps.product import read_image
 from kspipe.recipe import parse_recipe
 from kspipe.stages.compare import compare_relations
@@ -95,3 +96,33 @@ def test_a_line_ratio_by_key(out) -> None:
     assert 'line_ratio = "schinnerer2024_r21"' in text
     # The written recipe is a recipe.
     compare_relations(out / "run", overwrite=True)
+
+
+def test_an_initial_mass_function(out) -> None:
+    calibration = {"calibration": "kennicutt1998_fuv", "maps": ["fuv"]}
+    kroupa = image(reduced(out, star_formation=calibration), "sigma_sfr")
+    header = fits.getheader(out / "run" / "maps" / "sigma_sfr.fits")
+    assert "Salpeter to Kroupa, star formation x 0.64509" in " ".join(header["HISTORY"])
+    folder = reduced(out, star_formation={**calibration, "imf": "Salpeter"}, relations={})
+    salpeter = image(folder, "sigma_sfr")
+    seen = np.isfinite(salpeter)
+    # C334 of the reference sheet.
+    np.testing.assert_allclose((kroupa / salpeter)[seen], 0.64509, rtol=1e-4)
+    assert "to Kroupa" not in " ".join(fits.getheader(folder / "sigma_sfr.fits")["HISTORY"])
+    compare_relations(out / "run", overwrite=True)
+    text = (out / "run" / "pixels.ecsv").read_text()
+    assert "face-on, Salpeter IMF" in text
+
+
+def test_a_power_law_counts_what_it_leaves_out(out) -> None:
+    with pytest.warns(KspipeWarning, match=r"calzetti2007_24um.*power law, and \d+ pixels"):
+        reduced(out, star_formation={"calibration": "calzetti2007_24um", "maps": ["ir"]})
+    compare_relations(out / "run", overwrite=True)
+    summary = json.loads((out / "run" / "summary.json").read_text())
+    sfr, gas = (image(out / "run" / "maps", name) for name in ("sigma_sfr", "sigma_gas"))
+    assert summary["n_left_out"] == int(np.sum(np.isnan(sfr) & np.isfinite(gas))) > 100
+    assert summary["n_pixels"] == int(np.isfinite(sfr + gas).sum())
+    # Nothing is left out of a straight line.
+    reduced(out)
+    compare_relations(out / "run", overwrite=True)
+    assert json.loads((out / "run" / "summary.json").read_text())["n_left_out"] == 0
