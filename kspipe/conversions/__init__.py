@@ -14,9 +14,12 @@ from kspipe.conversions.extinction import EXTINCTION, Extinction
 from kspipe.conversions.imf import IMFS, Imf, imf_factor
 from kspipe.conversions.inputs import INPUTS, Input
 from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
+from kspipe.conversions.mass_metallicity import MASS_METALLICITY, MassMetallicity
 from kspipe.conversions.metallicity import oh_from_gradient, z_prime
+from kspipe.conversions.oh_scales import OH_SCALES, USUAL_SHIFT_DEX, scale_shift_dex
 from kspipe.conversions.record import Range, Record
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
+from kspipe.conversions.strong_lines import STRONG_LINES, StrongLine
 from kspipe.conversions.surface import Surface, carry_noise, make_surface
 
 __all__ = [
@@ -26,7 +29,11 @@ __all__ = [
     "IMFS",
     "INPUTS",
     "LINE_RATIO",
+    "MASS_METALLICITY",
+    "OH_SCALES",
     "STAR_FORMATION",
+    "STRONG_LINES",
+    "USUAL_SHIFT_DEX",
     "AlphaCO",
     "AtomicGas",
     "Choices",
@@ -35,15 +42,18 @@ __all__ = [
     "Imf",
     "Input",
     "LineRatio",
+    "MassMetallicity",
     "Parameters",
     "Range",
     "Record",
     "StarFormation",
+    "StrongLine",
     "Surface",
     "carry_noise",
     "convert",
     "imf_factor",
     "make_surface",
     "oh_from_gradient",
+    "scale_shift_dex",
     "z_prime",
 ]

@@ -42,6 +42,14 @@ INPUTS: Final = {
     for entry in (
         Input("oh", "OH", "metallicity, 12 + log10(O/H)", 8.5, 8.0, 8.8),
         Input("z_prime", "Z'", "metallicity, 10^(OH - 8.69)", 0.65, 0.2, 1.3),
+        Input("n2", "N2", "log10 [NII]6583 / Halpha", -0.6, -1.4, -0.35),
+        Input("o3n2", "O3N2", "log10 ([OIII]5007 / Hbeta) / ([NII]6583 / Halpha)", 0.4, -0.3, 1.6),
+        Input("n2s2", "N2S2", "log10 [NII]6583 / [SII]6717+31", -0.1, -0.6, 0.4),
+        Input("d16_y", "y", "N2S2 + 0.264 N2", -0.26, -0.9, 0.3),
+        Input("r2_hb", "R2", "[OII]3727+29 / Hbeta", 2.0, 0.5, 5.0),
+        Input("r3_hb", "R3", "[OIII]4959+5007 / Hbeta", 1.5, 0.2, 6.0),
+        Input("n2_hb", "N2", "[NII]6548+84 / Hbeta", 1.0, 0.05, 2.0),
+        Input("s2_hb", "S2", "[SII]6717+31 / Hbeta", 0.9, 0.2, 2.0),
         Input(
             "sigma_star",
             "Sigma_star",

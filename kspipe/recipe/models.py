@@ -19,7 +19,7 @@ from pydantic import (
     model_validator,
 )
 
-from kspipe.conversions import ALPHA_CO, EXTINCTION, LINE_RATIO, STAR_FORMATION
+from kspipe.conversions import ALPHA_CO, EXTINCTION, LINE_RATIO, OH_SCALES, STAR_FORMATION
 from kspipe.core.errors import nearest
 from kspipe.core.registry import Registry
 from kspipe.core.tracers import TRACERS
@@ -401,13 +401,21 @@ def _gradient(typed: str | None) -> str | None:
     return typed
 
 
+def _oh_scale(typed: Any) -> str:
+    if typed not in OH_SCALES:
+        raise ValueError(
+            f'metallicity scale "{typed}" is not known; {nearest(str(typed), OH_SCALES)}'
+        )
+    return str(typed)
+
+
 class MetallicityTable(Table):
     """12 + log10(O/H) over the disc: a centre and a gradient, or a map."""
 
     oh: Abundance | None = None
     gradient: Annotated[str | None, AfterValidator(_gradient)] = None
     map: Path | None = None
-    scale: str = "not stated"
+    scale: Annotated[str, BeforeValidator(_oh_scale)] = "not stated"
 
     @property
     def slope(self) -> tuple[float, str]:

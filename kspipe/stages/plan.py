@@ -14,7 +14,17 @@ from astropy.io import fits
 from numpy.typing import NDArray
 
 from kspipe import __version__
-from kspipe.conversions import ALPHA_CO, ATOMIC, EXTINCTION, LINE_RATIO, STAR_FORMATION, Choices
+from kspipe.conversions import (
+    ALPHA_CO,
+    ATOMIC,
+    EXTINCTION,
+    LINE_RATIO,
+    STAR_FORMATION,
+    USUAL_SHIFT_DEX,
+    Choices,
+    scale_shift_dex,
+)
+from kspipe.core.constants import OH_SOLAR
 from kspipe.core.errors import Fault, KspipeWarning, MapError
 from kspipe.kernels.geometry import beam_axes
 from kspipe.maps import MapSource
@@ -97,6 +107,7 @@ def make_plan(recipe: Recipe, memory: InMemory | None = None) -> Plan:
     grid = _grid(recipe, sources, fwhm)
     _check_grid(grid)
     _warn_inclination(recipe)
+    _warn_scale(recipe)
     prints = {f"match.{name}": _match_print(recipe, sources[name], grid, fwhm) for name in sources}
     prints["convert"] = convert_print(recipe, prints)
     return Plan(recipe, sources, target, grid, prints)
@@ -145,6 +156,27 @@ def _warn_inclination(recipe: Recipe) -> None:
             KspipeWarning,
             stacklevel=2,
         )
+
+
+def _warn_scale(recipe: Recipe) -> None:
+    """Tell that alpha_CO stands on another metallicity scale than the recipe."""
+    alpha_co, given = choices_of(recipe).alpha_co, recipe.metallicity.scale
+    wanted = ALPHA_CO.get(alpha_co).oh_scale if alpha_co else None
+    if wanted is None or given in (wanted, "not stated"):
+        return
+    oh = recipe.metallicity.oh.value if recipe.metallicity.oh else OH_SOLAR
+    shift = scale_shift_dex(given, wanted, oh)
+    size = (
+        f"{shift:+.2f} dex at {oh:g}"
+        if shift is not None
+        else "usually {:g} to {:g} dex (common practice)".format(*USUAL_SHIFT_DEX)
+    )
+    warnings.warn(
+        f'metallicity.scale "{given}": "{alpha_co}" is tied to {wanted}, a shift of {size}; '
+        "12+log10(O/H) is used as it is",
+        KspipeWarning,
+        stacklevel=2,
+    )
 
 
 def _match_print(recipe: Recipe, source: MapSource, grid: Grid, fwhm: float) -> str:

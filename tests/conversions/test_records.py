@@ -14,7 +14,9 @@ from kspipe.conversions import (
     IMFS,
     INPUTS,
     LINE_RATIO,
+    MASS_METALLICITY,
     STAR_FORMATION,
+    STRONG_LINES,
     AlphaCO,
     Extinction,
     LineRatio,
@@ -32,10 +34,18 @@ FAMILIES = {
     "extinction": EXTINCTION,
     "imf": IMFS,
     "line_ratio": LINE_RATIO,
+    "mass_metallicity": MASS_METALLICITY,
     "star_formation": STAR_FORMATION,
+    "strong_lines": STRONG_LINES,
     "relations": LAWS,
 }
 SHELVED = [(name, record) for name, family in FAMILIES.items() for record in family]
+
+WITHOUT_MASS = [
+    record
+    for family in (EXTINCTION, LINE_RATIO, STAR_FORMATION, IMFS, MASS_METALLICITY, STRONG_LINES)
+    for record in family
+]
 
 every = pytest.mark.parametrize(
     "record", [record for _, record in SHELVED], ids=[f"{name}:{r.key}" for name, r in SHELVED]
@@ -86,9 +96,7 @@ def test_a_record_cannot_be_changed(record) -> None:
 @every_conversion
 def test_conventions_are_stated(record: Record) -> None:
     assert record.helium_factor in (None, HELIUM_FACTOR)
-    assert (record.helium_factor is None) == (
-        record in [*EXTINCTION, *LINE_RATIO, *STAR_FORMATION, *IMFS]
-    )
+    assert (record.helium_factor is None) == (record in WITHOUT_MASS)
     assert (record.imf is None) == (record not in [*STAR_FORMATION, *IMFS])
     assert record.scatter_dex is None or 0 < record.scatter_dex < 1
     for limits in record.ranges:

@@ -414,6 +414,7 @@ def test_files_in_memory_may_be_missing(good, folder) -> None:
             "metallicity.gradient",
             "r25",
         ),
+        ({"metallicity__scale": "PP04"}, "metallicity.scale", 'did you mean "PP04 N2"'),
         # What an alpha_CO record needs, and what it does not.
         ({"gas__alpha_co": "accurso2017"}, "gas.alpha_co", 'ms_offset = "0.2 dex"'),
         ({"gas__alpha_co": "accurso2017"}, "gas.alpha_co", "do without: amorin2016"),

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import json
 import math
+import re
+import warnings
 from pathlib import Path
 from typing import Any
 
@@ -16,6 +18,7 @@ from kspipe.core.errors import KspipeWarning
 from kspipe.maps.product import read_image
 from kspipe.recipe import parse_recipe
 from kspipe.stages.compare import compare_relations
+from kspipe.stages.plan import make_plan
 from kspipe.stages.reduce import reduce_maps
 
 OH, SLOPE = 8.75, -0.045
@@ -126,3 +129,28 @@ def test_a_power_law_counts_what_it_leaves_out(out) -> None:
     reduced(out)
     compare_relations(out / "run", overwrite=True)
     assert json.loads((out / "run" / "summary.json").read_text())["n_left_out"] == 0
+
+
+@pytest.mark.parametrize(
+    ("scale", "alpha_co", "says"),
+    [
+        # 8.75 by Marino et al. 2013 is O3N2 = -1.014, which is 9.05 by Pettini & Pagel 2004.
+        ("M13 O3N2", "accurso2017", r"accurso2017.*tied to PP04 O3N2.*\+0\.30 dex at 8.75"),
+        ("direct", "genzel2012", r"tied to Denicolo.*usually 0.1 to 0.3 dex"),
+        ("PP04 O3N2", "accurso2017", None),
+        ("not stated", "accurso2017", None),
+        ("direct", "sun2020", None),
+    ],
+)
+def test_another_scale_of_metallicity_is_told(out, scale, alpha_co, says) -> None:
+    gas: dict[str, Any] = {"alpha_co": alpha_co, "line_ratio": 0.65}
+    if alpha_co == "accurso2017":
+        gas["ms_offset"] = "0 dex"
+    metallicity = {"oh": 8.75, "scale": scale}
+    recipe = parse_recipe(demo_recipe(out, gas=gas, metallicity=metallicity), folder=out)
+    with warnings.catch_warnings(record=True) as told:
+        warnings.simplefilter("always", KspipeWarning)
+        make_plan(recipe)
+    texts = [str(w.message) for w in told if "metallicity.scale" in str(w.message)]
+    assert bool(texts) == (says is not None)
+    assert says is None or re.search(says, texts[0])
