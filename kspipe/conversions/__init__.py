@@ -19,6 +19,7 @@ from kspipe.conversions.metallicity import oh_from_gradient, z_prime
 from kspipe.conversions.oh_scales import OH_SCALES, USUAL_SHIFT_DEX, scale_shift_dex
 from kspipe.conversions.record import Range, Record
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
+from kspipe.conversions.stars import STARS, Stars, midplane_density_msun_pc3
 from kspipe.conversions.strong_lines import STRONG_LINES, StrongLine
 from kspipe.conversions.surface import Surface, carry_noise, make_surface
 
@@ -31,6 +32,7 @@ __all__ = [
     "LINE_RATIO",
     "MASS_METALLICITY",
     "OH_SCALES",
+    "STARS",
     "STAR_FORMATION",
     "STRONG_LINES",
     "USUAL_SHIFT_DEX",
@@ -47,12 +49,14 @@ __all__ = [
     "Range",
     "Record",
     "StarFormation",
+    "Stars",
     "StrongLine",
     "Surface",
     "carry_noise",
     "convert",
     "imf_factor",
     "make_surface",
+    "midplane_density_msun_pc3",
     "oh_from_gradient",
     "scale_shift_dex",
     "z_prime",

@@ -26,6 +26,9 @@ class Choices:
         Star-formation record.
     alpha_co : str or None
         alpha_CO record; None for atomic gas only.
+    stars : str or None
+        Stellar-mass record, where a map of its tracer is given; its ``sigma_star`` replaces the
+        parameter.
     imf : str
         Initial mass function of the star-formation rates that come out.
     line_ratio : str or None
@@ -42,6 +45,7 @@ class Choices:
     alpha_co: str | None = None
     atomic: str = "leroy2008_thin"
     line_ratio: str | None = None
+    stars: str | None = None
     imf: str = "Kroupa"
     ebv_scale: EbvScale | None = None
     extinction: Mapping[str, str] = field(
@@ -71,6 +75,10 @@ class Parameters:
         [NII]6583 / Halpha in the H-alpha map; 0 where it is free of [NII].
     as_24um : array_like
         24 um over 22 um intensity, where a 22 um map stands for 24 um.
+    hi_opacity : array_like
+        Atomic gas over that of optically thin emission.
+    mass_to_light : array_like
+        Of stars, in solar units at 3.4 um.
     sigma_star : array_like or None
         Stellar surface density [Msun/pc2], face-on, at the beam of the maps.
     ms_offset_dex, g0_over_n : array_like or None
@@ -83,6 +91,8 @@ class Parameters:
     ebv: Array | float = 0.0
     nii_ratio: Array | float = 0.0
     as_24um: Array | float = 1.0
+    hi_opacity: Array | float = 1.0
+    mass_to_light: Array | float = 0.5
     sigma_star: Array | float | None = None
     ms_offset_dex: Array | float | None = None
     g0_over_n: Array | float | None = None

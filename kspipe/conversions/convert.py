@@ -20,6 +20,7 @@ from kspipe.conversions.imf import imf_factor
 from kspipe.conversions.line_ratio import LINE_RATIO
 from kspipe.conversions.molecular import molecular_gas
 from kspipe.conversions.star_formation import STAR_FORMATION
+from kspipe.conversions.stars import STARS
 from kspipe.core.tracers import CO_LINES
 
 __all__ = ["Converted", "convert"]
@@ -34,7 +35,8 @@ class Converted:
     Attributes
     ----------
     values : dict of str to float64 array
-        ``sigma_atom``, ``sigma_mol``, ``sigma_gas`` [Msun/pc2, with helium, face-on] and
+        ``sigma_star``, ``sigma_atom``, ``sigma_mol``, ``sigma_gas``
+        [Msun/pc2, with helium, face-on] and
         ``sigma_sfr`` [Msun/yr/kpc2, face-on]; molecular entries are absent without CO.
     derivatives : dict of str to dict of str to float64 array
         Per product and tracer, in the product's unit per canonical intensity.
@@ -81,7 +83,11 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
     made = _Products()
     if "HI" in intensity:
         per_hi = ATOMIC.get(choices.atomic).msun_pc2_per_k_kms * cos_i
+        if np.any(np.asarray(parameters.hi_opacity) != 1.0):
+            per_hi = per_hi * parameters.hi_opacity
         made.add("sigma_atom", per_hi * intensity["HI"], {"HI": per_hi})
+    if choices.stars is not None:
+        _add_stars(made, intensity, choices, parameters)
     # First, because a line ratio may depend on it.
     _add_sfr(made, intensity, choices, parameters)
     if choices.alpha_co is not None:
@@ -108,6 +114,17 @@ class _Products:
         }
 
 
+def _add_stars(
+    made: _Products, intensity: Mapping[str, Array], choices: Choices, parameters: Parameters
+) -> None:
+    record = STARS.get(str(choices.stars))
+    if record.tracer not in intensity:
+        raise KeyError(f"record {record.key!r} needs {record.tracer}, which is not among the maps")
+    mass_to_light = np.asarray(parameters.mass_to_light, dtype=float)
+    slope = record.msun_pc2_per_intensity * mass_to_light * np.asarray(parameters.cos_i)
+    made.add("sigma_star", slope * intensity[record.tracer], {record.tracer: slope})
+
+
 def _add_molecular(
     made: _Products, intensity: Mapping[str, Array], choices: Choices, parameters: Parameters
 ) -> None:
@@ -122,6 +139,7 @@ def _add_molecular(
         for name in ("oh", "sigma_star", "ms_offset_dex", "g0_over_n")
         if (value := getattr(parameters, name)) is not None
     }
+    given.update({k: v for k, v in made.values.items() if k == "sigma_star"})
     ratio, ratio_log_slope = _line_ratio(line, choices, parameters, made.values["sigma_sfr"])
     face_on = cos_i / ratio * intensity[line]
     gas = molecular_gas(record, face_on, made.values.get("sigma_atom"), given)
@@ -133,9 +151,12 @@ def _add_molecular(
         per_sfr = -gas.per_line * face_on * ratio_log_slope
         for tracer, slope in made.derivatives["sigma_sfr"].items():
             slopes[tracer] = per_sfr * slope
+    if gas.per_star is not None and "sigma_star" in made.values:
+        for tracer, slope in made.derivatives["sigma_star"].items():
+            slopes[tracer] = gas.per_star * slope
     made.add("sigma_mol", value, slopes)
     shape = made.values["sigma_mol"].shape
-    if gas.per_star is not None:
+    if gas.per_star is not None and "sigma_star" not in made.values:
         made.by_parameter["sigma_mol"] = {"sigma_star": np.broadcast_to(gas.per_star, shape)}
     if gas.negative_co is not None:
         made.flags["negative_co"] = np.broadcast_to(gas.negative_co, shape)

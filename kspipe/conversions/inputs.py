@@ -57,6 +57,7 @@ INPUTS: Final = {
             200.0,
             1.0,
             5000.0,
+            do='type a table [stars] with record and map, and add that map ("3.6um" or "W1")',
         ),
         Input(
             "sigma_total",

@@ -74,6 +74,7 @@ CITATIONS = _citations(
     ),
     Citation("leroy2008", "Leroy et al. 2008", "AJ 136, 2782", "2008AJ....136.2782L"),
     Citation("leroy2012", "Leroy et al. 2012", "AJ 144, 3", "2012AJ....144....3L"),
+    Citation("leroy2019", "Leroy et al. 2019", "ApJS 244, 24"),
     Citation("leroy2022", "Leroy et al. 2022", "ApJ 927, 149", "2022ApJ...927..149L"),
     Citation("marino2013", "Marino et al. 2013", "A&A 559, A114"),
     Citation("murphy2011", "Murphy et al. 2011", "ApJ 737, 67", "2011ApJ...737...67M"),

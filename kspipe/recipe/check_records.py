@@ -5,11 +5,17 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from typing import Final
 
-from kspipe.conversions import ALPHA_CO, EXTINCTION, INPUTS, LINE_RATIO, STAR_FORMATION
-from kspipe.core.errors import Fault
-from kspipe.recipe.models import ForegroundTable, GasTable, StarFormationTable
+from kspipe.conversions import ALPHA_CO, EXTINCTION, INPUTS, LINE_RATIO, STAR_FORMATION, STARS
+from kspipe.core.errors import Fault, nearest
+from kspipe.recipe.models import (
+    ForegroundTable,
+    GasTable,
+    MapTable,
+    StarFormationTable,
+    StarsTable,
+)
 
-__all__ = ["alpha_co_faults", "convention_faults", "line_ratio_faults", "listed"]
+__all__ = ["alpha_co_faults", "convention_faults", "line_ratio_faults", "listed", "stars_faults"]
 
 
 def line_ratio_faults(line: str, key: str) -> list[Fault]:
@@ -31,13 +37,14 @@ def line_ratio_faults(line: str, key: str) -> list[Fault]:
 _GAS_INPUTS: Final = {"ms_offset": "ms_offset_dex", "g0_over_n": "g0_over_n"}
 
 
-def alpha_co_faults(gas: GasTable) -> list[Fault]:
+def alpha_co_faults(gas: GasTable, *, has_stars: bool) -> list[Fault]:
     """What an alpha_CO record needs and the recipe does not give, and the other way round."""
     record = ALPHA_CO.get(gas.alpha_co)
     needs = set(record.needs)
     if "sigma_total" in needs:
         needs = needs - {"sigma_total"} | {"sigma_star"}
-    given = {"oh"} | {_GAS_INPUTS[key] for key in _GAS_INPUTS if getattr(gas, key) is not None}
+    given = {"oh"} | ({"sigma_star"} if has_stars else set())
+    given |= {_GAS_INPUTS[key] for key in _GAS_INPUTS if getattr(gas, key) is not None}
     faults = [
         Fault(
             f"gas.{key}",
@@ -48,7 +55,12 @@ def alpha_co_faults(gas: GasTable) -> list[Fault]:
         if name in given - needs
     ]
     for name in sorted(needs - given):
-        do_without = listed(other.key for other in ALPHA_CO if set(other.needs) <= given)
+        do_without = listed(
+            other.key
+            for other in ALPHA_CO
+            if set(other.needs) - {"sigma_total"} <= given
+            and (has_stars or not other.is_self_consistent)
+        )
         faults.append(
             Fault(
                 "gas.alpha_co",
@@ -64,6 +76,25 @@ def alpha_co_faults(gas: GasTable) -> list[Fault]:
 def listed(keys: Iterable[str]) -> str:
     """Write keys in a row, sorted."""
     return ", ".join(sorted(keys))
+
+
+def stars_faults(table: StarsTable, maps: Mapping[str, MapTable | None]) -> list[Fault]:
+    """A map of stars that is not there or is no map of the record's band."""
+    if table.map not in maps:
+        what = f'no map is called "{table.map}"'
+        return [Fault("stars.map", what, nearest(table.map, maps))]
+    listed_map = maps[table.map]
+    record = STARS.get(table.record)
+    if listed_map is None or listed_map.tracer == record.tracer:
+        return []
+    fit = listed(r.key for r in STARS if r.tracer == listed_map.tracer)
+    return [
+        Fault(
+            "stars.map",
+            f'"{record.key}" takes {record.tracer}; maps.{table.map} is {listed_map.tracer}',
+            f"records for it: {fit or 'none'}",
+        )
+    ]
 
 
 def convention_faults(

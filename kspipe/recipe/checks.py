@@ -15,6 +15,7 @@ from kspipe.recipe.check_records import (
     convention_faults,
     line_ratio_faults,
     listed,
+    stars_faults,
 )
 from kspipe.recipe.models import (
     GalaxyTable,
@@ -23,6 +24,7 @@ from kspipe.recipe.models import (
     MetallicityTable,
     RelationTable,
     StarFormationTable,
+    StarsTable,
 )
 from kspipe.relations import LAWS
 
@@ -39,6 +41,10 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
     some_map_is_faulty = len(maps) < len(tables["maps"])
     faults = _duplicates(maps)
     faults += _gas_faults(tables["gas"], maps, complete=not some_map_is_faulty)
+    if isinstance(tables["gas"], GasTable):
+        faults += alpha_co_faults(tables["gas"], has_stars="stars" in tables)
+    if isinstance(tables.get("stars"), StarsTable):
+        faults += stars_faults(tables["stars"], tables["maps"])
     faults += _map_extras(maps)
     if isinstance(tables["star_formation"], StarFormationTable):
         faults += _star_formation_faults(tables["star_formation"], tables["maps"])
@@ -123,7 +129,6 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
             faults += line_ratio_faults(lines[0], gas.line_ratio)
         elif lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
             faults.append(Fault("gas.line_ratio", "CO(1-0) takes no line ratio", "remove the key"))
-        faults += alpha_co_faults(gas)
     return faults
 
 

@@ -19,7 +19,7 @@ from pydantic import (
     model_validator,
 )
 
-from kspipe.conversions import ALPHA_CO, EXTINCTION, LINE_RATIO, OH_SCALES, STAR_FORMATION
+from kspipe.conversions import ALPHA_CO, EXTINCTION, LINE_RATIO, OH_SCALES, STAR_FORMATION, STARS
 from kspipe.core.errors import nearest
 from kspipe.core.registry import Registry
 from kspipe.core.tracers import TRACERS
@@ -38,6 +38,7 @@ __all__ = [
     "Recipe",
     "RelationTable",
     "StarFormationTable",
+    "StarsTable",
 ]
 
 
@@ -61,6 +62,12 @@ def _between(low: float, high: float, what: str) -> Any:
         return quantity
 
     return AfterValidator(check)
+
+
+def _opacity(factor: Measured) -> Measured:
+    if not 1.0 <= factor.value <= 3.0:
+        raise ValueError(f"{factor.text!r}: expected a factor from 1 (optically thin) to 3")
+    return factor
 
 
 def _key_of(registry: Registry[Any]) -> Any:
@@ -119,6 +126,7 @@ FieldOverDensity = Annotated[
     _measured("", "0.01"),
     _between(0, math.inf, "a positive ratio of radiation field to density"),
 ]
+Opacity = Annotated[Measured, _measured("", '1.1 or "1.1 +- 0.1"'), AfterValidator(_opacity)]
 Speed = Annotated[Measured, _measured("km/s", '"640 km/s"')]
 Percent = Annotated[Measured, BeforeValidator(parse_percent)]
 Arcsec = Annotated[
@@ -466,6 +474,15 @@ class GasTable(Table):
     ] = None
     ms_offset: Offset | None = None
     g0_over_n: FieldOverDensity | None = None
+    hi_opacity: Opacity | None = None
+
+
+class StarsTable(Table):
+    """Stellar surface density from a near-infrared map."""
+
+    record: Annotated[str, _key_of(STARS)]
+    map: str
+    mass_to_light: Ratio = Measured(0.5, 0.0, "0.5")
 
 
 class StarFormationTable(Table):
@@ -508,6 +525,7 @@ class Recipe(Table):
     foreground: ForegroundTable
     gas: GasTable | Literal["atomic only"]
     star_formation: StarFormationTable
+    stars: StarsTable | None = None
     relations: dict[str, RelationTable] = Field(default_factory=dict)
     comparison: ComparisonTable = ComparisonTable()
 

@@ -21,6 +21,7 @@ __all__ = ["pixel_table", "write_pixels"]
 Array = NDArray[np.float64]
 
 _DENSITIES = {
+    "sigma_star": ("solMass / pc2", "stars, face-on"),
     "sigma_atom": ("solMass / pc2", "atomic gas with helium, face-on"),
     "sigma_mol": ("solMass / pc2", "molecular gas with helium, face-on"),
     "sigma_gas": ("solMass / pc2", "atomic and molecular gas with helium, face-on"),

@@ -20,6 +20,7 @@ from kspipe.conversions import (
     EXTINCTION,
     LINE_RATIO,
     STAR_FORMATION,
+    STARS,
     USUAL_SHIFT_DEX,
     Choices,
     scale_shift_dex,
@@ -108,6 +109,7 @@ def make_plan(recipe: Recipe, memory: InMemory | None = None) -> Plan:
     _check_grid(grid)
     _warn_inclination(recipe)
     _warn_scale(recipe)
+    _warn_opacity(recipe)
     prints = {f"match.{name}": _match_print(recipe, sources[name], grid, fwhm) for name in sources}
     prints["convert"] = convert_print(recipe, prints)
     return Plan(recipe, sources, target, grid, prints)
@@ -153,6 +155,19 @@ def _warn_inclination(recipe: Recipe) -> None:
         warnings.warn(
             f"galaxy.inclination {inclination:g} deg: cos i, and each surface density with it, "
             f"changes by {per_degree:.1f} % per degree",
+            KspipeWarning,
+            stacklevel=2,
+        )
+
+
+def _warn_opacity(recipe: Recipe) -> None:
+    """Tell that one factor for all pixels is no opacity correction of any of them."""
+    opacity = None if isinstance(recipe.gas, str) else recipe.gas.hi_opacity
+    if opacity is not None and opacity.value != 1.0:
+        warnings.warn(
+            f"gas.hi_opacity {opacity}: one factor for all pixels, though only cold peaks are "
+            "thick; "
+            "integrated maps know no spin temperature",
             KspipeWarning,
             stacklevel=2,
         )
@@ -219,6 +234,7 @@ def choices_of(recipe: Recipe) -> Choices:
     return Choices(
         calibration=recipe.star_formation.calibration,
         alpha_co=gas.alpha_co if gas else None,
+        stars=recipe.stars.record if recipe.stars else None,
         imf=recipe.star_formation.imf,
         ebv_scale=recipe.foreground.ebv_scale,
         line_ratio=gas.line_ratio if gas and isinstance(gas.line_ratio, str) else None,
@@ -238,6 +254,8 @@ def records_of(recipe: Recipe) -> list[Any]:
         records.append(ALPHA_CO.get(choices.alpha_co))
     if choices.line_ratio is not None:
         records.append(LINE_RATIO.get(choices.line_ratio))
+    if choices.stars is not None:
+        records.append(STARS.get(choices.stars))
     calibration = STAR_FORMATION.get(choices.calibration)
     records.append(calibration)
     keys = {choices.extinction[t] for t in calibration.tracers if t in choices.extinction}
@@ -254,6 +272,7 @@ def convert_print(recipe: Recipe, match_prints: Mapping[str, str]) -> str:
             "metallicity map": recipe.metallicity.map and file_checksum(recipe.metallicity.map),
             "foreground": recipe.foreground.model_dump(),
             "gas": recipe.gas if isinstance(recipe.gas, str) else recipe.gas.model_dump(),
+            "stars": recipe.stars and recipe.stars.model_dump(),
             "star formation": recipe.star_formation.model_dump(),
             "ratios": {n: [t.nii_ratio, t.as_24um] for n, t in recipe.maps.items()},
             "low_snr": recipe.comparison.low_snr,

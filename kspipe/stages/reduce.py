@@ -33,6 +33,7 @@ log = logging.getLogger(__name__)
 
 # FITS unit of each product in DIR/maps.
 PRODUCT_UNITS: Final = {
+    "sigma_star": "solMass pc-2",
     "sigma_atom": "solMass pc-2",
     "sigma_mol": "solMass pc-2",
     "sigma_gas": "solMass pc-2",
@@ -171,6 +172,7 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
     lines = [record.sentence for record in records_of(plan.recipe)]
     galaxy = plan.recipe.galaxy
     lines += _imf_lines(plan.recipe)
+    lines += _factor_lines(plan.recipe)
     lines.append(
         f"face-on, helium included (1.36), cos i = {galaxy.cos_i:.5f} applied once; distance "
         f"{galaxy.distance.text}"
@@ -210,6 +212,17 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
             extensions={"COVERAGE": (everywhere, ""), "FLAGS": (disc.flags, "")},
             history=[note],
         )
+
+
+def _factor_lines(recipe: Recipe) -> list[str]:
+    """Say which typed factors stand beside the records."""
+    gas = None if isinstance(recipe.gas, str) else recipe.gas
+    lines = []
+    if gas and gas.hi_opacity:
+        lines.append(f"atomic gas x {gas.hi_opacity}, one opacity factor for all pixels")
+    if recipe.stars:
+        lines.append(f"mass-to-light ratio of stars: {recipe.stars.mass_to_light}")
+    return lines
 
 
 def _warn_unsolved(recipe: Recipe, disc: Disc) -> None:

@@ -98,10 +98,17 @@ def _totals(
     areas = grid.areas_arcsec2()
     pc2 = recipe.galaxy.pc_per_arcsec**2 / recipe.galaxy.cos_i
     # Face-on surface densities times the area in the plane of the disc.
-    weights = {"sigma_atom": pc2, "sigma_mol": pc2, "sigma_gas": pc2, "sigma_sfr": pc2 * 1e-6}
+    weights = {
+        "sigma_atom": pc2,
+        "sigma_mol": pc2,
+        "sigma_star": pc2,
+        "sigma_gas": pc2,
+        "sigma_sfr": pc2 * 1e-6,
+    }
     names = {
         "sigma_atom": ("mass_atom", "Msun"),
         "sigma_mol": ("mass_mol", "Msun"),
+        "sigma_star": ("mass_star", "Msun"),
         "sigma_gas": ("mass_gas", "Msun"),
         "sigma_sfr": ("sfr", "Msun/yr"),
     }
@@ -113,10 +120,12 @@ def _totals(
         surface = disc.surfaces[product]
         pixel = float(np.mean(areas)) * weights[product]
         random = math.sqrt(max(sum_covariance(surface.noise, surface.noise, used, jacobian), 0.0))
+        common = _common_error(disc, product, used, areas)
+        common = math.hypot(common, _factor_error(recipe, disc, product, used, areas))
         totals[name] = {
             "value": float(np.sum((surface.value * areas)[used])) * weights[product],
             "random_error": random * pixel,
-            "calibration_error": _common_error(disc, product, used, areas) * weights[product],
+            "calibration_error": common * weights[product],
             "unit": unit,
         }
     total = {name: float(entry["value"]) for name, entry in totals.items()}
@@ -142,6 +151,28 @@ def _common_error(
         per_level = float(np.sum((slope * areas)[used]))
         variance += (sky.common.calibration * per_scale) ** 2
         variance += (sky.common.pedestal * per_level) ** 2
+    return math.sqrt(variance)
+
+
+def _factor_error(
+    recipe: Recipe,
+    disc: Disc,
+    product: str,
+    used: NDArray[np.bool_],
+    areas: NDArray[np.float64],
+) -> float:
+    """Error of a sum from typed factors that multiply a map: HI opacity, M/L of stars."""
+    gas = None if isinstance(recipe.gas, str) else recipe.gas
+    factors = {"HI": gas.hi_opacity if gas else None}
+    if recipe.stars:
+        tracer = recipe.maps[recipe.stars.map].tracer
+        factors[tracer] = recipe.stars.mass_to_light
+    variance = 0.0
+    for tracer, factor in factors.items():
+        slope = disc.surfaces[product].slopes.get(tracer)
+        if factor is not None and slope is not None:
+            per_factor = float(np.sum((slope * disc.intensity[tracer].value * areas)[used]))
+            variance += (factor.error / factor.value * per_factor) ** 2
     return math.sqrt(variance)
 
 

@@ -102,12 +102,9 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
 
 def _used_maps(recipe: Recipe, matched: dict[str, SkyMap]) -> dict[str, SkyMap]:
     """Maps that a surface density is made of, by tracer."""
+    wanted = {*recipe.star_formation.maps, *({recipe.stars.map} if recipe.stars else ())}
     gas = {"HI", *(CO_LINES if recipe.has_molecular else ())}
-    return {
-        sky.tracer: sky
-        for name, sky in matched.items()
-        if sky.tracer in gas or name in recipe.star_formation.maps
-    }
+    return {sky.tracer: sky for name, sky in matched.items() if sky.tracer in gas or name in wanted}
 
 
 def parameters_of(recipe: Recipe, oh: Array) -> Parameters:
@@ -124,6 +121,8 @@ def parameters_of(recipe: Recipe, oh: Array) -> Parameters:
         ebv=recipe.foreground.ebv.value,
         nii_ratio=nii.value if nii else 0.0,
         as_24um=as_24um.value if as_24um else 1.0,
+        hi_opacity=gas.hi_opacity.value if gas and gas.hi_opacity else 1.0,
+        mass_to_light=recipe.stars.mass_to_light.value if recipe.stars else 0.5,
         ms_offset_dex=gas.ms_offset.value if gas and gas.ms_offset else None,
         g0_over_n=gas.g0_over_n.value if gas and gas.g0_over_n else None,
     )

@@ -16,6 +16,7 @@ from kspipe.conversions import (
     LINE_RATIO,
     MASS_METALLICITY,
     STAR_FORMATION,
+    STARS,
     STRONG_LINES,
     AlphaCO,
     Extinction,
@@ -36,6 +37,7 @@ FAMILIES = {
     "line_ratio": LINE_RATIO,
     "mass_metallicity": MASS_METALLICITY,
     "star_formation": STAR_FORMATION,
+    "stars": STARS,
     "strong_lines": STRONG_LINES,
     "relations": LAWS,
 }
@@ -43,7 +45,15 @@ SHELVED = [(name, record) for name, family in FAMILIES.items() for record in fam
 
 WITHOUT_MASS = [
     record
-    for family in (EXTINCTION, LINE_RATIO, STAR_FORMATION, IMFS, MASS_METALLICITY, STRONG_LINES)
+    for family in (
+        EXTINCTION,
+        LINE_RATIO,
+        STAR_FORMATION,
+        IMFS,
+        MASS_METALLICITY,
+        STARS,
+        STRONG_LINES,
+    )
     for record in family
 ]
 
@@ -97,7 +107,7 @@ def test_a_record_cannot_be_changed(record) -> None:
 def test_conventions_are_stated(record: Record) -> None:
     assert record.helium_factor in (None, HELIUM_FACTOR)
     assert (record.helium_factor is None) == (record in WITHOUT_MASS)
-    assert (record.imf is None) == (record not in [*STAR_FORMATION, *IMFS])
+    assert (record.imf is None) == (record not in [*STAR_FORMATION, *IMFS, *STARS])
     assert record.scatter_dex is None or 0 < record.scatter_dex < 1
     for limits in record.ranges:
         assert limits.low < limits.high
@@ -279,3 +289,9 @@ def test_a_range_in_words() -> None:
     assert str(Range("Z'", 0.2, 2.0)) == "0.2 <= Z' <= 2"
     assert str(Range("Z'", 0.5, np.inf)) == "Z' >= 0.5"
     assert str(Range("OH", -np.inf, 8.8)) == "OH <= 8.8"
+
+
+@pytest.mark.parametrize("record", list(STARS), ids=lambda record: record.key)
+def test_the_printed_formula_of_stars_holds_its_coefficient(record) -> None:
+    assert record.msun_pc2_per_intensity in numbers(record.formula)
+    assert TRACERS[record.tracer].unit == "MJy/sr"

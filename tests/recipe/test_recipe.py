@@ -425,6 +425,18 @@ def test_files_in_memory_may_be_missing(good, folder) -> None:
         ({"gas__g0_over_n": 0.01}, "gas.g0_over_n", "belongs to wolfire2010"),
         ({"gas__alpha_co": "wolfire2010", "gas__g0_over_n": 0}, "gas.g0_over_n", "positive"),
         ({"gas__alpha_co": "accurso2017", "gas__ms_offset": 0.2}, "gas.ms_offset", "no unit"),
+        # Stars, and the opacity of HI.
+        ({"gas__alpha_co": "schinnerer2024"}, "gas.alpha_co", "table [stars]"),
+        ({"stars": {"map": "ir"}}, "stars.record", "missing"),
+        ({"stars": {"record": "leroy2019_36um", "map": "irr"}}, "stars.map", 'mean "ir"'),
+        ({"stars": {"record": "leroy2019_36um", "map": "ir"}}, "stars.map", "is 24um"),
+        (
+            {"stars": {"record": "leroy2019", "map": "ir"}},
+            "stars.record",
+            'mean "leroy2019_',
+        ),
+        ({"gas__hi_opacity": 0.9}, "gas.hi_opacity", "from 1 (optically thin) to 3"),
+        ({"gas__hi_opacity": "1.1 K"}, "gas.hi_opacity", "has the unit"),
         # Line ratios by key.
         ({"gas__line_ratio": "leroy2022"}, "gas.line_ratio", 'mean "leroy2022_r'),
         ({"gas__line_ratio": "leroy2022_r31"}, "gas.line_ratio", "records for it: denbrok2021"),

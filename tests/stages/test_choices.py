@@ -154,3 +154,59 @@ def test_another_scale_of_metallicity_is_told(out, scale, alpha_co, says) -> Non
     texts = [str(w.message) for w in told if "metallicity.scale" in str(w.message)]
     assert bool(texts) == (says is not None)
     assert says is None or re.search(says, texts[0])
+
+
+def with_stars(out: Path) -> dict[str, Any]:
+    """Write a near-infrared map of the demo and return its tables."""
+    raw = demo_recipe(out)
+    stars = fits.open(out / "mir24.fits")[0]
+    stars.data = stars.data * 0.2
+    stars.writeto(out / "nir.fits", overwrite=True)
+    maps = {**raw["maps"], "nir": {**raw["maps"]["ir"], "tracer": "3.6um", "file": "nir.fits"}}
+    maps["nir"]["noise"] = "0.02 MJy/sr"
+    stars_table = {"record": "leroy2019_36um", "map": "nir", "mass_to_light": "0.5 +- 0.1"}
+    return {"maps": maps, "stars": stars_table}
+
+
+def test_stars_and_the_alpha_co_that_needs_them(out) -> None:
+    tables = with_stars(out)
+    gas = {"alpha_co": "bolatto2013_eq31", "line_ratio": 0.65}
+    folder = reduced(out, **tables, gas=gas)
+    atom, mol, star, oh = (
+        image(folder, name) for name in ("sigma_atom", "sigma_mol", "sigma_star", "metallicity")
+    )
+    base = image(reduced(out, maps=tables["maps"]), "sigma_mol") / 4.35
+    seen = np.isfinite(mol)
+    # Bolatto et al. 2013, Eq. 31, at the solution.
+    total = star + atom + np.maximum(mol, 0.0)
+    alpha = 2.9 * np.exp(0.4 / 10 ** (oh - 8.69)) * (np.maximum(total, 100) / 100) ** -0.5
+    np.testing.assert_allclose(mol[seen], (alpha * base)[seen], rtol=1e-5, atol=1e-6)
+    reduced(out, **tables, gas=gas)
+    compare_relations(out / "run", overwrite=True)
+    summary = json.loads((out / "run" / "summary.json").read_text())
+    assert summary["flags"]["negative_co"] == int(np.sum((mol < 0) & np.isfinite(mol + atom)))
+    # 0.1 in 0.5 is a fifth of the mass of stars, beside the flux scale.
+    stars = summary["totals"]["mass_star"]
+    assert stars["calibration_error"] == pytest.approx(0.2 * stars["value"], rel=0.01)
+    text = (out / "run" / "pixels.ecsv").read_text()
+    assert "sigma_star_err" in text
+    # The written recipe is a recipe with the same stars.
+    assert "[stars]" in (out / "run" / "recipe.toml").read_text()
+
+
+def test_an_opacity_of_hi(out) -> None:
+    thin = image(reduced(out), "sigma_atom")
+    gas = {"alpha_co": "bolatto2013_galactic", "line_ratio": 0.65, "hi_opacity": "1.2 +- 0.12"}
+    with pytest.warns(KspipeWarning, match="hi_opacity.*one factor for all pixels"):
+        folder = reduced(out, gas=gas)
+    thick = image(folder, "sigma_atom")
+    seen = np.isfinite(thick)
+    np.testing.assert_allclose(thick[seen], 1.2 * thin[seen], rtol=1e-6)
+    assert "atomic gas x 1.2 +- 0.12" in " ".join(
+        fits.getheader(folder / "sigma_atom.fits")["HISTORY"]
+    )
+    with pytest.warns(KspipeWarning, match="hi_opacity"):
+        compare_relations(out / "run", overwrite=True)
+    atom = json.loads((out / "run" / "summary.json").read_text())["totals"]["mass_atom"]
+    # A tenth, common to all pixels.
+    assert atom["calibration_error"] == pytest.approx(0.1 * atom["value"], rel=1e-3)
