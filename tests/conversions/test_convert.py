@@ -84,6 +84,8 @@ def parameters(shape: tuple[int, ...] = ()) -> Parameters:
         ebv=rng.uniform(0.0, 0.3, shape),
         nii_ratio=rng.uniform(0.0, 0.5, shape),
         as_24um=rng.uniform(0.9, 1.2, shape),
+        hi_opacity=rng.uniform(1.0, 1.3, shape),
+        mass_to_light=rng.uniform(0.2, 0.6, shape),
         sigma_star=rng.lognormal(5.0, 1.0, shape),
         ms_offset_dex=rng.uniform(-0.5, 0.5, shape),
         g0_over_n=rng.uniform(0.001, 0.1, shape),
@@ -251,6 +253,8 @@ def test_inclination_enters_exactly_once(choices: Choices) -> None:
         ("oh", 8.4, {("sigma_mol", "CO(2-1)"), ("sigma_gas", "CO(2-1)")}),
         ("line_ratio", 0.65, {("sigma_mol", "CO(2-1)"), ("sigma_gas", "CO(2-1)")}),
         ("as_24um", 1.1, {("sigma_sfr", "22um")}),
+        ("hi_opacity", 1.2, {("sigma_atom", "HI"), ("sigma_gas", "HI")}),
+        ("mass_to_light", 0.3, set()),
     ],
 )
 @pytest.mark.parametrize("calibration", STAR_FORMATION.keys())
