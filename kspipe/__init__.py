@@ -19,7 +19,9 @@ _FACE = {
     "RecipeError": "kspipe.core.errors",
     "Reduction": "kspipe.api",
     "compare": "kspipe.api",
+    "explain": "kspipe.conversions.shelf",
     "figures": "kspipe.api",
+    "list_family": "kspipe.conversions.shelf",
     "load_recipe": "kspipe.recipe",
     "reduce": "kspipe.api",
     "run": "kspipe.api",
@@ -35,7 +37,9 @@ __all__ = [
     "Reduction",
     "__version__",
     "compare",
+    "explain",
     "figures",
+    "list_family",
     "load_recipe",
     "reduce",
     "run",
@@ -43,6 +47,7 @@ __all__ = [
 
 if TYPE_CHECKING:
     from kspipe.api import Comparison, Reduction, compare, figures, reduce, run
+    from kspipe.conversions.shelf import explain, list_family
     from kspipe.core.errors import KspipeError, KspipeWarning, MapError, RecipeError
     from kspipe.recipe import Recipe, load_recipe
 

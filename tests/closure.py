@@ -13,7 +13,7 @@ from pathlib import Path
 import numpy as np
 from demo import load_demo
 
-from kspipe.conversions import make_surface, z_prime
+from kspipe.conversions import make_surface
 from kspipe.recipe import load_recipe
 from kspipe.stages.plan import Plan, choices_of, make_plan
 from kspipe.stages.reduce import match_one
@@ -68,7 +68,7 @@ def truth_of(run: Run) -> dict[str, tuple[np.ndarray, np.ndarray]]:
         sky,
         {tracer: matched.noise for tracer, matched in disc.intensity.items()},
         choices_of(plan.recipe),
-        parameters_of(plan.recipe, z_prime(disc.oh)),
+        parameters_of(plan.recipe, disc.oh),
     )
     return {name: (surface.value, surface.error) for name, surface in surfaces.items()}
 

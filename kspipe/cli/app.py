@@ -130,6 +130,41 @@ def run_command(
     print_summary(out)
 
 
+@app.command("list", epilog="Example: kspipe list alpha_co")
+def list_command(
+    family: Annotated[
+        str | None, typer.Argument(metavar="FAMILY", help="Of records; all families without it.")
+    ] = None,
+    debug: DebugOption = False,
+) -> None:
+    """List the published conversions of a family, or the families."""
+    from kspipe.cli.session import session
+
+    with session(quiet=True, debug=debug):
+        from kspipe.conversions.shelf import list_family
+
+        rows = list_family(family)
+    for key, *rest in rows:
+        typer.echo(f"{key}: {'; '.join(rest)}")
+
+
+@app.command("explain", epilog="Example: kspipe explain bolatto2013_eq31")
+def explain_command(
+    key: Annotated[str, typer.Argument(metavar="KEY", help="Of a record.")],
+    debug: DebugOption = False,
+) -> None:
+    """Explain a record: formula, inputs, range, conventions, paper, and a worked number."""
+    from kspipe.cli.session import session
+
+    with session(quiet=True, debug=debug):
+        from kspipe.conversions.shelf import explain
+
+        rows = explain(key)
+    width = max(len(name) for name, _ in rows)
+    for name, text in rows:
+        typer.echo(f"{name:<{width}}  {text}")
+
+
 def main() -> None:
     """Entry point of the command."""
     app(prog_name="kspipe")

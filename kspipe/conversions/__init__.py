@@ -1,28 +1,63 @@
 """Published conversions from intensity to surface density, one record each."""
 
+from kspipe.conversions import (  # noqa: F401 - fill the shelves
+    alpha_co_density,
+    alpha_co_metallicity,
+    star_formation_hybrid,
+    star_formation_single,
+)
 from kspipe.conversions.alpha_co import ALPHA_CO, AlphaCO
 from kspipe.conversions.atomic import ATOMIC, AtomicGas
-from kspipe.conversions.convert import Choices, Converted, Parameters, convert
+from kspipe.conversions.choices import Choices, Parameters
+from kspipe.conversions.convert import Converted, convert
 from kspipe.conversions.extinction import EXTINCTION, Extinction
+from kspipe.conversions.imf import IMFS, Imf, imf_factor
+from kspipe.conversions.inputs import INPUTS, Input
+from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
+from kspipe.conversions.mass_metallicity import MASS_METALLICITY, MassMetallicity
 from kspipe.conversions.metallicity import oh_from_gradient, z_prime
+from kspipe.conversions.oh_scales import OH_SCALES, USUAL_SHIFT_DEX, scale_shift_dex
+from kspipe.conversions.record import Range, Record
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
-from kspipe.conversions.surface import Surface, make_surface
+from kspipe.conversions.stars import STARS, Stars, midplane_density_msun_pc3
+from kspipe.conversions.strong_lines import STRONG_LINES, StrongLine
+from kspipe.conversions.surface import Surface, carry_noise, make_surface
 
 __all__ = [
     "ALPHA_CO",
     "ATOMIC",
     "EXTINCTION",
+    "IMFS",
+    "INPUTS",
+    "LINE_RATIO",
+    "MASS_METALLICITY",
+    "OH_SCALES",
+    "STARS",
     "STAR_FORMATION",
+    "STRONG_LINES",
+    "USUAL_SHIFT_DEX",
     "AlphaCO",
     "AtomicGas",
     "Choices",
     "Converted",
     "Extinction",
+    "Imf",
+    "Input",
+    "LineRatio",
+    "MassMetallicity",
     "Parameters",
+    "Range",
+    "Record",
     "StarFormation",
+    "Stars",
+    "StrongLine",
     "Surface",
+    "carry_noise",
     "convert",
+    "imf_factor",
     "make_surface",
+    "midplane_density_msun_pc3",
     "oh_from_gradient",
+    "scale_shift_dex",
     "z_prime",
 ]

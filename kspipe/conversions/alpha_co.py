@@ -1,82 +1,68 @@
-"""The CO-to-H2 conversion factor, always for CO(1-0) and with helium."""
+"""The CO-to-H2 conversion factor, always for CO(1-0) and with helium: what a record of it is."""
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.conversions.record import Range, Record
-from kspipe.core.constants import HELIUM_FACTOR
+from kspipe.conversions.record import Record
 from kspipe.core.registry import Registry
 
-__all__ = ["ALPHA_CO", "AlphaCO"]
+__all__ = ["ALPHA_CO", "AlphaCO", "Inputs"]
 
 Array = NDArray[np.float64]
+Inputs = Mapping[str, Array]
+OfInputs = Callable[[Inputs], Array]
 
 
 @dataclass(frozen=True, kw_only=True)
 class AlphaCO(Record):
-    """alpha_CO [Msun/pc2 per K km/s of CO(1-0)] as a function of metallicity.
+    """alpha_CO [Msun/pc2 per K km/s of CO(1-0)].
 
     Attributes
     ----------
+    needs : tuple of str
+        Names in `kspipe.conversions.inputs.INPUTS`. One that needs ``sigma_total`` depends on its
+        own result; `convert` solves for it.
     function : callable
-        alpha_CO of Z' = 10^(12+log(O/H) - 8.69).
-    depends_on_z : bool
-        Whether Z' matters at all.
+        Of a mapping with all of `needs`; surface densities in it are face-on and with helium.
+    log_slopes : tuple of (str, callable)
+        d ln(alpha_CO) / d(input) for each surface density that is needed, as a function of the
+        same mapping.
+    oh_scale : str or None
+        The metallicity scale that the coefficients are tied to; None where the paper's scale was
+        not confirmed.
     """
 
-    function: Callable[[Array], Array]
-    depends_on_z: bool
+    function: OfInputs
+    needs: tuple[str, ...] = ()
+    log_slopes: tuple[tuple[str, OfInputs], ...] = ()
+    oh_scale: str | None = None
 
-    def __call__(self, z_prime: Array) -> Array:
-        """Evaluate; NaN metallicity gives NaN where metallicity matters."""
-        return self.function(np.asarray(z_prime, dtype=float))
+    @property
+    def is_self_consistent(self) -> bool:
+        """Whether the molecular gas that it gives is among its inputs."""
+        return "sigma_total" in self.needs
 
+    def __call__(self, inputs: Inputs) -> Array:
+        """Evaluate on arrays that broadcast; NaN in a needed input gives NaN.
 
-def _galactic(z_prime: Array) -> Array:
-    return np.full(np.shape(z_prime), 4.35)
+        Raises
+        ------
+        KeyError
+            If an input is missing.
+        """
+        missing = [name for name in self.needs if name not in inputs]
+        if missing:
+            raise KeyError(f"record {self.key!r} needs {', '.join(missing)}")
+        return self.function(inputs)
 
-
-def _sun2020(z_prime: Array) -> Array:
-    return 4.35 * z_prime**-1.6
+    def log_slope(self, name: str, inputs: Inputs) -> Array | float:
+        """Evaluate d ln(alpha_CO) / d(input); zero for what it does not need."""
+        return next((slope(inputs) for known, slope in self.log_slopes if known == name), 0.0)
 
 
 ALPHA_CO = Registry[AlphaCO]("alpha_CO record")
-
-ALPHA_CO.add(
-    AlphaCO(
-        key="bolatto2013_galactic",
-        label=r"$\alpha_{\rm CO}$ = 4.35",
-        cite="bolatto2013",
-        where="Section 8, the value recommended for the Milky Way",
-        formula="alpha_CO = 4.35  [Msun/pc2 per K km/s], X_CO = 2e20 cm-2 per K km/s",
-        certainty="verified",
-        scatter_dex=0.11,
-        helium_factor=HELIUM_FACTOR,
-        note="+-30 % (0.11 dex) in the Milky Way disc; too high in galaxy centres, too low at low "
-        "metallicity.",
-        function=_galactic,
-        depends_on_z=False,
-    )
-)
-ALPHA_CO.add(
-    AlphaCO(
-        key="sun2020",
-        label=r"$\alpha_{\rm CO} \propto Z'^{-1.6}$",
-        cite="sun2020",
-        where="alpha_CO prescription of the paper (equation number not confirmed)",
-        formula="alpha_CO = 4.35 Z'^-1.6  [Msun/pc2 per K km/s]",
-        certainty="verified",
-        ranges=(Range("Z'", 0.2, 2.0),),
-        helium_factor=HELIUM_FACTOR,
-        note="Z' on the scale 12+log(O/H) = 8.69; an offset of 0.2 dex between metallicity scales "
-        "is 0.32 dex in alpha_CO. The range is that of discs where such slopes are used (common "
-        "practice), not one printed in the paper.",
-        function=_sun2020,
-        depends_on_z=True,
-    )
-)

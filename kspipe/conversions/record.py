@@ -2,11 +2,17 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Literal
 
+import numpy as np
+from numpy.typing import NDArray
+
 __all__ = ["Certainty", "Range", "Record"]
 
+Array = NDArray[np.float64]
 Certainty = Literal["verified", "from memory"]
 
 
@@ -19,13 +25,21 @@ class Range:
     quantity : str
         The input, with its unit.
     low, high : float
+        Infinite where the paper gives no bound.
+    name : str
+        Of the input in `kspipe.conversions.inputs.INPUTS`; empty where it is none of them.
     """
 
     quantity: str
     low: float
     high: float
+    name: str = ""
 
     def __str__(self) -> str:
+        if math.isinf(self.high):
+            return f"{self.quantity} >= {self.low:g}"
+        if math.isinf(self.low):
+            return f"{self.quantity} <= {self.high:g}"
         return f"{self.low:g} <= {self.quantity} <= {self.high:g}"
 
 
@@ -70,3 +84,18 @@ class Record:
     helium_factor: float | None = None
     imf: str | None = None
     note: str = ""
+
+    @property
+    def sentence(self) -> str:
+        """One line for histories: key, source, formula, and that it is from memory if it is."""
+        doubt = "; coefficients from memory" if self.certainty == "from memory" else ""
+        return f"{self.key} ({self.cite}, {self.where}): {self.formula}{doubt}"
+
+    def outside(self, inputs: Mapping[str, Array]) -> NDArray[np.bool_]:
+        """Where an input lies outside a range; a range of an input not given is passed over."""
+        outside = np.zeros((), dtype=bool)
+        for allowed in self.ranges:
+            if allowed.name in inputs:
+                value = np.asarray(inputs[allowed.name])
+                outside = outside | (value < allowed.low) | (value > allowed.high)
+        return outside

@@ -8,10 +8,11 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.conversions.convert import Choices, Parameters, convert
+from kspipe.conversions.choices import Choices, Parameters
+from kspipe.conversions.convert import Converted, convert
 from kspipe.kernels.noise import NoiseTerm, propagate, total_error
 
-__all__ = ["Surface", "make_surface"]
+__all__ = ["Surface", "carry_noise", "make_surface"]
 
 Array = NDArray[np.float64]
 Terms = tuple[NoiseTerm, ...]
@@ -60,6 +61,12 @@ def make_surface(
     -------
     dict of str to Surface
         ``sigma_atom sigma_gas sigma_sfr`` and, with CO, ``sigma_mol f_mol t_dep``.
+    """
+    return carry_noise(convert(intensity, choices, parameters), noise)
+
+
+def carry_noise(converted: Converted, noise: Mapping[str, Terms]) -> dict[str, Surface]:
+    """Carry noise through a conversion that was made; see `make_surface`.
 
     Notes
     -----
@@ -67,7 +74,6 @@ def make_surface(
     sigma_mol and -f / sigma_gas with respect to sigma_atom. Ratios are NaN where the denominator
     is not positive.
     """
-    converted = convert(intensity, choices, parameters)
     made = {}
     for name, value in converted.values.items():
         slopes = converted.derivatives[name]

@@ -37,6 +37,8 @@ def _citations(*entries: Citation) -> dict[str, Citation]:
 
 
 CITATIONS = _citations(
+    Citation("accurso2017", "Accurso et al. 2017", "MNRAS 470, 4750", "2017MNRAS.470.4750A"),
+    Citation("amorin2016", "Amorin et al. 2016", "A&A 588, A23"),
     Citation("asplund2009", "Asplund et al. 2009", "ARA&A 47, 481", "2009ARA&A..47..481A"),
     Citation("bianchi2017", "Bianchi et al. 2017", "ApJS 230, 24", "2017ApJS..230...24B"),
     Citation(
@@ -47,6 +49,21 @@ CITATIONS = _citations(
         "cardelli1989", "Cardelli, Clayton & Mathis 1989", "ApJ 345, 245", "1989ApJ...345..245C"
     ),
     Citation("engelbracht2007", "Engelbracht et al. 2007", "PASP 119, 994"),
+    Citation("chabrier2003", "Chabrier 2003", "PASP 115, 763"),
+    Citation("curti2017", "Curti et al. 2017", "MNRAS 465, 1384", "2017MNRAS.465.1384C"),
+    Citation("curti2020", "Curti et al. 2020", "MNRAS 491, 944", "2020MNRAS.491..944C"),
+    Citation("denbrok2021", "Den Brok et al. 2021", "MNRAS 504, 3221", "2021MNRAS.504.3221D"),
+    Citation("dopita2016", "Dopita et al. 2016", "Ap&SS 361, 61"),
+    Citation("fitzpatrick1999", "Fitzpatrick 1999", "PASP 111, 63", "1999PASP..111...63F"),
+    Citation("genzel2012", "Genzel et al. 2012", "ApJ 746, 69", "2012ApJ...746...69G"),
+    Citation("genzel2015", "Genzel et al. 2015", "ApJ 800, 20", "2015ApJ...800...20G"),
+    Citation("gildepaz2007", "Gil de Paz et al. 2007", "ApJS 173, 185"),
+    Citation("hao2011", "Hao et al. 2011", "ApJ 741, 124", "2011ApJ...741..124H"),
+    Citation("hunt2015", "Hunt et al. 2015", "A&A 583, A114"),
+    Citation("kennicutt1998", "Kennicutt 1998", "ARA&A 36, 189", "1998ARA&A..36..189K"),
+    Citation("kennicutt2009", "Kennicutt et al. 2009", "ApJ 703, 1672", "2009ApJ...703.1672K"),
+    Citation("kennicutt2012", "Kennicutt & Evans 2012", "ARA&A 50, 531", "2012ARA&A..50..531K"),
+    Citation("kroupa2001", "Kroupa 2001", "MNRAS 322, 231"),
     Citation(
         "krumholz2009", "Krumholz, McKee & Tumlinson 2009", "ApJ 699, 850", "2009ApJ...699..850K"
     ),
@@ -58,11 +75,26 @@ CITATIONS = _citations(
     ),
     Citation("leroy2008", "Leroy et al. 2008", "AJ 136, 2782", "2008AJ....136.2782L"),
     Citation("leroy2012", "Leroy et al. 2012", "AJ 144, 3", "2012AJ....144....3L"),
+    Citation("leroy2019", "Leroy et al. 2019", "ApJS 244, 24"),
     Citation("leroy2022", "Leroy et al. 2022", "ApJ 927, 149", "2022ApJ...927..149L"),
     Citation("morrissey2007", "Morrissey et al. 2007", "ApJS 173, 682"),
     Citation("sun2020", "Sun et al. 2020", "ApJ 892, 148"),
     Citation("wright2010", "Wright et al. 2010", "AJ 140, 1868"),
+    Citation("marino2013", "Marino et al. 2013", "A&A 559, A114"),
+    Citation("murphy2011", "Murphy et al. 2011", "ApJ 737, 67", "2011ApJ...737...67M"),
+    Citation("odonnell1994", "O'Donnell 1994", "ApJ 422, 158"),
+    Citation("pettini2004", "Pettini & Pagel 2004", "MNRAS 348, L59"),
+    Citation("pilyugin2016", "Pilyugin & Grebel 2016", "MNRAS 457, 3678", "2016MNRAS.457.3678P"),
+    Citation("rieke2009", "Rieke et al. 2009", "ApJ 692, 556"),
+    Citation("saintonge2017", "Saintonge et al. 2017", "ApJS 233, 22"),
+    Citation("salpeter1955", "Salpeter 1955", "ApJ 121, 161"),
+    Citation("sanchez2019", "Sanchez et al. 2019", "MNRAS 484, 3042", "2019MNRAS.484.3042S"),
+    Citation("schinnerer2024", "Schinnerer & Leroy 2024", "ARA&A 62, 369"),
+    Citation("schlafly2011", "Schlafly & Finkbeiner 2011", "ApJ 737, 103", "2011ApJ...737..103S"),
+    Citation("schruba2012", "Schruba et al. 2012", "AJ 143, 138"),
+    Citation("wolfire2010", "Wolfire, Hollenbach & McKee 2010", "ApJ 716, 1191"),
     Citation("wyder2007", "Wyder et al. 2007", "ApJS 173, 293"),
+    Citation("yajima2021", "Yajima et al. 2021", "PASJ 73, 257"),
 )
 
 

@@ -131,7 +131,13 @@ def nearest(word: str, known: Iterable[str]) -> str:
         ``did you mean "x"? Known: a, b, c``.
     """
     known = sorted(known)
-    close = difflib.get_close_matches(word.lower(), [k.lower() for k in known], n=1, cutoff=0.5)
+    typed = word.lower()
+    close = difflib.get_close_matches(typed, [k.lower() for k in known], n=3, cutoff=0.5)
+    # Of equally near words, the one with the same beginning: H1 is HI, not W1.
+    close.sort(
+        key=lambda k: (difflib.SequenceMatcher(None, k, typed).ratio(), k[:1] == typed[:1]),
+        reverse=True,
+    )
     listed = "known: " + ", ".join(known)
     if not close:
         return listed

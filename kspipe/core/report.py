@@ -11,6 +11,7 @@ _NAMES = {
     "mass_atom": "atomic gas",
     "mass_mol": "molecular gas",
     "mass_gas": "total gas",
+    "mass_star": "stars",
     "sfr": "star formation",
     "f_mol": "molecular fraction",
     "t_dep": "depletion time, molecular",

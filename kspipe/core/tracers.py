@@ -98,6 +98,22 @@ TRACERS: Final = {
             is_radio=False,
             source="22.09 um nominal, common practice for the 22 um band",
         ),
+        Tracer(
+            "3.6um",
+            r"3.6 $\mu$m",
+            "MJy/sr",
+            _at_micron(3.55),
+            is_radio=False,
+            source="3.55 um, value from memory",
+        ),
+        Tracer(
+            "W1",
+            "W1",
+            "MJy/sr",
+            _at_micron(3.3526),
+            is_radio=False,
+            source="3.3526 um, value from memory",
+        ),
     )
 }
 

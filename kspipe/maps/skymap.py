@@ -29,6 +29,8 @@ class Flag(IntFlag):
     NO_SOLUTION = 32
     USER_MASK = 64
     BRIDGED = 128
+    # alpha_CO depends on the gas that it gives, and CO is negative: taken at zero CO.
+    NEGATIVE_CO = 256
 
     @classmethod
     def meanings(cls) -> dict[str, int]:

@@ -7,9 +7,16 @@ from collections import Counter
 from collections.abc import Mapping
 from typing import Any, Final
 
-from kspipe.conversions import STAR_FORMATION
+from kspipe.conversions import LINE_RATIO, STAR_FORMATION
 from kspipe.core.errors import Fault, nearest
 from kspipe.core.tracers import CO_LINES
+from kspipe.recipe.check_records import (
+    alpha_co_faults,
+    convention_faults,
+    line_ratio_faults,
+    listed,
+    stars_faults,
+)
 from kspipe.recipe.models import (
     GalaxyTable,
     GasTable,
@@ -17,6 +24,7 @@ from kspipe.recipe.models import (
     MetallicityTable,
     RelationTable,
     StarFormationTable,
+    StarsTable,
 )
 from kspipe.relations import LAWS
 
@@ -33,9 +41,16 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
     some_map_is_faulty = len(maps) < len(tables["maps"])
     faults = _duplicates(maps)
     faults += _gas_faults(tables["gas"], maps, complete=not some_map_is_faulty)
+    if isinstance(tables["gas"], GasTable):
+        faults += alpha_co_faults(tables["gas"], has_stars="stars" in tables)
+    if isinstance(tables.get("stars"), StarsTable):
+        faults += stars_faults(tables["stars"], tables["maps"])
     faults += _map_extras(maps)
     if isinstance(tables["star_formation"], StarFormationTable):
         faults += _star_formation_faults(tables["star_formation"], tables["maps"])
+        faults += convention_faults(
+            tables["star_formation"], tables["foreground"], tables["relations"]
+        )
     galaxy, metallicity = tables["galaxy"], tables["metallicity"]
     if isinstance(galaxy, GalaxyTable):
         per_r25 = isinstance(metallicity, MetallicityTable) and metallicity.slope[1] == "r25"
@@ -106,10 +121,13 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
                 Fault(
                     "gas.line_ratio",
                     f"{lines[0]} needs its ratio to CO(1-0)",
-                    "type line_ratio, for example 0.65 for CO(2-1) (Leroy et al. 2022: 0.50-0.83)",
+                    "type line_ratio, for example 0.65 for CO(2-1) (Leroy et al. 2022: 0.50-0.83), "
+                    f"or the key of a record: {listed(LINE_RATIO.keys())}",
                 )
             )
-        if lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
+        if lines and isinstance(gas.line_ratio, str):
+            faults += line_ratio_faults(lines[0], gas.line_ratio)
+        elif lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
             faults.append(Fault("gas.line_ratio", "CO(1-0) takes no line ratio", "remove the key"))
     return faults
 

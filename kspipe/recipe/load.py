@@ -23,6 +23,7 @@ from kspipe.recipe.models import (
     Recipe,
     RelationTable,
     StarFormationTable,
+    StarsTable,
 )
 
 __all__ = ["load_recipe", "parse_recipe"]
@@ -35,9 +36,10 @@ _TABLES: Final[dict[str, type[BaseModel]]] = {
     "metallicity": MetallicityTable,
     "foreground": ForegroundTable,
     "star_formation": StarFormationTable,
+    "stars": StarsTable,
     "comparison": ComparisonTable,
 }
-_OPTIONAL: Final = ("relations", "comparison")
+_OPTIONAL: Final = ("relations", "comparison", "stars")
 _TOP: Final = ("seed", "maps", "gas", "relations", *_TABLES)
 
 

@@ -19,7 +19,7 @@ from pydantic import (
     model_validator,
 )
 
-from kspipe.conversions import ALPHA_CO, EXTINCTION, STAR_FORMATION
+from kspipe.conversions import ALPHA_CO, EXTINCTION, LINE_RATIO, OH_SCALES, STAR_FORMATION, STARS
 from kspipe.core.errors import nearest
 from kspipe.core.registry import Registry
 from kspipe.core.tracers import TRACERS
@@ -39,6 +39,7 @@ __all__ = [
     "Recipe",
     "RelationTable",
     "StarFormationTable",
+    "StarsTable",
 ]
 
 
@@ -62,6 +63,12 @@ def _between(low: float, high: float, what: str) -> Any:
         return quantity
 
     return AfterValidator(check)
+
+
+def _opacity(factor: Measured) -> Measured:
+    if not 1.0 <= factor.value <= 3.0:
+        raise ValueError(f"{factor.text!r}: expected a factor from 1 (optically thin) to 3")
+    return factor
 
 
 def _key_of(registry: Registry[Any]) -> Any:
@@ -114,6 +121,13 @@ Ratio = Annotated[
 RatioOrZero = Annotated[
     Measured, _measured("", '0.3 or "0.3 +- 0.1"'), _between(0, 10, "a ratio, 0 or 0 to 10")
 ]
+Offset = Annotated[Measured, _measured("dex", '"0.2 +- 0.1 dex"')]
+FieldOverDensity = Annotated[
+    Measured,
+    _measured("", "0.01"),
+    _between(0, math.inf, "a positive ratio of radiation field to density"),
+]
+Opacity = Annotated[Measured, _measured("", '1.1 or "1.1 +- 0.1"'), AfterValidator(_opacity)]
 Speed = Annotated[Measured, _measured("km/s", '"640 km/s"')]
 Percent = Annotated[Measured, BeforeValidator(parse_percent)]
 Arcsec = Annotated[
@@ -412,13 +426,21 @@ def _gradient(typed: str | None) -> str | None:
     return typed
 
 
+def _oh_scale(typed: Any) -> str:
+    if typed not in OH_SCALES:
+        raise ValueError(
+            f'metallicity scale "{typed}" is not known; {nearest(str(typed), OH_SCALES)}'
+        )
+    return str(typed)
+
+
 class MetallicityTable(Table):
     """12 + log10(O/H) over the disc: a centre and a gradient, or a map."""
 
     oh: Abundance | None = None
     gradient: Annotated[str | None, AfterValidator(_gradient)] = None
     map: Path | None = None
-    scale: str = "not stated"
+    scale: Annotated[str, BeforeValidator(_oh_scale)] = "not stated"
 
     @property
     def slope(self) -> tuple[float, str]:
@@ -442,13 +464,42 @@ class ForegroundTable(Table):
     ebv: Reddening
     uv: Annotated[str, _key_of(EXTINCTION)] = "bianchi2017"
     halpha: Annotated[str, _key_of(EXTINCTION)] = "cardelli1989"
+    ebv_scale: Literal["SFD", "SF11"] | None = None
+
+
+def _line_ratio(typed: Any) -> Measured | str | None:
+    """Read ``0.65 +- 0.08``, or the key of a record."""
+    if isinstance(typed, str) and typed[:1].isalpha():
+        if typed not in LINE_RATIO:
+            raise ValueError(f"{LINE_RATIO.unknown(typed)}; or a number such as 0.65")
+        return typed
+    return None if typed is None else parse_measured(typed, "", '0.65 or "0.65 +- 0.08"')
+
+
+def _line_ratio_bounds(ratio: Measured | str | None) -> Measured | str | None:
+    if isinstance(ratio, Measured) and not 0 < ratio.value < 10:
+        raise ValueError(f"{ratio.text!r}: expected a ratio between 0 and 10")
+    return ratio
 
 
 class GasTable(Table):
     """From lines to atomic and molecular gas."""
 
     alpha_co: Annotated[str, _key_of(ALPHA_CO)]
-    line_ratio: Ratio | None = None
+    line_ratio: Annotated[
+        Measured | str | None, BeforeValidator(_line_ratio), AfterValidator(_line_ratio_bounds)
+    ] = None
+    ms_offset: Offset | None = None
+    g0_over_n: FieldOverDensity | None = None
+    hi_opacity: Opacity | None = None
+
+
+class StarsTable(Table):
+    """Stellar surface density from a near-infrared map."""
+
+    record: Annotated[str, _key_of(STARS)]
+    map: str
+    mass_to_light: Ratio = Measured(0.5, 0.0, "0.5")
 
 
 class StarFormationTable(Table):
@@ -456,6 +507,7 @@ class StarFormationTable(Table):
 
     calibration: Annotated[str, _key_of(STAR_FORMATION)]
     maps: tuple[str, ...]
+    imf: Literal["Kroupa", "Salpeter", "Chabrier"] = "Kroupa"
 
 
 class RelationTable(Table):
@@ -490,6 +542,7 @@ class Recipe(Table):
     foreground: ForegroundTable
     gas: GasTable | Literal["atomic only"]
     star_formation: StarFormationTable
+    stars: StarsTable | None = None
     relations: dict[str, RelationTable] = Field(default_factory=dict)
     comparison: ComparisonTable = ComparisonTable()
 

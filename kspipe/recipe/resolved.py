@@ -42,6 +42,8 @@ def resolved_recipe(recipe: Recipe, found: Mapping[str, Mapping[str, str]]) -> s
     tables = ["metallicity", "foreground", "star_formation", "comparison"]
     if not isinstance(recipe.gas, str):
         tables.insert(2, "gas")
+    if recipe.stars is not None:
+        tables.insert(-1, "stars")
     for name in tables:
         lines += _table(name, getattr(recipe, name))
     for name, relation in recipe.relations.items():

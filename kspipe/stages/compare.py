@@ -106,7 +106,12 @@ def compare_relations(
             _write_residuals(
                 staging / "residuals" / f"{name}.fits", recipe, name, residuals, beam, grid
             )
-        meta = {"galaxy": recipe.galaxy.name, "kspipe": __version__, "flags": Flag.meanings()}
+        meta = {
+            "galaxy": recipe.galaxy.name,
+            "kspipe": __version__,
+            "imf": recipe.star_formation.imf,
+            "flags": Flag.meanings(),
+        }
         write_pixels(
             pixel_table(disc, residuals, used, independent, grid, meta), staging / "pixels.ecsv"
         )

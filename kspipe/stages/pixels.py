@@ -21,10 +21,11 @@ __all__ = ["pixel_table", "write_pixels"]
 Array = NDArray[np.float64]
 
 _DENSITIES = {
+    "sigma_star": ("solMass / pc2", "stars, face-on"),
     "sigma_atom": ("solMass / pc2", "atomic gas with helium, face-on"),
     "sigma_mol": ("solMass / pc2", "molecular gas with helium, face-on"),
     "sigma_gas": ("solMass / pc2", "atomic and molecular gas with helium, face-on"),
-    "sigma_sfr": ("solMass / (yr kpc2)", "star-formation rate, face-on, Kroupa IMF"),
+    "sigma_sfr": ("solMass / (yr kpc2)", "star-formation rate, face-on"),
 }
 
 
@@ -69,7 +70,8 @@ def pixel_table(
     for name, (unit, what) in _DENSITIES.items():
         if name in disc.surfaces:
             surface = disc.surfaces[name]
-            add(name, surface.value[used], unit, what)
+            imf = f", {meta['imf']} IMF" if name == "sigma_sfr" else ""
+            add(name, surface.value[used], unit, what + imf)
             add(f"{name}_err", surface.error[used], unit, f"random 1-sigma error of {name}")
     add("z_prime", z_prime(disc.oh)[used], None, "metallicity, 10^(12+log10(O/H) - 8.69)")
     flags = np.bitwise_or.reduce([disc.flags, *(r.flags for r in residuals.values())])

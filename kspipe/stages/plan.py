@@ -15,7 +15,18 @@ from numpy.typing import NDArray
 from pydantic import BaseModel
 
 from kspipe import __version__
-from kspipe.conversions import ALPHA_CO, ATOMIC, EXTINCTION, STAR_FORMATION, Choices
+from kspipe.conversions import (
+    ALPHA_CO,
+    ATOMIC,
+    EXTINCTION,
+    LINE_RATIO,
+    STAR_FORMATION,
+    STARS,
+    USUAL_SHIFT_DEX,
+    Choices,
+    scale_shift_dex,
+)
+from kspipe.core.constants import OH_SOLAR
 from kspipe.core.errors import Fault, KspipeWarning, MapError
 from kspipe.kernels.geometry import beam_axes
 from kspipe.maps import MapSource
@@ -98,6 +109,8 @@ def make_plan(recipe: Recipe, memory: InMemory | None = None) -> Plan:
     grid = _grid(recipe, sources, fwhm)
     _check_grid(grid)
     _warn_inclination(recipe)
+    _warn_scale(recipe)
+    _warn_opacity(recipe)
     prints = {f"match.{name}": _match_print(recipe, sources[name], grid, fwhm) for name in sources}
     prints["convert"] = convert_print(recipe, prints)
     return Plan(recipe, sources, target, grid, prints)
@@ -148,6 +161,40 @@ def _warn_inclination(recipe: Recipe) -> None:
         )
 
 
+def _warn_opacity(recipe: Recipe) -> None:
+    """Tell that one factor for all pixels is no opacity correction of any of them."""
+    opacity = None if isinstance(recipe.gas, str) else recipe.gas.hi_opacity
+    if opacity is not None and opacity.value != 1.0:
+        warnings.warn(
+            f"gas.hi_opacity {opacity}: one factor for all pixels, though only cold peaks are "
+            "thick; "
+            "integrated maps know no spin temperature",
+            KspipeWarning,
+            stacklevel=2,
+        )
+
+
+def _warn_scale(recipe: Recipe) -> None:
+    """Tell that alpha_CO stands on another metallicity scale than the recipe."""
+    alpha_co, given = choices_of(recipe).alpha_co, recipe.metallicity.scale
+    wanted = ALPHA_CO.get(alpha_co).oh_scale if alpha_co else None
+    if wanted is None or given in (wanted, "not stated"):
+        return
+    oh = recipe.metallicity.oh.value if recipe.metallicity.oh else OH_SOLAR
+    shift = scale_shift_dex(given, wanted, oh)
+    size = (
+        f"{shift:+.2f} dex at {oh:g}"
+        if shift is not None
+        else "usually {:g} to {:g} dex (common practice)".format(*USUAL_SHIFT_DEX)
+    )
+    warnings.warn(
+        f'metallicity.scale "{given}": "{alpha_co}" is tied to {wanted}, a shift of {size}; '
+        "12+log10(O/H) is used as it is",
+        KspipeWarning,
+        stacklevel=2,
+    )
+
+
 def _match_print(recipe: Recipe, source: MapSource, grid: Grid, fwhm: float) -> str:
     galaxy, request = recipe.galaxy, asdict(source.request)
     # Contents count, not where they lie.
@@ -184,9 +231,14 @@ def _checksum(image: Any) -> str:
 
 def choices_of(recipe: Recipe) -> Choices:
     """Pick the records that a recipe names, by key."""
+    gas = None if isinstance(recipe.gas, str) else recipe.gas
     return Choices(
         calibration=recipe.star_formation.calibration,
-        alpha_co=None if isinstance(recipe.gas, str) else recipe.gas.alpha_co,
+        alpha_co=gas.alpha_co if gas else None,
+        stars=recipe.stars.record if recipe.stars else None,
+        imf=recipe.star_formation.imf,
+        ebv_scale=recipe.foreground.ebv_scale,
+        line_ratio=gas.line_ratio if gas and isinstance(gas.line_ratio, str) else None,
         extinction={
             "FUV": recipe.foreground.uv,
             "NUV": recipe.foreground.uv,
@@ -201,6 +253,10 @@ def records_of(recipe: Recipe) -> list[Any]:
     records: list[Any] = [ATOMIC.get(choices.atomic)]
     if choices.alpha_co is not None:
         records.append(ALPHA_CO.get(choices.alpha_co))
+    if choices.line_ratio is not None:
+        records.append(LINE_RATIO.get(choices.line_ratio))
+    if choices.stars is not None:
+        records.append(STARS.get(choices.stars))
     calibration = STAR_FORMATION.get(choices.calibration)
     records.append(calibration)
     keys = {choices.extinction[t] for t in calibration.tracers if t in choices.extinction}
@@ -222,6 +278,7 @@ def convert_print(recipe: Recipe, match_prints: Mapping[str, str]) -> str:
             "metallicity map": recipe.metallicity.map and file_checksum(recipe.metallicity.map),
             "foreground": _values(recipe.foreground),
             "gas": recipe.gas if isinstance(recipe.gas, str) else _values(recipe.gas),
+            "stars": recipe.stars and _values(recipe.stars),
             "star formation": _values(recipe.star_formation),
             "ratios": {n: [t.nii_ratio, t.as_24um] for n, t in recipe.maps.items()},
             "low_snr": recipe.comparison.low_snr,

@@ -4,19 +4,22 @@ from __future__ import annotations
 
 import logging
 import os
+import warnings
 from pathlib import Path
 from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
 
+from kspipe.conversions import STAR_FORMATION, imf_factor
+from kspipe.core.errors import KspipeWarning
 from kspipe.core.progress import Progress, no_progress
 from kspipe.kernels.coarse import evaluate_smoothly
 from kspipe.kernels.geometry import disc_radius, position_offsets
 from kspipe.maps.header import sky_of_pixels
 from kspipe.maps.product import read_matched, write_matched, write_product
 from kspipe.maps.read import load_map, relative_noise, with_photon_noise
-from kspipe.maps.skymap import SkyMap
+from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import match_map, measure_noise, measure_noise_correlation
 from kspipe.recipe import Recipe
 from kspipe.recipe.resolved import resolved_recipe
@@ -38,6 +41,7 @@ log = logging.getLogger(__name__)
 
 # FITS unit of each product in DIR/maps.
 PRODUCT_UNITS: Final = {
+    "sigma_star": "solMass pc-2",
     "sigma_atom": "solMass pc-2",
     "sigma_mol": "solMass pc-2",
     "sigma_gas": "solMass pc-2",
@@ -109,6 +113,7 @@ def reduce_maps(
             for name in plan.sources
         }
         disc = surfaces_of(recipe, matched, plan.grid)
+        _warn_unsolved(recipe, disc)
         (staging / "maps").mkdir()
         _write_maps(staging / "maps", plan, disc)
         write_steps(staging / STEPS_FILE, matched, judge_maps(plan, matched, totals))
@@ -175,8 +180,10 @@ def _outside_galaxy(sky: SkyMap, recipe: Recipe) -> NDArray[np.bool_]:
 
 def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
     """Write the surface densities, ratios, metallicity and radius."""
-    lines = [f"{r.key} ({r.cite}, {r.where}): {r.formula}" for r in records_of(plan.recipe)]
+    lines = [record.sentence for record in records_of(plan.recipe)]
     galaxy = plan.recipe.galaxy
+    lines += _imf_lines(plan.recipe)
+    lines += _factor_lines(plan.recipe)
     lines.append(
         f"face-on, helium included (1.36), cos i = {galaxy.cos_i:.5f} applied once; distance "
         f"{galaxy.distance.text}"
@@ -216,6 +223,40 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
             extensions={"COVERAGE": (everywhere, ""), "FLAGS": (disc.flags, "")},
             history=[note],
         )
+
+
+def _factor_lines(recipe: Recipe) -> list[str]:
+    """Say which typed factors stand beside the records."""
+    gas = None if isinstance(recipe.gas, str) else recipe.gas
+    lines = []
+    if gas and gas.hi_opacity:
+        lines.append(f"atomic gas x {gas.hi_opacity}, one opacity factor for all pixels")
+    if recipe.stars:
+        lines.append(f"mass-to-light ratio of stars: {recipe.stars.mass_to_light}")
+    return lines
+
+
+def _warn_unsolved(recipe: Recipe, disc: Disc) -> None:
+    n = int(np.sum((disc.flags & int(Flag.NO_SOLUTION)) != 0))
+    if n:
+        warnings.warn(
+            f'star_formation.calibration: "{recipe.star_formation.calibration}" is a power law, '
+            f"and {n} pixels are at or below zero: NaN, flagged no_solution. What is left is "
+            "biased towards bright pixels",
+            KspipeWarning,
+            stacklevel=2,
+        )
+
+
+def _imf_lines(recipe: Recipe) -> list[str]:
+    """Say what a change of initial mass function did; nothing where there was none."""
+    given = str(STAR_FORMATION.get(recipe.star_formation.calibration).imf)
+    wanted = recipe.star_formation.imf
+    if given == wanted:
+        return []
+    factor = imf_factor(given, wanted)
+    change = f"{given} to {wanted}, star formation x {factor:.5f}"
+    return [f"initial mass function: {change} (same number of stars of 30 Msun)"]
 
 
 def _found(plan: Plan) -> dict[str, dict[str, str]]:

@@ -22,7 +22,7 @@ from kspipe.relations import LAWS
 from kspipe.stages.plan import Plan, records_of
 from kspipe.stages.surface import Disc
 
-__all__ = ["make_summary", "summary_text"]
+__all__ = ["left_out", "make_summary", "summary_text"]
 
 
 def make_summary(
@@ -64,6 +64,7 @@ def make_summary(
         "n_pixels": int(used.sum()),
         "n_independent": independent_beams(int(used.sum()), pixel_area, beam),
         "n_samples": int((used & independent).sum()),
+        "n_left_out": left_out(disc, used),
         "gas": recipe.gas if isinstance(recipe.gas, str) else "atomic and molecular",
         "totals": _totals(recipe, disc, used, grid),
         "flags": {
@@ -82,8 +83,18 @@ def make_summary(
             name: {"history": list(sky.history), **findings.get(name, {})}
             for name, sky in matched.items()
         },
+        "records": {
+            record.key: {"formula": record.formula, "certainty": record.certainty}
+            for record in [*records_of(recipe), *laws]
+        },
         "sources": {key: str(cite(key)) for key in cited},
     }
+
+
+def left_out(disc: Disc, used: NDArray[np.bool_]) -> int:
+    """Count covered pixels with gas but, at or below zero, no star formation by a power law."""
+    unsolved = (disc.flags & int(Flag.NO_SOLUTION)) != 0
+    return int(np.sum(np.isfinite(disc.surfaces["sigma_gas"].value) & ~used & unsolved))
 
 
 def _totals(
@@ -93,10 +104,17 @@ def _totals(
     areas = grid.areas_arcsec2()
     pc2 = recipe.galaxy.pc_per_arcsec**2 / recipe.galaxy.cos_i
     # Face-on surface densities times the area in the plane of the disc.
-    weights = {"sigma_atom": pc2, "sigma_mol": pc2, "sigma_gas": pc2, "sigma_sfr": pc2 * 1e-6}
+    weights = {
+        "sigma_atom": pc2,
+        "sigma_mol": pc2,
+        "sigma_star": pc2,
+        "sigma_gas": pc2,
+        "sigma_sfr": pc2 * 1e-6,
+    }
     names = {
         "sigma_atom": ("mass_atom", "Msun"),
         "sigma_mol": ("mass_mol", "Msun"),
+        "sigma_star": ("mass_star", "Msun"),
         "sigma_gas": ("mass_gas", "Msun"),
         "sigma_sfr": ("sfr", "Msun/yr"),
     }
@@ -108,10 +126,14 @@ def _totals(
         surface = disc.surfaces[product]
         pixel = float(np.mean(areas)) * weights[product]
         random = math.sqrt(max(sum_covariance(surface.noise, surface.noise, used, jacobian), 0.0))
+        face_on = areas * weights[product]
+        errors = _common_errors(disc, product, used, face_on)
+        factor = _factor_error(recipe, disc, product, used, face_on)
+        errors["calibration_error"] = math.hypot(errors["calibration_error"], factor)
         totals[name] = {
             "value": float(np.sum((surface.value * areas)[used])) * weights[product],
             "random_error": random * pixel,
-            **_common_errors(disc, product, used, areas * weights[product]),
+            **errors,
             "unit": unit,
         }
     total = {name: float(entry["value"]) for name, entry in totals.items()}
@@ -139,6 +161,28 @@ def _common_errors(
         calibration += (sky.common.pedestal * per_level) ** 2
         matching += (sky.common.matching * per_scale) ** 2
     return {"calibration_error": math.sqrt(calibration), "matching_error": math.sqrt(matching)}
+
+
+def _factor_error(
+    recipe: Recipe,
+    disc: Disc,
+    product: str,
+    used: NDArray[np.bool_],
+    areas: NDArray[np.float64],
+) -> float:
+    """Error of a sum from typed factors that multiply a map: HI opacity, M/L of stars."""
+    gas = None if isinstance(recipe.gas, str) else recipe.gas
+    factors = {"HI": gas.hi_opacity if gas else None}
+    if recipe.stars:
+        tracer = recipe.maps[recipe.stars.map].tracer
+        factors[tracer] = recipe.stars.mass_to_light
+    variance = 0.0
+    for tracer, factor in factors.items():
+        slope = disc.surfaces[product].slopes.get(tracer)
+        if factor is not None and slope is not None:
+            per_factor = float(np.sum((slope * disc.intensity[tracer].value * areas)[used]))
+            variance += (factor.error / factor.value * per_factor) ** 2
+    return math.sqrt(variance)
 
 
 def summary_text(summary: dict[str, Any]) -> str:

@@ -11,12 +11,11 @@ from astropy.wcs import WCS
 from numpy.typing import NDArray
 
 from kspipe.conversions import (
-    ALPHA_CO,
     Parameters,
     Surface,
-    make_surface,
+    carry_noise,
+    convert,
     oh_from_gradient,
-    z_prime,
 )
 from kspipe.core.errors import Fault, GridError
 from kspipe.core.tracers import CO_LINES
@@ -26,6 +25,7 @@ from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.maps.source import StoredImage
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe
+from kspipe.recipe.quantity import Measured
 from kspipe.stages.plan import choices_of
 
 __all__ = ["Disc", "parameters_of", "surfaces_of"]
@@ -86,45 +86,45 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
     )
     oh = metallicity_of(recipe, grid, radius_kpc)
     used = _used_maps(recipe, matched)
-    choices = choices_of(recipe)
-    parameters = parameters_of(recipe, z_prime(oh))
-    surfaces = make_surface(
+    converted = convert(
         {tracer: sky.value for tracer, sky in used.items()},
-        {tracer: sky.noise for tracer, sky in used.items()},
-        choices,
-        parameters,
+        choices_of(recipe),
+        parameters_of(recipe, oh),
     )
+    surfaces = carry_noise(converted, {tracer: sky.noise for tracer, sky in used.items()})
     coverage = {
         name: np.min([used[tracer].coverage for tracer in surface.slopes], axis=0)
         for name, surface in surfaces.items()
     }
-    flags = _flags(recipe, surfaces, list(used.values()), z_prime(oh))
+    flags = _flags(recipe, surfaces, list(used.values()), converted.flags)
     return Disc(surfaces, coverage, flags, oh, radius_kpc, used)
 
 
 def _used_maps(recipe: Recipe, matched: dict[str, SkyMap]) -> dict[str, SkyMap]:
     """Maps that a surface density is made of, by tracer."""
+    wanted = {*recipe.star_formation.maps, *({recipe.stars.map} if recipe.stars else ())}
     gas = {"HI", *(CO_LINES if recipe.has_molecular else ())}
-    return {
-        sky.tracer: sky
-        for name, sky in matched.items()
-        if sky.tracer in gas or name in recipe.star_formation.maps
-    }
+    return {sky.tracer: sky for name, sky in matched.items() if sky.tracer in gas or name in wanted}
 
 
-def parameters_of(recipe: Recipe, z: Array) -> Parameters:
-    """The numbers of a recipe that are not records, with Z' on the grid."""
-    ratio = None if isinstance(recipe.gas, str) else recipe.gas.line_ratio
+def parameters_of(recipe: Recipe, oh: Array) -> Parameters:
+    """The numbers of a recipe that are not records, with 12 + log10(O/H) on the grid."""
+    gas = None if isinstance(recipe.gas, str) else recipe.gas
+    ratio = gas.line_ratio if gas else None
     tables = [recipe.maps[name] for name in recipe.star_formation.maps]
     nii = next((t.nii_ratio for t in tables if t.nii_ratio is not None), None)
     as_24um = next((t.as_24um for t in tables if t.as_24um is not None), None)
     return Parameters(
         cos_i=recipe.galaxy.cos_i,
-        z_prime=z,
-        line_ratio=ratio.value if ratio else 1.0,
+        oh=oh,
+        line_ratio=ratio.value if isinstance(ratio, Measured) else 1.0,
         ebv=recipe.foreground.ebv.value,
         nii_ratio=nii.value if nii else 0.0,
         as_24um=as_24um.value if as_24um else 1.0,
+        hi_opacity=gas.hi_opacity.value if gas and gas.hi_opacity else 1.0,
+        mass_to_light=recipe.stars.mass_to_light.value if recipe.stars else 0.5,
+        ms_offset_dex=gas.ms_offset.value if gas and gas.ms_offset else None,
+        g0_over_n=gas.g0_over_n.value if gas and gas.g0_over_n else None,
     )
 
 
@@ -161,7 +161,10 @@ def _metallicity_map(path: Path, grid: Grid) -> Array:
 
 
 def _flags(
-    recipe: Recipe, surfaces: dict[str, Surface], maps: list[SkyMap], z: Array
+    recipe: Recipe,
+    surfaces: dict[str, Surface],
+    maps: list[SkyMap],
+    converted: dict[str, NDArray[np.bool_]],
 ) -> NDArray[np.int32]:
     """Bits that say what to beware of in a pixel."""
     gas, sfr = surfaces["sigma_gas"], surfaces["sigma_sfr"]
@@ -170,11 +173,8 @@ def _flags(
         Flag.NONPOSITIVE_SFR: sfr.value <= 0,
         Flag.NONPOSITIVE_GAS: gas.value <= 0,
         Flag.LOW_SNR: (gas.value < limit * gas.error) | (sfr.value < limit * sfr.error),
-        Flag.OUTSIDE_RANGE: np.zeros(gas.value.shape, dtype=bool),
+        **{Flag[name.upper()]: where for name, where in converted.items()},
     }
-    if not isinstance(recipe.gas, str):
-        for allowed in ALPHA_CO.get(recipe.gas.alpha_co).ranges:
-            bits[Flag.OUTSIDE_RANGE] |= (z < allowed.low) | (z > allowed.high)
     flags = np.bitwise_or.reduce([sky.flags for sky in maps]).astype(np.int32)
     for flag, where in bits.items():
         flags |= np.where(where, int(flag), 0).astype(np.int32)

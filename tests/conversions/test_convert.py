@@ -34,19 +34,33 @@ def extinctions(tracers: tuple[str, ...]) -> list[dict[str, str]]:
     return [dict(pairs) for pairs in itertools.product(*filter(None, by_band))]
 
 
+# Every calibration with every extinction, every alpha_CO with one of them, none left out.
 CHOICES = [
     Choices(record.key, alpha_co=alpha, atomic=atomic.key, extinction=extinction)
     for record in STAR_FORMATION
-    for alpha in [None, *ALPHA_CO.keys()]
     for atomic in ATOMIC
     for extinction in extinctions(record.tracers)
+    for alpha in (None, "sun2020")
 ]
+CHOICES += [Choices("leroy2008_fuv_24um", alpha_co=alpha) for alpha in (r.key for r in ALPHA_CO)]
+CHOICES += [Choices("kennicutt1998_halpha", imf=imf) for imf in ("Salpeter", "Chabrier")]
 all_choices = pytest.mark.parametrize(
     "choices",
     CHOICES,
-    ids=lambda c: "-".join([c.calibration, str(c.alpha_co), *c.extinction.values()]),
+    ids=lambda c: "-".join([c.calibration, str(c.alpha_co), *c.extinction.values(), c.imf]),
 )
-TYPICAL = {"HI": 300.0, "CO(2-1)": 5.0, "FUV": 0.05, "24um": 1.0, "Halpha": 1e-5}
+LINEAR = [
+    c
+    for c in CHOICES
+    if STAR_FORMATION.get(c.calibration).is_linear
+    and not (c.alpha_co and ALPHA_CO.get(c.alpha_co).is_self_consistent)
+]
+linear_choices = pytest.mark.parametrize(
+    "choices",
+    LINEAR,
+    ids=lambda c: "-".join([c.calibration, str(c.alpha_co), *c.extinction.values(), c.imf]),
+)
+TYPICAL = {"HI": 300.0, "CO(2-1)": 5.0, "FUV": 0.05, "NUV": 0.05, "24um": 1.0, "Halpha": 1e-5}
 
 
 def sky(choices: Choices, line: str = "CO(2-1)", shape: tuple[int, ...] = SHAPE) -> Maps:
@@ -65,11 +79,16 @@ def parameters(shape: tuple[int, ...] = ()) -> Parameters:
     rng = np.random.default_rng(2)
     return Parameters(
         cos_i=rng.uniform(0.3, 1.0, shape),
-        z_prime=rng.uniform(0.3, 1.5, shape),
+        oh=rng.uniform(8.2, 8.85, shape),
         line_ratio=rng.uniform(0.5, 0.9, shape),
         ebv=rng.uniform(0.0, 0.3, shape),
         nii_ratio=rng.uniform(0.0, 0.5, shape),
         as_24um=rng.uniform(0.9, 1.2, shape),
+        hi_opacity=rng.uniform(1.0, 1.3, shape),
+        mass_to_light=rng.uniform(0.2, 0.6, shape),
+        sigma_star=rng.lognormal(5.0, 1.0, shape),
+        ms_offset_dex=rng.uniform(-0.5, 0.5, shape),
+        g0_over_n=rng.uniform(0.001, 0.1, shape),
     )
 
 
@@ -83,7 +102,8 @@ def assert_same(got: Converted, expected: Converted, rel: float = 1e-12) -> None
 
 
 def at(given: Parameters, index: tuple[int, ...]) -> Parameters:
-    return Parameters(**{f.name: np.asarray(getattr(given, f.name))[index] for f in fields(given)})
+    stated = {f.name: value for f in fields(given) if (value := getattr(given, f.name)) is not None}
+    return Parameters(**{name: np.asarray(value)[index] for name, value in stated.items()})
 
 
 # --- contracts -----------------------------------------------------------------------------------
@@ -99,12 +119,20 @@ def test_products(choices: Choices) -> None:
         assert value.shape == SHAPE
         assert value.dtype == np.float64
         assert all(slope.shape == SHAPE for slope in got.derivatives[product].values())
-        assert all(np.all(slope > 0) for slope in got.derivatives[product].values())
+        solved = np.isfinite(value)
+        assert solved.all() or not STAR_FORMATION.get(choices.calibration).is_linear
+        for tracer, slope in got.derivatives[product].items():
+            if product == "sigma_mol" and tracer == "HI":
+                # More atoms, a deeper potential, a lower alpha_CO: what CO gives is nearer zero.
+                assert np.all(slope * value <= 0)
+            else:
+                assert np.all(slope[solved] > 0)
+                assert np.isfinite(slope[solved]).all()
     gas = got.values["sigma_atom"] + got.values.get("sigma_mol", 0.0)
     np.testing.assert_allclose(got.values["sigma_gas"], gas, rtol=1e-14)
 
 
-@all_choices
+@linear_choices
 def test_derivatives_are_differences(choices: Choices) -> None:
     maps, given = sky(choices), parameters()
     base = convert(maps, choices, given)
@@ -124,7 +152,7 @@ def test_derivatives_are_differences(choices: Choices) -> None:
         np.testing.assert_allclose(value, total, rtol=1e-12)
 
 
-@all_choices
+@linear_choices
 def test_signs_and_blanks_are_kept(choices: Choices) -> None:
     maps = sky(choices)
     flipped = convert({t: -m for t, m in maps.items()}, choices, parameters())
@@ -164,10 +192,11 @@ def test_an_array_is_many_single_pixels(choices: Choices) -> None:
     for index in np.ndindex(SHAPE):
         single = convert({t: m[index] for t, m in maps.items()}, choices, at(given, index))
         for product, value in single.values.items():
-            assert float(value) == pytest.approx(whole.values[product][index], rel=1e-12)
+            expected = whole.values[product][index]
+            assert float(value) == pytest.approx(expected, rel=1e-12, nan_ok=True)
             for tracer, slope in single.derivatives[product].items():
                 expected = whole.derivatives[product][tracer][index]
-                assert float(slope) == pytest.approx(expected, rel=1e-12)
+                assert float(slope) == pytest.approx(expected, rel=1e-12, nan_ok=True)
 
 
 @all_choices
@@ -198,7 +227,7 @@ def test_choices_and_results_travel(choices: Choices) -> None:
 # --- inclination, and what belongs to single bands ------------------------------------------------
 
 
-@all_choices
+@linear_choices
 def test_inclination_enters_exactly_once(choices: Choices) -> None:
     # C911: applied twice at 60 degrees it would be 0.30103 dex, as much as forgotten.
     maps, given = sky(choices), parameters()
@@ -219,11 +248,13 @@ def test_inclination_enters_exactly_once(choices: Choices) -> None:
 @pytest.mark.parametrize(
     ("name", "value", "touched"),
     [
-        ("ebv", 0.2, {("sigma_sfr", "FUV"), ("sigma_sfr", "Halpha")}),
+        ("ebv", 0.2, {("sigma_sfr", "FUV"), ("sigma_sfr", "NUV"), ("sigma_sfr", "Halpha")}),
         ("nii_ratio", 0.4, {("sigma_sfr", "Halpha")}),
-        ("z_prime", 0.5, {("sigma_mol", "CO(2-1)"), ("sigma_gas", "CO(2-1)")}),
+        ("oh", 8.4, {("sigma_mol", "CO(2-1)"), ("sigma_gas", "CO(2-1)")}),
         ("line_ratio", 0.65, {("sigma_mol", "CO(2-1)"), ("sigma_gas", "CO(2-1)")}),
         ("as_24um", 1.1, {("sigma_sfr", "22um")}),
+        ("hi_opacity", 1.2, {("sigma_atom", "HI"), ("sigma_gas", "HI")}),
+        ("mass_to_light", 0.3, set()),
     ],
 )
 @pytest.mark.parametrize("calibration", STAR_FORMATION.keys())
@@ -233,7 +264,8 @@ def test_a_parameter_changes_its_own_bands_only(
 ) -> None:
     choices = Choices(calibration, alpha_co="sun2020")
     maps = sky(choices)
-    maps[band] = maps.pop("24um")
+    if "24um" in maps:
+        maps[band] = np.abs(maps.pop("24um"))
     base = convert(maps, choices, Parameters(cos_i=0.5)).derivatives
     other = convert(maps, choices, Parameters(cos_i=0.5, **{name: value})).derivatives
     changed = {
@@ -245,7 +277,9 @@ def test_a_parameter_changes_its_own_bands_only(
     assert changed == {(p, t) for p, t in touched if t in maps}
 
 
-@pytest.mark.parametrize("calibration", STAR_FORMATION.keys())
+@pytest.mark.parametrize(
+    "calibration", [record.key for record in STAR_FORMATION if "24um" in record.tracers]
+)
 def test_22um_stands_for_24um(calibration: str) -> None:
     choices = Choices(calibration)
     maps = sky(choices)

@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 
 from kspipe.conversions import EXTINCTION, Choices, Parameters, convert
+from kspipe.conversions.extinction import SF11_OVER_SFD
 
 FIVE_DIGITS = 5e-5
 
@@ -99,3 +100,56 @@ def test_two_screens_are_one(tracer: str, key: str) -> None:
     assert correction(tracer, key, 0.1) * correction(tracer, key, 0.2) == pytest.approx(together)
     assert correction(tracer, key, -0.3) == pytest.approx(1 / together)
     assert correction(tracer, key, 0.0) == 1.0
+
+
+def test_other_published_sets() -> None:
+    # C401 and C403 to four digits; Fitzpatrick 1999 and O'Donnell 1994 from a general library.
+    for key, tracer, expected in (
+        ("cardelli1989_fuv", "FUV", 8.1494), ("fitzpatrick1999", "FUV", 7.965),
+        ("fitzpatrick1999", "Halpha", 2.358), ("odonnell1994", "Halpha", 2.519),
+        ("gildepaz2007", "FUV", 7.9), ("gildepaz2007", "NUV", 8.0),
+    ):  # fmt: skip
+        assert EXTINCTION.get(key).coefficients[tracer] == pytest.approx(expected, rel=FIVE_DIGITS)
+    assert EXTINCTION.get("cardelli1989_fuv").coefficients["FUV"] == pytest.approx(
+        ccm89(0.1528), rel=FIVE_DIGITS
+    )
+    # Curves differ by 2.5 % in the FUV and 7 % at H-alpha; the optical ones by less than 1 %.
+    assert EXTINCTION.get("fitzpatrick1999").coefficients["FUV"] == pytest.approx(
+        ccm89(0.1528), rel=0.025
+    )
+    assert EXTINCTION.get("odonnell1994").coefficients["Halpha"] == pytest.approx(
+        ccm89(0.65628), rel=0.01
+    )
+
+
+def test_the_curved_form() -> None:
+    # Wyder et al. 2007 (from memory): A_NUV = 8.24 E - 0.67 E^2; linear in thin dust, and within
+    # 4 % of 7.95 E where E(B-V) is 0.3.
+    record = EXTINCTION.get("wyder2007_uv")
+    assert float(record.magnitudes("NUV", np.array(0.3))) == pytest.approx(8.24 * 0.3 - 0.67 * 0.09)
+    assert float(record.magnitudes("NUV", np.array(1e-6))) / 1e-6 == pytest.approx(8.24, rel=1e-6)
+    assert float(record.magnitudes("NUV", np.array(0.3))) == pytest.approx(7.95 * 0.3, rel=0.04)
+    assert record.magnitudes("FUV", np.array(0.3)) == pytest.approx(8.24 * 0.3)
+
+
+def test_the_scale_of_the_colour_excess() -> None:
+    # Schlafly & Finkbeiner 2011 (from memory) print A_V = 2.742 E(SFD) for R_V = 3.1. It is no
+    # second value of the factor: 2.742 / 0.86 = 3.19, because their V is a band over a star's
+    # spectrum, 3 % more than the 3.1 of the curve at one wavelength.
+    assert 1.0 < 2.742 / (3.1 * SF11_OVER_SFD) < 1.03
+    maps = {"FUV": np.ones(1), "24um": np.zeros(1)}
+
+    def with_scale(key: str, scale: str | None) -> float:
+        choices = Choices("leroy2008_fuv_24um", extinction={"FUV": key}, ebv_scale=scale)
+        return float(convert(maps, choices, Parameters(1.0, ebv=0.1)).values["sigma_sfr"][0])
+
+    # Band coefficients belong to the older map, curves to the colour excess itself.
+    assert with_scale("bianchi2017", "SFD") == with_scale("bianchi2017", None)
+    assert with_scale("fitzpatrick1999", "SF11") == with_scale("fitzpatrick1999", None)
+    ratio = with_scale("fitzpatrick1999", "SFD") / with_scale("fitzpatrick1999", None)
+    assert ratio == pytest.approx(10 ** (0.4 * 7.965 * 0.1 * (0.86 - 1)), rel=1e-9)
+    # On one scale the two agree within 15 %, mixed they are 25 % apart in magnitudes.
+    mags = [
+        2.5 * math.log10(with_scale(key, "SFD") / 0.081) for key in ("bianchi2017", "gildepaz2007")
+    ]
+    assert mags[0] == pytest.approx(mags[1], rel=0.025)

@@ -35,14 +35,20 @@ def variants() -> dict[str, dict[str, Any]]:
         "whole numbers": {"foreground": {"ebv": 0}, "metallicity": {"oh": 9}},
         "numbers as text": {"metallicity": {"oh": "8.750", "gradient": "-0.045dex/kpc"}},
         "per r25": {"metallicity": {"oh": "8.69 +- 0.05", "gradient": "-0.3 dex/r25"}},
-        "quotes": {"metallicity": {"oh": 8.69, "scale": 'direct, "Te" \\ 3 %'}},
-        "letters": {"metallicity": {"oh": 8.69, "scale": "méthode directe ± 0.1"}},
+        "quotes": {"galaxy_name": 'Orrinda, "the disc" \\ 3 %'},
+        "letters": {"galaxy_name": "Orrindà ± 0.1"},
         "ratio of one": {"gas": {"alpha_co": "bolatto2013_galactic", "line_ratio": 1}},
         "beam in pc": {"grid": {"beam": "700 pc", "size": "4 arcmin", "minimum_coverage": 0.7}},
         "common beam": {"grid": {"beam": "common", "pixels_per_beam": 4}},
         "no relations": {"relations": None},
         "low_snr": {"comparison": {"low_snr": 5}},
     }
+
+
+def with_variant(good: dict[str, Any], name: str) -> dict[str, Any]:
+    changes = dict(variants()[name])
+    called = changes.pop("galaxy_name", good["galaxy"]["name"])
+    return {**good, "galaxy": {**good["galaxy"], "name": called}, **changes}
 
 
 def meaning(recipe: Recipe) -> dict[str, Any]:
@@ -66,7 +72,7 @@ def meaning(recipe: Recipe) -> dict[str, Any]:
 
 @pytest.mark.parametrize("name", variants())
 def test_a_resolved_recipe_is_the_same_recipe(good, folder, tmp_path, name) -> None:
-    raw = {**good, **variants()[name]}
+    raw = with_variant(good, name)
     recipe = parse_recipe({k: v for k, v in raw.items() if v is not None}, folder=folder)
     text = resolved_recipe(recipe, {"hi": {"unit": "'K km/s'", "beam": "13.4 arcsec"}})
     # In another folder, so that its paths have to be absolute.
@@ -117,7 +123,7 @@ def test_a_reduction_can_be_compared_however_its_numbers_were_typed(
     good, folder, tmp_path, name
 ) -> None:
     """The folder's own recipe must not look like another one to the next stage."""
-    raw = copy.deepcopy({**good, **variants()[name]})
+    raw = copy.deepcopy(with_variant(good, name))
     raw["grid"] = {"beam": "40 arcsec"}
     reduce_maps(parse_recipe(raw, folder=folder), tmp_path / "out")
     assert compare_relations(tmp_path / "out")
@@ -126,7 +132,7 @@ def test_a_reduction_can_be_compared_however_its_numbers_were_typed(
 @pytest.mark.parametrize("name", variants())
 def test_the_resolved_recipe_asks_for_the_same_products(good, folder, tmp_path, name) -> None:
     """Fingerprints decide on reuse: those of the resolved recipe are those of the typed one."""
-    raw = {k: v for k, v in {**good, **variants()[name]}.items() if v is not None}
+    raw = {k: v for k, v in with_variant(good, name).items() if v is not None}
     recipe = parse_recipe(raw, folder=folder)
     (tmp_path / "recipe.toml").write_text(resolved_recipe(recipe, {}), encoding="utf-8")
     again = load_recipe(tmp_path / "recipe.toml")
