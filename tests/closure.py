@@ -14,6 +14,7 @@ import numpy as np
 from demo import load_demo
 
 from kspipe.conversions import make_surface
+from kspipe.maps import SkyMap
 from kspipe.recipe import load_recipe
 from kspipe.stages.plan import Plan, choices_of, make_plan
 from kspipe.stages.reduce import match_one
@@ -37,8 +38,10 @@ class Run:
     complete: np.ndarray
 
 
-def reduce_painted(seed: int, *, noise: bool, recipe_name: str = "orrinda_short.toml") -> Run:
-    """Paint the sky, reduce it in memory."""
+def matched_painted(
+    seed: int, *, noise: bool, recipe_name: str = "orrinda_short.toml"
+) -> tuple[Plan, dict[str, SkyMap]]:
+    """Paint the sky, match its maps in memory."""
     recipe = load_recipe(ROOT / "recipes" / recipe_name)
     if not noise:
         # A noise-free map shows no noise to measure; the painter's own value stands in.
@@ -49,9 +52,14 @@ def reduce_painted(seed: int, *, noise: bool, recipe_name: str = "orrinda_short.
         name: (painted[STEMS[name][0]], painted.get(STEMS[name][1] or "")) for name in recipe.maps
     }
     plan = make_plan(recipe, memory)
-    matched = {name: match_one(plan, name) for name in plan.sources}
+    return plan, {name: match_one(plan, name) for name in plan.sources}
+
+
+def reduce_painted(seed: int, *, noise: bool, recipe_name: str = "orrinda_short.toml") -> Run:
+    """Paint the sky, reduce it in memory."""
+    plan, matched = matched_painted(seed, noise=noise, recipe_name=recipe_name)
     complete = np.min([sky.coverage for sky in matched.values()], axis=0) > 0.9999
-    return Run(plan, surfaces_of(recipe, matched, plan.grid), complete)
+    return Run(plan, surfaces_of(plan.recipe, matched, plan.grid), complete)
 
 
 def truth_of(run: Run) -> dict[str, tuple[np.ndarray, np.ndarray]]:
