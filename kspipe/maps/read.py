@@ -173,8 +173,9 @@ def _stated_sigma(
 def relative_noise(source: MapSource) -> Array | None:
     """How the noise varies over the field, from the recipe's shape; None where it gives none.
 
-    Noise goes as 1 / primary beam (one where the beam is one), as 1 / sqrt(exposure) (one at the
-    longest) and as the square root of the number of channels summed (one for one channel).
+    Noise goes as 1 / primary beam (one where the beam is one), as 1 / sqrt(exposure) or
+    1 / sqrt(weight) (one at the largest), and as the square root of the number of channels summed
+    (one for one channel).
 
     Raises
     ------
@@ -202,7 +203,7 @@ def relative_noise(source: MapSource) -> Array | None:
         raise MapError(Fault(f"{where}, {image}", "no pixel is positive"))
     if noise.shape_is == "primary beam":
         return np.asarray(1.0 / positive)
-    if noise.shape_is == "exposure":
+    if noise.shape_is in ("exposure", "weight"):
         return np.asarray(np.sqrt(np.nanmax(positive) / positive))
     return np.asarray(np.sqrt(positive))
 

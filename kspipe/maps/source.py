@@ -66,8 +66,8 @@ class NoiseRequest:
         measured on blank sky.
     shape_file : Path or None
         Map of how the noise varies over the field.
-    shape_is : {"primary beam", "exposure", "channels"}
-        Noise goes as 1 / primary beam, 1 / sqrt(exposure), sqrt(channels summed).
+    shape_is : {"primary beam", "exposure", "weight", "channels"}
+        Noise goes as 1 / primary beam, 1 / sqrt(exposure or weight), sqrt(channels summed).
     gain : float or None
         Photons per stored unit of one pixel: adds photon noise sqrt(value / gain).
     """
@@ -80,7 +80,7 @@ class NoiseRequest:
     stated: Literal["sigma", "variance", "inverse variance"] = "sigma"
     correlated: Literal["beam", "none", "measure"] = "none"
     shape_file: Path | None = None
-    shape_is: Literal["primary beam", "exposure", "channels"] = "primary beam"
+    shape_is: Literal["primary beam", "exposure", "weight", "channels"] = "primary beam"
     gain: float | None = None
 
 

@@ -88,7 +88,7 @@ def _left_out(numbers: Mapping[str, Any]) -> str:
     """Which part of the pixels is not in the median."""
     if numbers["fraction_without_log"] is None:
         return "no pixel has a prediction"
-    return f"{percent(numbers['fraction_without_log'])} of covered pixels could not enter"
+    return f"{percent(numbers['fraction_without_log'])} of pixels not in it"
 
 
 def map_lines(

@@ -270,15 +270,15 @@ class NoiseTyped(Table):
     level: Level
     correlated: Correlated | None = None
     shape: Path | None = None
-    shape_is: Literal["primary beam", "exposure", "channels"] | None = None
+    shape_is: Literal["primary beam", "exposure", "weight", "channels"] | None = None
     gain: float | None = Field(default=None, gt=0)
 
     @model_validator(mode="after")
     def _shape_is_said(self) -> NoiseTyped:
         if (self.shape is None) != (self.shape_is is None):
             raise ValueError(
-                'shape = "file.fits" and shape_is = "primary beam", "exposure" or "channels" '
-                "go together"
+                'shape = "file.fits" goes with shape_is = "primary beam", "exposure", "weight" or '
+                '"channels"'
             )
         return self
 

@@ -2,8 +2,8 @@
 
 ``python tests/bench/accuracy.py``: for each tracer the 1st, 16th, 50th, 84th and 99th percentile
 of recovered/true - 1 [%], where coverage is complete, and where it is 0.5 to 0.95 (structured
-edges); truth above 5 %, at edges 0.2 %, of its maximum. By hand is a kernel sampled on pixels through
-``convolve_fft``, then ``reproject_interp``; it is told beam, unit and pixel by the painter.
+edges); truth above 5 %, at edges 0.2 %, of its maximum. By hand is a kernel sampled on pixels
+through ``convolve_fft``, then ``reproject_interp``; the painter tells it beam, unit and pixel.
 """
 
 import sys

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import math
 from pathlib import Path
 
 import numpy as np
@@ -246,3 +247,23 @@ def test_hdus_in_memory_are_never_modified(data, sigma) -> None:
     np.testing.assert_array_equal(hdu.data, before[0])
     np.testing.assert_array_equal(noise_hdu.data, before[2])
     assert (str(hdu.header), str(noise_hdu.header)) == before[1::2]
+
+
+@pytest.mark.parametrize(
+    ("shape_is", "expected"),
+    [
+        # Common practice: noise as 1/PB, 1/sqrt(time or weight), sqrt(channels summed).
+        ("primary beam", [2.0, 1.0, 0.25]),
+        ("exposure", [math.sqrt(8.0), 2.0, 1.0]),
+        ("weight", [math.sqrt(8.0), 2.0, 1.0]),
+        ("channels", [math.sqrt(0.5), 1.0, 2.0]),
+    ],
+)
+def test_noise_follows_its_shape(tmp_path, data, shape_is, expected) -> None:
+    shape = np.full(SHAPE, 4.0)
+    shape[0, :2] = 0.5, 1.0
+    file = tmp_path / "shape.fits"
+    make_hdu(shape).writeto(file)
+    noise = NoiseRequest("value", value=0.1, unit="K km/s", shape_file=file, shape_is=shape_is)
+    sky = read_map(make_hdu(data), noise=noise)
+    np.testing.assert_allclose(sky.error[0, :3], 0.1 * np.array(expected), rtol=1e-6)
