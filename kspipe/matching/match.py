@@ -32,6 +32,8 @@ LEAST_PIXELS_PER_BEAM: Final = 2.5
 WELL_SAMPLED: Final = 4.0
 # A pixel's size on the sky may change by this much before a map gets more than one kernel.
 STEADY_SCALE: Final = 1e-4
+# Beyond this no tile is small enough: the kernel at the galaxy's centre serves all of the map.
+BENT_SCALE: Final = 0.02
 # The cubic B-spline's prefilter forgets a pixel by 0.27 for each pixel of distance.
 SPLINE_MARGIN: Final = 14
 # A kernel narrower than a pixel would ring from the edge of a tile, which therefore fades out.
@@ -180,7 +182,7 @@ def _tile_size(sky: SkyMap, smoothing: Smoothing, wanted: tuple[slice, slice]) -
                 return TILE
             difference = float(np.linalg.norm(corner.T @ corner - form))
             change = max(change, 0.5 * difference / float(np.linalg.norm(form)))
-    if sky.psf is not None or change < STEADY_SCALE:
+    if sky.psf is not None or not STEADY_SCALE < change < BENT_SCALE:
         return TILE
     widest = max(rows.stop - rows.start, columns.stop - columns.start)
     # The scale changes with the square of the distance from the tangent point.

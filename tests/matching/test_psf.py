@@ -615,9 +615,12 @@ def test_rounding_a_beam_up_to_its_major_axis_always_works(major, ratio, pa, hai
     sky = make_sky(np.full((41, 41), 3.0), wcs=wcs, beam_arcsec2=source.beam_arcsec2, noise=(term,))
     matched = match_map(sky, target, plain_grid(7, major / 3), minimum_coverage=0.1)
     # The spline forgets what lies beyond a tile's margin of 14 pixels by 0.268^14 = 1e-8.
-    np.testing.assert_allclose(matched.value, 3.0, rtol=1e-7)
-    assert (matched.error <= 1.0 / matched.coverage + 1e-9).all()
-    assert (matched.error > 0).all()
+    # Of a wide beam less than a tenth may fall on the map in the grid's corners.
+    seen = matched.coverage >= 0.1
+    assert seen[2:5, 2:5].all()
+    np.testing.assert_allclose(matched.value[seen], 3.0, rtol=1e-7)
+    assert (matched.error[seen] <= 1.0 / matched.coverage[seen] + 1e-9).all()
+    assert (matched.error[seen] > 0).all()
 
 
 @pytest.mark.slow
