@@ -7,10 +7,10 @@ from typing import Final
 
 from kspipe.conversions import ALPHA_CO, EXTINCTION, INPUTS, LINE_RATIO, STAR_FORMATION, STARS
 from kspipe.core.errors import Fault, nearest
+from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.models import (
     ForegroundTable,
     GasTable,
-    MapTable,
     StarFormationTable,
     StarsTable,
 )

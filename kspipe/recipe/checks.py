@@ -17,10 +17,10 @@ from kspipe.recipe.check_records import (
     listed,
     stars_faults,
 )
+from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.models import (
     GalaxyTable,
     GasTable,
-    MapTable,
     MetallicityTable,
     RelationTable,
     StarFormationTable,

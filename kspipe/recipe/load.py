@@ -10,16 +10,14 @@ from pydantic import BaseModel, ValidationError
 
 from kspipe.core.errors import Fault, RecipeError, nearest
 from kspipe.recipe.checks import check_relation, check_together
+from kspipe.recipe.map_table import MapTable, NoiseFile, NoiseTyped
 from kspipe.recipe.models import (
     ComparisonTable,
     ForegroundTable,
     GalaxyTable,
     GasTable,
     GridTable,
-    MapTable,
     MetallicityTable,
-    NoiseFile,
-    NoiseTyped,
     Recipe,
     RelationTable,
     StarFormationTable,

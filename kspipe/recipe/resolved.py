@@ -9,7 +9,8 @@ from typing import Any
 
 from pydantic import BaseModel
 
-from kspipe.recipe.models import MapTable, Recipe
+from kspipe.recipe.map_table import MapTable
+from kspipe.recipe.models import Recipe
 from kspipe.recipe.quantity import Measured, Position
 
 __all__ = ["resolved_recipe"]

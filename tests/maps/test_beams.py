@@ -19,7 +19,7 @@ from hypothesis import strategies as st
 from kspipe.core.errors import BeamError
 from kspipe.maps.beams import Beam, beam_difference, beam_table, find_beam, table_beam
 from kspipe.maps.product import write_product
-from kspipe.recipe.models import MapTable
+from kspipe.recipe.map_table import MapTable
 
 fixed = settings(derandomize=True, deadline=None, max_examples=80)
 # Headers and tables as telescopes left them, which radio_beam ships with its tests.

@@ -20,7 +20,7 @@ from kspipe.core.errors import GridError, MapError, UnitError
 from kspipe.core.tracers import TRACERS
 from kspipe.maps import NoiseRequest
 from kspipe.maps.intensity import examples, open_door, read_stored_unit
-from kspipe.recipe.models import MapTable
+from kspipe.recipe.map_table import MapTable
 
 # SI and CODATA 2018 exact values, kept apart from the constants of kspipe on purpose.
 C_CM_S, K_ERG_K, H_ERG_S = 2.99792458e10, 1.380649e-16, 6.62607015e-27
