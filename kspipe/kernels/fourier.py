@@ -47,11 +47,18 @@ class Padded:
 
 
 @lru_cache(maxsize=4)
-def _transfer(shape: tuple[int, int], cxx: float, cxy: float, cyy: float, spline: int) -> Array:
-    """Fourier transform of a unit Gaussian on the half plane of a real FFT.
+def _transfer(
+    shape: tuple[int, int],
+    cxx: float,
+    cxy: float,
+    cyy: float,
+    spline: int,
+    orders: tuple[int, int],
+) -> Transfer:
+    """Fourier transform of a derivative of a unit Gaussian on the half plane of a real FFT.
 
-    The tiles of one map share it, and it costs as much as the transform itself. With `spline` it
-    gives coefficients of the spline through that many samples per pixel.
+    The value, its weight and other tiles share it, and it costs as much as the transform itself.
+    With `spline` it gives coefficients of the spline through that many samples per pixel.
     """
     ky = np.fft.fftfreq(shape[0])[:, None]
     kx = np.fft.rfftfreq(shape[1])[None, :]
@@ -59,7 +66,11 @@ def _transfer(shape: tuple[int, int], cxx: float, cxy: float, cyy: float, spline
     transfer = np.exp(-2.0 * math.pi**2 * exponent)
     if spline:
         transfer /= spline_samples(shape, spline)
-    return np.asarray(transfer)
+    if orders == (0, 0):
+        return np.asarray(transfer)
+    return np.asarray(
+        transfer * (2j * math.pi * kx) ** orders[0] * (2j * math.pi * ky) ** orders[1]
+    )
 
 
 def spline_samples(shape: tuple[int, int], fine: int = 1) -> Array:
@@ -88,6 +99,7 @@ def gaussian_smooth(
     workers: int = 1,
     as_spline: bool = False,
     fine: int = 1,
+    derivative: tuple[int, int] = (0, 0),
 ) -> Padded:
     """Convolve with a Gaussian whose transfer function is exact; zero beyond the edges.
 
@@ -107,6 +119,8 @@ def gaussian_smooth(
     fine : int
         Samples of the result per pixel, by zeros at high frequencies: exact for what the pixels
         hold. For maps whose final beam spans few pixels.
+    derivative : (int, int)
+        Orders in x and y [pixel] of the derivative of the result that is wanted.
 
     Returns
     -------
@@ -119,12 +133,12 @@ def gaussian_smooth(
     """
     reach = gaussian_reach(covariance_pix2)
     margin = max(reach, 2) if margin is None else margin
-    if not np.any(covariance_pix2) and not as_spline and fine == 1:
+    if not (np.any(covariance_pix2) or as_spline or any(derivative)) and fine == 1:
         return Padded(np.pad(array, margin), margin)
     (cxx, cxy), (_, cyy) = np.asarray(covariance_pix2).tolist()
 
     def transfer(shape: tuple[int, int]) -> Transfer:
-        return _transfer(shape, cxx, cxy, cyy, fine if as_spline else 0)
+        return _transfer(shape, cxx, cxy, cyy, fine if as_spline else 0, derivative)
 
     return filtered(array, transfer, reach=reach, margin=margin, workers=workers, fine=fine)
 

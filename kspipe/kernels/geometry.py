@@ -19,6 +19,7 @@ __all__ = [
     "beam_covariance",
     "disc_radius",
     "hexagonal_lattice",
+    "offset_positions",
     "pixel_covariance",
     "position_offsets",
     "subtract_covariance",
@@ -83,7 +84,7 @@ def pixel_covariance(jacobian_arcsec: Array) -> Array:
     (2, 2) float64 array
         A unit box has variance 1/12 on each axis [arcsec2].
     """
-    return jacobian_arcsec @ jacobian_arcsec.T / 12.0
+    return jacobian_arcsec @ np.swapaxes(jacobian_arcsec, -1, -2) / 12.0
 
 
 def transform_covariance(covariance: Array, jacobian: Array) -> Array:
@@ -146,6 +147,31 @@ def position_offsets(
     with np.errstate(invalid="ignore", divide="ignore"):
         scale = np.where(sine > 0, separation / sine, 0.0)
     return x * scale, y * scale
+
+
+def offset_positions(
+    lon_deg: Array, lat_deg: Array, east_arcsec: Array, north_arcsec: Array
+) -> tuple[Array, Array]:
+    """Sky positions at offsets east and north along great circles; undoes `position_offsets`.
+
+    Parameters
+    ----------
+    lon_deg, lat_deg : float64 array
+        Where the offsets start.
+    east_arcsec, north_arcsec : float64 array
+        Shapes that broadcast with the positions.
+
+    Returns
+    -------
+    lon_deg, lat_deg : float64 array
+    """
+    lat0 = np.radians(lat_deg)
+    separation = np.radians(np.hypot(east_arcsec, north_arcsec) / 3600.0)
+    angle = np.arctan2(east_arcsec, north_arcsec)
+    sine = np.sin(separation)
+    up = np.cos(separation) * np.cos(lat0) - sine * np.sin(lat0) * np.cos(angle)
+    lat = np.arcsin(np.cos(separation) * np.sin(lat0) + sine * np.cos(lat0) * np.cos(angle))
+    return lon_deg + np.degrees(np.arctan2(sine * np.sin(angle), up)), np.degrees(lat)
 
 
 def disc_radius(

@@ -126,29 +126,30 @@ def shifted_wcs(
     return moved
 
 
-def pixel_jacobian(wcs: WCS, x: float, y: float, *, icrs: bool = True) -> Array:
-    """Sky offset (east, north) [arcsec] for one pixel step in x and in y at one position.
+def pixel_jacobian(wcs: WCS, x: Array | float, y: Array | float, *, icrs: bool = True) -> Array:
+    """Sky offset (east, north) [arcsec] for one pixel step in x and in y.
 
     Parameters
     ----------
     wcs : astropy.wcs.WCS
         Celestial, any frame.
-    x, y : float
-        Pixel position.
+    x, y : float or (...) float64 array
+        Pixel positions.
     icrs : bool
         East and north of ICRS; else those of the map's own frame, on which its beam angle counts.
 
     Returns
     -------
-    (2, 2) float64 array
+    (..., 2, 2) float64 array
         Columns are the steps in x and y.
     """
-    half = 0.5
-    xs, ys = np.array([x - half, x + half, x, x]), np.array([y, y, y - half, y + half])
+    half = np.array([[0.5, -0.5, 0.0, 0.0], [0.0, 0.0, 0.5, -0.5]])
+    xs, ys = (np.asarray(p, dtype=float)[..., None] + h for p, h in zip((x, y), half, strict=True))
     lon, lat = sky_of_pixels(wcs, xs, ys) if icrs else wcs.all_pix2world(xs, ys, 0)
-    dlon = (lon[1::2] - lon[::2] + 180.0) % 360.0 - 180.0
-    dlat = lat[1::2] - lat[::2]
-    return np.array([dlon * math.cos(math.radians(float(np.mean(lat)))), dlat]) * DEG_ARCSEC
+    dlon = (lon[..., ::2] - lon[..., 1::2] + 180.0) % 360.0 - 180.0
+    dlat = lat[..., ::2] - lat[..., 1::2]
+    cosine = np.cos(np.radians(np.mean(lat, axis=-1, keepdims=True)))
+    return np.stack([dlon * cosine, dlat], axis=-2) * DEG_ARCSEC
 
 
 def pixel_areas_arcsec2(wcs: WCS, shape: tuple[int, int]) -> Array:

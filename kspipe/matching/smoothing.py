@@ -149,11 +149,23 @@ class GaussianSmoothing:
         return {}
 
     def smooth(
-        self, array: Array, *, workers: int = 1, as_spline: bool = False, fine: int = 1
+        self,
+        array: Array,
+        *,
+        workers: int = 1,
+        as_spline: bool = False,
+        fine: int = 1,
+        derivative: tuple[int, int] = (0, 0),
     ) -> Array:
-        """Smooth values, or coverage; zero beyond the edges."""
+        """Smooth values, or coverage, or take a derivative of that; zero beyond the edges."""
         return gaussian_smooth(
-            array, self.pix2, margin=0, workers=workers, as_spline=as_spline, fine=fine
+            array,
+            self.pix2,
+            margin=0,
+            workers=workers,
+            as_spline=as_spline,
+            fine=fine,
+            derivative=derivative,
         ).array
 
     def variance(self, term: NoiseTerm, sigma: Array, *, workers: int = 1) -> Array:

@@ -10,10 +10,9 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import ndimage
 
-import kspipe.matching.match as match_module
 from kspipe.kernels.geometry import beam_covariance
 from kspipe.kernels.noise import NoiseTerm
-from kspipe.matching import Grid, match_map
+from kspipe.matching import Grid, bending, match_map
 
 
 def round_beam(fwhm: float) -> np.ndarray:
@@ -39,8 +38,7 @@ def test_tiles_equal_the_whole_map(monkeypatch, correlated) -> None:
     sky = make_sky(value, wcs=wcs, beam_arcsec2=beam, noise=(term,))
     results = []
     for size in (10_000, 70):
-        monkeypatch.setattr(match_module, "_tile_size", lambda *_, size=size: size)
-        monkeypatch.setattr(match_module, "TILE", 0)  # one kernel: only the cutting is tested
+        monkeypatch.setattr(bending, "TILE", size)
         results.append(match_map(sky, round_beam(15.0), grid_around(180, 5.0)))
     whole, tiles = results
     seen = np.isfinite(whole.value)

@@ -198,11 +198,9 @@ def checked_pixels(matched: SkyMap, radius: float) -> tuple[np.ndarray, SkyCoord
 
 
 def assert_equal_on_the_sky(matched: SkyMap, expected: np.ndarray, chosen, at) -> None:
-    """Sums inside 3 and 4 degrees to 0.3 %, and pixel by pixel nearly everywhere.
+    """Sums inside 3 and 4 degrees, and every pixel, to 0.3 %.
 
-    Where the sky is near zero a pixel is held to 0.3 % of one percent of the peak. A gnomonic
-    pixel changes its size by 0.15 % within a beam at 4 degrees, which one kernel per tile does
-    not follow: single pixels there are off by up to 0.4 %.
+    Where the sky is near zero a pixel is held to 0.3 % of one percent of the peak.
     """
     size = np.maximum(np.abs(expected), 0.01 * np.nanmax(matched.value))
     ours = matched.value[chosen]
@@ -210,8 +208,7 @@ def assert_equal_on_the_sky(matched: SkyMap, expected: np.ndarray, chosen, at) -
     for radius in (3.0, 4.0):
         inside = at.separation(CENTRE).deg < radius
         assert ours[inside].sum() == pytest.approx(expected[inside].sum(), rel=0.003)
-        assert np.quantile(off[inside], 0.99) < 0.003, f"within {radius} deg"
-        assert off[inside].max() < 0.004, f"within {radius} deg"
+        assert off[inside].max() < 0.003, f"within {radius} deg"
 
 
 @pytest.mark.parametrize("name", ["ha", "ir"])
