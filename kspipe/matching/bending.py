@@ -42,7 +42,7 @@ STEADY_SKEWNESS: Final = 2e-4
 MOST_PER_TILE: Final = 0.05
 LEAST_TILE: Final = 128
 # Nodes along each side of a tile; moments hardly change over it.
-NODES: Final = 5
+NODES: Final = 9
 # Gauss-Hermite points along each axis: exact for projections up to the ninth power.
 _Z, _WEIGHTS = np.polynomial.hermite_e.hermegauss(5)
 _WEIGHTS = _WEIGHTS / _WEIGHTS.sum()
@@ -142,13 +142,15 @@ def bend_of(
     Returns
     -------
     Bending
-        Kernels made for a PSF image are one for the whole map, and so is that of a map with no
-        sky at some place that is wanted.
+        Kernels made for a PSF image are one for the whole map, and so is that of a projection
+        that ends or has an edge within what is wanted.
     """
     change = 0.0
     if isinstance(smoothing, GaussianSmoothing) and np.any(smoothing.arcsec2):
-        moments = seen_on_pixels(sky, target_arcsec2, *_nodes(wanted))
-        change = _change(moments, smoothing.pix2)
+        nodes = _nodes(wanted)
+        moments = seen_on_pixels(sky, target_arcsec2, *nodes)
+        if np.isfinite(moments.skewness).all() and _is_smooth(moments, nodes, smoothing.pix2):
+            change = _change(moments, smoothing.pix2)
     tile = TILE
     if change > MOST_PER_TILE:
         widest = max(part.stop - part.start for part in wanted)
@@ -164,13 +166,24 @@ def _nodes(part: tuple[slice, slice]) -> tuple[Array, Array]:
 
 
 def _change(moments: Moments, kernel_pix2: Array) -> float:
-    """How far kernels are from one Gaussian; zero where that does not tell, or the sky ends."""
+    """How far kernels are from one Gaussian; zero where that does not tell."""
     variance = 0.5 * float(np.trace(kernel_pix2))
     wider = np.max(np.abs(moments.covariance - _upper(kernel_pix2))) / variance
     skew = np.max(np.abs(moments.skewness)) / variance**1.5
     if wider > STEADY_VARIANCE or skew > STEADY_SKEWNESS:
         return float(max(wider, skew))
     return 0.0
+
+
+def _is_smooth(moments: Moments, nodes: tuple[Array, Array], kernel_pix2: Array) -> bool:
+    """Whether every second node tells the others: not so across the edge of a projection's face."""
+    x, y = nodes[0][:NODES], nodes[1][::NODES]
+    off = 0.0
+    for part in moments.covariance:
+        every = part.reshape(NODES, NODES)
+        spline = RectBivariateSpline(y[::2], x[::2], every[::2, ::2])
+        off = max(off, float(np.max(np.abs(spline(y, x) - every))))
+    return off < STEADY_VARIANCE * 0.5 * float(np.trace(kernel_pix2))
 
 
 def _upper(covariance: Array) -> Array:
@@ -236,7 +249,9 @@ def seen_on_pixels(sky: SkyMap, target_arcsec2: Array, x: Array, y: Array) -> Mo
     point_x, point_y = skycoord_to_pixel(
         SkyCoord(*there, unit="deg"), sky.wcs, origin=0, mode="all"
     )
-    dx, dy = point_x - x[:, None], point_y - y[:, None]
+    # The middle point, not x and y: a projection and its inverse may be approximations.
+    middle = slice(weights.size // 2, weights.size // 2 + 1)
+    dx, dy = point_x - point_x[:, middle], point_y - point_y[:, middle]
     mean = np.array([dx @ weights, dy @ weights])
     dx, dy = dx - mean[0][:, None], dy - mean[1][:, None]
     return Moments(

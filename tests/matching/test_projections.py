@@ -32,6 +32,9 @@ every_projection = pytest.mark.parametrize(
 SOURCE = SkyCoord(286.0, -66.3, unit="deg")
 FWHM, TARGET = 1500.0, 2100.0
 PEAK = (FWHM / TARGET) ** 2
+# The sky of CSC is an approximation in the standard itself (its inverse is off by 0.02 pixel
+# here), ZPN's is a polynomial that is inverted step by step.
+CRUDE = {"CSC": 0.01, "ZPN": 2e-3}
 
 
 def round_gaussian(sky: SkyCoord, fwhm: float) -> np.ndarray:
@@ -62,9 +65,8 @@ def test_a_source_keeps_flux_place_and_width(file) -> None:
     truth = PEAK * round_gaussian(SkyCoord(*grid.sky(), unit="deg"), TARGET)
     inside = matched.coverage > 0.999
     assert inside.mean() > 0.95
-    # One kernel serves the whole map: it is that of the source's place, and over the width of the
-    # source none of the projections bends by more.
-    np.testing.assert_allclose(matched.value[inside], truth[inside], atol=0.01 * PEAK)
+    off = CRUDE.get(file.stem.removeprefix("1904-66_"), 5e-4)
+    np.testing.assert_allclose(matched.value[inside], truth[inside], atol=off * PEAK)
     flux = np.sum((matched.value * grid.areas_arcsec2())[inside]) * ARCSEC2_SR
     expected = np.sum((truth * grid.areas_arcsec2())[inside]) * ARCSEC2_SR
-    assert flux == pytest.approx(expected, rel=0.01)
+    assert flux == pytest.approx(expected, rel=0.2 * off)
