@@ -13,7 +13,7 @@ from pathlib import Path
 import numpy as np
 from demo import load_demo
 
-from kspipe.conversions import make_surface
+from kspipe.conversions import Ratio, Surface, make_surface
 from kspipe.maps import SkyMap
 from kspipe.recipe import load_recipe
 from kspipe.stages.plan import Plan, choices_of, make_plan
@@ -23,10 +23,7 @@ from kspipe.stages.surface import Disc, parameters_of, surfaces_of
 ROOT = Path(__file__).resolve().parents[1]
 STEMS = {"hi": ("hi", "hi_noise"), "co": ("co", None), "fuv": ("fuv", None)}
 STEMS |= {"ir": ("mir24", "mir24_noise"), "ha": ("halpha", None)}
-SURFACE_DENSITIES = ("sigma_atom", "sigma_mol", "sigma_gas", "sigma_sfr")
-DENOMINATORS = {"f_mol": "sigma_gas", "t_dep": "sigma_sfr"}
-# Below this S/N of the denominator a ratio is far from Gaussian, whatever its error.
-LEAST_DENOMINATOR = 5.0
+PRODUCTS = ("sigma_atom", "sigma_mol", "sigma_gas", "sigma_sfr", "f_mol", "t_dep")
 
 
 @dataclass(frozen=True)
@@ -97,7 +94,7 @@ def noise_free_percentiles(recipe_name: str = "orrinda_short.toml") -> dict[str,
 
 @dataclass(frozen=True)
 class Coverage:
-    """How often the truth lies inside the stated error."""
+    """How often the truth lies inside what is stated."""
 
     product: str
     snr: str
@@ -106,33 +103,35 @@ class Coverage:
     within_2: float
 
 
-def coverage_table(seeds: Iterable[int], *, weak_denominators: bool = False) -> list[Coverage]:
+def stated(surface: Surface, n_sigma: int) -> tuple[np.ndarray, np.ndarray]:
+    """What a product says: value +- error, and for a ratio its interval."""
+    if isinstance(surface, Ratio):
+        return surface.interval(n_sigma)
+    return surface.value - n_sigma * surface.error, surface.value + n_sigma * surface.error
+
+
+def coverage_table(seeds: Iterable[int]) -> list[Coverage]:
     """Pool pixels over noise seeds, by product and true S/N.
 
-    Ratios are pooled where the true S/N of their denominator is at least 5, or, with
-    `weak_denominators`, below.
+    All covered pixels count: also those of a ratio whose denominator came out below zero, which
+    have an interval, if no value.
     """
-    pulls: dict[tuple[str, str], list[np.ndarray]] = {}
+    inside: dict[tuple[str, str], list[np.ndarray]] = {}
     for seed in seeds:
         run = reduce_painted(seed, noise=True)
         truths = truth_of(run)
-        for name in (*SURFACE_DENSITIES, *DENOMINATORS):
-            surface, (truth, true_error) = run.disc.surfaces[name], truths[name]
-            pull = (surface.value - truth) / surface.error
-            used = np.isfinite(pull)
-            if name in DENOMINATORS:
-                bottom, bottom_error = truths[DENOMINATORS[name]]
-                used &= (bottom < LEAST_DENOMINATOR * bottom_error) == weak_denominators
-            elif weak_denominators:
-                continue
+        for name in PRODUCTS:
+            truth, true_error = truths[name]
+            low, high = np.swapaxes([stated(run.disc.surfaces[name], k) for k in (1, 2)], 0, 1)
+            within = (low < truth) & (truth < high)
+            used = ~np.isnan(low[0]) & np.isfinite(truth)
             snr = truth / true_error
-            for label, low, high in (("< 1", -np.inf, 1), ("1 to 5", 1, 5), ("> 5", 5, np.inf)):
-                chosen = used & (snr >= low) & (snr < high)
-                pulls.setdefault((name, label), []).append(np.abs(pull[chosen]))
+            for label, least, most in (("< 1", -np.inf, 1), ("1 to 5", 1, 5), ("> 5", 5, np.inf)):
+                chosen = used & (snr >= least) & (snr < most)
+                inside.setdefault((name, label), []).append(within[:, chosen])
     table = []
-    for (name, label), parts in pulls.items():
-        pull = np.concatenate(parts)
-        if pull.size:
-            within = [float(np.mean(pull < k)) for k in (1, 2)]
-            table.append(Coverage(name, label, pull.size, *within))
+    for (name, label), parts in inside.items():
+        pooled = np.concatenate(parts, axis=1)
+        if pooled.size:
+            table.append(Coverage(name, label, pooled.shape[1], *pooled.mean(axis=1).tolist()))
     return table

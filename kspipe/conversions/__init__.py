@@ -21,7 +21,7 @@ from kspipe.conversions.record import Range, Record
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
 from kspipe.conversions.stars import STARS, Stars, midplane_density_msun_pc3
 from kspipe.conversions.strong_lines import STRONG_LINES, StrongLine
-from kspipe.conversions.surface import Surface, carry_noise, make_surface
+from kspipe.conversions.surface import Ratio, Surface, carry_noise, make_surface
 
 __all__ = [
     "ALPHA_CO",
@@ -47,6 +47,7 @@ __all__ = [
     "MassMetallicity",
     "Parameters",
     "Range",
+    "Ratio",
     "Record",
     "StarFormation",
     "Stars",

@@ -10,9 +10,10 @@ from numpy.typing import NDArray
 
 from kspipe.conversions.choices import Choices, Parameters
 from kspipe.conversions.convert import Converted, convert
-from kspipe.kernels.noise import NoiseTerm, propagate, total_error
+from kspipe.kernels.noise import NoiseTerm, covariance, propagate, total_error
+from kspipe.kernels.statistics import ratio_interval
 
-__all__ = ["Surface", "carry_noise", "make_surface"]
+__all__ = ["Ratio", "Surface", "carry_noise", "make_surface"]
 
 Array = NDArray[np.float64]
 Terms = tuple[NoiseTerm, ...]
@@ -40,6 +41,47 @@ class Surface:
         return total_error(self.noise)
 
 
+@dataclass(frozen=True)
+class Ratio(Surface):
+    """A ratio of two surfaces, whose first-order error says little where the lower one is faint.
+
+    Attributes
+    ----------
+    top, bottom : Surface
+    unit : float
+        What the ratio was multiplied with.
+    """
+
+    top: Surface
+    bottom: Surface
+    unit: float
+
+    def interval(self, n_sigma: float = 1.0) -> tuple[Array, Array]:
+        """Confidence interval of the true ratio, exact for any noise in the denominator.
+
+        Parameters
+        ----------
+        n_sigma : float
+            1 for 68.3 %.
+
+        Returns
+        -------
+        lower, upper : (ny, nx) float64 array
+            Infinite where the data leave an end open; also where the ratio itself is NaN for a
+            denominator that is not positive.
+        """
+        top, bottom = self.top.noise, self.bottom.noise
+        terms = [covariance(top, top), covariance(bottom, bottom), covariance(top, bottom)]
+        shape = self.value.shape
+        lower, upper = ratio_interval(
+            self.top.value,
+            self.bottom.value,
+            np.array([np.broadcast_to(term, shape) for term in terms]),
+            n_sigma,
+        )
+        return self.unit * lower, self.unit * upper
+
+
 def make_surface(
     intensity: Mapping[str, Array],
     noise: Mapping[str, Terms],
@@ -60,7 +102,8 @@ def make_surface(
     Returns
     -------
     dict of str to Surface
-        ``sigma_atom sigma_gas sigma_sfr`` and, with CO, ``sigma_mol f_mol t_dep``.
+        ``sigma_atom sigma_gas sigma_sfr`` and, with CO, ``sigma_mol f_mol t_dep``; the last two
+        are `Ratio`.
     """
     return carry_noise(convert(intensity, choices, parameters), noise)
 
@@ -84,7 +127,7 @@ def carry_noise(converted: Converted, noise: Mapping[str, Terms]) -> dict[str, S
     return made
 
 
-def _ratio(top: Surface, bottom: Surface, noise: Mapping[str, Terms], unit: float) -> Surface:
+def _ratio(top: Surface, bottom: Surface, noise: Mapping[str, Terms], unit: float) -> Ratio:
     """Ratio of two surfaces times a unit factor; what they share cancels in its error."""
     positive = np.where(bottom.value > 0, bottom.value, np.nan)
     ratio = top.value / positive
@@ -92,4 +135,4 @@ def _ratio(top: Surface, bottom: Surface, noise: Mapping[str, Terms], unit: floa
     for tracer in {**top.slopes, **bottom.slopes}:
         d_top, d_bottom = top.slopes.get(tracer, 0.0), bottom.slopes.get(tracer, 0.0)
         slopes[tracer] = unit * (d_top - ratio * d_bottom) / positive
-    return Surface(unit * ratio, propagate(noise, slopes), slopes)
+    return Ratio(unit * ratio, propagate(noise, slopes), slopes, top, bottom, unit)

@@ -8,7 +8,7 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["clipped_scatter", "correlation_area", "median_error"]
+__all__ = ["clipped_scatter", "correlation_area", "median_error", "ratio_interval"]
 
 Array = NDArray[np.float64]
 
@@ -61,3 +61,55 @@ def median_error(values: Array, rng: np.random.Generator, n_draws: int = 1000) -
         return math.nan
     picks = rng.integers(0, values.size, (n_draws, values.size))
     return float(np.std(np.median(values[picks], axis=1)))
+
+
+def ratio_interval(
+    top: Array, bottom: Array, variance_terms: Array, n_sigma: float = 1.0
+) -> tuple[Array, Array]:
+    """Confidence interval of the ratio of two true values, from their noisy measurements.
+
+    Exact for Gaussian noise at any signal to noise: where the denominator is lost in its noise
+    the interval is open at one end or at both, instead of an error that means nothing.
+
+    Parameters
+    ----------
+    top, bottom : float64 array
+        Measured numerator and denominator, any sign.
+    variance_terms : (3, ...) float64 array
+        Variance of the numerator, of the denominator, and their covariance.
+    n_sigma : float
+        1 for 68.3 %, 2 for 95.4 %.
+
+    Returns
+    -------
+    lower, upper : float64 array
+        Infinite where open; NaN where a measurement is.
+
+    Notes
+    -----
+    The true ratio r makes top - r bottom a Gaussian of mean zero. Those r for which it is within
+    n_sigma of zero solve a quadratic inequality; where its solution is all but a gap between two
+    ratios, the side of the gap is returned on which a positive denominator puts the ratio.
+
+    References
+    ----------
+    .. [1] Fieller 1954, J. R. Stat. Soc. B 16, 175, Section 2 (equation from memory).
+    """
+    var_top, var_bottom, shared = variance_terms
+    square = n_sigma**2
+    a = bottom**2 - square * var_bottom
+    b = top * bottom - square * shared
+    c = top**2 - square * var_top
+    with np.errstate(invalid="ignore", divide="ignore"):
+        root = np.sqrt(np.maximum(b**2 - a * c, 0.0))
+        # The form without cancellation; a = 0 puts one end at infinity.
+        far = b + np.where(b >= 0, root, -root)
+        ends = np.sort([far / a, c / far], axis=0)
+    is_closed = a > 0
+    # With no closed interval but a numerator beyond its noise, the sign of the ratio is known.
+    is_above = ~is_closed & (c > 0) & (top > 0)
+    is_below = ~is_closed & (c > 0) & (top <= 0)
+    lower = np.select([is_closed, is_above], [ends[0], ends[1]], -np.inf)
+    upper = np.select([is_closed, is_below], [ends[1], ends[0]], np.inf)
+    unknown = ~np.isfinite(top + bottom + var_top + var_bottom + shared)
+    return np.where(unknown, np.nan, lower), np.where(unknown, np.nan, upper)

@@ -6,12 +6,12 @@ import logging
 import os
 import warnings
 from pathlib import Path
-from typing import Final
+from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.conversions import STAR_FORMATION, imf_factor
+from kspipe.conversions import STAR_FORMATION, Ratio, Surface, imf_factor
 from kspipe.core.errors import KspipeWarning
 from kspipe.core.progress import Progress, no_progress
 from kspipe.kernels.coarse import evaluate_smoothly
@@ -203,10 +203,11 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
             plan.target_arcsec2,
             extensions={
                 "ERROR": (surface.error, unit),
+                **_interval_of(surface, unit),
                 "COVERAGE": (disc.coverage[name], ""),
                 "FLAGS": (disc.flags, ""),
             },
-            history=[*sources, *lines],
+            history=[*sources, *lines, *([_RATIO_LINE] if isinstance(surface, Ratio) else [])],
         )
     everywhere = np.ones(plan.grid.shape)
     anchored = f"scale of 12+log10(O/H): {plan.recipe.metallicity.scale}"
@@ -223,6 +224,21 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
             extensions={"COVERAGE": (everywhere, ""), "FLAGS": (disc.flags, "")},
             history=[note],
         )
+
+
+_RATIO_LINE: Final = (
+    "ERROR is first order and says little where the denominator is below about 5 sigma; LOWER and "
+    "UPPER hold the true ratio with 68.3 % confidence everywhere (Fieller 1954), infinite where "
+    "the data leave an end open"
+)
+
+
+def _interval_of(surface: Surface, unit: str) -> dict[str, tuple[NDArray[Any], str]]:
+    """Extensions with the interval of a ratio; none for other surfaces."""
+    if not isinstance(surface, Ratio):
+        return {}
+    lower, upper = surface.interval()
+    return {"LOWER": (lower, unit), "UPPER": (upper, unit)}
 
 
 def _factor_lines(recipe: Recipe) -> list[str]:

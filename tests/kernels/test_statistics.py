@@ -10,7 +10,12 @@ import pytest
 
 from kspipe.kernels.fourier import gaussian_smooth
 from kspipe.kernels.geometry import beam_area, beam_covariance
-from kspipe.kernels.statistics import clipped_scatter, correlation_area, median_error
+from kspipe.kernels.statistics import (
+    clipped_scatter,
+    correlation_area,
+    median_error,
+    ratio_interval,
+)
 
 
 def normal(n: int, seed: int = 1) -> np.ndarray:
@@ -133,3 +138,59 @@ def test_the_same_generator_gives_the_same_error() -> None:
     values = normal(50)
     first, second = (median_error(values, np.random.default_rng(9)) for _ in range(2))
     assert first == second > 0
+
+
+# --- Ratios --------------------------------------------------------------------------------------
+
+
+def test_the_interval_of_a_ratio_solves_its_definition() -> None:
+    """At its ends top - r bottom is exactly n sigma from zero (the definition, Fieller 1954)."""
+    top, bottom = np.array([3.0, 1.0, -2.0]), np.array([10.0, 4.0, 6.0])
+    terms = np.array([[0.5, 0.2, 0.3], [0.4, 0.1, 0.6], [0.1, -0.05, 0.2]])
+    for n_sigma in (1.0, 2.0):
+        for r in ratio_interval(top, bottom, terms, n_sigma):
+            distance = (top - r * bottom) ** 2
+            variance = terms[0] - 2 * r * terms[2] + r**2 * terms[1]
+            np.testing.assert_allclose(distance, n_sigma**2 * variance, rtol=1e-10)
+
+
+def test_a_sharp_denominator_leaves_the_usual_error() -> None:
+    """Where the denominator has no noise the interval is value +- error."""
+    low, high = ratio_interval(np.array(3.0), np.array(2.0), np.array([0.25, 0.0, 0.0]), 1.0)
+    np.testing.assert_allclose([low, high], [1.25, 1.75], rtol=1e-12)
+
+
+@pytest.mark.parametrize(
+    ("top", "bottom"), [(0, 0.3), (1, 0.3), (0, 1), (1, 1), (0, 3), (1, 3), (10, 3), (10, 30)]
+)
+@pytest.mark.parametrize("shared", [-0.4, 0.0, 0.6])
+def test_the_interval_holds_the_truth_as_often_as_it_says(top, bottom, shared) -> None:
+    """50,000 draws (0.2 %) from no signal to much, noise of both signs shared.
+
+    Where the denominator is faint the solution may be all but a gap; the interval then goes over
+    the gap, and holds the truth up to 5 % oftener.
+    """
+    truth = top / bottom
+    terms = np.array([1.0, 1.0, shared])
+    noise = np.random.default_rng(7).multivariate_normal([0, 0], [[1, shared], [shared, 1]], 50_000)
+    for n_sigma, expected in ((1.0, 0.6827), (2.0, 0.9545)):
+        low, high = ratio_interval(
+            top + noise[:, 0], bottom + noise[:, 1], terms[:, None] + np.zeros(50_000), n_sigma
+        )
+        within = np.mean((low <= truth) & (truth <= high))
+        assert expected - 0.008 < within < expected + (0.05 if bottom < 2 else 0.008)
+
+
+def test_open_ends() -> None:
+    one = np.array([1.0, 1.0, 0.0])
+    # A bright numerator over nothing: a lower limit; a negative one: an upper limit.
+    low, high = ratio_interval(np.array(9.0), np.array(0.5), one)
+    assert 0 < low < 18
+    assert high == np.inf
+    low, high = ratio_interval(np.array(-9.0), np.array(0.5), one)
+    assert -18 < high < 0
+    assert low == -np.inf
+    # Nothing over nothing: anything.
+    low, high = ratio_interval(np.array(0.1), np.array(0.1), one)
+    assert (low, high) == (-np.inf, np.inf)
+    assert np.isnan(ratio_interval(np.array(np.nan), np.array(1.0), one)).all()
