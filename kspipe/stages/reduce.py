@@ -203,9 +203,9 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
             plan.target_arcsec2,
             extensions={
                 "ERROR": (surface.error, unit),
-                **_interval_of(surface, unit),
                 "COVERAGE": (disc.coverage[name], ""),
                 "FLAGS": (disc.flags, ""),
+                **_interval_of(surface, unit),
             },
             history=[*sources, *lines, *([_RATIO_LINE] if isinstance(surface, Ratio) else [])],
         )

@@ -75,7 +75,8 @@ def test_outputs_are_the_contract(made):
     for name, unit in zip(names, units, strict=True):
         with fits.open(out / "maps" / f"{name}.fits") as hdus:
             random = [] if name in ("metallicity", "radius") else ["ERROR"]
-            assert [h.name for h in hdus[1:]] == [*random, "COVERAGE", "FLAGS"]
+            interval = ["LOWER", "UPPER"] if name in ("f_mol", "t_dep") else []
+            assert [h.name for h in hdus[1:]] == [*random, "COVERAGE", "FLAGS", *interval]
             header = hdus[0].header
             assert header["BUNIT"] == unit
             assert header["CTYPE1"] == "RA---TAN"
