@@ -14,7 +14,6 @@ from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
-from scipy.integrate import quad
 
 from kspipe.conversions.record import Record
 from kspipe.core.registry import Registry
@@ -47,6 +46,9 @@ class Imf(Record):
     @property
     def mass_per_massive_star(self) -> float:
         """Mass of all stars over the number of stars per Msun at the pivot."""
+        # Its import costs half a second, and few recipes change the mass function.
+        from scipy.integrate import quad  # noqa: PLC0415
+
         edges = (LOWEST_MSUN, *self.breaks, HIGHEST_MSUN)
         mass = sum(
             quad(lambda m: m * self.number(m), low, high, epsrel=1e-12)[0]

@@ -58,8 +58,10 @@ Terms = tuple[NoiseTerm, ...]
 
 def total_error(terms: Iterable[NoiseTerm]) -> Array:
     """Random 1-sigma error: the root sum of squares over sources."""
-    terms = tuple(terms)
-    return np.asarray(np.sqrt(sum(term.sigma**2 for term in terms)))
+    sigmas = [term.sigma for term in terms]
+    if len(sigmas) == 1:
+        return np.abs(sigmas[0])
+    return np.asarray(np.sqrt(sum(sigma**2 for sigma in sigmas)))
 
 
 def covariance(first: Iterable[NoiseTerm], second: Iterable[NoiseTerm]) -> Array | float:

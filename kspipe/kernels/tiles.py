@@ -41,11 +41,19 @@ class Tile:
         """Row and column of the padded section's first element in the whole array."""
         return self.section[0].start - self.before[0], self.section[1].start - self.before[1]
 
-    def cut(self, array: NDArray[Any], *, is_section: bool = False) -> NDArray[np.float64]:
-        """Cut out the section, or take it where it is one already, and pad it with zeros."""
-        pad = list(zip(self.before, self.after, strict=True))
-        section = array if is_section else array[self.section]
-        return np.pad(np.asarray(section, dtype=float), pad)
+    def cut(self, array: NDArray[Any], fill: Any = 0.0) -> NDArray[Any]:
+        """Cut out the section; beyond the array's edges it holds `fill`."""
+        section = array[self.section]
+        if not any(self.before + self.after):
+            return np.asarray(section)
+        whole = np.full(
+            [b + n + a for b, n, a in zip(self.before, section.shape, self.after, strict=True)],
+            fill,
+            dtype=array.dtype,
+        )
+        (top, left), (rows, columns) = self.before, section.shape
+        whole[top : top + rows, left : left + columns] = section
+        return whole
 
 
 def cut_tiles(

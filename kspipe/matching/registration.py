@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Final
 
 import numpy as np
@@ -45,6 +45,8 @@ REACH_BEAMS: Final = 2.0
 LARGEST_ERROR_BEAMS: Final = 0.15
 # What the spline through the lags leaves of a displacement known exactly.
 FLOOR_PIX: Final = 0.002
+# Of a larger grid the inner square of this side is compared: some 170 beams across.
+MOST_PIXELS: Final = 512
 # An offset of this many errors is worth typing a shift.
 SIGNIFICANT: Final = 3.0
 
@@ -97,12 +99,15 @@ class Registration:
         None where it could not be measured.
     applied_arcsec : (float, float)
         East and north by which the recipe has moved the map already.
+    within_arcsec : float or None
+        Side of the square about the galaxy's centre that was compared; None for the whole grid.
     """
 
     reference: str | None
     kind: str
     offset: Offset | None
     applied_arcsec: tuple[float, float] = (0.0, 0.0)
+    within_arcsec: float | None = None
 
     def __str__(self) -> str:
         if self.reference is None:
@@ -110,7 +115,8 @@ class Registration:
         kind = "astrometric offset" if self.kind == "astrometric" else self.kind
         if self.offset is None:
             return f"{kind} from {self.reference}: too faint or too far off to measure"
-        return f"{kind} from {self.reference}: {self.offset}"
+        where = f", in the inner {self.within_arcsec / 60:.3g} arcmin" if self.within_arcsec else ""
+        return f"{kind} from {self.reference}: {self.offset}{where}"
 
     @property
     def proposal(self) -> str:
@@ -132,6 +138,7 @@ class Registration:
             "north_arcsec": offset.north_arcsec if offset else None,
             "north_error_arcsec": offset.north_error_arcsec if offset else None,
             "correlation": offset.correlation if offset else None,
+            "within_arcsec": self.within_arcsec,
             "applied_shift_arcsec": list(self.applied_arcsec),
             "proposal": self.proposal,
             "text": str(self),
@@ -161,6 +168,10 @@ def register_maps(
     -------
     dict of str to Registration
     """
+    window = _window(grid)
+    within = None if window is None else MOST_PIXELS * grid.pixel_arcsec
+    if window is not None:
+        matched = {name: _cut(sky, window) for name, sky in matched.items()}
     ranking = sorted(matched, key=lambda name: (-signal_to_noise(matched[name]), name))
     registrations = {}
     for name, sky in matched.items():
@@ -172,8 +183,30 @@ def register_maps(
             continue
         kind = "astrometric" if reference in alike else "offset of emission"
         offset = measure_offset(sky, matched[reference], grid.jacobian_arcsec())
-        registrations[name] = Registration(reference, kind, offset, applied)
+        registrations[name] = Registration(reference, kind, offset, applied, within)
     return registrations
+
+
+def _window(grid: Grid) -> tuple[slice, slice] | None:
+    """Square about the galaxy's centre, of a side that tells enough; None where all is no more."""
+    if max(grid.shape) <= MOST_PIXELS:
+        return None
+    parts = []
+    for n, centre in zip(grid.shape, grid.centre_pixel[::-1], strict=True):
+        start = min(max(round(centre) - MOST_PIXELS // 2, 0), max(n - MOST_PIXELS, 0))
+        parts.append(slice(start, start + MOST_PIXELS))
+    return parts[0], parts[1]
+
+
+def _cut(sky: SkyMap, window: tuple[slice, slice]) -> SkyMap:
+    """Cut a map to a window; its coordinates, which nothing here asks for, stay as they are."""
+    return replace(
+        sky,
+        value=sky.value[window],
+        noise=tuple(term.with_sigma(term.sigma[window]) for term in sky.noise),
+        coverage=sky.coverage[window],
+        flags=sky.flags[window],
+    )
 
 
 def _process(sky: SkyMap) -> str:

@@ -91,16 +91,24 @@ def smooth_and_sample(
         if not here.size:
             continue
         tx, ty = x.ravel()[here] - tile.origin[1], y.ravel()[here] - tile.origin[0]
-        observed = tile.cut(np.isfinite(sky.value[tile.section]), is_section=True) > 0
+        value = tile.cut(sky.value, np.nan)
+        observed = np.isfinite(value)
+        is_full = bool(observed.all())
         out.on_blank.flat[here] = ~observed[np.rint(ty).astype(int), np.rint(tx).astype(int)]
         kernel, bend = bending.at(tile.core, x.ravel()[here], y.ravel()[here])
         sample = partial(_sampled, kernel, bend, tx, ty, fine=fine, workers=workers)
-        fade: Array | float = _fade(observed.shape) if fine > 1 else 1.0
-        out.value.flat[here] = sample(np.where(observed, tile.cut(sky.value), 0.0) * fade)
-        is_full = bool(observed.all())
-        out.weight.flat[here] = 1.0 if is_full else sample(np.where(observed, fade, 0.0))
+        fade = _fade(observed.shape) if fine > 1 else None
+        seen = value if is_full else np.where(observed, value, 0.0)
+        out.value.flat[here] = sample(seen if fade is None else seen * fade)
+        if is_full:
+            out.weight.flat[here] = 1.0
+        else:
+            weight = observed.astype(float)
+            out.weight.flat[here] = sample(weight if fade is None else weight * fade)
         for term, variance in zip(sky.noise, out.variances, strict=True):
-            sigma = np.where(observed, tile.cut(term.sigma), 0.0)
+            sigma = tile.cut(term.sigma)
+            if not is_full:
+                sigma = np.where(observed, sigma, 0.0)
             spread = sample_linear(kernel.variance(term, sigma, workers=workers), tx, ty)
             if bend is not None and not np.any(term.correlation_arcsec2):
                 spread *= bend.gain

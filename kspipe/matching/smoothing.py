@@ -186,9 +186,14 @@ class GaussianSmoothing:
             correlation = transform_covariance(term.correlation_arcsec2, self.jacobian)
             inner = kernel - kernel @ np.linalg.inv(kernel + correlation) @ kernel
             inner = 0.5 * (inner + inner.T)
-        seen = gaussian_smooth(sigma, inner, margin=0, workers=workers).array
+        largest = float(np.max(sigma))
+        if not largest > 0:
+            return np.zeros(sigma.shape)
+        # Single precision, in units of the largest: no error is known to a millionth.
+        single = (sigma / largest).astype(np.float32)
+        seen = gaussian_smooth(single, inner, margin=0, workers=workers).array
         spread = gaussian_smooth(seen**2, (kernel - inner) / 2.0, margin=0, workers=workers)
-        return np.asarray(spread.array * self._noise_gain(term))
+        return np.multiply(spread.array, largest**2 * self._noise_gain(term), dtype=float)
 
     def _noise_gain(self, term: NoiseTerm) -> float:
         """Share of the variance that is left where sigma is constant and all is observed."""

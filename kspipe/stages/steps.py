@@ -50,6 +50,8 @@ __all__ = [
 ]
 
 STEPS_FILE: Final = "steps.ecsv"
+# The median noise of a map is that of about so many pixels, evenly spread.
+MEDIAN_OF: Final = 250_000
 Findings = dict[str, dict[str, Any]]
 # Flux, median noise and observed pixels on the grid's sky.
 _Left = tuple[float, float, int]
@@ -183,7 +185,10 @@ def _left(sky: SkyMap, grid: Grid, flux: float) -> _Left:
     seen = np.isfinite(sky.value)
     if sky.wcs is not grid.wcs:
         seen &= pixels_within(sky.value.shape, sky.wcs, grid)
-    noise = float(np.median(sky.error[seen])) if seen.any() else math.nan
+    every = (slice(None, None, max(1, math.isqrt(seen.size // MEDIAN_OF))),) * 2
+    of = seen[every]
+    sigmas = [term.sigma[every][of] for term in sky.noise]
+    noise = float(np.median(np.sqrt(sum(s**2 for s in sigmas)))) if of.any() else math.nan
     return flux, noise, int(seen.sum())
 
 
