@@ -32,6 +32,8 @@ __all__ = [
 
 Array = NDArray[np.float64]
 
+# Pixel sizes by CD and by CDELT may differ by rounding.
+SIZE_TOLERANCE: Final = 0.01
 # Header and galaxy velocity may differ by a rotation curve, not by more.
 VELOCITY_TOLERANCE: Final = 0.002
 
@@ -52,6 +54,7 @@ def celestial_wcs(header: fits.Header, where: str) -> WCS:
                 "add CDELT1 and CDELT2 to a copy of the file",
             )
         )
+    _refuse_two_sizes(header, where)
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", FITSFixedWarning)
         try:
@@ -91,6 +94,28 @@ def _has_pixel_size(header: fits.Header) -> bool:
     """Whether the size is said for both axes; the standard's default is one degree."""
     by_step = all(isinstance(header.get(f"CDELT{axis}"), int | float) for axis in (1, 2))
     return by_step or any(f"CD{i}_{j}" in header for i in (1, 2) for j in (1, 2))
+
+
+def _refuse_two_sizes(header: fits.Header, where: str) -> None:
+    """Refuse a CD matrix and CDELT cards that give pixels of different size."""
+    keys = ("CD1_1", "CD1_2", "CD2_1", "CD2_2")
+    by_matrix = [header.get(key, 0.0) for key in keys]
+    by_step = [header.get(f"CDELT{axis}") for axis in (1, 2)]
+    known = [value for value in (*by_matrix, *by_step) if isinstance(value, int | float)]
+    if not any(key in header for key in keys) or len(known) < len(keys) + len(by_step):
+        return
+    cd = math.sqrt(abs(by_matrix[0] * by_matrix[3] - by_matrix[1] * by_matrix[2]))
+    cdelt = math.sqrt(abs(by_step[0] * by_step[1]))
+    # Many writers leave CDELT = 1 beside a CD matrix, as the standard's default has it.
+    if cd > 0 and cdelt not in (0.0, 1.0) and abs(cdelt / cd - 1.0) > SIZE_TOLERANCE:
+        raise GridError(
+            Fault(
+                where,
+                f"the CD matrix gives pixels of {cd * DEG_ARCSEC:.4g} arcsec, CDELT of "
+                f"{cdelt * DEG_ARCSEC:.4g} arcsec",
+                "remove the wrong cards from a copy of the file",
+            )
+        )
 
 
 def shifted_wcs(

@@ -104,6 +104,8 @@ class MapRequest:
         Fraction.
     pedestal_error : (float, str) or None
         1-sigma error of the zero level with its unit.
+    background : {"keep", "subtract"}
+        Whether the level of the sky beyond the galaxy is taken off.
     zeros : {"flux", "blank"} or None
         What pixels at exactly zero mean.
     counts : str or None
@@ -138,6 +140,7 @@ class MapRequest:
     averages_pixels: bool = False
     calibration_error: float = 0.0
     pedestal_error: tuple[float, str] | None = None
+    background: Literal["keep", "subtract"] = "keep"
     zeros: Literal["flux", "blank"] | None = None
     counts: str | None = None
     zero_point: float | None = None

@@ -22,7 +22,7 @@ from astropy.wcs.utils import skycoord_to_pixel
 from numpy.typing import NDArray
 from scipy.interpolate import RectBivariateSpline
 
-from kspipe.kernels.geometry import offset_positions, pixel_covariance
+from kspipe.kernels.geometry import offset_positions, pixel_covariance, transform_covariance
 from kspipe.kernels.tiles import TILE
 from kspipe.maps.header import pixel_jacobian, sky_of_pixels
 from kspipe.maps.skymap import SkyMap
@@ -32,11 +32,11 @@ __all__ = ["Bend", "Bending", "bend_of", "seen_on_pixels"]
 
 Array = NDArray[np.float64]
 
-# A tile's kernel may be off by this share of its variance before corrections are worth their
+# A kernel may be off by this share of the target's variance before corrections are worth their
 # time: a point source's peak is then off by as much.
 STEADY_VARIANCE: Final = 5e-4
-# The same for skewness in units of sigma cubed: the flank of a source at 3 sigma is off by three
-# times as much.
+# The same for skewness in units of the target's sigma cubed: the flank of a source at 3 sigma is
+# off by three times as much.
 STEADY_SKEWNESS: Final = 2e-4
 # A tile whose kernels differ by more is cut smaller: what is left out goes with the square.
 MOST_PER_TILE: Final = 0.05
@@ -97,8 +97,8 @@ class Bending:
     smoothing : Smoothing
         At the galaxy's centre.
     change : float
-        Largest difference of a kernel from that one, in units of its variance or of its sigma
-        cubed; zero where one kernel serves all of the map.
+        Largest difference of a kernel from that one, in units of the target's variance or of its
+        sigma cubed; zero where one kernel serves all of the map.
     tile : int
         Side of the tiles that the map is cut into.
     """
@@ -120,7 +120,7 @@ class Bending:
             return self.smoothing, None
         nodes = _nodes(core)
         moments = seen_on_pixels(self.sky, self.target_arcsec2, *nodes)
-        if not _change(moments, kernel.pix2):
+        if not _change(moments, kernel.pix2, _variance_pix2(self.target_arcsec2, kernel)):
             return kernel, None
         return kernel, _bend(moments, kernel.pix2, nodes, x, y)
 
@@ -149,8 +149,9 @@ def bend_of(
     if isinstance(smoothing, GaussianSmoothing) and np.any(smoothing.arcsec2):
         nodes = _nodes(wanted)
         moments = seen_on_pixels(sky, target_arcsec2, *nodes)
-        if np.isfinite(moments.skewness).all() and _is_smooth(moments, nodes, smoothing.pix2):
-            change = _change(moments, smoothing.pix2)
+        variance = _variance_pix2(target_arcsec2, smoothing)
+        if np.isfinite(moments.skewness).all() and _is_smooth(moments, nodes, variance):
+            change = _change(moments, smoothing.pix2, variance)
     tile = TILE
     if change > MOST_PER_TILE:
         widest = max(part.stop - part.start for part in wanted)
@@ -165,9 +166,8 @@ def _nodes(part: tuple[slice, slice]) -> tuple[Array, Array]:
     return mesh_x.ravel(), mesh_y.ravel()
 
 
-def _change(moments: Moments, kernel_pix2: Array) -> float:
-    """How far kernels are from one Gaussian; zero where that does not tell."""
-    variance = 0.5 * float(np.trace(kernel_pix2))
+def _change(moments: Moments, kernel_pix2: Array, variance: float) -> float:
+    """How far kernels are from one Gaussian; zero where the target beam does not feel it."""
     wider = np.max(np.abs(moments.covariance - _upper(kernel_pix2))) / variance
     skew = np.max(np.abs(moments.skewness)) / variance**1.5
     if wider > STEADY_VARIANCE or skew > STEADY_SKEWNESS:
@@ -175,7 +175,12 @@ def _change(moments: Moments, kernel_pix2: Array) -> float:
     return 0.0
 
 
-def _is_smooth(moments: Moments, nodes: tuple[Array, Array], kernel_pix2: Array) -> bool:
+def _variance_pix2(target_arcsec2: Array, smoothing: Smoothing) -> float:
+    """Mean variance of the target beam along an axis, on the map's pixels."""
+    return 0.5 * float(np.trace(transform_covariance(target_arcsec2, smoothing.jacobian)))
+
+
+def _is_smooth(moments: Moments, nodes: tuple[Array, Array], variance: float) -> bool:
     """Whether every second node tells the others: not so across the edge of a projection's face."""
     x, y = nodes[0][:NODES], nodes[1][::NODES]
     off = 0.0
@@ -183,7 +188,7 @@ def _is_smooth(moments: Moments, nodes: tuple[Array, Array], kernel_pix2: Array)
         every = part.reshape(NODES, NODES)
         spline = RectBivariateSpline(y[::2], x[::2], every[::2, ::2])
         off = max(off, float(np.max(np.abs(spline(y, x) - every))))
-    return off < STEADY_VARIANCE * 0.5 * float(np.trace(kernel_pix2))
+    return off < STEADY_VARIANCE * variance
 
 
 def _upper(covariance: Array) -> Array:

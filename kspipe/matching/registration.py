@@ -24,6 +24,7 @@ from kspipe.kernels.crosscorrelation import (
 from kspipe.kernels.geometry import beam_axes
 from kspipe.maps.skymap import SkyMap
 from kspipe.matching.grid import Grid
+from kspipe.matching.point_sources import point_offset
 
 __all__ = ["Offset", "Registration", "measure_offset", "register_maps"]
 
@@ -62,7 +63,7 @@ class Offset:
     east_error_arcsec, north_error_arcsec : float
         1 sigma, from the random noise of both maps.
     correlation : float
-        Correlation coefficient at the offset, of what is not noise.
+        Correlation coefficient at the offset, of what is not noise; NaN on point sources.
     """
 
     east_arcsec: float
@@ -94,13 +95,15 @@ class Registration:
     reference : str or None
         Name of the map compared with; None for the map that the others are compared with.
     kind : {"astrometric", "offset of emission", "reference"}
-        Astrometric only between maps of one emission process.
+        Astrometric only between maps of one emission process, or on point sources.
     offset : Offset or None
         None where it could not be measured.
     applied_arcsec : (float, float)
         East and north by which the recipe has moved the map already.
     within_arcsec : float or None
         Side of the square about the galaxy's centre that was compared; None for the whole grid.
+    n_sources : int
+        Point sources that the offset was measured on; 0 for a cross-correlation.
     """
 
     reference: str | None
@@ -108,6 +111,7 @@ class Registration:
     offset: Offset | None
     applied_arcsec: tuple[float, float] = (0.0, 0.0)
     within_arcsec: float | None = None
+    n_sources: int = 0
 
     def __str__(self) -> str:
         if self.reference is None:
@@ -115,6 +119,8 @@ class Registration:
         kind = "astrometric offset" if self.kind == "astrometric" else self.kind
         if self.offset is None:
             return f"{kind} from {self.reference}: too faint or too far off to measure"
+        if self.n_sources:
+            return f"{kind} from {self.reference}, on {self.n_sources} point sources: {self.offset}"
         where = f", in the inner {self.within_arcsec / 60:.3g} arcmin" if self.within_arcsec else ""
         return f"{kind} from {self.reference}: {self.offset}{where}"
 
@@ -137,8 +143,11 @@ class Registration:
             "east_error_arcsec": offset.east_error_arcsec if offset else None,
             "north_arcsec": offset.north_arcsec if offset else None,
             "north_error_arcsec": offset.north_error_arcsec if offset else None,
-            "correlation": offset.correlation if offset else None,
+            "correlation": (
+                offset.correlation if offset and math.isfinite(offset.correlation) else None
+            ),
             "within_arcsec": self.within_arcsec,
+            "n_point_sources": self.n_sources,
             "applied_shift_arcsec": list(self.applied_arcsec),
             "proposal": self.proposal,
             "text": str(self),
@@ -149,6 +158,7 @@ def register_maps(
     matched: Mapping[str, SkyMap],
     grid: Grid,
     applied_arcsec: Mapping[str, tuple[float, float]] | None = None,
+    is_outside: NDArray[np.bool_] | None = None,
 ) -> dict[str, Registration]:
     """Measure where every map lies against a reference.
 
@@ -163,6 +173,9 @@ def register_maps(
     grid : Grid
     applied_arcsec : mapping of str to (float, float), optional
         East and north by which the recipe has moved each map already.
+    is_outside : (ny, nx) bool array, optional
+        Beyond the galaxy's disc. Where maps of different processes share point sources there, the
+        offset is measured on these, and is astrometric.
 
     Returns
     -------
@@ -170,6 +183,7 @@ def register_maps(
     """
     window = _window(grid)
     within = None if window is None else MOST_PIXELS * grid.pixel_arcsec
+    whole = matched
     if window is not None:
         matched = {name: _cut(sky, window) for name, sky in matched.items()}
     ranking = sorted(matched, key=lambda name: (-signal_to_noise(matched[name]), name))
@@ -181,10 +195,31 @@ def register_maps(
         if reference == name:
             registrations[name] = Registration(None, "reference", None, applied)
             continue
+        if reference not in alike and is_outside is not None:
+            on_points = _on_points(whole[name], whole[reference], is_outside, grid)
+            if on_points is not None:
+                registrations[name] = replace(
+                    on_points, reference=reference, applied_arcsec=applied
+                )
+                continue
         kind = "astrometric" if reference in alike else "offset of emission"
         offset = measure_offset(sky, matched[reference], grid.jacobian_arcsec())
         registrations[name] = Registration(reference, kind, offset, applied, within)
     return registrations
+
+
+def _on_points(
+    sky: SkyMap, reference: SkyMap, is_outside: NDArray[np.bool_], grid: Grid
+) -> Registration | None:
+    """Offset on the point sources that two maps share; None for too few."""
+    jacobian = grid.jacobian_arcsec()
+    found = point_offset(sky, reference, is_outside, jacobian)
+    if found is None:
+        return None
+    east, north = jacobian @ np.array([found.x, found.y])
+    errors = np.sqrt(np.diag(jacobian @ found.covariance @ jacobian.T))
+    offset = Offset(float(east), float(north), float(errors[0]), float(errors[1]), math.nan)
+    return Registration(reference.name, "astrometric", offset, n_sources=found.n)
 
 
 def _window(grid: Grid) -> tuple[slice, slice] | None:

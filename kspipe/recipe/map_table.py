@@ -161,6 +161,7 @@ class MapTable(Table):
     averages_pixels: bool | None = None
     calibration_error: Percent = NO_ERROR
     pedestal_error: Annotated[str | None, _stated('"0.005 MJy/sr"')] = None
+    background: Literal["keep", "subtract"] = "keep"
     zeros: Literal["flux", "blank"] | None = None
     counts: Annotated[str | None, _stated('"1.40e-15 erg/s/cm2/A"')] = None
     zero_point: Magnitude | None = None
@@ -191,6 +192,7 @@ class MapTable(Table):
             averages_pixels=averages,
             calibration_error=self.calibration_error.value,
             pedestal_error=noise_value(self.pedestal_error) if self.pedestal_error else None,
+            background=self.background,
             zeros=self.zeros,
             counts=self.counts,
             zero_point=self.zero_point.value if self.zero_point else None,

@@ -214,6 +214,7 @@ def _match_print(recipe: Recipe, source: MapSource, grid: Grid, fwhm: float) -> 
                 # Blank sky is what lies outside the disc.
                 [galaxy.inclination.value, galaxy.position_angle.value, galaxy.r25]
                 if "measure" in (source.request.noise.kind, source.request.noise.correlated)
+                or source.request.background == "subtract"
                 else None,
             ],
             "grid": [fwhm, grid.pixel_arcsec, grid.shape, grid.wcs.to_header_string()],

@@ -14,15 +14,13 @@ from numpy.typing import NDArray
 from kspipe.conversions import STAR_FORMATION, Ratio, Surface, imf_factor
 from kspipe.core.errors import KspipeWarning
 from kspipe.core.progress import Progress, no_progress
-from kspipe.kernels.coarse import evaluate_smoothly
-from kspipe.kernels.geometry import disc_radius, position_offsets
-from kspipe.maps.header import sky_of_pixels
 from kspipe.maps.product import read_matched, write_matched, write_product
 from kspipe.maps.read import load_map, relative_noise, with_photon_noise
 from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import match_map, measure_noise, measure_noise_correlation
 from kspipe.recipe import Recipe
 from kspipe.recipe.resolved import resolved_recipe
+from kspipe.stages.blank_sky import outside_galaxy, without_background
 from kspipe.stages.folder import ProductFolder
 from kspipe.stages.plan import InMemory, Plan, make_plan, records_of
 from kspipe.stages.steps import (
@@ -49,9 +47,6 @@ PRODUCT_UNITS: Final = {
     "f_mol": "",
     "t_dep": "Gyr",
 }
-
-# Emission is expected inside this many r25 of the disc (common practice).
-BLANK_SKY_R25: Final = 1.5
 
 
 def reduce_maps(
@@ -134,7 +129,7 @@ def match_one(plan: Plan, name: str) -> SkyMap:
     sky = note_shift(load_map(source), source)
     stated = source.request.noise
     if stated.kind == "measure" or stated.correlated == "measure":
-        outside = _outside_galaxy(sky, recipe)
+        outside = outside_galaxy(sky, recipe)
     if stated.kind == "measure":
         sky = measure_noise(
             sky,
@@ -146,6 +141,8 @@ def match_one(plan: Plan, name: str) -> SkyMap:
         sky = measure_noise_correlation(sky, outside)
     if stated.gain is not None:
         sky = with_photon_noise(sky, source)
+    if source.request.background == "subtract":
+        sky = without_background(sky, recipe)
     log.info("match %s: %d pixels observed", name, int(np.isfinite(sky.value).sum()))
     matched = match_map(
         sky,
@@ -156,26 +153,6 @@ def match_one(plan: Plan, name: str) -> SkyMap:
         workers=os.cpu_count() or 1,
     )
     return note_steps(sky, matched, plan)
-
-
-def _outside_galaxy(sky: SkyMap, recipe: Recipe) -> NDArray[np.bool_]:
-    """Pixels of a map beyond the disc; all of them where the recipe gives no r25."""
-    galaxy = recipe.galaxy
-    if galaxy.r25 is None:
-        return np.ones(sky.value.shape, dtype=bool)
-
-    def offsets(x: NDArray[np.float64], y: NDArray[np.float64]) -> tuple[NDArray[np.float64], ...]:
-        return position_offsets(*sky_of_pixels(sky.wcs, x, y), *galaxy.centre.degrees)
-
-    # A tenth of an arcsecond is nothing at 1.5 r25.
-    (east, north), _ = evaluate_smoothly(offsets, sky.value.shape, 0.1)
-    radius = disc_radius(
-        east,
-        north,
-        inclination_deg=galaxy.inclination.value,
-        pa_deg=galaxy.position_angle.value,
-    )
-    return np.asarray(radius > BLANK_SKY_R25 * galaxy.r25.value)
 
 
 def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:

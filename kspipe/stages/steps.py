@@ -34,6 +34,8 @@ from kspipe.matching.short_spacings import (
     judge_short_spacings,
     read_total,
 )
+from kspipe.matching.sky_level import SkyLevel
+from kspipe.stages.blank_sky import level_of, outside_galaxy
 from kspipe.stages.plan import Plan
 
 __all__ = [
@@ -148,6 +150,12 @@ def _reading(stored: SkyMap, source: MapSource, grid: Grid, read: _Left) -> list
         unmoved = replace(stored, wcs=wcs)
         before = _left(unmoved, grid, flux_within(unmoved.value, wcs, grid))
         moved = [Step("shift", _shift_words(source), "recipe shift", *read)]
+    if "sky_taken_off" in stored.facts:
+        level = cast("SkyLevel", stored.facts["sky_taken_off"])
+        sky_flux = flux_within(np.isfinite(stored.value) * level.value, stored.wcs, grid)
+        off = Step("background", f"taken off: {level}", "recipe background", *read)
+        moved = [*(replace(step, flux=step.flux + sky_flux) for step in moved), off]
+        before = (before[0] + sky_flux, *before[1:])
     return [
         Step("read", size, f"{source.image.file.name}{image}", *before),
         Step("unit", f"{source.unit.text!r} to {stored.unit}", source.unit.origin, *before),
@@ -237,17 +245,25 @@ def judge_maps(
     Returns
     -------
     dict of str to dict
-        By map: ``registration``, ``negative`` and, for lines in the radio, ``short_spacings``.
+        By map: ``registration``, ``negative``; where there is sky beyond the galaxy,
+        ``sky_level``; and, for lines in the radio, ``short_spacings``.
     """
     kpc = plan.recipe.galaxy.pc_per_arcsec / 1e3
     applied = {name: source.request.shift_arcsec for name, source in plan.sources.items()}
     findings: Findings = {}
-    for name, registration in register_maps(matched, plan.grid, applied).items():
+    disc = None
+    if plan.recipe.galaxy.r25 is not None:
+        disc = outside_galaxy(next(iter(matched.values())), plan.recipe, 1.0)
+    for name, registration in register_maps(matched, plan.grid, applied, disc).items():
         sky = matched[name]
         found: dict[str, Any] = {
             "registration": registration.as_plain(),
             "negative": next((s.detail for s in sky.steps if s.step == "negative"), None),
         }
+        level = level_of(sky, plan.recipe)
+        if level is not None:
+            found["sky_level"] = level.as_plain()
+            _warn_of_level(sky, level, plan)
         spacings = _short_spacings(sky, plan, totals[name])
         if spacings is not None:
             found["short_spacings"] = spacings.as_plain(kpc)
@@ -256,6 +272,24 @@ def judge_maps(
                 warnings.warn(f"maps.{name}: {warning}", KspipeWarning, stacklevel=2)
         findings[name] = _plain(found)
     return findings
+
+
+def _warn_of_level(sky: SkyMap, level: SkyLevel, plan: Plan) -> None:
+    """Warn of a sky level that neither the recipe's action nor its error accounts for."""
+    is_known = abs(level.value) <= 3.0 * sky.common.pedestal
+    if not level.is_significant or is_known:
+        return
+    subtracted = plan.sources[sky.name].request.background == "subtract"
+    warnings.warn(
+        f"maps.{sky.name}: the sky is not zero: {level}; "
+        + (
+            "what is left after subtraction: the background is not flat"
+            if subtracted
+            else 'type background = "subtract", or pedestal_error if it is emission or known'
+        ),
+        KspipeWarning,
+        stacklevel=3,
+    )
 
 
 def _short_spacings(sky: SkyMap, plan: Plan, total: Total | None) -> ShortSpacings | None:
@@ -294,6 +328,8 @@ def _rows(sky: SkyMap, found: Mapping[str, Any]) -> list[StepRow]:
         spacings = found["short_spacings"]
         origin = "default" if spacings["stated"] is None else "recipe short_spacings"
         steps.append(Step("short spacings", spacings["text"], origin, *left))
+    if "sky_level" in found:
+        steps.append(Step("sky level", found["sky_level"]["text"], "measured", *left))
     registration = found["registration"]
     proposal = f"; {registration['proposal']} would undo it" if registration["proposal"] else ""
     steps.append(Step("registration", f"{registration['text']}{proposal}", "measured", *left))

@@ -55,6 +55,12 @@ PIXEL_CARDS = ("CDELT", "PC", "CD1", "CD2")
         # One of two: the other is a degree by default.
         ({"CDELT2": 2 / 3600}, PIXEL_CARDS, "pixel"),
         ({"CDELT1": "small", "CDELT2": 2 / 3600}, PIXEL_CARDS, "pixel"),
+        # Two sizes: no reader can know which is meant.
+        (
+            {"CD1_1": -2 / 3600, "CD2_2": 2 / 3600, "CDELT1": -4 / 3600, "CDELT2": 4 / 3600},
+            PIXEL_CARDS,
+            "CD matrix gives pixels of 2 arcsec, CDELT of 4 arcsec",
+        ),
         ({"CTYPE2": "DEC---TAN"}, (), "sky coordinates"),  # malformed, as in a real header
         ({"CTYPE1": "RA---TAN", "CTYPE2": "GLAT-TAN"}, (), "sky coordinates"),
         ({"CTYPE1": "RA---XXX", "CTYPE2": "DEC--XXX"}, (), "sky coordinates"),
@@ -74,9 +80,10 @@ def test_unusable_coordinates_are_refused(cards, drop, why) -> None:
         {"CDELT1": -2 / 3600, "CDELT2": 2 / 3600},
         {"CDELT1": -2 / 3600, "CDELT2": 2 / 3600, "CROTA2": 0.0},
         {"CD1_1": -2 / 3600, "CD2_2": 2 / 3600},
+        {"CD1_1": -2 / 3600, "CD2_2": 2 / 3600, "CDELT1": 1.0, "CDELT2": 1.0},
         {"CDELT1": -2.0, "CDELT2": 2.0, "CUNIT1": "arcsec", "CUNIT2": "arcsec"},
     ],
-    ids=["CDELT", "CROTA2", "CD", "CUNIT arcsec"],
+    ids=["CDELT", "CROTA2", "CD", "CD and default CDELT", "CUNIT arcsec"],
 )
 def test_ways_to_write_a_pixel_size(cards) -> None:
     if "CUNIT1" in cards:

@@ -67,7 +67,7 @@ def rows_of(folder: Path, name: str) -> dict:
 def test_every_map_has_its_steps_in_order(plain) -> None:
     steps = [row.step for row in step_table(plain) if row.map == "hi"]
     expected = ["read", "unit", "beam", "noise", "match", "negative"]
-    assert steps == [*expected, "short spacings", "registration"]
+    assert steps == [*expected, "short spacings", "sky level", "registration"]
     assert "short spacings" not in rows_of(plain, "ir")
     assert {row.map for row in step_table(plain)} == {"hi", "co", "fuv", "ir", "nuv"}
 
