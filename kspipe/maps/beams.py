@@ -176,7 +176,7 @@ def header_beam(header: fits.Header, where: str) -> Beam | None:
     Raises
     ------
     BeamError
-        If BMAJ or BMIN is not a positive number.
+        If BMAJ or BMIN is not a positive number, or the angle of a long beam is missing.
     """
     if "BMAJ" not in header:
         return None
@@ -197,7 +197,19 @@ def header_beam(header: fits.Header, where: str) -> Beam | None:
                 'type beam = "... arcsec" for this map',
             )
         )
+    if cards["BPA"] is None and abs(major / minor - 1.0) > SAME_BEAM:
+        raise BeamError(
+            Fault(
+                where,
+                f"BMAJ and BMIN are {major * DEG_ARCSEC:.4g} and {minor * DEG_ARCSEC:.4g} arcsec, "
+                "and there is no BPA: no telling which way the beam is long",
+                f'type beam = "{major * DEG_ARCSEC:.4g} x {minor * DEG_ARCSEC:.4g} arcsec, '
+                'pa ... deg" for this map',
+            )
+        )
     read = ", ".join(key for key, card in cards.items() if card is not None)
+    if cards["BMIN"] is None:
+        read += " (no BMIN: taken as round)"
     return _ordered(major * DEG_ARCSEC, minor * DEG_ARCSEC, angle, f"header {read}")
 
 

@@ -357,7 +357,7 @@ class MapSource:
         pixel_area = abs(float(np.linalg.det(own)))
         psf = _psf(request, jacobian, where)
         beam, is_stated = _beam(request, image, psf, np.linalg.inv(to_icrs), where)
-        _check_beam(beam, math.sqrt(pixel_area), image, where)
+        _check_beam(beam, math.sqrt(pixel_area), image, where, request)
         refuse_unused_counts(unit, request.counts, request.zero_point, f"{where}, {image}")
 
         def through(reading: UnitReading, at: str) -> Door:
@@ -434,9 +434,21 @@ def _beam(
     )
 
 
-def _check_beam(beam: Beam, pixel_arcsec: float, image: StoredImage, where: str) -> None:
+def _check_beam(
+    beam: Beam, pixel_arcsec: float, image: StoredImage, where: str, request: MapRequest
+) -> None:
     """Refuse a beam that no map of these pixels can have."""
     ratio = beam.minor_arcsec / pixel_arcsec
+    if ratio < 1.0 and not request.averages_pixels:
+        raise BeamError(
+            Fault(
+                where,
+                f"a beam of {beam} ({beam.origin}) is narrower than the pixels of "
+                f"{pixel_arcsec:.4g} arcsec: no map sampled at points is written so",
+                'type beam = "... arcsec" for this map, or averages_pixels = true if values are '
+                "means over the pixel",
+            )
+        )
     field_arcsec = max(image.shape) * pixel_arcsec
     if ratio > MOST_PIXELS_PER_BEAM or beam.major_arcsec > field_arcsec or ratio < 0.2:
         raise BeamError(

@@ -182,16 +182,22 @@ def test_beam_off_the_header(data) -> None:
     ("cards", "expected"),
     [
         ({"BMIN": None, "BPA": None}, round_beam(12.0)),
-        ({"BPA": None}, elliptical_beam(12, 8, 0)),
         ({"BPA": 210.0}, elliptical_beam(12, 8, 30)),
         # A minor axis that is the longer one lies a quarter turn away.
         ({"BMAJ": 8 / 3600, "BMIN": 12 / 3600}, elliptical_beam(12, 8, 120)),
     ],
-    ids=["round", "no angle", "half a turn", "exchanged"],
+    ids=["round", "half a turn", "exchanged"],
 )
 def test_incomplete_beam_cards(data, cards, expected) -> None:
     source = open_source(make_hdu(data, beam_arcsec=(12.0, 8.0, 30.0), cards=cards))
     np.testing.assert_allclose(source.beam_arcsec2, expected, rtol=1e-6, atol=1e-9)
+
+
+def test_what_was_not_said_is_said(data) -> None:
+    source = open_source(make_hdu(data, beam_arcsec=12.0, cards={"BMIN": None, "BPA": None}))
+    assert source.beam.origin == "header BMAJ (no BMIN: taken as round)"
+    # A detector's pixel may be wider than its beam: it counts in the final beam.
+    open_source(make_hdu(data, beam_arcsec=1.5), averages_pixels=True, tracer="24um", unit="MJy/sr")
 
 
 def test_the_recipe_overrides_the_header(hdu) -> None:
@@ -212,7 +218,8 @@ def test_the_recipe_overrides_the_header(hdu) -> None:
         ({"BMAJ": 0.0}, "positive"),
         ({"BMAJ": -8 / 3600}, "positive"),
         ({"BMIN": 0.0}, "positive"),
-        ({"BMAJ": 0.1 / 3600, "BMIN": 0.1 / 3600}, "not plausible"),  # 2 arcsec pixels
+        ({"BMAJ": 1.9 / 3600, "BMIN": 1.9 / 3600}, "narrower than the pixels"),  # 2 arcsec
+        ({"BMAJ": 12 / 3600, "BPA": None}, "no BPA"),
     ],
 )
 def test_a_beam_that_cannot_be_is_refused(data, cards, why) -> None:
