@@ -60,7 +60,7 @@ FREQ_STOKES = line_cards(("FREQ", 1.42e9, 1e4), ("STOKES", 1.0, 1.0))
     ids=["3 axes", "4 axes", "4-axis header"],
 )
 def test_degenerate_axes_are_dropped(data, shape, cards) -> None:
-    # Observers' list, section 4, test 11: a header of 4 axes is no obstacle.
+    # A header of 4 axes is no obstacle.
     plain = read_map(make_hdu(data))
     sky = read_map(make_hdu(data.reshape(shape), cards=cards))
     assert sky.wcs.naxis == 2
@@ -247,7 +247,7 @@ def test_beam_angle_counts_in_the_frame_of_the_map() -> None:
 def test_exchanged_axes_are_understood_or_refused() -> None:
     """CTYPE1 the latitude: nothing may pass with longitude and latitude mistaken.
 
-    Observers' list, section 4, test 11: swapped axes never pass silently.
+    Swapped axes never pass silently.
     """
     wcs = WCS(naxis=2)
     wcs.wcs.ctype = ["DEC--TAN", "RA---TAN"]

@@ -109,7 +109,7 @@ BEAM = (13.0, 10.0, 30.0)
 )
 @pytest.mark.parametrize("tracer", ["24um", "HI"])
 def test_point_source_keeps_its_flux_and_gets_the_beam(pixel, target, geometry, tracer) -> None:
-    # Observers' list, section 4, test 1: 1 Jy in, 1.000 +- 0.002 Jy out, FWHM within 1 %.
+    # 1 Jy in, 1.000 +- 0.002 Jy out, FWHM within 1 %.
     side = 2 * round((60 + 1.7 * target) / pixel) + 1
     wcs = make_wcs((side, side), pixel, **geometry)
     image = gaussian(*offsets(wcs, (side, side), POSITION), elliptical_beam(*BEAM))
@@ -176,7 +176,7 @@ def holed(shape=(81, 81)) -> np.ndarray:
 
 @pytest.mark.parametrize(("geometry", "minimum"), [({}, 0.5), ({"rotation_deg": 40.0}, 0.9)])
 def test_flat_map_with_blanks_stays_flat(geometry, minimum) -> None:
-    # Observers' list, section 4, test 2: constant to 1e-4 and nothing outside the footprint.
+    # Constant to 1e-4 and nothing outside the footprint.
     value = holed()
     wcs = make_wcs(value.shape, 3.0, **geometry)
     sky = make_sky(value, wcs=wcs, beam_arcsec2=round_beam(8.0))
@@ -347,7 +347,7 @@ def demo_truth(demo_grid) -> np.ndarray:
 
 @pytest.mark.parametrize("kind", GRIDS)
 def test_the_same_sky_on_other_grids(kind, demo_grid, demo_truth) -> None:
-    # Observers' list, section 4, test 5. Truth: the painter's analytic Gaussians under 15 arcsec.
+    # Truth: the painter's analytic Gaussians under 15 arcsec.
     matched = match_map(demo_sky(kind), round_beam(15.0), demo_grid)
     inside = matched.coverage > 0.999
     assert inside.mean() > 0.7

@@ -127,7 +127,7 @@ def draws(name: str) -> tuple[np.ndarray, SkyMap]:
 @every_case
 @pytest.mark.parametrize("where", ["inside", "near blanks and edges", "everywhere"])
 def test_stated_error_is_the_scatter(name, where) -> None:
-    # Observers' list, section 4, test 7: the output sigma equals the scatter over 200 draws
+    # The output sigma equals the scatter over 200 draws
     # within 5 %.
     values, matched = draws(name)
     inside = matched.coverage > 0.98
@@ -147,7 +147,7 @@ def test_stated_error_is_the_scatter(name, where) -> None:
 
 @every_case
 def test_pulls_are_normal(name) -> None:
-    # Observers' list, section 4, test 7: pull width 1.00 +- 0.05.
+    # Pull width 1.00 +- 0.05.
     values, matched = draws(name)
     pulls = (values / matched.error)[:, np.isfinite(matched.value)]
     assert np.std(pulls) == pytest.approx(1.0, abs=0.05)

@@ -1,6 +1,6 @@
 """What must not matter: the order of maps, threads, and whether maps come from memory.
 
-Observers' list, section 4, test 6; here to the last bit of the files.
+Here to the last bit of the files.
 """
 
 from __future__ import annotations

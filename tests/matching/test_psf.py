@@ -218,7 +218,7 @@ def test_a_point_source_becomes_the_gaussian(name, factor) -> None:
     inner = np.s_[60:-60, 60:-60]
     cell = 4.0
     total = np.sum(matched.value[inner]) * cell
-    # Observers' list, section 4, test 1: 1 in, 1.000 +- 0.002 out; less what the image cuts off.
+    # 1 in, 1.000 +- 0.002 out; less what the image cuts off.
     cut_off = 1 - psf_sum(profile)
     assert total == pytest.approx(1.0, abs=0.002 + cut_off)
     kernel = matching_kernel(psf, round_beam(target), STEP, averages_pixels=False)
@@ -270,7 +270,7 @@ def test_a_flat_map_stays_flat_around_its_hole() -> None:
     matched = match_map(sky, round_beam(9.0), plain_grid(61, 3.0))
     seen = np.isfinite(matched.value)
     assert 1000 < seen.sum() < seen.size
-    # Observers' list, section 4, test 2: constant to 1e-4.
+    # Constant to 1e-4.
     np.testing.assert_allclose(matched.value[seen], 7.0, rtol=1e-4)
 
 
@@ -662,7 +662,7 @@ def test_equal_beams_over_a_field_of_degrees() -> None:
     sky = make_sky(hdu.data, wcs=wcs, beam_arcsec2=source.beam_arcsec2, averages_pixels=True)
     for target in (width, width * (1 + 1e-7)):
         matched = match_map(sky, choose_beam([source], target), plain_grid(61, 360.0))
-        # Observers' list, section 4, test 2: constant to 1e-4.
+        # Constant to 1e-4.
         np.testing.assert_allclose(matched.value, 3.0, rtol=1e-4)
 
 

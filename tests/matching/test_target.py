@@ -59,7 +59,6 @@ def test_legal_targets_are_those_that_can_be_deconvolved(major, ratio, pa, targe
 
 
 def test_a_refusal_names_the_map_and_the_smallest_legal_beam() -> None:
-    # Observers' list, section 4, test 12.
     sources = [
         source_with((13.4, 10.6, 35.0), name="hi"),
         source_with((11.5, 11.5, 0.0), name="co"),

@@ -1,6 +1,6 @@
 """Bad input ends in one message and leaves nothing behind.
 
-Observers' list, section 4, tests 11 and 14: a message that names the map or file, exit code 2,
+A message that names the map or file, exit code 2,
 and no partial product under a final name.
 """
 
@@ -398,7 +398,7 @@ def gone_product(job: Job) -> None:
     ids=lambda value: getattr(value, "__name__", None),
 )
 def test_a_stale_reduction_is_not_compared(reduced, spoil, message) -> None:
-    # Observers' list, section 4, test 13: one changed input pixel is reported.
+    # One changed input pixel is reported.
     spoil(reduced)
     before = contents(reduced.out)
     with pytest.raises(InputError, match=message) as caught:
@@ -417,7 +417,6 @@ def test_an_unchanged_reduction_is_reused(reduced) -> None:
 
 @pytest.mark.parametrize("moment", ["matching", "publishing"])
 def test_a_run_killed_half_way_leaves_no_half_product(job, moment, monkeypatch) -> None:
-    # Observers' list, section 4, test 14.
     def killed(*_: Any, **__: Any) -> None:
         raise KeyboardInterrupt
 
