@@ -50,7 +50,7 @@ def test_legal_targets_are_those_that_can_be_deconvolved(major, ratio, pa, targe
     except DeconvolutionError:
         is_legal = False
     assert is_legal == (target > major)
-    source = source_with((major, ratio * major, pa))
+    source = source_with((major, ratio * major, pa), pixel=1.2)
     if is_legal:
         np.testing.assert_allclose(choose_beam([source], target), round_beam(target), rtol=1e-9)
     else:
