@@ -8,7 +8,10 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from kspipe.conversions.alpha_co import AlphaCO
 from kspipe.conversions.extinction import EbvScale
+from kspipe.conversions.line_ratio import LineRatio
+from kspipe.conversions.star_formation import StarFormation
 from kspipe.core.constants import OH_SOLAR
 
 __all__ = ["Choices", "Parameters"]
@@ -18,20 +21,22 @@ Array = NDArray[np.float64]
 
 @dataclass(frozen=True)
 class Choices:
-    """Which records are used, by key, so that a choice travels between processes.
+    """Which records are used: by key, so that a choice travels between processes.
+
+    A user's own record, which has no key on a shelf, stands in the place of its key.
 
     Attributes
     ----------
-    calibration : str
+    calibration : str or StarFormation
         Star-formation record.
-    alpha_co : str or None
+    alpha_co : str or AlphaCO or None
         alpha_CO record; None for atomic gas only.
     stars : str or None
         Stellar-mass record, where a map of its tracer is given; its ``sigma_star`` replaces the
         parameter.
     imf : str
         Initial mass function of the star-formation rates that come out.
-    line_ratio : str or None
+    line_ratio : str or LineRatio or None
         Line-ratio record; None where the ratio is a number among the parameters.
     atomic : str
         Atomic gas record.
@@ -41,10 +46,10 @@ class Choices:
         Which E(B-V) is given; None takes it as each record wants it.
     """
 
-    calibration: str
-    alpha_co: str | None = None
+    calibration: str | StarFormation
+    alpha_co: str | AlphaCO | None = None
     atomic: str = "leroy2008_thin"
-    line_ratio: str | None = None
+    line_ratio: str | LineRatio | None = None
     stars: str | None = None
     imf: str = "Kroupa"
     ebv_scale: EbvScale | None = None
@@ -81,6 +86,8 @@ class Parameters:
         Of stars, in solar units at 3.4 um.
     sigma_star : array_like or None
         Stellar surface density [Msun/pc2], face-on, at the beam of the maps.
+    alpha_co : array_like or None
+        alpha_CO itself [Msun/pc2 per K km/s], where no record makes it.
     ms_offset_dex, g0_over_n : array_like or None
         As in `kspipe.conversions.inputs.INPUTS`; only some alpha_CO records need them.
     """
@@ -94,5 +101,6 @@ class Parameters:
     hi_opacity: Array | float = 1.0
     mass_to_light: Array | float = 0.5
     sigma_star: Array | float | None = None
+    alpha_co: Array | float | None = None
     ms_offset_dex: Array | float | None = None
     g0_over_n: Array | float | None = None

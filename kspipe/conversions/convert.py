@@ -129,14 +129,14 @@ def _add_molecular(
     made: _Products, intensity: Mapping[str, Array], choices: Choices, parameters: Parameters
 ) -> None:
     """Molecular gas of the one CO line, with its slopes by tracer."""
-    record = ALPHA_CO.get(str(choices.alpha_co))
+    record = ALPHA_CO.get(choices.alpha_co or "")
     line = next((tracer for tracer in CO_LINES if tracer in intensity), None)
     if line is None:
         raise KeyError(f"record {record.key!r} needs a CO line, none is among the maps")
     cos_i = np.asarray(parameters.cos_i, dtype=float)
     given = {
         name: np.asarray(value, dtype=float)
-        for name in ("oh", "sigma_star", "ms_offset_dex", "g0_over_n")
+        for name in ("oh", "sigma_star", "alpha_co", "ms_offset_dex", "g0_over_n")
         if (value := getattr(parameters, name)) is not None
     }
     given.update({k: v for k, v in made.values.items() if k == "sigma_star"})
@@ -161,6 +161,17 @@ def _add_molecular(
     if gas.negative_co is not None:
         made.flags["negative_co"] = np.broadcast_to(gas.negative_co, shape)
     made.flags["outside_range"] = np.broadcast_to(gas.outside_range, shape)
+    no_factor = np.isnan(gas.alpha_co)
+    if no_factor.any():
+        # A power of what is not positive; a blank input is a blank, not a failure.
+        needed = [face_on, *(given[name] for name in record.needs if name in given)]
+        if record.is_self_consistent:
+            needed += [made.values["sigma_atom"], given["sigma_star"]]
+        no_factor = no_factor & np.isfinite(sum(needed[1:], needed[0]))
+        if no_factor.any():
+            made.flags["no_solution"] = made.flags.get("no_solution", False) | np.broadcast_to(
+                no_factor, shape
+            )
 
 
 def _line_ratio(

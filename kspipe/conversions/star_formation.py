@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields
 from types import MappingProxyType
 from typing import Any
 
@@ -85,13 +85,21 @@ class StarFormation(Record):
             total = total + coefficient * value
         return np.asarray(total)
 
-    def __reduce__(self) -> tuple[object, tuple[str]]:
-        """Travel by key."""
-        return _by_key, (self.key,)
+    def __reduce__(self) -> tuple[Any, ...]:
+        """Travel by key; a user's own record, which lies on no shelf, as plain data."""
+        if self.key in STAR_FORMATION:
+            return _by_key, (self.key,)
+        data = {f.name: getattr(self, f.name) for f in fields(self)}
+        plain = {k: dict(v) if isinstance(v, Mapping) else v for k, v in data.items()}
+        return _from_data, (plain,)
 
 
 def _by_key(key: str) -> StarFormation:
     return STAR_FORMATION.get(key)
+
+
+def _from_data(data: dict[str, Any]) -> StarFormation:
+    return StarFormation(**data)
 
 
 STAR_FORMATION = Registry[StarFormation]("star-formation record")

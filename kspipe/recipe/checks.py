@@ -7,7 +7,7 @@ from collections import Counter
 from collections.abc import Mapping
 from typing import Any, Final
 
-from kspipe.conversions import LINE_RATIO, STAR_FORMATION
+from kspipe.conversions import LINE_RATIO, STAR_FORMATION, LineRatio
 from kspipe.core.errors import Fault, nearest
 from kspipe.core.tracers import CO_LINES
 from kspipe.recipe.check_records import (
@@ -15,8 +15,10 @@ from kspipe.recipe.check_records import (
     convention_faults,
     line_ratio_faults,
     listed,
+    metallicity_faults,
     stars_faults,
 )
+from kspipe.recipe.located import region_faults
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.models import (
     GalaxyTable,
@@ -51,17 +53,11 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
         faults += convention_faults(
             tables["star_formation"], tables["foreground"], tables["relations"]
         )
+    faults += region_faults(tables)
     galaxy, metallicity = tables["galaxy"], tables["metallicity"]
     if isinstance(galaxy, GalaxyTable):
-        per_r25 = isinstance(metallicity, MetallicityTable) and metallicity.slope[1] == "r25"
-        if per_r25 and galaxy.r25 is None:
-            faults.append(
-                Fault(
-                    "metallicity.gradient",
-                    "a gradient per r25 needs galaxy.r25",
-                    'type r25 = "... arcmin" in [galaxy]',
-                )
-            )
+        if isinstance(metallicity, MetallicityTable):
+            faults += metallicity_faults(metallicity, galaxy)
         if galaxy.inclination.value > MOST_INCLINED_DEG and tables["relations"]:
             faults.append(
                 Fault(
@@ -125,7 +121,7 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
                     f"or the key of a record: {listed(LINE_RATIO.keys())}",
                 )
             )
-        if lines and isinstance(gas.line_ratio, str):
+        if lines and isinstance(gas.line_ratio, str | LineRatio):
             faults += line_ratio_faults(lines[0], gas.line_ratio)
         elif lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
             faults.append(Fault("gas.line_ratio", "CO(1-0) takes no line ratio", "remove the key"))

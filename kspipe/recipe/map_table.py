@@ -11,6 +11,7 @@ from pydantic import BaseModel, BeforeValidator, Field, PlainValidator, model_va
 from kspipe.core.tracers import TRACERS
 from kspipe.core.units import read_unit
 from kspipe.maps import MapRequest, NoiseRequest
+from kspipe.recipe.kinds import RatioOrZero
 from kspipe.recipe.quantity import parse_measured
 from kspipe.recipe.values import (
     NO_ERROR,
@@ -18,7 +19,6 @@ from kspipe.recipe.values import (
     Magnitude,
     Percent,
     Ratio,
-    RatioOrZero,
     Table,
     TracerName,
     Wavelength,

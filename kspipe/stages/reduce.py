@@ -11,7 +11,7 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.conversions import STAR_FORMATION, imf_factor
+from kspipe.conversions import ALPHA_CO, STAR_FORMATION, imf_factor
 from kspipe.core.errors import KspipeWarning
 from kspipe.core.progress import Progress, no_progress
 from kspipe.kernels.coarse import evaluate_smoothly
@@ -22,9 +22,10 @@ from kspipe.maps.read import load_map, relative_noise, with_photon_noise
 from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import match_map, measure_noise, measure_noise_correlation
 from kspipe.recipe import Recipe
+from kspipe.recipe.quantity import Measured
 from kspipe.recipe.resolved import resolved_recipe
 from kspipe.stages.folder import ProductFolder
-from kspipe.stages.plan import InMemory, Plan, make_plan, records_of
+from kspipe.stages.plan import InMemory, Plan, choices_of, make_plan, records_of
 from kspipe.stages.steps import (
     STEPS_FILE,
     judge_maps,
@@ -184,6 +185,7 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
     galaxy = plan.recipe.galaxy
     lines += _imf_lines(plan.recipe)
     lines += _factor_lines(plan.recipe)
+    lines += [note for field in disc.fields.values() for note in field.notes]
     lines.append(
         f"face-on, helium included (1.36), cos i = {galaxy.cos_i:.5f} applied once; distance "
         f"{galaxy.distance.text}"
@@ -209,7 +211,7 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
             history=[*sources, *lines],
         )
     everywhere = np.ones(plan.grid.shape)
-    anchored = f"scale of 12+log10(O/H): {plan.recipe.metallicity.scale}"
+    anchored = f"scale of 12+log10(O/H): {plan.recipe.metallicity.oh_scale}"
     for name, value, unit, note in (
         ("metallicity", disc.oh, "", anchored),
         ("radius", disc.radius_kpc, "kpc", "deprojected distance from the centre, thin disc"),
@@ -231,21 +233,33 @@ def _factor_lines(recipe: Recipe) -> list[str]:
     lines = []
     if gas and gas.hi_opacity:
         lines.append(f"atomic gas x {gas.hi_opacity}, one opacity factor for all pixels")
-    if recipe.stars:
+    if recipe.stars and isinstance(recipe.stars.mass_to_light, Measured):
         lines.append(f"mass-to-light ratio of stars: {recipe.stars.mass_to_light}")
     return lines
 
 
 def _warn_unsolved(recipe: Recipe, disc: Disc) -> None:
-    n = int(np.sum((disc.flags & int(Flag.NO_SOLUTION)) != 0))
-    if n:
-        warnings.warn(
-            f'star_formation.calibration: "{recipe.star_formation.calibration}" is a power law, '
-            f"and {n} pixels are at or below zero: NaN, flagged no_solution. What is left is "
-            "biased towards bright pixels",
-            KspipeWarning,
-            stacklevel=2,
-        )
+    unsolved = (disc.flags & int(Flag.NO_SOLUTION)) != 0
+    # Where star formation is there, it is the gas that is not.
+    of_gas = unsolved & np.isfinite(disc.surfaces["sigma_sfr"].value)
+    choices = choices_of(recipe)
+    alpha_co = None if choices.alpha_co is None else ALPHA_CO.get(choices.alpha_co)
+    for where, key, record in (
+        (
+            unsolved & ~of_gas,
+            "star_formation.calibration",
+            STAR_FORMATION.get(choices.calibration),
+        ),
+        (of_gas, "gas.alpha_co", alpha_co),
+    ):
+        n = int(where.sum())
+        if n and record is not None:
+            warnings.warn(
+                f'{key}: "{record.key}" is a power law, and {n} pixels are at or below zero: NaN, '
+                "flagged no_solution. What is left is biased towards bright pixels",
+                KspipeWarning,
+                stacklevel=2,
+            )
 
 
 def _imf_lines(recipe: Recipe) -> list[str]:
