@@ -3,59 +3,28 @@
 from __future__ import annotations
 
 import json
-from dataclasses import replace
-from functools import cache
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pytest
 from astropy.io import fits
+from demo_disc import converted, disc_of, matched_maps, shared_folder
 from helpers import demo_recipe
 
 from kspipe.core.errors import GridError, KspipeWarning, RecipeError
-from kspipe.maps.product import read_matched
-from kspipe.maps.skymap import SkyMap
-from kspipe.matching import Grid
 from kspipe.recipe import load_recipe, parse_recipe
 from kspipe.recipe.resolved import resolved_recipe
 from kspipe.stages.compare import compare_relations
 from kspipe.stages.plan import make_plan
 from kspipe.stages.reduce import reduce_maps
-from kspipe.stages.surface import Disc, surfaces_of
 
 GAS = {"alpha_co": "bolatto2013_galactic", "line_ratio": 0.65}
 
 
 @pytest.fixture(scope="module")
-def out(tmp_path_factory) -> Path:
-    return tmp_path_factory.mktemp("varying")
-
-
-@cache
-def matched_maps(out: Path) -> tuple[Grid, dict[str, SkyMap]]:
-    """Grid and matched maps of the demo, and those of 24 um as if they were of H-alpha."""
-    recipe = parse_recipe(demo_recipe(out), folder=out)
-    reduce_maps(recipe, out / "run")
-    maps = {p.stem: read_matched(p) for p in (out / "run" / "matched").glob("*.fits")}
-    maps["ha"] = replace(maps["ir"], name="ha", tracer="Halpha", unit="erg/s/cm2/sr")
-    return make_plan(recipe).grid, maps
-
-
-def disc_of(out: Path, **changes: Any) -> Disc:
-    """Convert the matched maps of the demo by another recipe."""
-    grid, maps = matched_maps(out)
-    recipe = parse_recipe(demo_recipe(out, **changes), folder=out)
-    return surfaces_of(recipe, {name: maps[name] for name in recipe.maps}, grid)
-
-
-def converted(out: Path, **changes: Any) -> dict[str, np.ndarray]:
-    """Images of a conversion by name, errors as NAME_error."""
-    disc = disc_of(out, **changes)
-    images = {"metallicity": disc.oh, "radius": disc.radius_kpc, "flags": disc.flags}
-    for name, surface in disc.surfaces.items():
-        images |= {name: surface.value, f"{name}_error": surface.error}
-    return images
+def out() -> Path:
+    return shared_folder()
 
 
 def reduced(out: Path, **changes: Any) -> dict[str, np.ndarray]:
