@@ -45,11 +45,13 @@ def recipe_of(out: Path, **changes: Any) -> Recipe:
     return parse_recipe(demo_recipe(out, **changes), folder=out)
 
 
-def disc_of(out: Path, **changes: Any) -> Disc:
-    """Convert the matched maps of the demo by another recipe."""
+def disc_of(out: Path, _as: dict[str, str] | None = None, **changes: Any) -> Disc:
+    """Convert the matched maps of the demo by another recipe, some as if of another tracer."""
     grid, maps = matched_maps(out)
     recipe = recipe_of(out, **changes)
-    return surfaces_of(recipe, {name: maps[name] for name in recipe.maps}, grid)
+    used = {name: maps[name] for name in recipe.maps}
+    used |= {name: replace(maps[name], tracer=tracer) for name, tracer in (_as or {}).items()}
+    return surfaces_of(recipe, used, grid)
 
 
 def converted(out: Path, **changes: Any) -> dict[str, np.ndarray]:

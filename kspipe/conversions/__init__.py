@@ -12,6 +12,7 @@ from kspipe.conversions.choices import Choices, Parameters
 from kspipe.conversions.convert import Converted, convert
 from kspipe.conversions.extinction import EXTINCTION, Extinction
 from kspipe.conversions.field import Field, combine
+from kspipe.conversions.finished import FINISHED, FINISHED_SFR, Finished
 from kspipe.conversions.imf import IMFS, Imf, imf_factor
 from kspipe.conversions.inputs import INPUTS, Input
 from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
@@ -31,6 +32,8 @@ __all__ = [
     "ALPHA_CO",
     "ATOMIC",
     "EXTINCTION",
+    "FINISHED",
+    "FINISHED_SFR",
     "GIVEN_ALPHA_CO",
     "IMFS",
     "INPUTS",
@@ -48,6 +51,7 @@ __all__ = [
     "Converted",
     "Extinction",
     "Field",
+    "Finished",
     "Imf",
     "Input",
     "LineRatio",

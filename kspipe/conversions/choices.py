@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from kspipe.conversions.alpha_co import AlphaCO
 from kspipe.conversions.extinction import EbvScale
+from kspipe.conversions.finished import Finished
 from kspipe.conversions.line_ratio import LineRatio
 from kspipe.conversions.star_formation import StarFormation
 from kspipe.core.constants import OH_SOLAR
@@ -44,6 +45,8 @@ class Choices:
         Extinction record of each tracer that needs one.
     ebv_scale : {"SFD", "SF11"} or None
         Which E(B-V) is given; None takes it as each record wants it.
+    finished : mapping of str to Finished
+        Conventions of each finished map, by tracer.
     """
 
     calibration: str | StarFormation
@@ -53,6 +56,7 @@ class Choices:
     stars: str | None = None
     imf: str = "Kroupa"
     ebv_scale: EbvScale | None = None
+    finished: Mapping[str, Finished] = field(default_factory=dict)
     extinction: Mapping[str, str] = field(
         default_factory=lambda: {
             "FUV": "bianchi2017",

@@ -16,6 +16,7 @@ from kspipe.conversions.alpha_co import ALPHA_CO
 from kspipe.conversions.atomic import ATOMIC
 from kspipe.conversions.choices import Choices, Parameters
 from kspipe.conversions.corrections import apply, corrections_of
+from kspipe.conversions.finished import FINISHED, finished_factor
 from kspipe.conversions.imf import imf_factor
 from kspipe.conversions.line_ratio import LINE_RATIO
 from kspipe.conversions.molecular import molecular_gas
@@ -86,6 +87,7 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
         if np.any(np.asarray(parameters.hi_opacity) != 1.0):
             per_hi = per_hi * parameters.hi_opacity
         made.add("sigma_atom", per_hi * intensity["HI"], {"HI": per_hi})
+    _add_finished(made, intensity, choices, cos_i)
     if choices.stars is not None:
         _add_stars(made, intensity, choices, parameters)
     # First, because a line ratio may depend on it.
@@ -112,6 +114,16 @@ class _Products:
         self.derivatives[product] = {
             tracer: np.broadcast_to(slope, shape) for tracer, slope in slopes.items()
         }
+
+
+def _add_finished(
+    made: _Products, intensity: Mapping[str, Array], choices: Choices, cos_i: Array
+) -> None:
+    """Gas and stars that are given; star formation goes through its calibration."""
+    for tracer, product in FINISHED.items():
+        if tracer in intensity and product != "sigma_sfr":
+            factor = finished_factor(choices.finished[tracer], cos_i, "Kroupa")
+            made.add(product, factor * intensity[tracer], {tracer: factor})
 
 
 def _add_stars(
@@ -146,7 +158,8 @@ def _add_molecular(
     slopes = {line: gas.per_line / ratio * cos_i}
     value = gas.alpha_co / ratio * cos_i * intensity[line]
     if gas.per_atom is not None:
-        slopes["HI"] = gas.per_atom * made.derivatives["sigma_atom"]["HI"]
+        for tracer, slope in made.derivatives["sigma_atom"].items():
+            slopes[tracer] = gas.per_atom * slope
     if ratio_log_slope is not None:
         per_sfr = -gas.per_line * face_on * ratio_log_slope
         for tracer, slope in made.derivatives["sigma_sfr"].items():

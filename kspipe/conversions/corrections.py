@@ -54,6 +54,9 @@ def corrections_of(
         if tracer == "Halpha":
             nii = np.asarray(parameters.nii_ratio, dtype=float)
             corrections.append((True, 1.0 + NII_DOUBLET * nii))
+        state = choices.finished.get(tracer)
+        if state is not None and state.face_on:
+            corrections.append((True, np.asarray(parameters.cos_i, dtype=float)))
         stands_in = tracer == "24um" and "24um" not in intensity
         if stands_in:
             corrections.append((False, np.asarray(parameters.as_24um, dtype=float)))

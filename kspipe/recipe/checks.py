@@ -10,6 +10,7 @@ from typing import Any, Final
 from kspipe.conversions import LINE_RATIO, STAR_FORMATION, LineRatio
 from kspipe.core.errors import Fault, nearest
 from kspipe.core.tracers import CO_LINES
+from kspipe.recipe.check_finished import finished_faults, given_twice_faults
 from kspipe.recipe.check_records import (
     alpha_co_faults,
     convention_faults,
@@ -44,9 +45,11 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
     faults = _duplicates(maps)
     faults += _gas_faults(tables["gas"], maps, complete=not some_map_is_faulty)
     if isinstance(tables["gas"], GasTable):
-        faults += alpha_co_faults(tables["gas"], has_stars="stars" in tables)
+        faults += alpha_co_faults(tables["gas"], has_stars=_has_stars(tables, maps))
     if isinstance(tables.get("stars"), StarsTable):
         faults += stars_faults(tables["stars"], tables["maps"])
+        if any(table.tracer == "Sigma_star" for table in maps.values()):
+            faults.append(Fault("stars", "a map of Sigma_star is there, too", "remove one"))
     faults += _map_extras(maps)
     if isinstance(tables["star_formation"], StarFormationTable):
         faults += _star_formation_faults(tables["star_formation"], tables["maps"])
@@ -70,6 +73,10 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
     return faults
 
 
+def _has_stars(tables: Mapping[str, Any], maps: Mapping[str, MapTable]) -> bool:
+    return "stars" in tables or any(table.tracer == "Sigma_star" for table in maps.values())
+
+
 def _duplicates(maps: Mapping[str, MapTable]) -> list[Fault]:
     counts = Counter(table.tracer for table in maps.values())
     return [
@@ -87,19 +94,24 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
     faults = []
     tracers = {table.tracer: name for name, table in maps.items()}
     lines = [line for line in CO_LINES if line in tracers]
-    if complete and "HI" not in tracers:
+    if complete and not {"HI", "Sigma_HI"} & set(tracers):
         faults.append(
             Fault("maps", "no map of HI, which the atomic gas needs", 'add one with tracer = "HI"')
+        )
+    faults += given_twice_faults(tracers)
+    if complete and gas == "finished map" and "Sigma_mol" not in tracers:
+        faults.append(
+            Fault("gas", '"finished map", but no map is one of Sigma_mol', "add it, or type [gas]")
         )
     if len(lines) > 1:
         faults.append(
             Fault("maps", f"maps of {' and '.join(lines)}: the molecular gas takes one CO line")
         )
-    if gas == "atomic only" and lines:
+    if isinstance(gas, str) and lines:
         faults.append(
             Fault(
                 "gas",
-                f'"atomic only", but maps.{tracers[lines[0]]} is {lines[0]}',
+                f'"{gas}", but maps.{tracers[lines[0]]} is {lines[0]}',
                 "type a table [gas] with alpha_co, or remove that map",
             )
         )
@@ -132,6 +144,7 @@ def _map_extras(maps: Mapping[str, MapTable]) -> list[Fault]:
     """Keys that belong to one tracer only."""
     faults = []
     for name, table in maps.items():
+        faults += finished_faults(name, table)
         if table.tracer == "Halpha" and table.nii_ratio is None:
             faults.append(
                 Fault(

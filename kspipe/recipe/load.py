@@ -230,15 +230,16 @@ def _gas(
     raw: dict[str, Any], faults: list[Fault], context: Mapping[str, Any]
 ) -> GasTable | str | None:
     gas = raw.get("gas")
-    if gas == "atomic only":
-        return "atomic only"
+    if gas in ("atomic only", "finished map"):
+        return str(gas)
     if gas is None or isinstance(gas, str):
         seen = "is missing" if gas is None else f"is {gas!r}"
         faults.append(
             Fault(
                 "gas",
                 f"the gas {seen}",
-                'type a table [gas] with alpha_co, or gas = "atomic only" where there is no CO map',
+                'type a table [gas] with alpha_co, or gas = "atomic only" where there is no CO map '
+                '("finished map" where there is one of Sigma_mol)',
             )
         )
         return None

@@ -8,6 +8,7 @@ from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, BeforeValidator, Field, PlainValidator, model_validator
 
+from kspipe.conversions import Finished
 from kspipe.core.tracers import TRACERS
 from kspipe.core.units import read_unit
 from kspipe.maps import MapRequest, NoiseRequest
@@ -149,6 +150,12 @@ def _shift_typed(typed: Any) -> tuple[float, float]:
     return east, north
 
 
+def _helium(typed: Any) -> float | None:
+    if typed is not None and typed not in (1.0, 1.36, 1.4):
+        raise ValueError(f"{typed!r}: expected 1.0 (hydrogen only), 1.36 or 1.4")
+    return None if typed is None else float(typed)
+
+
 class MapTable(Table):
     """One map: what it is, where it lies, and what its header does not say."""
 
@@ -174,6 +181,16 @@ class MapTable(Table):
     total_flux: Level | None = None
     nii_ratio: RatioOrZero | None = None
     as_24um: Ratio | None = None
+    inclination: Literal["face-on", "sky"] | None = None
+    helium: Annotated[float | None, BeforeValidator(_helium)] = None
+    imf: Literal["Kroupa", "Salpeter", "Chabrier"] | None = None
+
+    @property
+    def finished(self) -> Finished | None:
+        """Conventions of a finished map; None for a map of an intensity."""
+        if self.inclination is None:
+            return None
+        return Finished(self.inclination == "face-on", self.helium, self.imf)
 
     def request(self, name: str) -> MapRequest:
         """Plain values for the room that reads maps."""

@@ -14,6 +14,7 @@ from pydantic import BeforeValidator, Field, model_validator
 from kspipe.conversions import (
     ALPHA_CO,
     EXTINCTION,
+    FINISHED_SFR,
     LINE_RATIO,
     STAR_FORMATION,
     STARS,
@@ -178,7 +179,10 @@ class StarsTable(Table):
 class StarFormationTable(Table):
     """Which calibration, on which maps."""
 
-    calibration: Annotated[str | StarFormation, key_of(STAR_FORMATION)]
+    calibration: Annotated[
+        str | StarFormation,
+        key_of(STAR_FORMATION, {FINISHED_SFR.key: FINISHED_SFR}),
+    ]
     maps: tuple[str, ...]
     imf: Literal["Kroupa", "Salpeter", "Chabrier"] = "Kroupa"
 
@@ -213,7 +217,7 @@ class Recipe(Table):
     maps: dict[str, MapTable]
     metallicity: MetallicityTable
     foreground: ForegroundTable
-    gas: GasTable | Literal["atomic only"]
+    gas: GasTable | Literal["atomic only", "finished map"]
     star_formation: StarFormationTable
     stars: StarsTable | None = None
     regions: dict[str, RegionTable] = Field(default_factory=dict)
@@ -228,4 +232,4 @@ class Recipe(Table):
     @property
     def has_molecular(self) -> bool:
         """Whether the recipe asks for molecular gas."""
-        return isinstance(self.gas, GasTable)
+        return self.gas != "atomic only"

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
+from types import MappingProxyType
 from typing import Annotated, Any, Final
 
 from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, ValidationInfo
@@ -69,18 +70,18 @@ def _opacity(factor: Measured) -> Measured:
     return factor
 
 
-def key_of(registry: Registry[Any]) -> Any:
+def key_of(registry: Registry[Any], more: Mapping[str, Any] = MappingProxyType({})) -> Any:
     """Validator of a key of a registry, or of the name of a record of the user's own.
 
     The user's own records of the recipe stand, by name, in the validation context; one that is
-    named becomes the record itself.
+    named becomes the record itself, like one of `more`.
     """
     kind = type(next(iter(registry)))
 
     def check(typed: Any, info: ValidationInfo) -> Any:
         if isinstance(typed, kind):
             return typed
-        own = (info.context or {}).get("records", {})
+        own = {**(info.context or {}).get("records", {}), **more}
         if isinstance(typed, str) and isinstance(own.get(typed), kind):
             return own[typed]
         if not isinstance(typed, str) or typed not in registry:

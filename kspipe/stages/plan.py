@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 import warnings
 from collections.abc import Mapping
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -19,6 +19,7 @@ from kspipe.conversions import (
     ALPHA_CO,
     ATOMIC,
     EXTINCTION,
+    FINISHED_SFR,
     GIVEN_ALPHA_CO,
     LINE_RATIO,
     MASS_METALLICITY,
@@ -223,8 +224,13 @@ def _checksum(image: Any) -> str:
 def choices_of(recipe: Recipe) -> Choices:
     """Pick the records that a recipe names, by key."""
     gas = None if isinstance(recipe.gas, str) else recipe.gas
+    finished = {t.tracer: t.finished for t in recipe.maps.values() if t.finished is not None}
+    calibration = recipe.star_formation.calibration
+    if calibration is FINISHED_SFR or calibration == FINISHED_SFR:
+        calibration = replace(FINISHED_SFR, imf=finished["Sigma_SFR"].imf)
     return Choices(
-        calibration=recipe.star_formation.calibration,
+        calibration=calibration,
+        finished=finished,
         alpha_co=_or(gas.alpha_co, str | AlphaCO, GIVEN_ALPHA_CO) if gas else None,
         stars=recipe.stars.record if recipe.stars else None,
         imf=recipe.star_formation.imf,
@@ -245,7 +251,7 @@ def _or(value: Any, kind: Any, other: Any) -> Any:
 def records_of(recipe: Recipe) -> list[Any]:
     """All conversion records that a recipe uses."""
     choices = choices_of(recipe)
-    records: list[Any] = [ATOMIC.get(choices.atomic)]
+    records: list[Any] = [ATOMIC.get(choices.atomic)] if recipe.map_of("HI") else []
     if choices.alpha_co is not None:
         records.append(ALPHA_CO.get(choices.alpha_co))
     if choices.line_ratio is not None:
@@ -298,6 +304,7 @@ def convert_print(recipe: Recipe, match_prints: Mapping[str, str]) -> str:
             "gas": recipe.gas if isinstance(recipe.gas, str) else _values(recipe.gas),
             "stars": recipe.stars and _values(recipe.stars),
             "star formation": _values(recipe.star_formation),
+            "finished": {n: str(t.finished) for n, t in recipe.maps.items()},
             "ratios": {n: _content([t.nii_ratio, t.as_24um]) for n, t in recipe.maps.items()},
             "low_snr": recipe.comparison.low_snr,
             "records": [f"{r.key}: {r.formula}" for r in records_of(recipe)],

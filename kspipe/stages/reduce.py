@@ -230,7 +230,11 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
 def _factor_lines(recipe: Recipe) -> list[str]:
     """Say which typed factors stand beside the records."""
     gas = None if isinstance(recipe.gas, str) else recipe.gas
-    lines = []
+    lines = [
+        f"maps.{name}: a finished map of {table.tracer}, {table.finished}"
+        for name, table in recipe.maps.items()
+        if table.finished is not None
+    ]
     if gas and gas.hi_opacity:
         lines.append(f"atomic gas x {gas.hi_opacity}, one opacity factor for all pixels")
     if recipe.stars and isinstance(recipe.stars.mass_to_light, Measured):
@@ -264,7 +268,7 @@ def _warn_unsolved(recipe: Recipe, disc: Disc) -> None:
 
 def _imf_lines(recipe: Recipe) -> list[str]:
     """Say what a change of initial mass function did; nothing where there was none."""
-    given = str(STAR_FORMATION.get(recipe.star_formation.calibration).imf)
+    given = str(STAR_FORMATION.get(choices_of(recipe).calibration).imf)
     wanted = recipe.star_formation.imf
     if given == wanted:
         return []

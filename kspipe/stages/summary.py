@@ -65,7 +65,7 @@ def make_summary(
         "n_independent": independent_beams(int(used.sum()), pixel_area, beam),
         "n_samples": int((used & independent).sum()),
         "n_left_out": left_out(disc, used),
-        "gas": recipe.gas if isinstance(recipe.gas, str) else "atomic and molecular",
+        "gas": "atomic and molecular" if recipe.has_molecular else recipe.gas,
         "totals": _totals(recipe, disc, used, grid),
         "flags": {
             name: int(np.sum((flags[used] & bit) != 0)) for name, bit in Flag.meanings().items()

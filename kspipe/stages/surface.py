@@ -111,7 +111,8 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
 def _used_maps(recipe: Recipe, matched: dict[str, SkyMap]) -> dict[str, SkyMap]:
     """Maps that a surface density is made of, by tracer."""
     wanted = {*recipe.star_formation.maps, *({recipe.stars.map} if recipe.stars else ())}
-    gas = {"HI", *(CO_LINES if recipe.has_molecular else ())}
+    gas = {"HI", "Sigma_HI", "Sigma_star"}
+    gas |= {*CO_LINES, "Sigma_mol"} if recipe.has_molecular else set()
     return {sky.tracer: sky for name, sky in matched.items() if sky.tracer in gas or name in wanted}
 
 
