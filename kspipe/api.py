@@ -20,10 +20,11 @@ from kspipe.core.report import relation_rows, total_rows
 from kspipe.maps.product import read_image
 from kspipe.products import draw_figures
 from kspipe.recipe import Recipe, load_recipe
+from kspipe.stages.alternatives import ALTERNATIVES_FILE, weigh_alternatives
 from kspipe.stages.compare import compare_relations
 from kspipe.stages.reduce import PRODUCT_UNITS, reduce_maps
 
-__all__ = ["Comparison", "Reduction", "compare", "figures", "reduce", "run"]
+__all__ = ["Comparison", "Reduction", "alternatives", "compare", "figures", "reduce", "run"]
 
 Maps = Mapping[str, fits.PrimaryHDU | tuple[fits.PrimaryHDU, fits.PrimaryHDU | None]]
 
@@ -238,6 +239,36 @@ def compare(
     """
     compare_relations(Path(out), overwrite=overwrite, memory=_memory(maps), progress=progress)
     return Comparison(out)
+
+
+def alternatives(
+    out: str | Path,
+    *,
+    maps: Maps | None = None,
+    overwrite: bool = False,
+    progress: Progress = no_progress,
+) -> Table:
+    """Say what every other record that fits would give for a reduced galaxy.
+
+    Parameters
+    ----------
+    out : path
+        Product folder of a reduction; ``alternatives.ecsv`` is written.
+    maps, overwrite, progress
+        As in `reduce`.
+
+    Returns
+    -------
+    astropy.table.Table
+        One row for each record: total, median and tilt with radius beside those of the one used.
+
+    Raises
+    ------
+    OutputError
+        If the reduction is absent or stale.
+    """
+    weigh_alternatives(Path(out), overwrite=overwrite, memory=_memory(maps), progress=progress)
+    return Table.read(Path(out) / ALTERNATIVES_FILE)
 
 
 def figures(

@@ -37,6 +37,8 @@ def matched_maps(out: Path) -> tuple[Grid, dict[str, SkyMap]]:
     reduce_maps(recipe, out / "run")
     maps = {p.stem: read_matched(p) for p in (out / "run" / "matched").glob("*.fits")}
     maps["ha"] = replace(maps["ir"], name="ha", tracer="Halpha", unit="erg/s/cm2/sr")
+    maps["hb"] = replace(maps["ir"], name="hb", tracer="Hbeta", unit="erg/s/cm2/sr")
+    maps["hb"] = replace(maps["hb"], value=maps["ir"].value[::-1])
     maps["nir"] = replace(maps["ir"], name="nir", tracer="3.6um")
     return make_plan(recipe).grid, maps
 

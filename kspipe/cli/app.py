@@ -130,6 +130,23 @@ def run_command(
     print_summary(out)
 
 
+@app.command("alternatives", epilog="Example: kspipe alternatives galaxy")
+def alternatives_command(
+    folder: FolderArgument,
+    overwrite: OverwriteOption = False,
+    quiet: QuietOption = False,
+    debug: DebugOption = False,
+) -> None:
+    """Say what every other record that fits would give for this galaxy; write alternatives.ecsv."""
+    from kspipe.cli.session import print_alternatives, session
+
+    with session(quiet=quiet, debug=debug) as progress:
+        from kspipe.stages.alternatives import weigh_alternatives
+
+        weigh_alternatives(folder, overwrite=overwrite, progress=progress)
+    print_alternatives(folder)
+
+
 @app.command("list", epilog="Example: kspipe list alpha_co")
 def list_command(
     family: Annotated[

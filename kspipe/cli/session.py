@@ -22,7 +22,7 @@ from kspipe.core.progress import Progress as ProgressCall
 from kspipe.core.progress import no_progress
 from kspipe.core.report import noted_lines, relation_rows, total_rows
 
-__all__ = ["print_steps", "print_summary", "session"]
+__all__ = ["print_alternatives", "print_steps", "print_summary", "session"]
 
 
 @contextmanager
@@ -101,6 +101,18 @@ def print_steps(folder: Path) -> None:
     console = Console(highlight=False, width=None if sys.stdout.isatty() else 160)
     table = Table("map", "step", "what", "from", "flux [unit sr]", "noise", "pixels", box=None)
     for cells in step_cells(step_table(folder)):
+        table.add_row(*(escape(cell) for cell in cells))
+    console.print(table)
+
+
+def print_alternatives(folder: Path) -> None:
+    """Print what every record that fits would give, on stdout."""
+    from kspipe.stages.alternatives import alternative_cells
+
+    console = Console(highlight=False, width=None if sys.stdout.isatty() else 160)
+    head = ("choice", "record", "total", "of used", "median", "median ratio", "tilt", "beware")
+    table = Table(*head, box=None)
+    for cells in alternative_cells(folder):
         table.add_row(*(escape(cell) for cell in cells))
     console.print(table)
 

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -45,6 +46,10 @@ class Choices:
         Extinction record of each tracer that needs one.
     ebv_scale : {"SFD", "SF11"} or None
         Which E(B-V) is given; None takes it as each record wants it.
+    balmer : str or None
+        Balmer-decrement record, where a map of Hbeta corrects Halpha.
+    total_infrared : str or None
+        Record that makes TIR of bands, where a calibration takes TIR and no map of it is there.
     finished : mapping of str to Finished
         Conventions of each finished map, by tracer.
     """
@@ -56,12 +61,15 @@ class Choices:
     stars: str | None = None
     imf: str = "Kroupa"
     ebv_scale: EbvScale | None = None
+    balmer: str | None = None
+    total_infrared: str | None = None
     finished: Mapping[str, Finished] = field(default_factory=dict)
     extinction: Mapping[str, str] = field(
         default_factory=lambda: {
             "FUV": "bianchi2017",
             "NUV": "bianchi2017",
             "Halpha": "cardelli1989",
+            "Hbeta": "cardelli1989",
         }
     )
 
@@ -84,6 +92,10 @@ class Parameters:
         [NII]6583 / Halpha in the H-alpha map; 0 where it is free of [NII].
     as_24um : array_like
         24 um over 22 um intensity, where a 22 um map stands for 24 um.
+    diffuse : mapping of str to array_like
+        Fraction of the emission of a tracer that does not come from where stars form.
+    thermal_fraction : array_like
+        Of the radio continuum, for calibrations of its thermal part.
     hi_opacity : array_like
         Atomic gas over that of optically thin emission.
     mass_to_light : array_like
@@ -102,9 +114,19 @@ class Parameters:
     ebv: Array | float = 0.0
     nii_ratio: Array | float = 0.0
     as_24um: Array | float = 1.0
+    diffuse: Mapping[str, Array | float] = field(default_factory=dict)
+    thermal_fraction: Array | float = 1.0
     hi_opacity: Array | float = 1.0
     mass_to_light: Array | float = 0.5
     sigma_star: Array | float | None = None
     alpha_co: Array | float | None = None
     ms_offset_dex: Array | float | None = None
     g0_over_n: Array | float | None = None
+
+    def changed(self, name: str, value: Array) -> Parameters:
+        """Copy with another value; ``diffuse.TRACER`` is one of `diffuse`."""
+        table, _, tracer = name.partition(".")
+        change: dict[str, Any] = {name: value}
+        if tracer:
+            change = {table: {**getattr(self, table), tracer: value}}
+        return replace(self, **change)

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from kspipe.conversions.alpha_co import ALPHA_CO
 from kspipe.conversions.atomic import ATOMIC
 from kspipe.conversions.choices import Choices, Parameters
-from kspipe.conversions.corrections import apply, corrections_of
+from kspipe.conversions.corrections import apply, terms_of
 from kspipe.conversions.finished import FINISHED, finished_factor
 from kspipe.conversions.imf import imf_factor
 from kspipe.conversions.line_ratio import LINE_RATIO
@@ -222,26 +222,43 @@ def _add_sfr(
 ) -> None:
     """Star formation: the terms of the calibration, each with its slope."""
     record = STAR_FORMATION.get(choices.calibration)
-    per_intensity = corrections_of(record, intensity, choices, parameters)
     cos_i = np.asarray(parameters.cos_i, dtype=float)
     imf = imf_factor(str(record.imf), choices.imf)
-    terms, slopes = [], {}
-    for tracer, (source, corrections) in per_intensity.items():
-        coefficient, power = record.coefficients[tracer], record.powers.get(tracer)
+    values: list[Array] = []
+    slopes: dict[str, Array] = {}
+    unsolved: list[NDArray[np.bool_]] = []
+
+    def add(value: Array, slopes_of_it: Mapping[str, Array]) -> None:
+        values.append(value)
+        for source, slope in slopes_of_it.items():
+            slopes[source] = slopes[source] + slope if source in slopes else slope
+
+    for term in terms_of(record, intensity, choices, parameters):
+        coefficient, power = record.coefficients[term.tracer], record.powers.get(term.tracer)
         if imf != 1.0:
             coefficient *= imf
-        stored = intensity[source]
-        if power is None:
-            slopes[source] = apply(np.asarray(coefficient * cos_i), corrections)
-            terms.append(slopes[source] * stored)
+        stored = intensity[term.source]
+        if power is not None:
+            positive = np.where(stored > 0, stored, np.nan)
+            value = coefficient * (apply(cos_i, term.corrections) * positive) ** power
+            add(value, {term.source: power * value / positive})
+            unsolved.append(stored <= 0)
             continue
-        positive = np.where(stored > 0, stored, np.nan)
-        face_on = apply(cos_i, corrections) * positive
-        terms.append(coefficient * face_on**power)
-        slopes[source] = power * terms[-1] / positive
-        unsolved = made.flags.get("no_solution", np.zeros((), dtype=bool))
-        made.flags["no_solution"] = unsolved | (stored <= 0)
-    made.add("sigma_sfr", sum(terms[1:], terms[0]), slopes)
-    if "no_solution" in made.flags:
+        slope = apply(np.asarray(coefficient * cos_i), term.corrections)
+        if term.decrement is None:
+            add(slope * stored, {term.source: slope})
+            continue
+        line = intensity["Hbeta"]
+        other = np.where(line > 0, line, np.nan)
+        seen = apply(np.ones(()), term.corrections) * stored
+        ratio = seen / (apply(np.ones(()), term.decrement.corrections) * other)
+        bright = slope * term.decrement.record.factor(ratio)
+        gain = term.decrement.record.power
+        value = bright * stored
+        add(value, {term.source: (1.0 + gain) * bright, "Hbeta": -gain * value / other})
+        unsolved.append((stored <= 0) | (line <= 0))
+    made.add("sigma_sfr", sum(values[1:], values[0]), slopes)
+    if unsolved:
         shape = made.values["sigma_sfr"].shape
-        made.flags["no_solution"] = np.broadcast_to(made.flags["no_solution"], shape)
+        failed = np.logical_or.reduce(np.broadcast_arrays(*unsolved))
+        made.flags["no_solution"] = np.broadcast_to(failed, shape)

@@ -62,7 +62,7 @@ def parameter_shifts(
     def slopes(name: str, error: Array) -> dict[str, Array]:
         up, down = fields[name].around(error)
         high, low = (
-            convert(intensity, choices, replace(parameters, **{name: value})).values
+            convert(intensity, choices, parameters.changed(name, value)).values
             for value in (up, down)
         )
         with np.errstate(invalid="ignore", divide="ignore"):

@@ -145,8 +145,11 @@ def convention_faults(
     faults = []
     record = STAR_FORMATION.get(table.calibration)
     if isinstance(foreground, ForegroundTable):
-        for tracer in record.tracers:
-            key = {"FUV": "uv", "NUV": "uv", "Halpha": "halpha"}.get(tracer)
+        lines = ("Hbeta",) if table.attenuation is not None else ()
+        for tracer in (*record.tracers, *lines):
+            key = {"FUV": "uv", "NUV": "uv"}.get(tracer) or (
+                "halpha" if tracer in ("Halpha", "Hbeta") else None
+            )
             if key and tracer not in EXTINCTION.get(getattr(foreground, key)).coefficients:
                 known = listed(r.key for r in EXTINCTION if tracer in r.coefficients)
                 faults.append(

@@ -7,10 +7,10 @@ from collections import Counter
 from collections.abc import Mapping
 from typing import Any, Final
 
-from kspipe.conversions import LINE_RATIO, STAR_FORMATION, LineRatio
+from kspipe.conversions import LINE_RATIO, LineRatio
 from kspipe.core.errors import Fault, nearest
 from kspipe.core.tracers import CO_LINES
-from kspipe.recipe.check_finished import finished_faults, given_twice_faults
+from kspipe.recipe.check_finished import given_twice_faults
 from kspipe.recipe.check_records import (
     alpha_co_faults,
     convention_faults,
@@ -19,6 +19,7 @@ from kspipe.recipe.check_records import (
     metallicity_faults,
     stars_faults,
 )
+from kspipe.recipe.check_star_formation import map_extra_faults, star_formation_faults
 from kspipe.recipe.located import region_faults
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.models import (
@@ -50,9 +51,9 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
         faults += stars_faults(tables["stars"], tables["maps"])
         if any(table.tracer == "Sigma_star" for table in maps.values()):
             faults.append(Fault("stars", "a map of Sigma_star is there, too", "remove one"))
-    faults += _map_extras(maps)
+    faults += map_extra_faults(maps, tables["galaxy"])
     if isinstance(tables["star_formation"], StarFormationTable):
-        faults += _star_formation_faults(tables["star_formation"], tables["maps"])
+        faults += star_formation_faults(tables["star_formation"], tables["maps"])
         faults += convention_faults(
             tables["star_formation"], tables["foreground"], tables["relations"]
         )
@@ -137,71 +138,6 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
             faults += line_ratio_faults(lines[0], gas.line_ratio)
         elif lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
             faults.append(Fault("gas.line_ratio", "CO(1-0) takes no line ratio", "remove the key"))
-    return faults
-
-
-def _map_extras(maps: Mapping[str, MapTable]) -> list[Fault]:
-    """Keys that belong to one tracer only."""
-    faults = []
-    for name, table in maps.items():
-        faults += finished_faults(name, table)
-        if table.tracer == "Halpha" and table.nii_ratio is None:
-            faults.append(
-                Fault(
-                    f"maps.{name}.nii_ratio",
-                    "an H-alpha map needs [NII]6583/Halpha",
-                    "type nii_ratio = 0 if the map is free of [NII]",
-                )
-            )
-        for key, value, owner in (
-            ("nii_ratio", table.nii_ratio, "Halpha"),
-            ("as_24um", table.as_24um, "22um"),
-        ):
-            if value is None:
-                continue
-            if table.tracer != owner:
-                faults.append(
-                    Fault(f"maps.{name}.{key}", f"belongs to a map of {owner}, not {table.tracer}")
-                )
-    return faults
-
-
-def _star_formation_faults(
-    table: StarFormationTable, maps: Mapping[str, MapTable | None]
-) -> list[Fault]:
-    faults = []
-    record = STAR_FORMATION.get(table.calibration)
-    found: list[str] = []
-    for name in table.maps:
-        if name not in maps:
-            faults.append(
-                Fault("star_formation.maps", f'no map is called "{name}"', nearest(name, maps))
-            )
-            return faults
-        listed = maps[name]
-        if listed is None:
-            return faults
-        tracer = listed.tracer
-        if tracer == "22um" and "24um" in record.tracers:
-            if listed.as_24um is None:
-                faults.append(
-                    Fault(
-                        f"maps.{name}.as_24um",
-                        f'"{record.key}" is calibrated on 24 um and this map is 22 um',
-                        "type as_24um = 24 um over 22 um intensity, for example 1.0",
-                    )
-                )
-            tracer = "24um"
-        found.append(tracer)
-    if sorted(found) != sorted(record.tracers):
-        faults.append(
-            Fault(
-                "star_formation.maps",
-                f'"{record.key}" takes {" and ".join(record.tracers)}; listed are '
-                f"{' and '.join(found) or 'none'}",
-                "list one map of each",
-            )
-        )
     return faults
 
 

@@ -13,11 +13,13 @@ from pydantic import BeforeValidator, Field, model_validator
 
 from kspipe.conversions import (
     ALPHA_CO,
+    BALMER,
     EXTINCTION,
     FINISHED_SFR,
     LINE_RATIO,
     STAR_FORMATION,
     STARS,
+    TOTAL_INFRARED,
     AlphaCO,
     LineRatio,
     StarFormation,
@@ -34,6 +36,7 @@ from kspipe.recipe.values import (
     Distance,
     FieldOverDensity,
     Inclination,
+    Magnitude,
     Offset,
     Opacity,
     Speed,
@@ -67,6 +70,7 @@ class GalaxyTable(Table):
     position_angle: Angle
     r25: Arcsec | None = None
     r_e: Arcsec | None = None
+    m_b: Magnitude | None = None
     velocity: Speed | None = None
     velocity_convention: Literal["optical", "radio"] = "optical"
 
@@ -177,13 +181,19 @@ class StarsTable(Table):
 
 
 class StarFormationTable(Table):
-    """Which calibration, on which maps."""
+    """Which calibration, on which maps.
+
+    ``attenuation`` is by the Balmer decrement, with a map of Hbeta among the maps;
+    ``total_infrared`` makes TIR of maps of its bands.
+    """
 
     calibration: Annotated[
         str | StarFormation,
         key_of(STAR_FORMATION, {FINISHED_SFR.key: FINISHED_SFR}),
     ]
     maps: tuple[str, ...]
+    attenuation: Annotated[str | None, key_of(BALMER)] = None
+    total_infrared: Annotated[str | None, key_of(TOTAL_INFRARED)] = None
     imf: Literal["Kroupa", "Salpeter", "Chabrier"] = "Kroupa"
 
 

@@ -10,7 +10,7 @@ from typing import Any
 from pydantic import BaseModel
 
 from kspipe.conversions import Record
-from kspipe.recipe.map_table import MapTable
+from kspipe.recipe.map_table import Filter, MapTable
 from kspipe.recipe.models import Recipe
 from kspipe.recipe.quantity import Measured, Position
 from kspipe.recipe.varying import ByRegion, OnMap, Profile, typed_as
@@ -95,10 +95,9 @@ def _value(value: Any) -> str:
             return repr(float(value.text))
         except ValueError:
             return _value(value.text)
-    if isinstance(value, OnMap | Profile | ByRegion):
-        return _value(typed_as(value))
-    if isinstance(value, Record):
-        return _value(value.key)
+    if isinstance(value, OnMap | Profile | ByRegion | Filter):
+        plain = {"filter": value.text} if isinstance(value, Filter) else typed_as(value)
+        return _value(plain)
     if isinstance(value, Mapping):
         pairs = [f"{_key(key)} = {_value(entry)}" for key, entry in value.items()]
         return "{" + ", ".join(pairs) + "}"
@@ -106,9 +105,10 @@ def _value(value: Any) -> str:
         return str(value).lower()
     if isinstance(value, int | float):
         return repr(value)
-    if isinstance(value, str | Path):
+    if isinstance(value, str | Path | Record):
         # A JSON string is a TOML basic string.
-        return json.dumps(str(value), ensure_ascii=False)
+        text = value.key if isinstance(value, Record) else str(value)
+        return json.dumps(text, ensure_ascii=False)
     if isinstance(value, BaseModel):
         pairs = [
             f"{field.alias or key} = {_value(getattr(value, key))}"

@@ -18,14 +18,17 @@ from kspipe import __version__
 from kspipe.conversions import (
     ALPHA_CO,
     ATOMIC,
+    BALMER,
     EXTINCTION,
     FINISHED_SFR,
     GIVEN_ALPHA_CO,
     LINE_RATIO,
     MASS_METALLICITY,
+    NITROGEN,
     STAR_FORMATION,
     STARS,
     STRONG_LINES,
+    TOTAL_INFRARED,
     AlphaCO,
     Choices,
     LineRatio,
@@ -231,6 +234,8 @@ def choices_of(recipe: Recipe) -> Choices:
     return Choices(
         calibration=calibration,
         finished=finished,
+        balmer=recipe.star_formation.attenuation,
+        total_infrared=recipe.star_formation.total_infrared,
         alpha_co=_or(gas.alpha_co, str | AlphaCO, GIVEN_ALPHA_CO) if gas else None,
         stars=recipe.stars.record if recipe.stars else None,
         imf=recipe.star_formation.imf,
@@ -240,6 +245,7 @@ def choices_of(recipe: Recipe) -> Choices:
             "FUV": recipe.foreground.uv,
             "NUV": recipe.foreground.uv,
             "Halpha": recipe.foreground.halpha,
+            "Hbeta": recipe.foreground.halpha,
         },
     )
 
@@ -262,6 +268,12 @@ def records_of(recipe: Recipe) -> list[Any]:
     records.append(calibration)
     keys = {choices.extinction[t] for t in calibration.tracers if t in choices.extinction}
     records += [EXTINCTION.get(key) for key in sorted(keys)]
+    if choices.balmer is not None:
+        records.append(BALMER.get(choices.balmer))
+    if choices.total_infrared is not None:
+        records.append(TOTAL_INFRARED.get(choices.total_infrared))
+    relations = {recipe.maps[n].nii_relation for n in recipe.star_formation.maps}
+    records += [NITROGEN.get(key) for key in sorted(filter(None, relations))]
     metallicity = recipe.metallicity
     if metallicity.calibration is not None:
         records.append(STRONG_LINES.get(metallicity.calibration))
@@ -305,7 +317,10 @@ def convert_print(recipe: Recipe, match_prints: Mapping[str, str]) -> str:
             "stars": recipe.stars and _values(recipe.stars),
             "star formation": _values(recipe.star_formation),
             "finished": {n: str(t.finished) for n, t in recipe.maps.items()},
-            "ratios": {n: _content([t.nii_ratio, t.as_24um]) for n, t in recipe.maps.items()},
+            "ratios": {
+                n: _content([t.nii_ratio, t.as_24um, t.nii_relation, t.thermal_fraction, t.diffuse])
+                for n, t in recipe.maps.items()
+            },
             "low_snr": recipe.comparison.low_snr,
             "records": [f"{r.key}: {r.formula}" for r in records_of(recipe)],
         }

@@ -95,7 +95,9 @@ def reduce_maps(
         return False
     to_match = [name for name in plan.sources if f"match.{name}" in stale]
     drop = tuple(
-        stage for stage in folder.stages if stage in ("compare", "figures") or _is_gone(stage, plan)
+        stage
+        for stage in folder.stages
+        if stage in ("compare", "figures", "alternatives") or _is_gone(stage, plan)
     )
     if drop:
         log.info("reduce: out-of-date products of %s are removed", ", ".join(drop))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 
@@ -9,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kspipe.conversions import (
+    NITROGEN,
     Field,
     Parameters,
     Surface,
@@ -17,16 +19,19 @@ from kspipe.conversions import (
     parameter_shifts,
 )
 from kspipe.core.tracers import CO_LINES
+from kspipe.kernels.diffuse import smooth_part
+from kspipe.maps.header import pixel_jacobian
 from kspipe.maps.skymap import Flag, NoiseTerm, SkyMap
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe
+from kspipe.recipe.map_table import Filter
 from kspipe.recipe.quantity import Measured
 from kspipe.recipe.varying import ByRegion, OnMap, Profile
 from kspipe.stages.metallicity import metallicity_of
 from kspipe.stages.place import Place, spread
 from kspipe.stages.plan import choices_of
 
-__all__ = ["Disc", "fields_of", "parameters_of", "surfaces_of"]
+__all__ = ["Disc", "fields_of", "parameters_of", "surfaces_of", "used_maps"]
 
 Array = NDArray[np.float64]
 
@@ -80,7 +85,7 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
     """
     place = Place.of(recipe, grid)
     fields = fields_of(recipe, place)
-    used = _used_maps(recipe, matched)
+    used = used_maps(recipe, matched)
     intensity = {tracer: sky.value for tracer, sky in used.items()}
     choices, parameters = choices_of(recipe), parameters_of(recipe, fields)
     converted = convert(intensity, choices, parameters)
@@ -108,12 +113,30 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
     )
 
 
-def _used_maps(recipe: Recipe, matched: dict[str, SkyMap]) -> dict[str, SkyMap]:
+def used_maps(recipe: Recipe, matched: dict[str, SkyMap]) -> dict[str, SkyMap]:
     """Maps that a surface density is made of, by tracer."""
     wanted = {*recipe.star_formation.maps, *({recipe.stars.map} if recipe.stars else ())}
     gas = {"HI", "Sigma_HI", "Sigma_star"}
     gas |= {*CO_LINES, "Sigma_mol"} if recipe.has_molecular else set()
-    return {sky.tracer: sky for name, sky in matched.items() if sky.tracer in gas or name in wanted}
+    return {
+        sky.tracer: _without_diffuse(sky, recipe)
+        for name, sky in matched.items()
+        if sky.tracer in gas or name in wanted
+    }
+
+
+def _without_diffuse(sky: SkyMap, recipe: Recipe) -> SkyMap:
+    """Take off what is smoother than a stated length, where the recipe says so."""
+    stated = recipe.maps[sky.name].diffuse
+    if not isinstance(stated, Filter) or sky.name not in recipe.star_formation.maps:
+        return sky
+    ny, nx = sky.value.shape
+    pixel_arcsec = math.sqrt(abs(float(np.linalg.det(pixel_jacobian(sky.wcs, nx / 2, ny / 2)))))
+    fwhm_pix = stated.kpc * 1e3 / recipe.galaxy.pc_per_arcsec / pixel_arcsec
+    smooth = smooth_part(sky.value, sky.error, fwhm_pix)
+    share = float(np.nansum(smooth) / np.nansum(sky.value))
+    step = f"diffuse emission taken off: smoother than {stated}, {share:.3g} of the flux"
+    return sky.with_step(step, value=sky.value - smooth)
 
 
 def fields_of(recipe: Recipe, place: Place) -> dict[str, Field]:
@@ -129,10 +152,18 @@ def fields_of(recipe: Recipe, place: Place) -> dict[str, Field]:
         "mass_to_light": ("stars.mass_to_light", recipe.stars and recipe.stars.mass_to_light),
     }
     for name in recipe.star_formation.maps:
-        for key in ("nii_ratio", "as_24um"):
-            typed.setdefault(key, (f"maps.{name}.{key}", getattr(recipe.maps[name], key)))
-            if typed[key][1] is None:
-                del typed[key]
+        table = recipe.maps[name]
+        where = f"maps.{name}"
+        mine = {
+            "nii_ratio": (f"{where}.nii_ratio", table.nii_ratio),
+            "as_24um": (f"{where}.as_24um", table.as_24um),
+            "thermal_fraction": (f"{where}.thermal_fraction", table.thermal_fraction),
+            f"diffuse.{table.tracer}": (f"{where}.diffuse", table.diffuse),
+        }
+        if table.nii_relation is not None and recipe.galaxy.m_b is not None:
+            ratio = NITROGEN.get(table.nii_relation)(recipe.galaxy.m_b.value)
+            mine["nii_ratio"] = (where, Measured(ratio, 0.0, f"{ratio:.5g}"))
+        typed |= {key: entry for key, entry in mine.items() if entry[1] is not None}
     fields = {
         name: spread(quantity, place, where)
         for name, (where, quantity) in typed.items()
@@ -143,9 +174,10 @@ def fields_of(recipe: Recipe, place: Place) -> dict[str, Field]:
 
 def parameters_of(recipe: Recipe, fields: Mapping[str, Field]) -> Parameters:
     """The numbers of a recipe that are not records."""
-    return Parameters(
-        cos_i=recipe.galaxy.cos_i, **{name: field.value for name, field in fields.items()}
-    )
+    parameters = Parameters(cos_i=recipe.galaxy.cos_i)
+    for name, field in fields.items():
+        parameters = parameters.changed(name, field.value)
+    return parameters
 
 
 def _flags(
