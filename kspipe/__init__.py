@@ -19,6 +19,7 @@ _FACE = {
     "RecipeError": "kspipe.core.errors",
     "Reduction": "kspipe.api",
     "alternatives": "kspipe.api",
+    "chain": "kspipe.api",
     "compare": "kspipe.api",
     "explain": "kspipe.conversions.shelf",
     "figures": "kspipe.api",
@@ -38,6 +39,7 @@ __all__ = [
     "Reduction",
     "__version__",
     "alternatives",
+    "chain",
     "compare",
     "explain",
     "figures",
@@ -48,7 +50,7 @@ __all__ = [
 ]
 
 if TYPE_CHECKING:
-    from kspipe.api import Comparison, Reduction, alternatives, compare, figures, reduce, run
+    from kspipe.api import Comparison, Reduction, alternatives, chain, compare, figures, reduce, run
     from kspipe.conversions.shelf import explain, list_family
     from kspipe.core.errors import KspipeError, KspipeWarning, MapError, RecipeError
     from kspipe.recipe import Recipe, load_recipe

@@ -147,6 +147,22 @@ def alternatives_command(
     print_alternatives(folder)
 
 
+@app.command("chain", epilog='Example: kspipe chain galaxy "03h12m24.0s -27d18m36s"')
+def chain_command(
+    folder: FolderArgument,
+    position: Annotated[str, typer.Argument(metavar="POSITION", help="On the sky, ICRS.")],
+    debug: DebugOption = False,
+) -> None:
+    """Follow one position from the stored counts to Msun/pc2, every factor with its unit."""
+    from kspipe.cli.session import print_chain, session
+
+    with session(quiet=True, debug=debug):
+        from kspipe.stages.chain import pixel_chain
+
+        table = pixel_chain(folder, position)
+    print_chain(table)
+
+
 @app.command("list", epilog="Example: kspipe list alpha_co")
 def list_command(
     family: Annotated[

@@ -47,12 +47,15 @@ class Converted:
         ``negative_co`` (alpha_CO was taken at zero CO), ``outside_range`` (an input of the
         alpha_CO record) and ``no_solution`` (a power law of a pixel at or below zero), where they
         can occur.
+    factors : dict of str to float64 array
+        ``alpha_co`` and ``line_ratio`` as they were used.
     """
 
     values: dict[str, Array]
     derivatives: dict[str, dict[str, Array]]
     by_parameter: dict[str, dict[str, Array]] = field(default_factory=dict)
     flags: dict[str, NDArray[np.bool_]] = field(default_factory=dict)
+    factors: dict[str, Array] = field(default_factory=dict)
 
 
 def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parameters) -> Converted:
@@ -96,7 +99,7 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
         _add_molecular(made, intensity, choices, parameters)
     if "sigma_atom" in made.values:
         _add_gas(made)
-    return Converted(made.values, made.derivatives, made.by_parameter, made.flags)
+    return Converted(made.values, made.derivatives, made.by_parameter, made.flags, made.factors)
 
 
 @dataclass
@@ -107,6 +110,7 @@ class _Products:
     derivatives: dict[str, dict[str, Array]] = field(default_factory=dict)
     by_parameter: dict[str, dict[str, Array]] = field(default_factory=dict)
     flags: dict[str, NDArray[np.bool_]] = field(default_factory=dict)
+    factors: dict[str, Array] = field(default_factory=dict)
 
     def add(self, product: str, value: Array, slopes: Mapping[str, Array]) -> None:
         self.values[product] = np.asarray(value, dtype=float)
@@ -155,6 +159,7 @@ def _add_molecular(
     ratio, ratio_log_slope = _line_ratio(line, choices, parameters, made.values["sigma_sfr"])
     face_on = cos_i / ratio * intensity[line]
     gas = molecular_gas(record, face_on, made.values.get("sigma_atom"), given)
+    made.factors |= {"alpha_co": gas.alpha_co, "line_ratio": ratio}
     slopes = {line: gas.per_line / ratio * cos_i}
     value = gas.alpha_co / ratio * cos_i * intensity[line]
     if gas.per_atom is not None:

@@ -45,6 +45,7 @@ class _Galaxy:
 
     matched: dict[str, SkyMap]
     place: Place
+    disc: NDArray[np.bool_]
     ring: NDArray[np.intp]
     ring_radius: Array
     area_pc2: Array
@@ -121,7 +122,8 @@ def alternative_table(
     astropy.table.Table
         Totals are of the pixels where both the record and the one used give a value. The tilt is
         the slope of log10 of the ratio of both against the radius, from sums over rings one beam
-        wide, so that negative pixels count.
+        wide, so that negative pixels count. Medians and tilts are of the disc inside r25, where
+        the recipe gives it.
     """
     galaxy = _galaxy(recipe, matched, grid)
     found = list(alternatives_of(recipe))
@@ -164,7 +166,9 @@ def _galaxy(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> _Galaxy:
     pixels = np.maximum(np.bincount(ring.ravel(), minlength=n), 1)
     radius = np.bincount(ring.ravel(), place.radius_kpc.ravel(), minlength=n) / pixels
     area = grid.areas_arcsec2() * recipe.galaxy.pc_per_arcsec**2 / recipe.galaxy.cos_i
-    return _Galaxy(matched, place, ring, radius, area)
+    r25 = recipe.galaxy.r25
+    edge_kpc = recipe.galaxy.kpc_per("r25") if r25 is not None else np.inf
+    return _Galaxy(matched, place, place.radius_kpc <= edge_kpc, ring, radius, area)
 
 
 def _converted(recipe: Recipe, galaxy: _Galaxy) -> tuple[dict[str, Array], int]:
@@ -193,6 +197,8 @@ def _row(
     both = np.isfinite(this) & np.isfinite(used)
     to_total = galaxy.area_pc2 * (1e-6 if product == "sigma_sfr" else 1.0)
     total, reference = (float(np.sum((image * to_total)[both])) for image in (this, used))
+    total_pixels = int(both.sum())
+    both = both & galaxy.disc
     positive = both & (np.where(both, this, 0) > 0) & (np.where(both, used, 0) > 0)
     ratio = np.log10(this[positive] / used[positive])
     return {
@@ -207,7 +213,7 @@ def _row(
         "median_unit": _UNITS.get(product, "Msun/pc2"),
         "median_dex": float(np.median(ratio)) if ratio.size else math.nan,
         "tilt_dex": _tilt(this, used, both, galaxy) * kpc,
-        "pixels": int(both.sum()),
+        "pixels": total_pixels,
         "outside_range": n_outside,
         "certainty": record.certainty,
         "paper": record.paper,
