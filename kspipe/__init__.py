@@ -18,6 +18,8 @@ _FACE = {
     "Recipe": "kspipe.recipe",
     "RecipeError": "kspipe.core.errors",
     "Reduction": "kspipe.api",
+    "alternatives": "kspipe.api",
+    "chain": "kspipe.api",
     "compare": "kspipe.api",
     "explain": "kspipe.conversions.shelf",
     "figures": "kspipe.api",
@@ -36,6 +38,8 @@ __all__ = [
     "RecipeError",
     "Reduction",
     "__version__",
+    "alternatives",
+    "chain",
     "compare",
     "explain",
     "figures",
@@ -46,7 +50,7 @@ __all__ = [
 ]
 
 if TYPE_CHECKING:
-    from kspipe.api import Comparison, Reduction, compare, figures, reduce, run
+    from kspipe.api import Comparison, Reduction, alternatives, chain, compare, figures, reduce, run
     from kspipe.conversions.shelf import explain, list_family
     from kspipe.core.errors import KspipeError, KspipeWarning, MapError, RecipeError
     from kspipe.recipe import Recipe, load_recipe

@@ -20,10 +20,21 @@ from kspipe.core.report import relation_rows, total_rows
 from kspipe.maps.product import read_image
 from kspipe.products import draw_figures
 from kspipe.recipe import Recipe, load_recipe
+from kspipe.stages.alternatives import ALTERNATIVES_FILE, weigh_alternatives
+from kspipe.stages.chain import pixel_chain
 from kspipe.stages.compare import compare_relations
 from kspipe.stages.reduce import PRODUCT_UNITS, reduce_maps
 
-__all__ = ["Comparison", "Reduction", "compare", "figures", "reduce", "run"]
+__all__ = [
+    "Comparison",
+    "Reduction",
+    "alternatives",
+    "chain",
+    "compare",
+    "figures",
+    "reduce",
+    "run",
+]
 
 Maps = Mapping[str, fits.PrimaryHDU | tuple[fits.PrimaryHDU, fits.PrimaryHDU | None]]
 
@@ -238,6 +249,61 @@ def compare(
     """
     compare_relations(Path(out), overwrite=overwrite, memory=_memory(maps), progress=progress)
     return Comparison(out)
+
+
+def alternatives(
+    out: str | Path,
+    *,
+    maps: Maps | None = None,
+    overwrite: bool = False,
+    progress: Progress = no_progress,
+) -> Table:
+    """Say what every other record that fits would give for a reduced galaxy.
+
+    Parameters
+    ----------
+    out : path
+        Product folder of a reduction; ``alternatives.ecsv`` is written.
+    maps, overwrite, progress
+        As in `reduce`.
+
+    Returns
+    -------
+    astropy.table.Table
+        One row for each record: total, median and tilt with radius beside those of the one used.
+
+    Raises
+    ------
+    OutputError
+        If the reduction is absent or stale.
+    """
+    weigh_alternatives(Path(out), overwrite=overwrite, memory=_memory(maps), progress=progress)
+    return Table.read(Path(out) / ALTERNATIVES_FILE)
+
+
+def chain(out: str | Path, position: str, *, maps: Maps | None = None) -> Table:
+    """Follow one position on the sky from the stored counts to surface densities.
+
+    Parameters
+    ----------
+    out : path
+        Product folder of a reduction.
+    position : str
+        ``03h12m24.0s -27d18m36s`` or ``48.100 -27.310 deg``, ICRS.
+    maps
+        As in `reduce`.
+
+    Returns
+    -------
+    astropy.table.Table
+        Every factor with the value and unit behind it.
+
+    Raises
+    ------
+    InputError
+        If the position cannot be read or lies outside the grid, or the reduction is stale.
+    """
+    return pixel_chain(Path(out), position, memory=_memory(maps))
 
 
 def figures(

@@ -73,7 +73,7 @@ def truth_of(run: Run) -> dict[str, tuple[np.ndarray, np.ndarray]]:
         sky,
         {tracer: matched.noise for tracer, matched in disc.intensity.items()},
         choices_of(plan.recipe),
-        parameters_of(plan.recipe, disc.oh),
+        parameters_of(plan.recipe, disc.fields),
     )
     return {name: (surface.value, surface.error) for name, surface in surfaces.items()}
 

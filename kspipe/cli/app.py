@@ -130,6 +130,39 @@ def run_command(
     print_summary(out)
 
 
+@app.command("alternatives", epilog="Example: kspipe alternatives galaxy")
+def alternatives_command(
+    folder: FolderArgument,
+    overwrite: OverwriteOption = False,
+    quiet: QuietOption = False,
+    debug: DebugOption = False,
+) -> None:
+    """Say what every other record that fits would give for this galaxy; write alternatives.ecsv."""
+    from kspipe.cli.session import print_alternatives, session
+
+    with session(quiet=quiet, debug=debug) as progress:
+        from kspipe.stages.alternatives import weigh_alternatives
+
+        weigh_alternatives(folder, overwrite=overwrite, progress=progress)
+    print_alternatives(folder)
+
+
+@app.command("chain", epilog='Example: kspipe chain galaxy "03h12m24.0s -27d18m36s"')
+def chain_command(
+    folder: FolderArgument,
+    position: Annotated[str, typer.Argument(metavar="POSITION", help="On the sky, ICRS.")],
+    debug: DebugOption = False,
+) -> None:
+    """Follow one position from the stored counts to Msun/pc2, every factor with its unit."""
+    from kspipe.cli.session import print_chain, session
+
+    with session(quiet=True, debug=debug):
+        from kspipe.stages.chain import pixel_chain
+
+        table = pixel_chain(folder, position)
+    print_chain(table)
+
+
 @app.command("list", epilog="Example: kspipe list alpha_co")
 def list_command(
     family: Annotated[

@@ -22,7 +22,7 @@ from kspipe.core.progress import Progress as ProgressCall
 from kspipe.core.progress import no_progress
 from kspipe.core.report import noted_lines, relation_rows, total_rows
 
-__all__ = ["print_steps", "print_summary", "session"]
+__all__ = ["print_alternatives", "print_chain", "print_steps", "print_summary", "session"]
 
 
 @contextmanager
@@ -103,6 +103,31 @@ def print_steps(folder: Path) -> None:
     for cells in step_cells(step_table(folder)):
         table.add_row(*(escape(cell) for cell in cells))
     console.print(table)
+
+
+def print_alternatives(folder: Path) -> None:
+    """Print what every record that fits would give, on stdout."""
+    from kspipe.stages.alternatives import alternative_cells
+
+    console = Console(highlight=False, width=None if sys.stdout.isatty() else 160)
+    head = ("choice", "record", "total", "of used", "median", "median ratio", "tilt", "beware")
+    table = Table(*head, box=None)
+    for cells in alternative_cells(folder):
+        table.add_row(*(escape(cell) for cell in cells))
+    console.print(table)
+
+
+def print_chain(table: Any) -> None:
+    """Print the chain of one pixel on stdout."""
+    from kspipe.stages.chain import chain_cells
+
+    console = Console(highlight=False, width=None if sys.stdout.isatty() else 140)
+    where = ", ".join(f"{key} {value}" for key, value in table.meta.items())
+    console.print(where, markup=False)
+    shown = Table("product", "map", "step", "factor", "value", "unit", box=None)
+    for cells in chain_cells(table):
+        shown.add_row(*(escape(cell) for cell in cells))
+    console.print(shown)
 
 
 def print_summary(folder: Path) -> None:

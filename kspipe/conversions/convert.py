@@ -15,7 +15,8 @@ from numpy.typing import NDArray
 from kspipe.conversions.alpha_co import ALPHA_CO
 from kspipe.conversions.atomic import ATOMIC
 from kspipe.conversions.choices import Choices, Parameters
-from kspipe.conversions.corrections import apply, corrections_of
+from kspipe.conversions.corrections import apply, terms_of
+from kspipe.conversions.finished import FINISHED, finished_factor
 from kspipe.conversions.imf import imf_factor
 from kspipe.conversions.line_ratio import LINE_RATIO
 from kspipe.conversions.molecular import molecular_gas
@@ -46,12 +47,15 @@ class Converted:
         ``negative_co`` (alpha_CO was taken at zero CO), ``outside_range`` (an input of the
         alpha_CO record) and ``no_solution`` (a power law of a pixel at or below zero), where they
         can occur.
+    factors : dict of str to float64 array
+        ``alpha_co`` and ``line_ratio`` as they were used.
     """
 
     values: dict[str, Array]
     derivatives: dict[str, dict[str, Array]]
     by_parameter: dict[str, dict[str, Array]] = field(default_factory=dict)
     flags: dict[str, NDArray[np.bool_]] = field(default_factory=dict)
+    factors: dict[str, Array] = field(default_factory=dict)
 
 
 def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parameters) -> Converted:
@@ -86,6 +90,7 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
         if np.any(np.asarray(parameters.hi_opacity) != 1.0):
             per_hi = per_hi * parameters.hi_opacity
         made.add("sigma_atom", per_hi * intensity["HI"], {"HI": per_hi})
+    _add_finished(made, intensity, choices, cos_i)
     if choices.stars is not None:
         _add_stars(made, intensity, choices, parameters)
     # First, because a line ratio may depend on it.
@@ -94,7 +99,7 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
         _add_molecular(made, intensity, choices, parameters)
     if "sigma_atom" in made.values:
         _add_gas(made)
-    return Converted(made.values, made.derivatives, made.by_parameter, made.flags)
+    return Converted(made.values, made.derivatives, made.by_parameter, made.flags, made.factors)
 
 
 @dataclass
@@ -105,6 +110,7 @@ class _Products:
     derivatives: dict[str, dict[str, Array]] = field(default_factory=dict)
     by_parameter: dict[str, dict[str, Array]] = field(default_factory=dict)
     flags: dict[str, NDArray[np.bool_]] = field(default_factory=dict)
+    factors: dict[str, Array] = field(default_factory=dict)
 
     def add(self, product: str, value: Array, slopes: Mapping[str, Array]) -> None:
         self.values[product] = np.asarray(value, dtype=float)
@@ -112,6 +118,16 @@ class _Products:
         self.derivatives[product] = {
             tracer: np.broadcast_to(slope, shape) for tracer, slope in slopes.items()
         }
+
+
+def _add_finished(
+    made: _Products, intensity: Mapping[str, Array], choices: Choices, cos_i: Array
+) -> None:
+    """Gas and stars that are given; star formation goes through its calibration."""
+    for tracer, product in FINISHED.items():
+        if tracer in intensity and product != "sigma_sfr":
+            factor = finished_factor(choices.finished[tracer], cos_i, "Kroupa")
+            made.add(product, factor * intensity[tracer], {tracer: factor})
 
 
 def _add_stars(
@@ -129,24 +145,26 @@ def _add_molecular(
     made: _Products, intensity: Mapping[str, Array], choices: Choices, parameters: Parameters
 ) -> None:
     """Molecular gas of the one CO line, with its slopes by tracer."""
-    record = ALPHA_CO.get(str(choices.alpha_co))
+    record = ALPHA_CO.get(choices.alpha_co or "")
     line = next((tracer for tracer in CO_LINES if tracer in intensity), None)
     if line is None:
         raise KeyError(f"record {record.key!r} needs a CO line, none is among the maps")
     cos_i = np.asarray(parameters.cos_i, dtype=float)
     given = {
         name: np.asarray(value, dtype=float)
-        for name in ("oh", "sigma_star", "ms_offset_dex", "g0_over_n")
+        for name in ("oh", "sigma_star", "alpha_co", "ms_offset_dex", "g0_over_n")
         if (value := getattr(parameters, name)) is not None
     }
     given.update({k: v for k, v in made.values.items() if k == "sigma_star"})
     ratio, ratio_log_slope = _line_ratio(line, choices, parameters, made.values["sigma_sfr"])
     face_on = cos_i / ratio * intensity[line]
     gas = molecular_gas(record, face_on, made.values.get("sigma_atom"), given)
+    made.factors |= {"alpha_co": gas.alpha_co, "line_ratio": ratio}
     slopes = {line: gas.per_line / ratio * cos_i}
     value = gas.alpha_co / ratio * cos_i * intensity[line]
     if gas.per_atom is not None:
-        slopes["HI"] = gas.per_atom * made.derivatives["sigma_atom"]["HI"]
+        for tracer, slope in made.derivatives["sigma_atom"].items():
+            slopes[tracer] = gas.per_atom * slope
     if ratio_log_slope is not None:
         per_sfr = -gas.per_line * face_on * ratio_log_slope
         for tracer, slope in made.derivatives["sigma_sfr"].items():
@@ -161,6 +179,17 @@ def _add_molecular(
     if gas.negative_co is not None:
         made.flags["negative_co"] = np.broadcast_to(gas.negative_co, shape)
     made.flags["outside_range"] = np.broadcast_to(gas.outside_range, shape)
+    no_factor = np.isnan(gas.alpha_co)
+    if no_factor.any():
+        # A power of what is not positive; a blank input is a blank, not a failure.
+        needed = [face_on, *(given[name] for name in record.needs if name in given)]
+        if record.is_self_consistent:
+            needed += [made.values["sigma_atom"], given["sigma_star"]]
+        no_factor = no_factor & np.isfinite(sum(needed[1:], needed[0]))
+        if no_factor.any():
+            made.flags["no_solution"] = made.flags.get("no_solution", False) | np.broadcast_to(
+                no_factor, shape
+            )
 
 
 def _line_ratio(
@@ -198,26 +227,43 @@ def _add_sfr(
 ) -> None:
     """Star formation: the terms of the calibration, each with its slope."""
     record = STAR_FORMATION.get(choices.calibration)
-    per_intensity = corrections_of(record, intensity, choices, parameters)
     cos_i = np.asarray(parameters.cos_i, dtype=float)
     imf = imf_factor(str(record.imf), choices.imf)
-    terms, slopes = [], {}
-    for tracer, (source, corrections) in per_intensity.items():
-        coefficient, power = record.coefficients[tracer], record.powers.get(tracer)
+    values: list[Array] = []
+    slopes: dict[str, Array] = {}
+    unsolved: list[NDArray[np.bool_]] = []
+
+    def add(value: Array, slopes_of_it: Mapping[str, Array]) -> None:
+        values.append(value)
+        for source, slope in slopes_of_it.items():
+            slopes[source] = slopes[source] + slope if source in slopes else slope
+
+    for term in terms_of(record, intensity, choices, parameters):
+        coefficient, power = record.coefficients[term.tracer], record.powers.get(term.tracer)
         if imf != 1.0:
             coefficient *= imf
-        stored = intensity[source]
-        if power is None:
-            slopes[source] = apply(np.asarray(coefficient * cos_i), corrections)
-            terms.append(slopes[source] * stored)
+        stored = intensity[term.source]
+        if power is not None:
+            positive = np.where(stored > 0, stored, np.nan)
+            value = coefficient * (apply(cos_i, term.corrections) * positive) ** power
+            add(value, {term.source: power * value / positive})
+            unsolved.append(stored <= 0)
             continue
-        positive = np.where(stored > 0, stored, np.nan)
-        face_on = apply(cos_i, corrections) * positive
-        terms.append(coefficient * face_on**power)
-        slopes[source] = power * terms[-1] / positive
-        unsolved = made.flags.get("no_solution", np.zeros((), dtype=bool))
-        made.flags["no_solution"] = unsolved | (stored <= 0)
-    made.add("sigma_sfr", sum(terms[1:], terms[0]), slopes)
-    if "no_solution" in made.flags:
+        slope = apply(np.asarray(coefficient * cos_i), term.corrections)
+        if term.decrement is None:
+            add(slope * stored, {term.source: slope})
+            continue
+        line = intensity["Hbeta"]
+        other = np.where(line > 0, line, np.nan)
+        seen = apply(np.ones(()), term.corrections) * stored
+        ratio = seen / (apply(np.ones(()), term.decrement.corrections) * other)
+        bright = slope * term.decrement.record.factor(ratio)
+        gain = term.decrement.record.power
+        value = bright * stored
+        add(value, {term.source: (1.0 + gain) * bright, "Hbeta": -gain * value / other})
+        unsolved.append((stored <= 0) | (line <= 0))
+    made.add("sigma_sfr", sum(values[1:], values[0]), slopes)
+    if unsolved:
         shape = made.values["sigma_sfr"].shape
-        made.flags["no_solution"] = np.broadcast_to(made.flags["no_solution"], shape)
+        failed = np.logical_or.reduce(np.broadcast_arrays(*unsolved))
+        made.flags["no_solution"] = np.broadcast_to(failed, shape)

@@ -108,11 +108,11 @@ EXTINCTION.add(
         key="cardelli1989",
         label="Cardelli et al. 1989, R_V = 3.1",
         cite="cardelli1989",
-        where="Eqs. 1 to 3 with R_V = 3.1, at 6562.8 A",
-        formula="A_Halpha = 2.5351 E(B-V)  [mag]",
+        where="Eqs. 1 to 3 with R_V = 3.1, at 6562.8 and 4861.3 A",
+        formula="A_Halpha = 2.5351 E(B-V), A_Hbeta = 3.6089 E(B-V)  [mag]",
         certainty="verified",
         ebv_scale="SF11",
-        coefficients=MappingProxyType({"Halpha": 2.5351}),
+        coefficients=MappingProxyType({"Halpha": 2.5351, "Hbeta": 3.6089}),
     )
 )
 EXTINCTION.add(
@@ -159,12 +159,12 @@ EXTINCTION.add(
         key="fitzpatrick1999",
         label="Fitzpatrick 1999, R_V = 3.1",
         cite="fitzpatrick1999",
-        where="the curve with R_V = 3.1, at 1528 and 6562.8 A",
-        formula="A_FUV = 7.965 E(B-V), A_Halpha = 2.358 E(B-V)  [mag]",
+        where="the curve with R_V = 3.1, at 1528, 6562.8 and 4861.3 A",
+        formula="A_FUV = 7.965 E(B-V), A_Halpha = 2.358 E(B-V), A_Hbeta = 3.615 E(B-V)  [mag]",
         certainty="verified",
         note="The values of a general extinction library.",
         ebv_scale="SF11",
-        coefficients=MappingProxyType({"FUV": 7.965, "Halpha": 2.358}),
+        coefficients=MappingProxyType({"FUV": 7.965, "Halpha": 2.358, "Hbeta": 3.615}),
     )
 )
 EXTINCTION.add(
@@ -172,11 +172,11 @@ EXTINCTION.add(
         key="odonnell1994",
         label="O'Donnell 1994, R_V = 3.1",
         cite="odonnell1994",
-        where="the optical curve with R_V = 3.1, at 6562.8 A",
-        formula="A_Halpha = 2.519 E(B-V)  [mag]",
+        where="the optical curve with R_V = 3.1, at 6562.8 and 4861.3 A",
+        formula="A_Halpha = 2.519 E(B-V), A_Hbeta = 3.663 E(B-V)  [mag]",
         certainty="verified",
         note="The value of a general extinction library.",
         ebv_scale="SF11",
-        coefficients=MappingProxyType({"Halpha": 2.519}),
+        coefficients=MappingProxyType({"Halpha": 2.519, "Hbeta": 3.663}),
     )
 )

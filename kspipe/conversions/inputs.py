@@ -41,6 +41,15 @@ INPUTS: Final = {
     entry.name: entry
     for entry in (
         Input("oh", "OH", "metallicity, 12 + log10(O/H)", 8.5, 8.0, 8.8),
+        Input(
+            "alpha_co",
+            "alpha_CO",
+            "alpha_CO [Msun/pc2 per K km/s of CO(1-0)]",
+            4.35,
+            0.5,
+            50.0,
+            do="type alpha_co = 4.35 in [gas]",
+        ),
         Input("z_prime", "Z'", "metallicity, 10^(OH - 8.69)", 0.65, 0.2, 1.3),
         Input("n2", "N2", "log10 [NII]6583 / Halpha", -0.6, -1.4, -0.35),
         Input("o3n2", "O3N2", "log10 ([OIII]5007 / Hbeta) / ([NII]6583 / Halpha)", 0.4, -0.3, 1.6),

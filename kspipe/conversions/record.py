@@ -10,10 +10,12 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from kspipe.core.citations import CITATIONS
+
 __all__ = ["Certainty", "Range", "Record"]
 
 Array = NDArray[np.float64]
-Certainty = Literal["verified", "from memory"]
+Certainty = Literal["verified", "from memory", "the user's own"]
 
 
 @dataclass(frozen=True)
@@ -54,12 +56,12 @@ class Record:
     label : str
         For figures and tables.
     cite : str
-        Key of `kspipe.core.citations`.
+        Key of `kspipe.core.citations`; of a user's own record the citation as it was typed.
     where : str
         Equation or table of the paper.
     formula : str
         In words and symbols, with units.
-    certainty : {"verified", "from memory"}
+    certainty : {"verified", "from memory", "the user's own"}
         Whether the coefficients were compared with a stored text of the source, or recomputed.
     ranges : tuple of Range
         Empty where the paper gives none.
@@ -90,6 +92,11 @@ class Record:
         """One line for histories: key, source, formula, and that it is from memory if it is."""
         doubt = "; coefficients from memory" if self.certainty == "from memory" else ""
         return f"{self.key} ({self.cite}, {self.where}): {self.formula}{doubt}"
+
+    @property
+    def paper(self) -> str:
+        """The citation in full."""
+        return str(CITATIONS.get(self.cite, self.cite))
 
     def outside(self, inputs: Mapping[str, Array]) -> NDArray[np.bool_]:
         """Where an input lies outside a range; a range of an input not given is passed over."""

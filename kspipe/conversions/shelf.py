@@ -9,15 +9,18 @@ import numpy as np
 
 from kspipe.conversions.alpha_co import ALPHA_CO, AlphaCO
 from kspipe.conversions.atomic import ATOMIC, AtomicGas
+from kspipe.conversions.balmer import BALMER, Balmer
 from kspipe.conversions.extinction import EXTINCTION, Extinction
 from kspipe.conversions.imf import IMFS, Imf, imf_factor
 from kspipe.conversions.inputs import INPUTS
 from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
 from kspipe.conversions.mass_metallicity import MASS_METALLICITY, MassMetallicity
+from kspipe.conversions.nitrogen import NITROGEN, Nitrogen
 from kspipe.conversions.record import Record
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
 from kspipe.conversions.stars import STARS, Stars
 from kspipe.conversions.strong_lines import STRONG_LINES, StrongLine
+from kspipe.conversions.total_infrared import TOTAL_INFRARED, TotalInfrared
 from kspipe.core.citations import cite
 from kspipe.core.errors import Fault, InputError, nearest
 from kspipe.core.registry import Registry
@@ -28,17 +31,31 @@ __all__ = ["FAMILIES", "explain", "find", "list_family"]
 FAMILIES: Final[dict[str, Registry[Any]]] = {
     "alpha_co": ALPHA_CO,
     "atomic": ATOMIC,
+    "balmer": BALMER,
     "extinction": EXTINCTION,
     "imf": IMFS,
     "line_ratio": LINE_RATIO,
     "mass_metallicity": MASS_METALLICITY,
+    "nitrogen": NITROGEN,
     "star_formation": STAR_FORMATION,
     "stars": STARS,
     "strong_lines": STRONG_LINES,
+    "total_infrared": TOTAL_INFRARED,
 }
 
 # Intensities of the disc of a nearby spiral, for worked numbers.
-_TYPICAL: Final = {"FUV": 0.05, "NUV": 0.07, "Halpha": 1e-5, "24um": 1.0, "3.6um": 0.5, "W1": 0.5}
+_TYPICAL: Final = {
+    "FUV": 0.05,
+    "NUV": 0.07,
+    "Halpha": 1e-5,
+    "24um": 1.0,
+    "70um": 20.0,
+    "160um": 40.0,
+    "TIR": 1e-3,
+    "1.4GHz": 0.1,
+    "3.6um": 0.5,
+    "W1": 0.5,
+}
 
 
 def find(key: str) -> tuple[str, Record]:
@@ -127,6 +144,21 @@ def _atomic(record: AtomicGas) -> str:
     return f"I_HI = 100 K km/s, face-on: {100 * record.msun_pc2_per_k_kms:.5g} Msun/pc2"
 
 
+def _balmer(record: Balmer) -> str:
+    excess, factor = (float(f(np.asarray(4.0))) for f in (record.excess, record.factor))
+    return f"Halpha/Hbeta = 4: E(B-V) = {excess:.5g} mag, Halpha x {factor:.5g}"
+
+
+def _nitrogen(record: Nitrogen) -> str:
+    return f"M_B = -20: [NII]6583/Halpha = {record(-20.0):.5g}"
+
+
+def _total_infrared(record: TotalInfrared) -> str:
+    value = sum(weight * _TYPICAL[band] for band, weight in record.weights.items())
+    given = ", ".join(f"I_{band} = {_TYPICAL[band]:g} MJy/sr" for band in record.bands)
+    return f"{given}: I_TIR = {value:.5g} erg/s/cm2/sr"
+
+
 def _extinction(record: Extinction) -> str:
     mags = {t: float(record.magnitudes(t, np.asarray(0.05))) for t in record.coefficients}
     return "E(B-V) = 0.05: " + ", ".join(f"A_{t} = {a:.5g} mag" for t, a in mags.items())
@@ -173,11 +205,14 @@ def _strong_lines(record: StrongLine) -> str:
 _WORKED: Final[dict[str, Callable[[Any], str]]] = {
     "alpha_co": _alpha_co,
     "atomic": _atomic,
+    "balmer": _balmer,
     "extinction": _extinction,
     "imf": _imf,
     "line_ratio": _line_ratio,
     "mass_metallicity": _mass_metallicity,
+    "nitrogen": _nitrogen,
     "star_formation": _star_formation,
     "stars": _stars,
     "strong_lines": _strong_lines,
+    "total_infrared": _total_infrared,
 }

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields
 from types import MappingProxyType
 from typing import Any
 
@@ -46,6 +46,8 @@ class StarFormation(Record):
         Of a tracer's face-on intensity where its term is no straight line.
     luminosity_powers : mapping of str to float
         Of a tracer's luminosity; may differ from `powers`.
+    thermal : tuple of str
+        Tracers of which only the thermal part is taken.
     family : str
         Whose stellar models the constants stand on: constants of two families are never added.
     """
@@ -55,6 +57,7 @@ class StarFormation(Record):
     luminosity: Mapping[str, float] = field(default_factory=_none)
     powers: Mapping[str, float] = field(default_factory=_none)
     luminosity_powers: Mapping[str, float] = field(default_factory=_none)
+    thermal: tuple[str, ...] = ()
 
     @property
     def tracers(self) -> tuple[str, ...]:
@@ -85,22 +88,35 @@ class StarFormation(Record):
             total = total + coefficient * value
         return np.asarray(total)
 
-    def __reduce__(self) -> tuple[object, tuple[str]]:
-        """Travel by key."""
-        return _by_key, (self.key,)
+    def __reduce__(self) -> tuple[Any, ...]:
+        """Travel by key; a user's own record, which lies on no shelf, as plain data."""
+        if self.key in STAR_FORMATION:
+            return _by_key, (self.key,)
+        data = {f.name: getattr(self, f.name) for f in fields(self)}
+        plain = {k: dict(v) if isinstance(v, Mapping) else v for k, v in data.items()}
+        return _from_data, (plain,)
 
 
 def _by_key(key: str) -> StarFormation:
     return STAR_FORMATION.get(key)
 
 
+def _from_data(data: dict[str, Any]) -> StarFormation:
+    return StarFormation(**data)
+
+
 STAR_FORMATION = Registry[StarFormation]("star-formation record")
 
 
 def luminosity_per_intensity(tracer: str) -> float:
-    """Luminosity per kpc2 [erg/s/kpc2] of a unit of canonical intensity, nu L_nu for bands."""
+    """Luminosity per kpc2 [erg/s/kpc2] of a unit of canonical intensity, nu L_nu for bands.
+
+    The radio continuum is counted per frequency [erg/s/Hz/kpc2], as its calibrations are.
+    """
     per_sr = 4.0 * math.pi * (PC_CM * 1e3) ** 2
     kind = TRACERS[tracer]
+    if kind.unit == "MJy/sr" and kind.is_radio:
+        return per_sr * 1e6 * JY_CGS
     if kind.unit == "MJy/sr":
         return per_sr * kind.frequency_ghz * 1e9 * 1e6 * JY_CGS
     if kind.unit == "erg/s/cm2/sr":

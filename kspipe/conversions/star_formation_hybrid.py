@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 from types import MappingProxyType
+from typing import Final
 
+from kspipe.conversions.record import Certainty
 from kspipe.conversions.star_formation import (
     STAR_FORMATION,
     StarFormation,
@@ -112,3 +114,37 @@ STAR_FORMATION.add(
         note=_WHOLE,
     )
 )
+
+# With the total infrared and the radio continuum; L(1.4GHz) per Hz.
+_MORE: Final[tuple[tuple[str, StarFormation, str, float, Certainty, float | None], ...]] = (
+    ("hao2011_fuv_tir", KENNICUTT2012_FUV, "TIR", 0.46, "from memory", 0.09),
+    ("hao2011_nuv_tir", KENNICUTT2012_NUV, "TIR", 0.27, "from memory", None),
+    ("kennicutt2009_halpha_tir", KENNICUTT2012_HALPHA, "TIR", 0.0024, "from memory", None),
+    ("hao2011_fuv_1p4ghz", KENNICUTT2012_FUV, "1.4GHz", 7.2e14, "verified", 0.14),
+    ("hao2011_nuv_1p4ghz", KENNICUTT2012_NUV, "1.4GHz", 4.2e14, "from memory", None),
+    ("kennicutt2009_halpha_1p4ghz", KENNICUTT2012_HALPHA, "1.4GHz", 0.39e13, "from memory", None),
+)
+for _key, _base, _dust, _weight, _certainty, _scatter in _MORE:
+    (_band,) = _base.luminosity
+    _log_c = {"FUV": 43.35, "NUV": 43.17, "Halpha": 41.27}[_band]
+    _attenuation = (
+        f" The same as A_{_band} = 2.5 log10[1 + {_weight:g} L(TIR) / L({_band})]."
+        if _dust == "TIR"
+        else ""
+    )
+    STAR_FORMATION.add(
+        hybrid(
+            _key,
+            _base,
+            _dust,
+            _weight,
+            f"log10 SFR = log10 [L({_band}) + {_weight:g} L({_dust})] - {_log_c}  [Msun/yr; erg/s"
+            f"{'; L(1.4GHz) in erg/s/Hz' if _dust == '1.4GHz' else ''}]",
+            family=KENNICUTT_EVANS,
+            certainty=_certainty,
+            cite=_key.split("_", maxsplit=1)[0],
+            where="as in Kennicutt & Evans 2012, Table 2",
+            scatter_dex=_scatter,
+            note=f"Fitted to whole galaxies.{_attenuation}",
+        )
+    )

@@ -68,6 +68,49 @@ _kennicutt2012(
     "24um", "24um", 42.69, "0, 5, 100", "Blind to light that no dust absorbs; old stars add to it."
 )
 
+_kennicutt2012("70um", "70um", 43.23, "0, 5, 100", "Old stars add to it, more than at 24 um.")
+KENNICUTT2012_TIR = _kennicutt2012(
+    "tir", "TIR", 43.41, "0, 5, 100", "Blind to light that no dust absorbs; old stars add to it."
+)
+_one(
+    "kennicutt2012_1p4ghz",
+    "1.4GHz",
+    10.0**-28.20,
+    "log10 SFR = log10 L_nu(1.4GHz) - 28.20  [Msun/yr; erg/s/Hz]",
+    "Table 1",
+    note="Stars of 0 to 100 Myr, tied to the infrared of whole galaxies; electrons travel by a "
+    "kpc, and active nuclei shine, too.",
+)
+_one(
+    "murphy2011_1p4ghz",
+    "1.4GHz",
+    6.35e-29,
+    "SFR = 6.35e-29 L_nu(1.4GHz)  [Msun/yr; erg/s/Hz]",
+    "the calibration at 1.4 GHz (equation number not confirmed)",
+    note="Tied to the infrared of whole galaxies; electrons travel by a kpc.",
+)
+_one(
+    "murphy2011_tir",
+    "TIR",
+    3.88e-44,
+    "SFR = 3.88e-44 L(TIR)  [Msun/yr; erg/s]",
+    "the TIR calibration (equation number not confirmed)",
+    note="Blind to light that no dust absorbs; old stars add to it.",
+)
+_one(
+    "murphy2011_thermal",
+    "1.4GHz",
+    4.6e-28 * 1.4**0.1,
+    "SFR = 4.6e-28 (T_e / 1e4 K)^-0.45 (nu / GHz)^0.1 L_nu(thermal), T_e = 1e4 K, nu = 1.4 GHz  "
+    "[Msun/yr; erg/s/Hz]",
+    "Eq. 11",
+    certainty="from memory",
+    label="1.4 GHz, thermal",
+    note="Needs the thermal fraction at 1.4 GHz, usually about 0.1 for whole discs (common "
+    "practice); no dust in the way.",
+    thermal=("1.4GHz",),
+)
+
 # 1.4e-28 per erg/s/Hz of the continuum from 1500 to 2800 A.
 for _name, _tracer in (("fuv", "FUV"), ("nuv", "NUV")):
     _one(
@@ -89,6 +132,16 @@ _one(
     family=KENNICUTT,
     imf="Salpeter",
     note=_CORRECTED,
+)
+_one(
+    "kennicutt1998_fir",
+    "TIR",
+    4.5e-44,
+    "SFR = 4.5e-44 L(8-1000um)  [Msun/yr; erg/s]",
+    "Eq. 4",
+    family=KENNICUTT,
+    imf="Salpeter",
+    note="For starbursts, in which dust takes all the light; 8 to 1000 um, taken for 3 to 1100 um.",
 )
 _one(
     "murphy2011_fuv",

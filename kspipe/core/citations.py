@@ -44,6 +44,7 @@ CITATIONS = _citations(
     Citation(
         "bolatto2013", "Bolatto, Wolfire & Leroy 2013", "ARA&A 51, 207", "2013ARA&A..51..207B"
     ),
+    Citation("calzetti2000", "Calzetti et al. 2000", "ApJ 533, 682", "2000ApJ...533..682C"),
     Citation("calzetti2007", "Calzetti et al. 2007", "ApJ 666, 870", "2007ApJ...666..870C"),
     Citation(
         "cardelli1989", "Cardelli, Clayton & Mathis 1989", "ApJ 345, 245", "1989ApJ...345..245C"
@@ -52,15 +53,18 @@ CITATIONS = _citations(
     Citation("chabrier2003", "Chabrier 2003", "PASP 115, 763"),
     Citation("curti2017", "Curti et al. 2017", "MNRAS 465, 1384", "2017MNRAS.465.1384C"),
     Citation("curti2020", "Curti et al. 2020", "MNRAS 491, 944", "2020MNRAS.491..944C"),
+    Citation("dale2002", "Dale & Helou 2002", "ApJ 576, 159", "2002ApJ...576..159D"),
     Citation("denbrok2021", "Den Brok et al. 2021", "MNRAS 504, 3221", "2021MNRAS.504.3221D"),
     Citation("dopita2016", "Dopita et al. 2016", "Ap&SS 361, 61"),
     Citation("fitzpatrick1999", "Fitzpatrick 1999", "PASP 111, 63", "1999PASP..111...63F"),
+    Citation("galametz2013", "Galametz et al. 2013", "MNRAS 431, 1956", "2013MNRAS.431.1956G"),
     Citation("genzel2012", "Genzel et al. 2012", "ApJ 746, 69", "2012ApJ...746...69G"),
     Citation("genzel2015", "Genzel et al. 2015", "ApJ 800, 20", "2015ApJ...800...20G"),
     Citation("gildepaz2007", "Gil de Paz et al. 2007", "ApJS 173, 185"),
     Citation("hao2011", "Hao et al. 2011", "ApJ 741, 124", "2011ApJ...741..124H"),
     Citation("hunt2015", "Hunt et al. 2015", "A&A 583, A114"),
     Citation("kennicutt1998", "Kennicutt 1998", "ARA&A 36, 189", "1998ARA&A..36..189K"),
+    Citation("kennicutt2008", "Kennicutt et al. 2008", "ApJS 178, 247", "2008ApJS..178..247K"),
     Citation("kennicutt2009", "Kennicutt et al. 2009", "ApJ 703, 1672", "2009ApJ...703.1672K"),
     Citation("kennicutt2012", "Kennicutt & Evans 2012", "ARA&A 50, 531", "2012ARA&A..50..531K"),
     Citation("kroupa2001", "Kroupa 2001", "MNRAS 322, 231"),

@@ -47,14 +47,16 @@ class Registry(Generic[R]):
         self._records[record.key] = record
         return record
 
-    def get(self, key: str) -> R:
-        """Find a record.
+    def get(self, key: str | R) -> R:
+        """Find a record; a user's own, which lies on no shelf, is returned as it is.
 
         Raises
         ------
         KeyError
             With the nearest known key in its message.
         """
+        if not isinstance(key, str):
+            return key
         try:
             return self._records[key]
         except KeyError:

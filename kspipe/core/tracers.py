@@ -2,19 +2,20 @@
 
 The canonical unit is the one that a map carries from the moment it is read: brightness
 temperature integrated over velocity for lines in the radio, specific intensity for continuum
-bands, and line intensity for H-alpha.
+bands, line intensity for the rest, and surface density for maps that are finished.
 """
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import Final, Literal
 
 from kspipe.core.constants import C_CM_S
 
-__all__ = ["CO_LINES", "TRACERS", "CanonicalUnit", "Tracer"]
+__all__ = ["CO_LINES", "RADIO_LINES", "TRACERS", "CanonicalUnit", "Tracer"]
 
-CanonicalUnit = Literal["K km/s", "MJy/sr", "erg/s/cm2/sr"]
+CanonicalUnit = Literal["K km/s", "MJy/sr", "erg/s/cm2/sr", "Msun/pc2", "Msun/yr/kpc2"]
 
 
 @dataclass(frozen=True)
@@ -30,7 +31,8 @@ class Tracer:
     unit : str
         Canonical unit.
     frequency_ghz : float
-        Rest frequency of a line, or frequency at the effective wavelength of a band.
+        Rest frequency of a line, or frequency at the effective wavelength of a band; NaN where
+        there is none.
     is_radio : bool
         Whether maps of it are sampled at points (radio) or averaged over detector pixels.
     source : str
@@ -47,6 +49,11 @@ class Tracer:
 
 def _at_micron(wavelength_um: float) -> float:
     return C_CM_S / (wavelength_um * 1e-4) / 1e9
+
+
+def _finished(key: str, label: str, unit: CanonicalUnit) -> Tracer:
+    """A map of a surface density that someone else made: on its beam, at points."""
+    return Tracer(key, label, unit, math.nan, is_radio=True, source="a finished map has none")
 
 
 _LINES = "rest frequency, common practice"
@@ -114,7 +121,55 @@ TRACERS: Final = {
             is_radio=False,
             source="3.3526 um, value from memory",
         ),
+        Tracer(
+            "Hbeta",
+            r"H$\beta$",
+            "erg/s/cm2/sr",
+            _at_micron(0.48613),
+            is_radio=False,
+            source="4861.3 A in air, common practice",
+        ),
+        Tracer(
+            "70um",
+            r"70 $\mu$m",
+            "MJy/sr",
+            _at_micron(70.0),
+            is_radio=False,
+            source="70 um nominal, common practice",
+        ),
+        Tracer(
+            "160um",
+            r"160 $\mu$m",
+            "MJy/sr",
+            _at_micron(160.0),
+            is_radio=False,
+            source="160 um nominal, common practice",
+        ),
+        Tracer(
+            "TIR",
+            "TIR",
+            "erg/s/cm2/sr",
+            math.nan,
+            is_radio=False,
+            source="3 to 1100 um, integrated",
+        ),
+        Tracer(
+            "1.4GHz",
+            "1.4 GHz",
+            "MJy/sr",
+            1.4,
+            is_radio=True,
+            source="1.4 GHz, by name",
+        ),
+        _finished("Sigma_HI", r"$\Sigma_{\rm HI}$", "Msun/pc2"),
+        _finished("Sigma_mol", r"$\Sigma_{\rm mol}$", "Msun/pc2"),
+        _finished("Sigma_star", r"$\Sigma_\star$", "Msun/pc2"),
+        _finished("Sigma_dust", r"$\Sigma_{\rm dust}$", "Msun/pc2"),
+        _finished("Sigma_SFR", r"$\Sigma_{\rm SFR}$", "Msun/yr/kpc2"),
     )
 }
 
 CO_LINES: Final = ("CO(1-0)", "CO(2-1)", "CO(3-2)")
+
+# What interferometers map, whose short spacings may be missing.
+RADIO_LINES: Final = ("HI", *CO_LINES, "1.4GHz")

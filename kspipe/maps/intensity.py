@@ -42,6 +42,8 @@ _EXAMPLES = {
     "K km/s": "'K km/s', 'Jy/beam km/s', 'Jy/beam m/s'",
     "MJy/sr": "'MJy/sr', 'Jy/pixel', 'Jy/beam', 'erg/s/cm2/A/pixel', 'mag(AB)/arcsec2'",
     "erg/s/cm2/sr": "'erg/s/cm2/arcsec2', 'erg/s/cm2/sr', 'Rayleigh', '0.1 Rayleigh'",
+    "Msun/pc2": "'Msun/pc2', 'Msun/kpc2'",
+    "Msun/yr/kpc2": "'Msun/yr/kpc2', 'Msun/yr/pc2'",
 }
 
 _SPEED: Final = u.km / u.s
@@ -49,6 +51,10 @@ _COUNTS: Final = (u.count, u.DN, u.adu, u.electron)
 _LINE_FLUX: Final = u.erg / u.s / u.cm**2
 _FLUX_PER_ANGSTROM: Final = _LINE_FLUX / u.AA
 
+_FINISHED_UNITS: Final = {
+    "Msun/pc2": u.Msun / u.pc**2,
+    "Msun/yr/kpc2": u.Msun / u.yr / u.kpc**2,
+}
 _NO_SOLID_ANGLE: Final = "a flux without a solid angle (per beam, pixel, sr or arcsec2?)"
 # What a refused unit is, beams and pixels taken as steradians; the first that fits is told.
 _KINDS: Final = (
@@ -60,7 +66,7 @@ _KINDS: Final = (
     (u.Jy * _SPEED, _NO_SOLID_ANGLE),
     (_LINE_FLUX, _NO_SOLID_ANGLE),
     (_FLUX_PER_ANGSTROM, _NO_SOLID_ANGLE),
-    (u.Msun / u.pc**2, "a surface density, which is made from an intensity, not read"),
+    (u.Msun / u.pc**2, "a surface density, which is read for finished maps (Sigma_HI ...) only"),
     (u.cm**-2, "a column density, which is read for HI only"),
     (u.mag, "a magnitude of an unsaid system and without a solid angle"),
     (u.mag / u.sr, "a magnitude of an unsaid system (AB is written mag(AB)/arcsec2)"),
@@ -158,6 +164,8 @@ class Door:
 
 def examples(tracer: Tracer) -> str:
     """Units that would fit a tracer."""
+    if tracer.unit == "erg/s/cm2/sr" and tracer.key != "Halpha":
+        return "'erg/s/cm2/arcsec2', 'erg/s/cm2/sr', 'W/m2/sr'"
     extra = ", 'cm-2'" if tracer.key == "HI" else ""
     return _EXAMPLES[tracer.unit] + extra
 
@@ -274,8 +282,11 @@ def open_door(
         factor = _line_temperature(unit, tracer, frequency_ghz, frequency_note, notes)
     elif tracer.unit == "MJy/sr":
         factor = _band_intensity(unit, tracer, wavelength_um, notes)
+    elif tracer.unit == "erg/s/cm2/sr":
+        factor = _line_intensity(unit, tracer, notes)
     else:
-        factor = _line_intensity(unit, notes)
+        finished = _FINISHED_UNITS[tracer.unit]
+        factor = float(unit.to(finished)) if unit.is_equivalent(finished) else None
     if factor is None:
         raise UnitError(_wrong_kind(reading, unit, tracer, where, notes))
     one = "magnitude 0" if reading.is_magnitude else "1 stored unit"
@@ -476,11 +487,11 @@ def _band_intensity(
     return None
 
 
-def _line_intensity(unit: u.UnitBase, notes: list[str]) -> float | None:
-    """Intensity of H-alpha [erg/s/cm2/sr] for one `unit`, or None."""
+def _line_intensity(unit: u.UnitBase, tracer: Tracer, notes: list[str]) -> float | None:
+    """Integrated intensity [erg/s/cm2/sr] for one `unit`, or None; photons of H-alpha only."""
     if unit.is_equivalent(_LINE_FLUX / u.sr):
         return float(unit.to(_LINE_FLUX / u.sr))
-    if unit.is_equivalent(u.R):
+    if unit.is_equivalent(u.R) and tracer.key == "Halpha":
         notes.append("photons of 6562.8 A")
         photon_erg = H_ERG_S * C_CM_S / HALPHA_CM
         return float(unit.to(u.R)) * RAYLEIGH_PHOTONS_S_CM2_SR * photon_erg

@@ -30,6 +30,8 @@ FITS_UNITS = {
     "K km/s": "K km s-1",
     "MJy/sr": "MJy sr-1",
     "erg/s/cm2/sr": "erg s-1 cm-2 sr-1",
+    "Msun/pc2": "solMass pc-2",
+    "Msun/yr/kpc2": "solMass yr-1 kpc-2",
 }
 
 

@@ -9,7 +9,7 @@ import astropy.units as u
 
 from kspipe.core.constants import C_CM_S, JY_CGS, K_ERG_K
 from kspipe.core.errors import Fault, MapError
-from kspipe.core.tracers import TRACERS
+from kspipe.core.tracers import RADIO_LINES
 from kspipe.core.units import UnitReadingError, read_unit
 from kspipe.maps.header import header_frequency_ghz, observed_frequency_ghz
 from kspipe.maps.source import MapRequest, MapSource
@@ -236,7 +236,7 @@ def judge_short_spacings(
     ShortSpacings or None
         None for a map that no interferometer makes.
     """
-    if not TRACERS[request.tracer].is_radio:
+    if request.tracer not in RADIO_LINES:
         return None
     if total is None:
         return ShortSpacings(request.short_spacings, request.largest_scale_arcsec)

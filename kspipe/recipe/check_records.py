@@ -5,20 +5,57 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from typing import Final
 
-from kspipe.conversions import ALPHA_CO, EXTINCTION, INPUTS, LINE_RATIO, STAR_FORMATION, STARS
+from kspipe.conversions import (
+    ALPHA_CO,
+    EXTINCTION,
+    GIVEN_ALPHA_CO,
+    INPUTS,
+    LINE_RATIO,
+    MASS_METALLICITY,
+    STAR_FORMATION,
+    STARS,
+    AlphaCO,
+    LineRatio,
+)
 from kspipe.core.errors import Fault, nearest
 from kspipe.recipe.map_table import MapTable
+from kspipe.recipe.metallicity_table import MetallicityTable
 from kspipe.recipe.models import (
     ForegroundTable,
+    GalaxyTable,
     GasTable,
     StarFormationTable,
     StarsTable,
 )
 
-__all__ = ["alpha_co_faults", "convention_faults", "line_ratio_faults", "listed", "stars_faults"]
+__all__ = [
+    "alpha_co_faults",
+    "convention_faults",
+    "line_ratio_faults",
+    "listed",
+    "metallicity_faults",
+    "stars_faults",
+]
 
 
-def line_ratio_faults(line: str, key: str) -> list[Fault]:
+def metallicity_faults(table: MetallicityTable, galaxy: GalaxyTable) -> list[Fault]:
+    """Lengths that a metallicity counts in and the recipe does not give."""
+    needed = {}
+    per = table.slope[1]
+    if per != "kpc":
+        needed[per] = ("metallicity.gradient", f"a gradient per {per}")
+    if table.relation is not None and table.gradient is not None:
+        record = MASS_METALLICITY.get(table.relation)
+        if record.place == "effective radius":
+            needed["r_e"] = ("metallicity.relation", f'a gradient around "{record.key}"')
+    return [
+        Fault(where, f"{what} needs galaxy.{length}", f'type {length} = "... arcmin" in [galaxy]')
+        for length, (where, what) in needed.items()
+        if getattr(galaxy, length) is None
+    ]
+
+
+def line_ratio_faults(line: str, key: str | LineRatio) -> list[Fault]:
     """A line-ratio record that belongs to another line than the map."""
     record = LINE_RATIO.get(key)
     if (record.upper, record.lower) == (line, "CO(1-0)"):
@@ -27,7 +64,7 @@ def line_ratio_faults(line: str, key: str) -> list[Fault]:
     return [
         Fault(
             "gas.line_ratio",
-            f'"{key}" is {record.upper} over {record.lower}; the map is {line}',
+            f'"{record.key}" is {record.upper} over {record.lower}; the map is {line}',
             f"records for it: {listed(fit)}" if fit else "remove the key",
         )
     ]
@@ -39,8 +76,12 @@ _GAS_INPUTS: Final = {"ms_offset": "ms_offset_dex", "g0_over_n": "g0_over_n"}
 
 def alpha_co_faults(gas: GasTable, *, has_stars: bool) -> list[Fault]:
     """What an alpha_CO record needs and the recipe does not give, and the other way round."""
-    record = ALPHA_CO.get(gas.alpha_co)
-    needs = set(record.needs)
+    if not isinstance(gas.alpha_co, str | AlphaCO):
+        record = GIVEN_ALPHA_CO
+        needs = {"oh"}
+    else:
+        record = ALPHA_CO.get(gas.alpha_co)
+        needs = set(record.needs)
     if "sigma_total" in needs:
         needs = needs - {"sigma_total"} | {"sigma_star"}
     given = {"oh"} | ({"sigma_star"} if has_stars else set())
@@ -104,8 +145,11 @@ def convention_faults(
     faults = []
     record = STAR_FORMATION.get(table.calibration)
     if isinstance(foreground, ForegroundTable):
-        for tracer in record.tracers:
-            key = {"FUV": "uv", "NUV": "uv", "Halpha": "halpha"}.get(tracer)
+        lines = ("Hbeta",) if table.attenuation is not None else ()
+        for tracer in (*record.tracers, *lines):
+            key = {"FUV": "uv", "NUV": "uv"}.get(tracer) or (
+                "halpha" if tracer in ("Halpha", "Hbeta") else None
+            )
             if key and tracer not in EXTINCTION.get(getattr(foreground, key)).coefficients:
                 known = listed(r.key for r in EXTINCTION if tracer in r.coefficients)
                 faults.append(

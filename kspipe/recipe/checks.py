@@ -7,16 +7,20 @@ from collections import Counter
 from collections.abc import Mapping
 from typing import Any, Final
 
-from kspipe.conversions import LINE_RATIO, STAR_FORMATION
+from kspipe.conversions import LINE_RATIO, LineRatio
 from kspipe.core.errors import Fault, nearest
 from kspipe.core.tracers import CO_LINES
+from kspipe.recipe.check_finished import given_twice_faults
 from kspipe.recipe.check_records import (
     alpha_co_faults,
     convention_faults,
     line_ratio_faults,
     listed,
+    metallicity_faults,
     stars_faults,
 )
+from kspipe.recipe.check_star_formation import map_extra_faults, star_formation_faults
+from kspipe.recipe.located import region_faults
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.models import (
     GalaxyTable,
@@ -42,26 +46,22 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
     faults = _duplicates(maps)
     faults += _gas_faults(tables["gas"], maps, complete=not some_map_is_faulty)
     if isinstance(tables["gas"], GasTable):
-        faults += alpha_co_faults(tables["gas"], has_stars="stars" in tables)
+        faults += alpha_co_faults(tables["gas"], has_stars=_has_stars(tables, maps))
     if isinstance(tables.get("stars"), StarsTable):
         faults += stars_faults(tables["stars"], tables["maps"])
-    faults += _map_extras(maps)
+        if any(table.tracer == "Sigma_star" for table in maps.values()):
+            faults.append(Fault("stars", "a map of Sigma_star is there, too", "remove one"))
+    faults += map_extra_faults(maps, tables["galaxy"])
     if isinstance(tables["star_formation"], StarFormationTable):
-        faults += _star_formation_faults(tables["star_formation"], tables["maps"])
+        faults += star_formation_faults(tables["star_formation"], tables["maps"])
         faults += convention_faults(
             tables["star_formation"], tables["foreground"], tables["relations"]
         )
+    faults += region_faults(tables)
     galaxy, metallicity = tables["galaxy"], tables["metallicity"]
     if isinstance(galaxy, GalaxyTable):
-        per_r25 = isinstance(metallicity, MetallicityTable) and metallicity.slope[1] == "r25"
-        if per_r25 and galaxy.r25 is None:
-            faults.append(
-                Fault(
-                    "metallicity.gradient",
-                    "a gradient per r25 needs galaxy.r25",
-                    'type r25 = "... arcmin" in [galaxy]',
-                )
-            )
+        if isinstance(metallicity, MetallicityTable):
+            faults += metallicity_faults(metallicity, galaxy)
         if galaxy.inclination.value > MOST_INCLINED_DEG and tables["relations"]:
             faults.append(
                 Fault(
@@ -72,6 +72,10 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
                 )
             )
     return faults
+
+
+def _has_stars(tables: Mapping[str, Any], maps: Mapping[str, MapTable]) -> bool:
+    return "stars" in tables or any(table.tracer == "Sigma_star" for table in maps.values())
 
 
 def _duplicates(maps: Mapping[str, MapTable]) -> list[Fault]:
@@ -91,19 +95,24 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
     faults = []
     tracers = {table.tracer: name for name, table in maps.items()}
     lines = [line for line in CO_LINES if line in tracers]
-    if complete and "HI" not in tracers:
+    if complete and not {"HI", "Sigma_HI"} & set(tracers):
         faults.append(
             Fault("maps", "no map of HI, which the atomic gas needs", 'add one with tracer = "HI"')
+        )
+    faults += given_twice_faults(tracers)
+    if complete and gas == "finished map" and "Sigma_mol" not in tracers:
+        faults.append(
+            Fault("gas", '"finished map", but no map is one of Sigma_mol', "add it, or type [gas]")
         )
     if len(lines) > 1:
         faults.append(
             Fault("maps", f"maps of {' and '.join(lines)}: the molecular gas takes one CO line")
         )
-    if gas == "atomic only" and lines:
+    if isinstance(gas, str) and lines:
         faults.append(
             Fault(
                 "gas",
-                f'"atomic only", but maps.{tracers[lines[0]]} is {lines[0]}',
+                f'"{gas}", but maps.{tracers[lines[0]]} is {lines[0]}',
                 "type a table [gas] with alpha_co, or remove that map",
             )
         )
@@ -125,74 +134,10 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
                     f"or the key of a record: {listed(LINE_RATIO.keys())}",
                 )
             )
-        if lines and isinstance(gas.line_ratio, str):
+        if lines and isinstance(gas.line_ratio, str | LineRatio):
             faults += line_ratio_faults(lines[0], gas.line_ratio)
         elif lines and lines[0] == "CO(1-0)" and gas.line_ratio is not None:
             faults.append(Fault("gas.line_ratio", "CO(1-0) takes no line ratio", "remove the key"))
-    return faults
-
-
-def _map_extras(maps: Mapping[str, MapTable]) -> list[Fault]:
-    """Keys that belong to one tracer only."""
-    faults = []
-    for name, table in maps.items():
-        if table.tracer == "Halpha" and table.nii_ratio is None:
-            faults.append(
-                Fault(
-                    f"maps.{name}.nii_ratio",
-                    "an H-alpha map needs [NII]6583/Halpha",
-                    "type nii_ratio = 0 if the map is free of [NII]",
-                )
-            )
-        for key, value, owner in (
-            ("nii_ratio", table.nii_ratio, "Halpha"),
-            ("as_24um", table.as_24um, "22um"),
-        ):
-            if value is None:
-                continue
-            if table.tracer != owner:
-                faults.append(
-                    Fault(f"maps.{name}.{key}", f"belongs to a map of {owner}, not {table.tracer}")
-                )
-    return faults
-
-
-def _star_formation_faults(
-    table: StarFormationTable, maps: Mapping[str, MapTable | None]
-) -> list[Fault]:
-    faults = []
-    record = STAR_FORMATION.get(table.calibration)
-    found: list[str] = []
-    for name in table.maps:
-        if name not in maps:
-            faults.append(
-                Fault("star_formation.maps", f'no map is called "{name}"', nearest(name, maps))
-            )
-            return faults
-        listed = maps[name]
-        if listed is None:
-            return faults
-        tracer = listed.tracer
-        if tracer == "22um" and "24um" in record.tracers:
-            if listed.as_24um is None:
-                faults.append(
-                    Fault(
-                        f"maps.{name}.as_24um",
-                        f'"{record.key}" is calibrated on 24 um and this map is 22 um',
-                        "type as_24um = 24 um over 22 um intensity, for example 1.0",
-                    )
-                )
-            tracer = "24um"
-        found.append(tracer)
-    if sorted(found) != sorted(record.tracers):
-        faults.append(
-            Fault(
-                "star_formation.maps",
-                f'"{record.key}" takes {" and ".join(record.tracers)}; listed are '
-                f"{' and '.join(found) or 'none'}",
-                "list one map of each",
-            )
-        )
     return faults
 
 

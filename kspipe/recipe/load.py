@@ -3,13 +3,17 @@
 from __future__ import annotations
 
 import tomllib
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, Final, TypeVar
 
 from pydantic import BaseModel, ValidationError
 
+from kspipe.conversions import Record
+from kspipe.conversions.shelf import FAMILIES
 from kspipe.core.errors import Fault, RecipeError, nearest
 from kspipe.recipe.checks import check_relation, check_together
+from kspipe.recipe.located import locate, located
 from kspipe.recipe.map_table import MapTable, NoiseFile, NoiseTyped
 from kspipe.recipe.models import (
     ComparisonTable,
@@ -23,6 +27,8 @@ from kspipe.recipe.models import (
     StarFormationTable,
     StarsTable,
 )
+from kspipe.recipe.own_records import RecordTable
+from kspipe.recipe.regions import RegionTable
 
 __all__ = ["load_recipe", "parse_recipe"]
 
@@ -38,7 +44,7 @@ _TABLES: Final[dict[str, type[BaseModel]]] = {
     "comparison": ComparisonTable,
 }
 _OPTIONAL: Final = ("relations", "comparison", "stars")
-_TOP: Final = ("seed", "maps", "gas", "relations", *_TABLES)
+_TOP: Final = ("seed", "maps", "gas", "relations", "records", "regions", *_TABLES)
 
 
 def load_recipe(path: str | Path, *, in_memory: frozenset[str] = frozenset()) -> Recipe:
@@ -104,22 +110,29 @@ def parse_recipe(
         for key in raw
         if key not in _TOP
     ]
+    records = _named(RecordTable, raw.get("records", {}), "records", faults)
+    regions = _named(RegionTable, raw.get("regions", {}), "regions", faults)
+    context = {"records": _own(records, faults)}
     tables: dict[str, Any] = {
-        name: _table(model, raw.get(name), name, faults)
+        name: _table(model, raw.get(name), name, faults, context)
         for name, model in _TABLES.items()
         if name in raw or name not in _OPTIONAL
     }
     tables["seed"] = _seed(raw, faults)
-    tables["gas"] = _gas(raw, faults)
+    tables["gas"] = _gas(raw, faults, context)
     tables["maps"] = _maps(raw, folder, in_memory, faults)
     tables["relations"] = _relations(raw, faults)
-    if isinstance(tables["metallicity"], MetallicityTable) and tables["metallicity"].map:
-        located = _locate(tables["metallicity"].map, folder, "metallicity.map", faults)
-        tables["metallicity"] = tables["metallicity"].model_copy(update={"map": located})
+    for name in ("metallicity", "foreground", "gas", "stars", "star_formation"):
+        if isinstance(tables.get(name), BaseModel):
+            tables[name] = located(tables[name], folder, name, faults)
+    tables["records"] = records
+    tables["regions"] = {
+        name: located(table, folder, f"regions.{name}", faults) for name, table in regions.items()
+    }
     grid = tables["grid"]
     if isinstance(grid, GridTable) and grid.like is not None and grid.like not in tables["maps"]:
-        located = _locate(Path(grid.like), folder, "grid.like", faults)
-        tables["grid"] = grid.model_copy(update={"like": str(located)})
+        like = locate(Path(grid.like), folder, "grid.like", faults)
+        tables["grid"] = grid.model_copy(update={"like": str(like)})
     faults += check_together(tables)
     if faults:
         raise RecipeError(*faults)
@@ -130,7 +143,45 @@ def _fields(model: type[BaseModel]) -> list[str]:
     return [field.alias or name for name, field in model.model_fields.items()]
 
 
-def _table(model: type[M], raw: object, where: str, faults: list[Fault]) -> M | None:
+def _named(model: type[M], raw: object, where: str, faults: list[Fault]) -> dict[str, M]:
+    """Check tables that the user names."""
+    if not isinstance(raw, dict):
+        faults.append(Fault(where, f"{raw!r} is not a table", f"type [{where}.NAME]"))
+        return {}
+    checked = {}
+    for name, table in raw.items():
+        if not name.isidentifier():
+            faults.append(Fault(f"{where}.{name}", "a name is made of letters, digits and _"))
+            continue
+        found = _table(model, table, f"{where}.{name}", faults)
+        if found is not None:
+            checked[name] = found
+    return checked
+
+
+def _own(tables: Mapping[str, RecordTable], faults: list[Fault]) -> dict[str, Record]:
+    """Make the user's own records; no key means two things."""
+    records = {}
+    published = {key for family in FAMILIES.values() for key in family.keys()}  # noqa: SIM118 - a registry iterates over records
+    for name, table in tables.items():
+        where = f"records.{name}"
+        if name in published:
+            faults.append(Fault(where, "is the key of a published record", "type another name"))
+            continue
+        try:
+            records[name] = table.record(name)
+        except ValueError as error:
+            faults.append(Fault(where, str(error)))
+    return records
+
+
+def _table(
+    model: type[M],
+    raw: object,
+    where: str,
+    faults: list[Fault],
+    context: Mapping[str, Any] | None = None,
+) -> M | None:
     """Check one table; its faults are appended and None comes back if there is any."""
     if raw is None:
         needed = [
@@ -142,7 +193,7 @@ def _table(model: type[M], raw: object, where: str, faults: list[Fault]) -> M | 
         faults.append(Fault(where, f"{raw!r} is not a table", f"type [{where}]"))
         return None
     try:
-        return model.model_validate(raw)
+        return model.model_validate(raw, context=context)
     except ValidationError as error:
         faults += [_fault(model, where, dict(detail)) for detail in error.errors()]
         return None
@@ -175,21 +226,24 @@ def _seed(raw: dict[str, Any], faults: list[Fault]) -> int | None:
     return None
 
 
-def _gas(raw: dict[str, Any], faults: list[Fault]) -> GasTable | str | None:
+def _gas(
+    raw: dict[str, Any], faults: list[Fault], context: Mapping[str, Any]
+) -> GasTable | str | None:
     gas = raw.get("gas")
-    if gas == "atomic only":
-        return "atomic only"
+    if gas in ("atomic only", "finished map"):
+        return str(gas)
     if gas is None or isinstance(gas, str):
         seen = "is missing" if gas is None else f"is {gas!r}"
         faults.append(
             Fault(
                 "gas",
                 f"the gas {seen}",
-                'type a table [gas] with alpha_co, or gas = "atomic only" where there is no CO map',
+                'type a table [gas] with alpha_co, or gas = "atomic only" where there is no CO map '
+                '("finished map" where there is one of Sigma_mol)',
             )
         )
         return None
-    return _table(GasTable, gas, "gas", faults)
+    return _table(GasTable, gas, "gas", faults, context)
 
 
 def _maps(
@@ -210,16 +264,11 @@ def _maps(
         model = found[name]
         if model is None or name in in_memory:
             continue
-        changes: dict[str, Any] = {"file": _locate(model.file, folder, f"{where}.file", faults)}
-        if isinstance(model.noise, NoiseFile):
-            located = _locate(model.noise.file, folder, f"{where}.noise.file", faults)
-            changes["noise"] = model.noise.model_copy(update={"file": located})
-        elif isinstance(model.noise, NoiseTyped) and model.noise.shape is not None:
-            located = _locate(model.noise.shape, folder, f"{where}.noise.shape", faults)
-            changes["noise"] = model.noise.model_copy(update={"shape": located})
-        if model.psf is not None:
-            changes["psf"] = _locate(model.psf, folder, f"{where}.psf", faults)
-        found[name] = model.model_copy(update=changes)
+        model = located(model, folder, where, faults)
+        if isinstance(model.noise, BaseModel):
+            noise = located(model.noise, folder, f"{where}.noise", faults)
+            model = model.model_copy(update={"noise": noise})
+        found[name] = model
     return found
 
 
@@ -233,23 +282,6 @@ def _map(table: object, where: str, faults: list[Fault]) -> MapTable | None:
         model = _table(MapTable, table, where, faults)
         return model if checked is not None else None
     return _table(MapTable, table, where, faults)
-
-
-def _locate(file: Path, folder: Path, where: str, faults: list[Fault]) -> Path:
-    try:
-        located = (folder / file.expanduser()).resolve()
-        exists = located.is_file()
-    except (OSError, RuntimeError, ValueError) as error:
-        # No such user, a name that is too long, a zero byte.
-        faults.append(Fault(where, f"{str(file)[:80]!r} is not a path ({error})"))
-        return file
-    if not exists:
-        faults.append(
-            Fault(
-                where, f"{located} does not exist", "relative paths count from the recipe's folder"
-            )
-        )
-    return located
 
 
 def _relations(raw: dict[str, Any], faults: list[Fault]) -> dict[str, RelationTable]:

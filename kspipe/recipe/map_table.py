@@ -3,14 +3,17 @@
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, BeforeValidator, Field, PlainValidator, model_validator
 
+from kspipe.conversions import NITROGEN, Finished
 from kspipe.core.tracers import TRACERS
 from kspipe.core.units import read_unit
 from kspipe.maps import MapRequest, NoiseRequest
+from kspipe.recipe.kinds import FRACTION, Fraction, RatioOrZero
 from kspipe.recipe.quantity import parse_measured
 from kspipe.recipe.values import (
     NO_ERROR,
@@ -18,13 +21,14 @@ from kspipe.recipe.values import (
     Magnitude,
     Percent,
     Ratio,
-    RatioOrZero,
     Table,
     TracerName,
     Wavelength,
+    key_of,
 )
+from kspipe.recipe.varying import Varying, read_varying
 
-__all__ = ["MapTable", "NoiseFile", "NoiseTyped", "noise_value"]
+__all__ = ["Filter", "MapTable", "NoiseFile", "NoiseTyped", "noise_value"]
 
 _NOISE_EXAMPLE = (
     'expected "measure", a number with its unit such as "0.0012 MJy/sr", or '
@@ -149,6 +153,45 @@ def _shift_typed(typed: Any) -> tuple[float, float]:
     return east, north
 
 
+def _helium(typed: Any) -> float | None:
+    if typed is not None and typed not in (1.0, 1.36, 1.4):
+        raise ValueError(f"{typed!r}: expected 1.0 (hydrogen only), 1.36 or 1.4")
+    return None if typed is None else float(typed)
+
+
+@dataclass(frozen=True)
+class Filter:
+    """Emission that is smoother than a length in the disc's distance counts as diffuse.
+
+    Attributes
+    ----------
+    text : str
+        The length as typed.
+    """
+
+    text: str
+
+    @property
+    def kpc(self) -> float:
+        """The length."""
+        return parse_measured(self.text, "kpc", '"2 kpc"').value
+
+    def __str__(self) -> str:
+        return self.text
+
+
+def _diffuse(typed: Any) -> Any:
+    """Read ``"none"``, a fraction that may vary, or ``{filter = "2 kpc"}``."""
+    if typed is None or typed == "none" or isinstance(typed, Filter):
+        return None if typed == "none" else typed
+    if isinstance(typed, dict) and "filter" in typed:
+        length = Filter(str(typed["filter"]))
+        if set(typed) != {"filter"} or not length.kpc > 0:
+            raise ValueError(f'{typed!r} is no filter; expected {{filter = "2 kpc"}}')
+        return length
+    return read_varying(typed, FRACTION)
+
+
 class MapTable(Table):
     """One map: what it is, where it lies, and what its header does not say."""
 
@@ -174,7 +217,20 @@ class MapTable(Table):
     largest_scale: Arcsec | None = None
     total_flux: Level | None = None
     nii_ratio: RatioOrZero | None = None
+    nii_relation: Annotated[str | None, key_of(NITROGEN)] = None
     as_24um: Ratio | None = None
+    thermal_fraction: Fraction | None = None
+    diffuse: Annotated[Varying | Filter | None, BeforeValidator(_diffuse)] = None
+    inclination: Literal["face-on", "sky"] | None = None
+    helium: Annotated[float | None, BeforeValidator(_helium)] = None
+    imf: Literal["Kroupa", "Salpeter", "Chabrier"] | None = None
+
+    @property
+    def finished(self) -> Finished | None:
+        """Conventions of a finished map; None for a map of an intensity."""
+        if self.inclination is None:
+            return None
+        return Finished(self.inclination == "face-on", self.helium, self.imf)
 
     def request(self, name: str) -> MapRequest:
         """Plain values for the room that reads maps."""

@@ -9,27 +9,42 @@ import math
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import AfterValidator, BeforeValidator, Field, model_validator
+from pydantic import BeforeValidator, Field, model_validator
 
-from kspipe.conversions import ALPHA_CO, EXTINCTION, LINE_RATIO, OH_SCALES, STAR_FORMATION, STARS
-from kspipe.core.errors import nearest
+from kspipe.conversions import (
+    ALPHA_CO,
+    BALMER,
+    EXTINCTION,
+    FINISHED_SFR,
+    LINE_RATIO,
+    STAR_FORMATION,
+    STARS,
+    TOTAL_INFRARED,
+    AlphaCO,
+    LineRatio,
+    StarFormation,
+)
+from kspipe.recipe.kinds import ALPHA_CO_VALUE, RATIO, Ratio, Reddening
 from kspipe.recipe.map_table import MapTable
+from kspipe.recipe.metallicity_table import MetallicityTable
+from kspipe.recipe.own_records import RecordTable
 from kspipe.recipe.quantity import Measured, Position, parse_centre, parse_measured
+from kspipe.recipe.regions import RegionTable
 from kspipe.recipe.values import (
-    Abundance,
     Angle,
     Arcsec,
     Distance,
     FieldOverDensity,
     Inclination,
+    Magnitude,
     Offset,
     Opacity,
-    Ratio,
-    Reddening,
     Speed,
     Table,
     key_of,
+    key_or,
 )
+from kspipe.recipe.varying import Varying, read_varying
 
 __all__ = [
     "ComparisonTable",
@@ -54,6 +69,8 @@ class GalaxyTable(Table):
     inclination: Inclination
     position_angle: Angle
     r25: Arcsec | None = None
+    r_e: Arcsec | None = None
+    m_b: Magnitude | None = None
     velocity: Speed | None = None
     velocity_convention: Literal["optical", "radio"] = "optical"
 
@@ -66,6 +83,22 @@ class GalaxyTable(Table):
     def pc_per_arcsec(self) -> float:
         """Length on the sky for one arcsecond."""
         return self.distance.value * 1e6 * math.pi / 648000.0
+
+    def kpc_per(self, unit: str) -> float:
+        """Length of one ``kpc``, ``arcsec``, ``r25`` or ``r_e`` [kpc].
+
+        Raises
+        ------
+        KeyError
+            If the recipe does not give that length.
+        """
+        lengths = {"r25": self.r25, "r_e": self.r_e}
+        if unit == "kpc":
+            return 1.0
+        length = lengths.get(unit)
+        if unit != "arcsec" and length is None:
+            raise KeyError(f"galaxy.{unit} is not given")
+        return self.pc_per_arcsec / 1e3 * (length.value if length else 1.0)
 
 
 def _beam_target(typed: Any) -> str:
@@ -106,64 +139,6 @@ class GridTable(Table):
             return parse_measured(self.beam, "pc", "").value / pc_per_arcsec
 
 
-def gradient_value(typed: str) -> tuple[float, str]:
-    """Split ``-0.045 dex/kpc`` into the number and what it counts per.
-
-    Raises
-    ------
-    ValueError
-        If it is neither per kpc nor per r25.
-    """
-    text, _, per = typed.partition("dex/")
-    try:
-        value = float(text)
-    except ValueError:
-        value = math.nan
-    if not math.isfinite(value) or per.strip() not in ("kpc", "r25"):
-        raise ValueError(
-            f'{typed!r} is not a gradient; expected "-0.045 dex/kpc" or "-0.3 dex/r25"'
-        )
-    return value, per.strip()
-
-
-def _gradient(typed: str | None) -> str | None:
-    if typed is not None:
-        gradient_value(typed)
-    return typed
-
-
-def _oh_scale(typed: Any) -> str:
-    if typed not in OH_SCALES:
-        raise ValueError(
-            f'metallicity scale "{typed}" is not known; {nearest(str(typed), OH_SCALES)}'
-        )
-    return str(typed)
-
-
-class MetallicityTable(Table):
-    """12 + log10(O/H) over the disc: a centre and a gradient, or a map."""
-
-    oh: Abundance | None = None
-    gradient: Annotated[str | None, AfterValidator(_gradient)] = None
-    map: Path | None = None
-    scale: Annotated[str, BeforeValidator(_oh_scale)] = "not stated"
-
-    @property
-    def slope(self) -> tuple[float, str]:
-        """Gradient and what it counts per: ``kpc`` or ``r25``; zero where none is given."""
-        return (0.0, "kpc") if self.gradient is None else gradient_value(self.gradient)
-
-    @model_validator(mode="after")
-    def _one_way(self) -> MetallicityTable:
-        if (self.map is None) == (self.oh is None):
-            raise ValueError(
-                'give either oh = 8.69 (with gradient = "... dex/kpc") or map = "file.fits"'
-            )
-        if self.map is not None and self.gradient is not None:
-            raise ValueError("a gradient and a map exclude each other")
-        return self
-
-
 class ForegroundTable(Table):
     """Extinction by the Milky Way; the colour excess must be typed, zero if it was removed."""
 
@@ -173,27 +148,24 @@ class ForegroundTable(Table):
     ebv_scale: Literal["SFD", "SF11"] | None = None
 
 
-def _line_ratio(typed: Any) -> Measured | str | None:
-    """Read ``0.65 +- 0.08``, or the key of a record."""
-    if isinstance(typed, str) and typed[:1].isalpha():
-        if typed not in LINE_RATIO:
-            raise ValueError(f"{LINE_RATIO.unknown(typed)}; or a number such as 0.65")
-        return typed
-    return None if typed is None else parse_measured(typed, "", '0.65 or "0.65 +- 0.08"')
-
-
-def _line_ratio_bounds(ratio: Measured | str | None) -> Measured | str | None:
-    if isinstance(ratio, Measured) and not 0 < ratio.value < 10:
-        raise ValueError(f"{ratio.text!r}: expected a ratio between 0 and 10")
-    return ratio
-
-
 class GasTable(Table):
-    """From lines to atomic and molecular gas."""
+    """From lines to atomic and molecular gas.
 
-    alpha_co: Annotated[str, key_of(ALPHA_CO)]
+    ``alpha_co`` and ``line_ratio`` are the key of a record or the quantity itself, which may vary
+    over the disc.
+    """
+
+    alpha_co: Annotated[
+        str | AlphaCO | Varying,
+        key_or(
+            ALPHA_CO,
+            lambda typed: read_varying(typed, ALPHA_CO_VALUE),
+            "or alpha_CO itself, such as 4.35 [Msun/pc2 per K km/s]",
+        ),
+    ]
     line_ratio: Annotated[
-        Measured | str | None, BeforeValidator(_line_ratio), AfterValidator(_line_ratio_bounds)
+        str | LineRatio | Varying | None,
+        key_or(LINE_RATIO, lambda typed: read_varying(typed, RATIO), "or a number such as 0.65"),
     ] = None
     ms_offset: Offset | None = None
     g0_over_n: FieldOverDensity | None = None
@@ -209,10 +181,19 @@ class StarsTable(Table):
 
 
 class StarFormationTable(Table):
-    """Which calibration, on which maps."""
+    """Which calibration, on which maps.
 
-    calibration: Annotated[str, key_of(STAR_FORMATION)]
+    ``attenuation`` is by the Balmer decrement, with a map of Hbeta among the maps;
+    ``total_infrared`` makes TIR of maps of its bands.
+    """
+
+    calibration: Annotated[
+        str | StarFormation,
+        key_of(STAR_FORMATION, {FINISHED_SFR.key: FINISHED_SFR}),
+    ]
     maps: tuple[str, ...]
+    attenuation: Annotated[str | None, key_of(BALMER)] = None
+    total_infrared: Annotated[str | None, key_of(TOTAL_INFRARED)] = None
     imf: Literal["Kroupa", "Salpeter", "Chabrier"] = "Kroupa"
 
 
@@ -246,9 +227,11 @@ class Recipe(Table):
     maps: dict[str, MapTable]
     metallicity: MetallicityTable
     foreground: ForegroundTable
-    gas: GasTable | Literal["atomic only"]
+    gas: GasTable | Literal["atomic only", "finished map"]
     star_formation: StarFormationTable
     stars: StarsTable | None = None
+    regions: dict[str, RegionTable] = Field(default_factory=dict)
+    records: dict[str, RecordTable] = Field(default_factory=dict)
     relations: dict[str, RelationTable] = Field(default_factory=dict)
     comparison: ComparisonTable = ComparisonTable()
 
@@ -259,4 +242,4 @@ class Recipe(Table):
     @property
     def has_molecular(self) -> bool:
         """Whether the recipe asks for molecular gas."""
-        return isinstance(self.gas, GasTable)
+        return self.gas != "atomic only"

@@ -9,9 +9,11 @@ from typing import Any
 
 from pydantic import BaseModel
 
-from kspipe.recipe.map_table import MapTable
+from kspipe.conversions import Record
+from kspipe.recipe.map_table import Filter, MapTable
 from kspipe.recipe.models import Recipe
 from kspipe.recipe.quantity import Measured, Position
+from kspipe.recipe.varying import ByRegion, OnMap, Profile, typed_as
 
 __all__ = ["resolved_recipe"]
 
@@ -47,6 +49,9 @@ def resolved_recipe(recipe: Recipe, found: Mapping[str, Mapping[str, str]]) -> s
         tables.insert(-1, "stars")
     for name in tables:
         lines += _table(name, getattr(recipe, name))
+    for family, group in (("regions", recipe.regions), ("records", recipe.records)):
+        for name, own in group.items():
+            lines += _table(f"{family}.{name}", own)
     for name, relation in recipe.relations.items():
         lines += ["", f"[relations.{name}]", f"law = {_value(relation.law)}"]
         lines += [
@@ -60,7 +65,7 @@ def _table(name: str, table: BaseModel) -> list[str]:
     lines = ["", f"[{name}]"]
     for key in type(table).model_fields:
         value = getattr(table, key)
-        if value is not None:
+        if value is not None and value != {}:
             origin = "" if key in table.model_fields_set else "  # default"
             lines.append(f"{key} = {_value(value)}{origin}")
     return lines
@@ -79,6 +84,10 @@ def _map(name: str, table: MapTable, found: Mapping[str, str]) -> list[str]:
     return lines
 
 
+def _key(key: str) -> str:
+    return key if key.isidentifier() else _value(key)
+
+
 def _value(value: Any) -> str:
     """Write one value in TOML."""
     if isinstance(value, Measured | Position):
@@ -86,13 +95,20 @@ def _value(value: Any) -> str:
             return repr(float(value.text))
         except ValueError:
             return _value(value.text)
+    if isinstance(value, OnMap | Profile | ByRegion | Filter):
+        plain = {"filter": value.text} if isinstance(value, Filter) else typed_as(value)
+        return _value(plain)
+    if isinstance(value, Mapping):
+        pairs = [f"{_key(key)} = {_value(entry)}" for key, entry in value.items()]
+        return "{" + ", ".join(pairs) + "}"
     if isinstance(value, bool):
         return str(value).lower()
     if isinstance(value, int | float):
         return repr(value)
-    if isinstance(value, str | Path):
+    if isinstance(value, str | Path | Record):
         # A JSON string is a TOML basic string.
-        return json.dumps(str(value), ensure_ascii=False)
+        text = value.key if isinstance(value, Record) else str(value)
+        return json.dumps(text, ensure_ascii=False)
     if isinstance(value, BaseModel):
         pairs = [
             f"{field.alias or key} = {_value(getattr(value, key))}"

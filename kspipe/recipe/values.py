@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable, Mapping
+from types import MappingProxyType
 from typing import Annotated, Any, Final
 
-from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, ValidationInfo
 
 from kspipe.core.errors import nearest
 from kspipe.core.registry import Registry
@@ -14,7 +16,6 @@ from kspipe.recipe.quantity import Measured, parse_measured, parse_percent
 
 __all__ = [
     "NO_ERROR",
-    "Abundance",
     "Angle",
     "Arcsec",
     "Distance",
@@ -25,13 +26,13 @@ __all__ = [
     "Opacity",
     "Percent",
     "Ratio",
-    "RatioOrZero",
-    "Reddening",
     "Speed",
+    "StellarMass",
     "Table",
     "TracerName",
     "Wavelength",
     "key_of",
+    "key_or",
 ]
 
 
@@ -69,13 +70,39 @@ def _opacity(factor: Measured) -> Measured:
     return factor
 
 
-def key_of(registry: Registry[Any]) -> Any:
-    """Validator of a key of a registry."""
+def key_of(registry: Registry[Any], more: Mapping[str, Any] = MappingProxyType({})) -> Any:
+    """Validator of a key of a registry, or of the name of a record of the user's own.
 
-    def check(typed: Any) -> str:
+    The user's own records of the recipe stand, by name, in the validation context; one that is
+    named becomes the record itself, like one of `more`.
+    """
+    kind = type(next(iter(registry)))
+
+    def check(typed: Any, info: ValidationInfo) -> Any:
+        if isinstance(typed, kind):
+            return typed
+        own = {**(info.context or {}).get("records", {}), **more}
+        if isinstance(typed, str) and isinstance(own.get(typed), kind):
+            return own[typed]
         if not isinstance(typed, str) or typed not in registry:
             raise ValueError(registry.unknown(str(typed)))
         return typed
+
+    return BeforeValidator(check)
+
+
+def key_or(registry: Registry[Any], other: Callable[[Any], Any], hint: str) -> Any:
+    """Validator of a key as in `key_of`, or of another value that does not begin with a letter."""
+    find = key_of(registry).func
+
+    def check(typed: Any, info: ValidationInfo) -> Any:
+        if not isinstance(typed, str) or not typed[:1].isalpha():
+            is_record = hasattr(typed, "certainty")
+            return typed if is_record else other(typed)
+        try:
+            return find(typed, info)
+        except ValueError as error:
+            raise ValueError(f"{error}; {hint}") from None
 
     return BeforeValidator(check)
 
@@ -94,27 +121,17 @@ Inclination = Annotated[
     Measured, _measured("deg", '"41 +- 3 deg"'), _between(0, 90, "0 (face-on), or 0 to 90 deg")
 ]
 Angle = Annotated[Measured, _measured("deg", '"128 +- 2 deg"')]
-Abundance = Annotated[
-    Measured,
-    _measured("", '8.69 or "8.69 +- 0.05"'),
-    _between(6.5, 9.5, "12+log10(O/H) between 6.5 and 9.5"),
-]
 Magnitude = Annotated[Measured, _measured("mag", '"18.82 mag"')]
 Wavelength = Annotated[
     Measured,
     _measured("um", '"1538.6 Angstrom" or "0.1539 um"'),
     _between(0, math.inf, "a positive wavelength"),
 ]
-Reddening = Annotated[
-    Measured,
-    _measured("", '0.03 or "0.03 +- 0.005"'),
-    _between(0, 3, "E(B-V), 0 or between 0 and 3 mag"),
-]
 Ratio = Annotated[
     Measured, _measured("", '0.65 or "0.65 +- 0.08"'), _between(0, 10, "a ratio between 0 and 10")
 ]
-RatioOrZero = Annotated[
-    Measured, _measured("", '0.3 or "0.3 +- 0.1"'), _between(0, 10, "a ratio, 0 or 0 to 10")
+StellarMass = Annotated[
+    Measured, _measured("solMass", '"2e10 solMass"'), _between(0, math.inf, "a positive mass")
 ]
 Offset = Annotated[Measured, _measured("dex", '"0.2 +- 0.1 dex"')]
 FieldOverDensity = Annotated[

@@ -31,7 +31,7 @@ from kspipe.stages.steps import read_findings
 from kspipe.stages.summary import make_summary, summary_text
 from kspipe.stages.surface import surfaces_of
 
-__all__ = ["compare_relations"]
+__all__ = ["compare_relations", "reduced_plan"]
 
 log = logging.getLogger(__name__)
 
@@ -68,7 +68,7 @@ def compare_relations(
         If the folder holds no reduction, or one made from other inputs.
     """
     folder = ProductFolder.open(out)
-    plan = _reduced_plan(folder, memory)
+    plan = reduced_plan(folder, memory)
     recipe, grid = plan.recipe, plan.grid
     print_ = compare_print(recipe, folder.stages["convert"]["fingerprint"])
     if not folder.check({"compare": print_}, overwrite=overwrite):
@@ -123,8 +123,14 @@ def compare_relations(
     return True
 
 
-def _reduced_plan(folder: ProductFolder, memory: InMemory | None) -> Plan:
-    """Plan DIR/recipe.toml again and refuse a reduction that was made from something else."""
+def reduced_plan(folder: ProductFolder, memory: InMemory | None) -> Plan:
+    """Plan DIR/recipe.toml again and refuse a reduction that was made from something else.
+
+    Raises
+    ------
+    OutputError
+        If there is no reduction, it is stale, or its files were changed.
+    """
     out = folder.path
     if "convert" not in folder.stages or not (out / "recipe.toml").is_file():
         raise OutputError(

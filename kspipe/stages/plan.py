@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 import warnings
 from collections.abc import Mapping
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -18,15 +18,22 @@ from kspipe import __version__
 from kspipe.conversions import (
     ALPHA_CO,
     ATOMIC,
+    BALMER,
     EXTINCTION,
+    FINISHED_SFR,
+    GIVEN_ALPHA_CO,
     LINE_RATIO,
+    MASS_METALLICITY,
+    NITROGEN,
     STAR_FORMATION,
     STARS,
-    USUAL_SHIFT_DEX,
+    STRONG_LINES,
+    TOTAL_INFRARED,
+    AlphaCO,
     Choices,
-    scale_shift_dex,
+    LineRatio,
+    Record,
 )
-from kspipe.core.constants import OH_SOLAR
 from kspipe.core.errors import Fault, KspipeWarning, MapError
 from kspipe.kernels.geometry import beam_axes
 from kspipe.maps import MapSource
@@ -34,8 +41,10 @@ from kspipe.maps.header import celestial_wcs
 from kspipe.maps.source import StoredImage
 from kspipe.matching import Grid, choose_beam
 from kspipe.recipe import Recipe
+from kspipe.recipe.varying import ByRegion, OnMap, Profile, typed_as
 from kspipe.relations import LAWS
 from kspipe.stages.folder import file_checksum, fingerprint
+from kspipe.stages.metallicity import metallicity_warnings
 
 __all__ = ["InMemory", "Plan", "choices_of", "compare_print", "convert_print", "make_plan"]
 
@@ -109,7 +118,7 @@ def make_plan(recipe: Recipe, memory: InMemory | None = None) -> Plan:
     grid = _grid(recipe, sources, fwhm)
     _check_grid(grid)
     _warn_inclination(recipe)
-    _warn_scale(recipe)
+    _warn_metallicity(recipe)
     _warn_opacity(recipe)
     prints = {f"match.{name}": _match_print(recipe, sources[name], grid, fwhm) for name in sources}
     prints["convert"] = convert_print(recipe, prints)
@@ -174,25 +183,11 @@ def _warn_opacity(recipe: Recipe) -> None:
         )
 
 
-def _warn_scale(recipe: Recipe) -> None:
-    """Tell that alpha_CO stands on another metallicity scale than the recipe."""
-    alpha_co, given = choices_of(recipe).alpha_co, recipe.metallicity.scale
-    wanted = ALPHA_CO.get(alpha_co).oh_scale if alpha_co else None
-    if wanted is None or given in (wanted, "not stated"):
-        return
-    oh = recipe.metallicity.oh.value if recipe.metallicity.oh else OH_SOLAR
-    shift = scale_shift_dex(given, wanted, oh)
-    size = (
-        f"{shift:+.2f} dex at {oh:g}"
-        if shift is not None
-        else "usually {:g} to {:g} dex (common practice)".format(*USUAL_SHIFT_DEX)
-    )
-    warnings.warn(
-        f'metallicity.scale "{given}": "{alpha_co}" is tied to {wanted}, a shift of {size}; '
-        "12+log10(O/H) is used as it is",
-        KspipeWarning,
-        stacklevel=2,
-    )
+def _warn_metallicity(recipe: Recipe) -> None:
+    alpha_co = choices_of(recipe).alpha_co
+    record = None if alpha_co is None else ALPHA_CO.get(alpha_co)
+    for text in metallicity_warnings(recipe, record):
+        warnings.warn(text, KspipeWarning, stacklevel=3)
 
 
 def _match_print(recipe: Recipe, source: MapSource, grid: Grid, fwhm: float) -> str:
@@ -233,25 +228,37 @@ def _checksum(image: Any) -> str:
 def choices_of(recipe: Recipe) -> Choices:
     """Pick the records that a recipe names, by key."""
     gas = None if isinstance(recipe.gas, str) else recipe.gas
+    finished = {t.tracer: t.finished for t in recipe.maps.values() if t.finished is not None}
+    calibration = recipe.star_formation.calibration
+    if calibration is FINISHED_SFR or calibration == FINISHED_SFR:
+        calibration = replace(FINISHED_SFR, imf=finished["Sigma_SFR"].imf)
     return Choices(
-        calibration=recipe.star_formation.calibration,
-        alpha_co=gas.alpha_co if gas else None,
+        calibration=calibration,
+        finished=finished,
+        balmer=recipe.star_formation.attenuation,
+        total_infrared=recipe.star_formation.total_infrared,
+        alpha_co=_or(gas.alpha_co, str | AlphaCO, GIVEN_ALPHA_CO) if gas else None,
         stars=recipe.stars.record if recipe.stars else None,
         imf=recipe.star_formation.imf,
         ebv_scale=recipe.foreground.ebv_scale,
-        line_ratio=gas.line_ratio if gas and isinstance(gas.line_ratio, str) else None,
+        line_ratio=_or(gas.line_ratio, str | LineRatio, None) if gas else None,
         extinction={
             "FUV": recipe.foreground.uv,
             "NUV": recipe.foreground.uv,
             "Halpha": recipe.foreground.halpha,
+            "Hbeta": recipe.foreground.halpha,
         },
     )
+
+
+def _or(value: Any, kind: Any, other: Any) -> Any:
+    return value if isinstance(value, kind) else other
 
 
 def records_of(recipe: Recipe) -> list[Any]:
     """All conversion records that a recipe uses."""
     choices = choices_of(recipe)
-    records: list[Any] = [ATOMIC.get(choices.atomic)]
+    records: list[Any] = [ATOMIC.get(choices.atomic)] if recipe.map_of("HI") else []
     if choices.alpha_co is not None:
         records.append(ALPHA_CO.get(choices.alpha_co))
     if choices.line_ratio is not None:
@@ -261,12 +268,41 @@ def records_of(recipe: Recipe) -> list[Any]:
     calibration = STAR_FORMATION.get(choices.calibration)
     records.append(calibration)
     keys = {choices.extinction[t] for t in calibration.tracers if t in choices.extinction}
-    return [*records, *(EXTINCTION.get(key) for key in sorted(keys))]
+    records += [EXTINCTION.get(key) for key in sorted(keys)]
+    if choices.balmer is not None:
+        records.append(BALMER.get(choices.balmer))
+    if choices.total_infrared is not None:
+        records.append(TOTAL_INFRARED.get(choices.total_infrared))
+    relations = {recipe.maps[n].nii_relation for n in recipe.star_formation.maps}
+    records += [NITROGEN.get(key) for key in sorted(filter(None, relations))]
+    metallicity = recipe.metallicity
+    if metallicity.calibration is not None:
+        records.append(STRONG_LINES.get(metallicity.calibration))
+    if metallicity.relation is not None:
+        records.append(MASS_METALLICITY.get(metallicity.relation))
+    return records
 
 
-def _values(table: BaseModel, *left_out: str) -> dict[str, Any]:
+def _values(table: BaseModel) -> dict[str, Any]:
     """Values of a recipe's table, as they are and not as they were typed."""
-    return {key: getattr(table, key) for key in type(table).model_fields if key not in left_out}
+    return {key: _content(getattr(table, key)) for key in type(table).model_fields}
+
+
+def _content(value: Any) -> Any:
+    """A value by what it holds: files by their contents, the user's own records by their words."""
+    if isinstance(value, Path):
+        return file_checksum(value)
+    if isinstance(value, Record):
+        return value.sentence
+    if isinstance(value, BaseModel):
+        return _values(value)
+    if isinstance(value, OnMap | Profile | ByRegion):
+        return _content(typed_as(value))
+    if isinstance(value, list | tuple):
+        return [_content(entry) for entry in value]
+    if isinstance(value, Mapping):
+        return {str(key): _content(entry) for key, entry in value.items()}
+    return value
 
 
 def convert_print(recipe: Recipe, match_prints: Mapping[str, str]) -> str:
@@ -275,13 +311,17 @@ def convert_print(recipe: Recipe, match_prints: Mapping[str, str]) -> str:
         {
             "matched": {k: v for k, v in match_prints.items() if k.startswith("match.")},
             "galaxy": _values(recipe.galaxy),
-            "metallicity": _values(recipe.metallicity, "map"),
-            "metallicity map": recipe.metallicity.map and file_checksum(recipe.metallicity.map),
+            "metallicity": _values(recipe.metallicity),
+            "regions": {n: _values(t) for n, t in recipe.regions.items()},
             "foreground": _values(recipe.foreground),
             "gas": recipe.gas if isinstance(recipe.gas, str) else _values(recipe.gas),
             "stars": recipe.stars and _values(recipe.stars),
             "star formation": _values(recipe.star_formation),
-            "ratios": {n: [t.nii_ratio, t.as_24um] for n, t in recipe.maps.items()},
+            "finished": {n: str(t.finished) for n, t in recipe.maps.items()},
+            "ratios": {
+                n: _content([t.nii_ratio, t.as_24um, t.nii_relation, t.thermal_fraction, t.diffuse])
+                for n, t in recipe.maps.items()
+            },
             "low_snr": recipe.comparison.low_snr,
             "records": [f"{r.key}: {r.formula}" for r in records_of(recipe)],
         }
@@ -293,7 +333,7 @@ def compare_print(recipe: Recipe, reduction_print: str) -> str:
     return fingerprint(
         {
             "reduction": reduction_print,
-            "relations": {n: _values(t, "defaults") for n, t in recipe.relations.items()},
+            "relations": {n: _values(t) | {"defaults": None} for n, t in recipe.relations.items()},
             "laws": [LAWS.get(t.law).formula for t in recipe.relations.values()],
             "comparison": _values(recipe.comparison),
             "seed": recipe.seed,

@@ -11,7 +11,7 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.conversions import STAR_FORMATION, Ratio, Surface, imf_factor
+from kspipe.conversions import ALPHA_CO, STAR_FORMATION, Ratio, Surface, imf_factor
 from kspipe.core.errors import KspipeWarning
 from kspipe.core.progress import Progress, no_progress
 from kspipe.maps.product import read_matched, write_matched, write_product
@@ -19,10 +19,11 @@ from kspipe.maps.read import load_map, relative_noise, with_photon_noise
 from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import match_map, measure_noise, measure_noise_correlation
 from kspipe.recipe import Recipe
+from kspipe.recipe.quantity import Measured
 from kspipe.recipe.resolved import resolved_recipe
 from kspipe.stages.blank_sky import outside_galaxy, without_background
 from kspipe.stages.folder import ProductFolder
-from kspipe.stages.plan import InMemory, Plan, make_plan, records_of
+from kspipe.stages.plan import InMemory, Plan, choices_of, make_plan, records_of
 from kspipe.stages.steps import (
     STEPS_FILE,
     judge_maps,
@@ -89,7 +90,9 @@ def reduce_maps(
         return False
     to_match = [name for name in plan.sources if f"match.{name}" in stale]
     drop = tuple(
-        stage for stage in folder.stages if stage in ("compare", "figures") or _is_gone(stage, plan)
+        stage
+        for stage in folder.stages
+        if stage in ("compare", "figures", "alternatives") or _is_gone(stage, plan)
     )
     if drop:
         log.info("reduce: out-of-date products of %s are removed", ", ".join(drop))
@@ -161,6 +164,7 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
     galaxy = plan.recipe.galaxy
     lines += _imf_lines(plan.recipe)
     lines += _factor_lines(plan.recipe)
+    lines += [note for field in disc.fields.values() for note in field.notes]
     lines.append(
         f"face-on, helium included (1.36), cos i = {galaxy.cos_i:.5f} applied once; distance "
         f"{galaxy.distance.text}"
@@ -187,7 +191,7 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
             history=[*sources, *lines, *([_RATIO_LINE] if isinstance(surface, Ratio) else [])],
         )
     everywhere = np.ones(plan.grid.shape)
-    anchored = f"scale of 12+log10(O/H): {plan.recipe.metallicity.scale}"
+    anchored = f"scale of 12+log10(O/H): {plan.recipe.metallicity.oh_scale}"
     for name, value, unit, note in (
         ("metallicity", disc.oh, "", anchored),
         ("radius", disc.radius_kpc, "kpc", "deprojected distance from the centre, thin disc"),
@@ -221,29 +225,45 @@ def _interval_of(surface: Surface, unit: str) -> dict[str, tuple[NDArray[Any], s
 def _factor_lines(recipe: Recipe) -> list[str]:
     """Say which typed factors stand beside the records."""
     gas = None if isinstance(recipe.gas, str) else recipe.gas
-    lines = []
+    lines = [
+        f"maps.{name}: a finished map of {table.tracer}, {table.finished}"
+        for name, table in recipe.maps.items()
+        if table.finished is not None
+    ]
     if gas and gas.hi_opacity:
         lines.append(f"atomic gas x {gas.hi_opacity}, one opacity factor for all pixels")
-    if recipe.stars:
+    if recipe.stars and isinstance(recipe.stars.mass_to_light, Measured):
         lines.append(f"mass-to-light ratio of stars: {recipe.stars.mass_to_light}")
     return lines
 
 
 def _warn_unsolved(recipe: Recipe, disc: Disc) -> None:
-    n = int(np.sum((disc.flags & int(Flag.NO_SOLUTION)) != 0))
-    if n:
-        warnings.warn(
-            f'star_formation.calibration: "{recipe.star_formation.calibration}" is a power law, '
-            f"and {n} pixels are at or below zero: NaN, flagged no_solution. What is left is "
-            "biased towards bright pixels",
-            KspipeWarning,
-            stacklevel=2,
-        )
+    unsolved = (disc.flags & int(Flag.NO_SOLUTION)) != 0
+    # Where star formation is there, it is the gas that is not.
+    of_gas = unsolved & np.isfinite(disc.surfaces["sigma_sfr"].value)
+    choices = choices_of(recipe)
+    alpha_co = None if choices.alpha_co is None else ALPHA_CO.get(choices.alpha_co)
+    for where, key, record in (
+        (
+            unsolved & ~of_gas,
+            "star_formation.calibration",
+            STAR_FORMATION.get(choices.calibration),
+        ),
+        (of_gas, "gas.alpha_co", alpha_co),
+    ):
+        n = int(where.sum())
+        if n and record is not None:
+            warnings.warn(
+                f'{key}: "{record.key}" is a power law, and {n} pixels are at or below zero: NaN, '
+                "flagged no_solution. What is left is biased towards bright pixels",
+                KspipeWarning,
+                stacklevel=2,
+            )
 
 
 def _imf_lines(recipe: Recipe) -> list[str]:
     """Say what a change of initial mass function did; nothing where there was none."""
-    given = str(STAR_FORMATION.get(recipe.star_formation.calibration).imf)
+    given = str(STAR_FORMATION.get(choices_of(recipe).calibration).imf)
     wanted = recipe.star_formation.imf
     if given == wanted:
         return []

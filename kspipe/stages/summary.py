@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from kspipe import __version__
 from kspipe.comparison import Headline, Residuals, independent_beams
-from kspipe.core.citations import cite
+from kspipe.core.citations import CITATIONS
 from kspipe.kernels.geometry import beam_axes
 from kspipe.kernels.noise import sum_covariance
 from kspipe.maps.skymap import Flag, SkyMap
@@ -65,7 +65,7 @@ def make_summary(
         "n_independent": independent_beams(int(used.sum()), pixel_area, beam),
         "n_samples": int((used & independent).sum()),
         "n_left_out": left_out(disc, used),
-        "gas": recipe.gas if isinstance(recipe.gas, str) else "atomic and molecular",
+        "gas": "atomic and molecular" if recipe.has_molecular else recipe.gas,
         "totals": _totals(recipe, disc, used, grid),
         "flags": {
             name: int(np.sum((flags[used] & bit) != 0)) for name, bit in Flag.meanings().items()
@@ -87,7 +87,7 @@ def make_summary(
             record.key: {"formula": record.formula, "certainty": record.certainty}
             for record in [*records_of(recipe), *laws]
         },
-        "sources": {key: str(cite(key)) for key in cited},
+        "sources": {key: str(CITATIONS.get(key, key)) for key in cited},
     }
 
 
@@ -128,7 +128,7 @@ def _totals(
         random = math.sqrt(max(sum_covariance(surface.noise, surface.noise, used, jacobian), 0.0))
         face_on = areas * weights[product]
         errors = _common_errors(disc, product, used, face_on)
-        factor = _factor_error(recipe, disc, product, used, face_on)
+        factor = _shift_error(disc, product, used, face_on)
         errors["calibration_error"] = math.hypot(errors["calibration_error"], factor)
         totals[name] = {
             "value": float(np.sum((surface.value * areas)[used])) * weights[product],
@@ -154,7 +154,9 @@ def _common_errors(
     """Errors of a sum that all pixels of a map share: flux scale and zero level, and matching."""
     calibration, matching = 0.0, 0.0
     for tracer, slope in disc.surfaces[product].slopes.items():
-        sky = disc.intensity[tracer]
+        sky = disc.intensity.get(tracer)
+        if sky is None:
+            continue  # a parameter, which is no map and has no flux scale
         per_scale = float(np.sum((slope * sky.value * areas)[used]))
         per_level = float(np.sum((slope * areas)[used]))
         calibration += (sky.common.calibration * per_scale) ** 2
@@ -163,26 +165,12 @@ def _common_errors(
     return {"calibration_error": math.sqrt(calibration), "matching_error": math.sqrt(matching)}
 
 
-def _factor_error(
-    recipe: Recipe,
-    disc: Disc,
-    product: str,
-    used: NDArray[np.bool_],
-    areas: NDArray[np.float64],
+def _shift_error(
+    disc: Disc, product: str, used: NDArray[np.bool_], areas: NDArray[np.float64]
 ) -> float:
-    """Error of a sum from typed factors that multiply a map: HI opacity, M/L of stars."""
-    gas = None if isinstance(recipe.gas, str) else recipe.gas
-    factors = {"HI": gas.hi_opacity if gas else None}
-    if recipe.stars:
-        tracer = recipe.maps[recipe.stars.map].tracer
-        factors[tracer] = recipe.stars.mass_to_light
-    variance = 0.0
-    for tracer, factor in factors.items():
-        slope = disc.surfaces[product].slopes.get(tracer)
-        if factor is not None and slope is not None:
-            per_factor = float(np.sum((slope * disc.intensity[tracer].value * areas)[used]))
-            variance += (factor.error / factor.value * per_factor) ** 2
-    return math.sqrt(variance)
+    """Error of a sum from typed numbers that pixels share, each independent of the others."""
+    sums = [float(np.sum((shift * areas)[used])) for shift in disc.shifts.get(product, [])]
+    return math.hypot(*sums)
 
 
 def summary_text(summary: dict[str, Any]) -> str:

@@ -2,33 +2,36 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Mapping
 from dataclasses import dataclass
-from pathlib import Path
 
 import numpy as np
-from astropy.io import fits
-from astropy.wcs import WCS
 from numpy.typing import NDArray
 
 from kspipe.conversions import (
+    NITROGEN,
+    Field,
     Parameters,
     Surface,
     carry_noise,
     convert,
-    oh_from_gradient,
+    parameter_shifts,
 )
-from kspipe.core.errors import Fault, GridError
 from kspipe.core.tracers import CO_LINES
-from kspipe.kernels.geometry import disc_radius
-from kspipe.maps.header import celestial_wcs
-from kspipe.maps.skymap import Flag, SkyMap
-from kspipe.maps.source import StoredImage
+from kspipe.kernels.diffuse import smooth_part
+from kspipe.maps.header import pixel_jacobian
+from kspipe.maps.skymap import Flag, NoiseTerm, SkyMap
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe
+from kspipe.recipe.map_table import Filter
 from kspipe.recipe.quantity import Measured
+from kspipe.recipe.varying import ByRegion, OnMap, Profile
+from kspipe.stages.metallicity import metallicity_of
+from kspipe.stages.place import Place, spread
 from kspipe.stages.plan import choices_of
 
-__all__ = ["Disc", "parameters_of", "surfaces_of"]
+__all__ = ["Disc", "fields_of", "parameters_of", "surfaces_of", "used_maps"]
 
 Array = NDArray[np.float64]
 
@@ -50,6 +53,10 @@ class Disc:
         In the disc.
     intensity : dict of str to SkyMap
         Matched maps by tracer.
+    shifts : dict of str to list of (ny, nx) float64 array
+        By product: its change for 1 sigma of each typed number that pixels share.
+    fields : dict of str to Field
+        Quantities of the recipe that may vary, by their names in `Parameters`.
     """
 
     surfaces: dict[str, Surface]
@@ -58,6 +65,8 @@ class Disc:
     oh: Array
     radius_kpc: Array
     intensity: dict[str, SkyMap]
+    shifts: dict[str, list[Array]]
+    fields: dict[str, Field]
 
 
 def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
@@ -74,90 +83,101 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
     -------
     Disc
     """
-    galaxy = recipe.galaxy
-    radius_kpc = (
-        disc_radius(
-            *grid.offsets_arcsec(),
-            inclination_deg=galaxy.inclination.value,
-            pa_deg=galaxy.position_angle.value,
-        )
-        * galaxy.pc_per_arcsec
-        / 1e3
-    )
-    oh = metallicity_of(recipe, grid, radius_kpc)
-    used = _used_maps(recipe, matched)
-    converted = convert(
-        {tracer: sky.value for tracer, sky in used.items()},
-        choices_of(recipe),
-        parameters_of(recipe, oh),
-    )
-    surfaces = carry_noise(converted, {tracer: sky.noise for tracer, sky in used.items()})
+    place = Place.of(recipe, grid)
+    fields = fields_of(recipe, place)
+    used = used_maps(recipe, matched)
+    intensity = {tracer: sky.value for tracer, sky in used.items()}
+    choices, parameters = choices_of(recipe), parameters_of(recipe, fields)
+    converted = convert(intensity, choices, parameters)
+    shifts = parameter_shifts(converted, intensity, choices, parameters, fields)
+    noise = {tracer: sky.noise for tracer, sky in used.items()}
+    beam = next(iter(used.values())).beam_arcsec2
+    noise |= {
+        name: (NoiseTerm(f"parameter {name}", np.broadcast_to(field.random, grid.shape), beam),)
+        for name, field in fields.items()
+        if field.random is not None
+    }
+    surfaces = carry_noise(shifts.converted, noise)
     coverage = {
-        name: np.min([used[tracer].coverage for tracer in surface.slopes], axis=0)
+        name: np.min([used[t].coverage for t in surface.slopes if t in used], axis=0)
         for name, surface in surfaces.items()
     }
-    flags = _flags(recipe, surfaces, list(used.values()), converted.flags)
-    return Disc(surfaces, coverage, flags, oh, radius_kpc, used)
-
-
-def _used_maps(recipe: Recipe, matched: dict[str, SkyMap]) -> dict[str, SkyMap]:
-    """Maps that a surface density is made of, by tracer."""
-    wanted = {*recipe.star_formation.maps, *({recipe.stars.map} if recipe.stars else ())}
-    gas = {"HI", *(CO_LINES if recipe.has_molecular else ())}
-    return {sky.tracer: sky for name, sky in matched.items() if sky.tracer in gas or name in wanted}
-
-
-def parameters_of(recipe: Recipe, oh: Array) -> Parameters:
-    """The numbers of a recipe that are not records, with 12 + log10(O/H) on the grid."""
-    gas = None if isinstance(recipe.gas, str) else recipe.gas
-    ratio = gas.line_ratio if gas else None
-    tables = [recipe.maps[name] for name in recipe.star_formation.maps]
-    nii = next((t.nii_ratio for t in tables if t.nii_ratio is not None), None)
-    as_24um = next((t.as_24um for t in tables if t.as_24um is not None), None)
-    return Parameters(
-        cos_i=recipe.galaxy.cos_i,
-        oh=oh,
-        line_ratio=ratio.value if isinstance(ratio, Measured) else 1.0,
-        ebv=recipe.foreground.ebv.value,
-        nii_ratio=nii.value if nii else 0.0,
-        as_24um=as_24um.value if as_24um else 1.0,
-        hi_opacity=gas.hi_opacity.value if gas and gas.hi_opacity else 1.0,
-        mass_to_light=recipe.stars.mass_to_light.value if recipe.stars else 0.5,
-        ms_offset_dex=gas.ms_offset.value if gas and gas.ms_offset else None,
-        g0_over_n=gas.g0_over_n.value if gas and gas.g0_over_n else None,
+    outside = [f.outside for f in fields.values() if f.outside is not None]
+    told = dict(converted.flags)
+    told["outside_range"] = np.logical_or.reduce(
+        np.broadcast_arrays(np.zeros(grid.shape, bool), *outside, told.get("outside_range", False))
+    )
+    flags = _flags(recipe, surfaces, list(used.values()), told)
+    return Disc(
+        surfaces, coverage, flags, fields["oh"].value, place.radius_kpc, used, shifts.common, fields
     )
 
 
-def metallicity_of(recipe: Recipe, grid: Grid, radius_kpc: Array) -> Array:
-    """12 + log10(O/H) on the grid, from a gradient or from a map.
-
-    Raises
-    ------
-    GridError
-        If a metallicity map cannot be read or does not reach the galaxy.
-    """
-    table = recipe.metallicity
-    if table.map is not None:
-        return _metallicity_map(table.map, grid)
-    slope, per = table.slope
-    if per == "r25" and recipe.galaxy.r25 is not None:
-        slope /= recipe.galaxy.r25.value * recipe.galaxy.pc_per_arcsec / 1e3
-    centre = table.oh.value if table.oh is not None else np.nan
-    return oh_from_gradient(radius_kpc, centre, slope)
+def used_maps(recipe: Recipe, matched: dict[str, SkyMap]) -> dict[str, SkyMap]:
+    """Maps that a surface density is made of, by tracer."""
+    wanted = {*recipe.star_formation.maps, *({recipe.stars.map} if recipe.stars else ())}
+    gas = {"HI", "Sigma_HI", "Sigma_star"}
+    gas |= {*CO_LINES, "Sigma_mol"} if recipe.has_molecular else set()
+    return {
+        sky.tracer: _without_diffuse(sky, recipe)
+        for name, sky in matched.items()
+        if sky.tracer in gas or name in wanted
+    }
 
 
-def _metallicity_map(path: Path, grid: Grid) -> Array:
-    """Interpolate a map of 12 + log10(O/H) linearly; it is not smoothed."""
-    # Its imports cost a second, and few recipes need it.
-    from reproject import reproject_interp  # noqa: PLC0415
+def _without_diffuse(sky: SkyMap, recipe: Recipe) -> SkyMap:
+    """Take off what is smoother than a stated length, where the recipe says so."""
+    stated = recipe.maps[sky.name].diffuse
+    if not isinstance(stated, Filter) or sky.name not in recipe.star_formation.maps:
+        return sky
+    ny, nx = sky.value.shape
+    pixel_arcsec = math.sqrt(abs(float(np.linalg.det(pixel_jacobian(sky.wcs, nx / 2, ny / 2)))))
+    fwhm_pix = stated.kpc * 1e3 / recipe.galaxy.pc_per_arcsec / pixel_arcsec
+    smooth = smooth_part(sky.value, sky.error, fwhm_pix)
+    share = float(np.nansum(smooth) / np.nansum(sky.value))
+    step = f"diffuse emission taken off: smoother than {stated}, {share:.3g} of the flux"
+    return sky.with_step(step, value=sky.value - smooth)
 
-    image = StoredImage.find(path, None)
-    wcs: WCS = celestial_wcs(image.header, f"metallicity.map, {image}")
-    hdu = fits.PrimaryHDU(image.read(), wcs.to_header())
-    oh, _ = reproject_interp(hdu, grid.wcs, shape_out=grid.shape, order="bilinear")
-    if not np.isfinite(oh).any():
-        raise GridError(Fault("metallicity.map", f"{image} does not reach the galaxy"))
-    return np.asarray(oh, dtype=float)
+
+def fields_of(recipe: Recipe, place: Place) -> dict[str, Field]:
+    """Quantities of a recipe that may vary over the disc, by their names in `Parameters`."""
+    gas = None if isinstance(recipe.gas, str) else recipe.gas
+    typed: dict[str, tuple[str, object]] = {
+        "ebv": ("foreground.ebv", recipe.foreground.ebv),
+        "alpha_co": ("gas.alpha_co", gas and gas.alpha_co),
+        "line_ratio": ("gas.line_ratio", gas and gas.line_ratio),
+        "hi_opacity": ("gas.hi_opacity", gas and gas.hi_opacity),
+        "ms_offset_dex": ("gas.ms_offset", gas and gas.ms_offset),
+        "g0_over_n": ("gas.g0_over_n", gas and gas.g0_over_n),
+        "mass_to_light": ("stars.mass_to_light", recipe.stars and recipe.stars.mass_to_light),
+    }
+    for name in recipe.star_formation.maps:
+        table = recipe.maps[name]
+        where = f"maps.{name}"
+        mine = {
+            "nii_ratio": (f"{where}.nii_ratio", table.nii_ratio),
+            "as_24um": (f"{where}.as_24um", table.as_24um),
+            "thermal_fraction": (f"{where}.thermal_fraction", table.thermal_fraction),
+            f"diffuse.{table.tracer}": (f"{where}.diffuse", table.diffuse),
+        }
+        if table.nii_relation is not None and recipe.galaxy.m_b is not None:
+            ratio = NITROGEN.get(table.nii_relation)(recipe.galaxy.m_b.value)
+            mine["nii_ratio"] = (where, Measured(ratio, 0.0, f"{ratio:.5g}"))
+        typed |= {key: entry for key, entry in mine.items() if entry[1] is not None}
+    fields = {
+        name: spread(quantity, place, where)
+        for name, (where, quantity) in typed.items()
+        if isinstance(quantity, Measured | OnMap | Profile | ByRegion)
+    }
+    return {"oh": metallicity_of(recipe, place), **fields}
+
+
+def parameters_of(recipe: Recipe, fields: Mapping[str, Field]) -> Parameters:
+    """The numbers of a recipe that are not records."""
+    parameters = Parameters(cos_i=recipe.galaxy.cos_i)
+    for name, field in fields.items():
+        parameters = parameters.changed(name, field.value)
+    return parameters
 
 
 def _flags(

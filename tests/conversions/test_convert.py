@@ -61,6 +61,7 @@ linear_choices = pytest.mark.parametrize(
     ids=lambda c: "-".join([c.calibration, str(c.alpha_co), *c.extinction.values(), c.imf]),
 )
 TYPICAL = {"HI": 300.0, "CO(2-1)": 5.0, "FUV": 0.05, "NUV": 0.05, "24um": 1.0, "Halpha": 1e-5}
+TYPICAL |= {"70um": 20.0, "TIR": 1e-3, "1.4GHz": 0.1}
 
 
 def sky(choices: Choices, line: str = "CO(2-1)", shape: tuple[int, ...] = SHAPE) -> Maps:
@@ -89,6 +90,9 @@ def parameters(shape: tuple[int, ...] = ()) -> Parameters:
         sigma_star=rng.lognormal(5.0, 1.0, shape),
         ms_offset_dex=rng.uniform(-0.5, 0.5, shape),
         g0_over_n=rng.uniform(0.001, 0.1, shape),
+        alpha_co=rng.uniform(1.0, 10.0, shape),
+        thermal_fraction=rng.uniform(0.05, 0.2, shape),
+        diffuse={"24um": rng.uniform(0.0, 0.5, shape), "Halpha": rng.uniform(0.0, 0.5, shape)},
     )
 
 
@@ -103,7 +107,9 @@ def assert_same(got: Converted, expected: Converted, rel: float = 1e-12) -> None
 
 def at(given: Parameters, index: tuple[int, ...]) -> Parameters:
     stated = {f.name: value for f in fields(given) if (value := getattr(given, f.name)) is not None}
-    return Parameters(**{name: np.asarray(value)[index] for name, value in stated.items()})
+    fractions = {t: np.asarray(v)[index] for t, v in stated.pop("diffuse").items()}
+    cut = {name: np.asarray(value)[index] for name, value in stated.items()}
+    return Parameters(**cut, diffuse=fractions)
 
 
 # --- contracts -----------------------------------------------------------------------------------
@@ -174,7 +180,9 @@ def test_signs_and_blanks_are_kept(choices: Choices) -> None:
 def test_inputs_are_untouched(choices: Choices) -> None:
     maps, given = sky(choices), parameters(SHAPE)
     before = pickle.dumps((maps, given, choices))
-    arrays = [*maps.values(), *(np.asarray(getattr(given, f.name)) for f in fields(given))]
+    stated = {f.name: getattr(given, f.name) for f in fields(given)}
+    arrays = [*maps.values(), *(np.asarray(stated[name]) for name in stated if name != "diffuse")]
+    arrays += [np.asarray(fraction) for fraction in given.diffuse.values()]
     for array in arrays:
         array.flags.writeable = False
     got = convert(maps, choices, given)

@@ -10,14 +10,17 @@ import pytest
 from kspipe.conversions import (
     ALPHA_CO,
     ATOMIC,
+    BALMER,
     EXTINCTION,
     IMFS,
     INPUTS,
     LINE_RATIO,
     MASS_METALLICITY,
+    NITROGEN,
     STAR_FORMATION,
     STARS,
     STRONG_LINES,
+    TOTAL_INFRARED,
     AlphaCO,
     Extinction,
     LineRatio,
@@ -32,13 +35,16 @@ from kspipe.relations import LAWS
 FAMILIES = {
     "atomic": ATOMIC,
     "alpha_co": ALPHA_CO,
+    "balmer": BALMER,
     "extinction": EXTINCTION,
     "imf": IMFS,
     "line_ratio": LINE_RATIO,
     "mass_metallicity": MASS_METALLICITY,
+    "nitrogen": NITROGEN,
     "star_formation": STAR_FORMATION,
     "stars": STARS,
     "strong_lines": STRONG_LINES,
+    "total_infrared": TOTAL_INFRARED,
     "relations": LAWS,
 }
 SHELVED = [(name, record) for name, family in FAMILIES.items() for record in family]
@@ -53,6 +59,9 @@ WITHOUT_MASS = [
         MASS_METALLICITY,
         STARS,
         STRONG_LINES,
+        BALMER,
+        NITROGEN,
+        TOTAL_INFRARED,
     )
     for record in family
 ]

@@ -156,7 +156,9 @@ def test_the_surface_form_is_the_luminosity_form() -> None:
     # A face-on square kiloparsec of uniform brightness has the luminosity 4 pi I kpc^2 (C322 to
     # C327 are these luminosities).
     per_unit = {"FUV": NU_FUV * L_NU, "24um": NU_24 * L_NU, "Halpha": L_LINE}
-    per_unit["NUV"] = C / 2271e-8 * L_NU
+    per_unit |= {"NUV": C / 2271e-8 * L_NU, "70um": C / 70e-4 * L_NU, "TIR": L_LINE}
+    # The radio continuum is counted per frequency.
+    per_unit["1.4GHz"] = L_NU
     for record in STAR_FORMATION:
         if record.luminosity and record.is_linear:
             whole = record.rate({t: np.array(per_unit[t]) for t in record.tracers})

@@ -130,6 +130,8 @@ def test_fits_units_mean_the_canonical_ones(canonical, unit) -> None:
         "K km/s": u.K * u.km / u.s,
         "MJy/sr": u.MJy / u.sr,
         "erg/s/cm2/sr": u.erg / u.s / u.cm**2 / u.sr,
+        "Msun/pc2": u.Msun / u.pc**2,
+        "Msun/yr/kpc2": u.Msun / u.yr / u.kpc**2,
     }[canonical]
     assert u.Unit(unit, format="fits") == expected
 

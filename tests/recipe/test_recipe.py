@@ -206,7 +206,7 @@ def test_atomic_only_is_typed(good, folder) -> None:
         ({"maps__co": ...}, "gas.alpha_co", 'gas = "atomic only"'),
         ({"gas__alpha_co": ...}, "gas.alpha_co", "missing"),
         ({"gas__alpha_co": "bolato2013_galactic"}, "gas.alpha_co", '"bolatto2013_galactic"'),
-        ({"gas__alpha_co": 4.35}, "gas.alpha_co", "4.35"),
+        ({"gas__alpha_co": -4.35}, "gas.alpha_co", "alpha_CO between 0 and 1000"),
         ({"gas__line_ratio": ...}, "gas.line_ratio", "CO(2-1) needs its ratio"),
         ({"gas__line_ratio": 0}, "gas.line_ratio", "ratio between 0 and 10"),
         ({"gas__line_ratio": -0.65}, "gas.line_ratio", "ratio between 0 and 10"),
