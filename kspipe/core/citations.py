@@ -106,9 +106,7 @@ CITATIONS = _citations(
     Citation("polzin2024", "Polzin et al. 2024", "ApJ 966, 172", "2024ApJ...966..172P"),
     Citation("elmegreen1989", "Elmegreen 1989", "ApJ 338, 178", "1989ApJ...338..178E"),
     Citation("blitz2006", "Blitz & Rosolowsky 2006", "ApJ 650, 933", "2006ApJ...650..933B"),
-    Citation(
-        "ostriker2010", "Ostriker, McKee & Leroy 2010", "ApJ 721, 975", "2010ApJ...721..975O"
-    ),
+    Citation("ostriker2010", "Ostriker, McKee & Leroy 2010", "ApJ 721, 975", "2010ApJ...721..975O"),
     Citation("kim2011", "Kim, Kim & Ostriker 2011", "ApJ 743, 25", "2011ApJ...743...25K"),
     Citation("leroy2013", "Leroy et al. 2013", "AJ 146, 19", "2013AJ....146...19L"),
     Citation("bigiel2008", "Bigiel et al. 2008", "AJ 136, 2846", "2008AJ....136.2846B"),

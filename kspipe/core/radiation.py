@@ -2,12 +2,11 @@
 
 from __future__ import annotations
 
-from typing import Final, Literal, TypeVar
+from typing import Any, Final, Literal
 
 __all__ = ["FIELD_UNITS", "FieldUnit", "field_in"]
 
 FieldUnit = Literal["solar neighbourhood", "Draine", "Habing"]
-T = TypeVar("T")
 
 # How many Habing fields (1.6e-3 erg/s/cm2 from 6 to 13.6 eV) each unit is worth. The field of
 # Draine 1978 is 1.7 of Habing's (common practice), and papers that scale to the solar
@@ -20,7 +19,7 @@ _IN_HABING: Final[dict[FieldUnit, float]] = {
 FIELD_UNITS: Final = tuple(_IN_HABING)
 
 
-def field_in(field: T, given: FieldUnit, wanted: FieldUnit) -> T:
+def field_in(field: Any, given: FieldUnit, wanted: FieldUnit) -> Any:
     """Express a radiation field in another unit.
 
     Parameters
@@ -34,4 +33,4 @@ def field_in(field: T, given: FieldUnit, wanted: FieldUnit) -> T:
     1.7
     """
     factor = _IN_HABING[given] / _IN_HABING[wanted]
-    return field if factor == 1.0 else field * factor  # type: ignore[operator,no-any-return]
+    return field if factor == 1.0 else field * factor

@@ -20,21 +20,21 @@ Partial = Callable[[Any, Any, Any], Any]
 
 # For each operation on (x, y) with the result r, the partial derivatives by x and by y.
 _BY_OPERAND: Final[dict[np.ufunc, tuple[Partial, ...]]] = {
-    np.add: (lambda x, y, r: 1.0, lambda x, y, r: 1.0),
-    np.subtract: (lambda x, y, r: 1.0, lambda x, y, r: -1.0),
-    np.multiply: (lambda x, y, r: y, lambda x, y, r: x),
-    np.divide: (lambda x, y, r: 1.0 / y, lambda x, y, r: -r / y),
-    np.power: (lambda x, y, r: y * r / x, lambda x, y, r: r * np.log(x)),
-    np.maximum: (lambda x, y, r: 1.0 * (x >= y), lambda x, y, r: 1.0 * (x < y)),
-    np.minimum: (lambda x, y, r: 1.0 * (x <= y), lambda x, y, r: 1.0 * (x > y)),
-    np.negative: (lambda x, y, r: -1.0,),
-    np.exp: (lambda x, y, r: r,),
-    np.expm1: (lambda x, y, r: r + 1.0,),
-    np.log: (lambda x, y, r: 1.0 / x,),
-    np.log10: (lambda x, y, r: 1.0 / (np.log(10.0) * x),),
-    np.log1p: (lambda x, y, r: 1.0 / (1.0 + x),),
-    np.sqrt: (lambda x, y, r: 0.5 / r,),
-    np.square: (lambda x, y, r: 2.0 * x,),
+    np.add: (lambda _x, _y, _r: 1.0, lambda _x, _y, _r: 1.0),
+    np.subtract: (lambda _x, _y, _r: 1.0, lambda _x, _y, _r: -1.0),
+    np.multiply: (lambda _x, y, _r: y, lambda x, _y, _r: x),
+    np.divide: (lambda _x, y, _r: 1.0 / y, lambda _x, y, r: -r / y),
+    np.power: (lambda x, y, r: y * r / x, lambda x, _y, r: r * np.log(x)),
+    np.maximum: (lambda x, y, _r: 1.0 * (x >= y), lambda x, y, _r: 1.0 * (x < y)),
+    np.minimum: (lambda x, y, _r: 1.0 * (x <= y), lambda x, y, _r: 1.0 * (x > y)),
+    np.negative: (lambda _x, _y, _r: -1.0,),
+    np.exp: (lambda _x, _y, r: r,),
+    np.expm1: (lambda _x, _y, r: r + 1.0,),
+    np.log: (lambda x, _y, _r: 1.0 / x,),
+    np.log10: (lambda x, _y, _r: 1.0 / (np.log(10.0) * x),),
+    np.log1p: (lambda x, _y, _r: 1.0 / (1.0 + x),),
+    np.sqrt: (lambda _x, _y, r: 0.5 / r,),
+    np.square: (lambda x, _y, _r: 2.0 * x,),
 }
 _COMPARISONS: Final = frozenset(
     {np.less, np.less_equal, np.greater, np.greater_equal, np.equal, np.not_equal, np.isfinite}
@@ -119,8 +119,7 @@ def choose(condition: NDArray[np.bool_], first: Any, second: Any) -> Any:
         return value
     one, other = slopes_of(first), slopes_of(second)
     slopes = {
-        name: np.where(condition, one.get(name, 0.0), other.get(name, 0.0))
-        for name in one | other
+        name: np.where(condition, one.get(name, 0.0), other.get(name, 0.0)) for name in one | other
     }
     return Dual(value, slopes)
 

@@ -17,6 +17,7 @@ from kspipe.recipe.check_records import (
     listed,
     stars_faults,
 )
+from kspipe.recipe.check_relations import rate_choice_faults, relation_faults
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.models import (
     GalaxyTable,
@@ -45,6 +46,7 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
         faults += alpha_co_faults(tables["gas"], has_stars="stars" in tables)
     if isinstance(tables.get("stars"), StarsTable):
         faults += stars_faults(tables["stars"], tables["maps"])
+    faults += relation_faults(tables)
     faults += _map_extras(maps)
     if isinstance(tables["star_formation"], StarFormationTable):
         faults += _star_formation_faults(tables["star_formation"], tables["maps"])
@@ -232,7 +234,7 @@ def check_relation(name: str, raw: object, faults: list[Fault]) -> RelationTable
                 Fault(f"{where}.{key}", f"{value!r} is not a number between {low:g} and {high:g}")
             )
     for key, parameter in known.items():
-        if key not in raw and parameter.default is None:
+        if key not in raw and parameter.default is None and key not in law.one_of:
             faults.append(
                 Fault(
                     f"{where}.{key}",
@@ -240,6 +242,7 @@ def check_relation(name: str, raw: object, faults: list[Fault]) -> RelationTable
                     f"type {key} = ...",
                 )
             )
+    faults += rate_choice_faults(where, law.key, raw)
     if len(faults) > before:
         return None
     given = {key: float(value) for key, value in raw.items() if key != "law"}

@@ -23,7 +23,7 @@ def _constant_time(own: Mapping[str, Any], given: Mapping[str, float]) -> Outcom
 def _power_law(gas: str, log_zero: float, index: float, pivot: float) -> Formula:
     ln_zero = log_zero * np.log(10.0) - index * np.log(pivot)
 
-    def function(own: Mapping[str, Any], given: Mapping[str, float]) -> Outcome:
+    def function(own: Mapping[str, Any], _given: Mapping[str, float]) -> Outcome:
         return Outcome(sigma_sfr=np.exp(ln_zero + index * np.log(own[gas])))
 
     return function
@@ -123,6 +123,6 @@ _power(
     (-3.84, 1.41, 1.0),
     helium=HELIUM_FACTOR, certainty="from memory", scatter=0.28, where="fit to spirals",
     formula="log10 Sigma_SFR = 1.41 log10 Sigma_gas - 3.84",
-    note="Averages over spirals. Index 1.41 +- 0.07 and scatter from the abstract; the constant and "
-    "that helium is included are from memory.",
+    note="Averages over spirals. Index 1.41 +- 0.07 and scatter from the abstract; the constant "
+    "and that helium is included are from memory.",
 )  # fmt: skip

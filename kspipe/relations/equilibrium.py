@@ -74,8 +74,8 @@ LAWS.add(
         label="Ostriker et al. 2010",
         cite="ostriker2010",
         where="vertical and thermal balance (equation numbers from memory)",
-        formula="Sigma_SFR = Sigma_gbc / t_SF; P_th of vertical balance = 12000 k (Sigma_SFR/2.5e-3)"
-        "/(1 + 3 (Z' Sigma/10)^0.4)",
+        formula="Sigma_SFR = Sigma_gbc / t_SF; P_th of vertical balance = 12000 k "
+        "(Sigma_SFR/2.5e-3)/(1 + 3 (Z' Sigma/10)^0.4)",
         certainty="from memory",
         function=_ostriker2010,
         needs=("sigma_gas", "oh", "rho_sd"),
@@ -108,9 +108,7 @@ LAWS.add(
         certainty="from memory",
         function=_kim2011,
         needs=("sigma_gas", "rho_sd"),
-        parameters=(
-            Parameter("gas_dispersion", "vertical, of the gas, km/s", 7.0, 1.0, 50.0),
-        ),
+        parameters=(Parameter("gas_dispersion", "vertical, of the gas, km/s", 7.0, 1.0, 50.0),),
         has_fraction=False,
         helium_factor=HELIUM_FACTOR,
         metallicity_anchor="none: metallicity does not enter",

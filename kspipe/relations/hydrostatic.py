@@ -86,7 +86,7 @@ def _solved(own: Mapping[str, Any], given: Mapping[str, float], field_of: Any) -
     taken = {**own, "two_phase": two_phase}
 
     def excess(w: Any, o: Mapping[str, Any]) -> Any:
-        """ln of s = 2 exp(-w) over the s of the pressure and the field that f(w) implies."""
+        """Ln of s = 2 exp(-w) over the s of the pressure and the field that f(w) implies."""
         ratio = _ratio_at(_fraction(w), o, given, field_of)
         return (LN2 - w) - np.log(ratio)
 
@@ -118,14 +118,14 @@ def _fraction(w: Any) -> Any:
 
 
 def _ratio_at(f: Any, o: Mapping[str, Any], given: Mapping[str, float], field_of: Any) -> Any:
-    """s of the pressure and field that a fraction implies."""
+    """S of the pressure and field that a fraction implies."""
     chi = krumholz2013_chi(f, o["sigma_gas"], o["rho_sd"], field_of(f, o), o["two_phase"])
     return mckee2010_ratio(given["clumping"] * o["sigma_gas"], o["z_prime"], chi)
 
 
 def _krumholz2013(own: Mapping[str, Any], given: Mapping[str, float]) -> Outcome:
     """Sigma_SFR = f_H2 eps_ff Sigma / t_ff at a given field."""
-    f = _solved(own, given, lambda f, o: o["g0"])
+    f = _solved(own, given, lambda _f, o: o["g0"])
     return Outcome(f, f * own["sigma_gas"] * given["efficiency"] / _free_fall(own, given))
 
 

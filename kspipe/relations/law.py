@@ -200,7 +200,9 @@ class Law:
         size = int(np.prod(shape))
         made = _Blank(size, self.has_fraction, tuple(taken), slopes=slopes)
         flat = {
-            name: array.reshape(()) if array.size == 1 else np.broadcast_to(array, shape).reshape(-1)
+            name: array.reshape(())
+            if array.size == 1
+            else np.broadcast_to(array, shape).reshape(-1)
             for name, array in taken.items()
         }
         for start in range(0, size, BLOCK):
@@ -248,6 +250,12 @@ class Law:
             values[name] = float(value)
         return values
 
+    def _usable(self, name: str, value: Array) -> Array:
+        """An input where it can have a prediction, else NaN."""
+        if name == self.gas:
+            return value if self.is_linear else np.where(value > 0, value, np.nan)
+        return np.where(value >= 0, value, np.nan) if name in _NEVER_NEGATIVE else value
+
     def _evaluate(
         self,
         inputs: Mapping[str, Array],
@@ -259,11 +267,8 @@ class Law:
     ) -> None:
         """Predict one piece."""
         numbers: dict[str, Any] = {}
-        for name, value in inputs.items():
-            if name == self.gas and not self.is_linear:
-                value = np.where(value > 0, value, np.nan)
-            elif name in _NEVER_NEGATIVE:
-                value = np.where(value >= 0, value, np.nan)
+        for name, given in inputs.items():
+            value = self._usable(name, given)
             numbers[name] = Dual(value, {name: 1.0}) if slopes else value
         own = self.own(numbers, parameters)
         with np.errstate(over="ignore", under="ignore", invalid="ignore", divide="ignore"):
@@ -281,16 +286,8 @@ class Law:
             for name, number in numbers.items():
                 if name != self.gas:
                     is_empty = is_empty & np.isfinite(plain(number))
-        for product, target in made.values.items():
-            target[piece] = plain(products[product])
-            if has_empty:
-                target[piece][np.broadcast_to(is_empty, target[piece].shape)] = 0.0
-            found = slopes_of(products[product])
-            for name, slope_target in made.slopes.get(product, {}).items():
-                slope_target[piece] = found.get(name, 0.0)
-                if has_empty:
-                    slope_target[piece][np.broadcast_to(is_empty, target[piece].shape)] = 0.0
-                slope_target[piece][np.isnan(target[piece])] = np.nan
+        for product in made.values:
+            made.write(product, products[product], piece, is_empty if has_empty else None)
         for name, (low, high) in self.ranges.items():
             if name in own:
                 value = plain(own[name])
@@ -310,6 +307,22 @@ class _Blank:
         )
         self.outside_range = np.zeros(size, dtype=bool)
 
+    def write(self, product: str, number: Any, piece: slice, is_empty: Mask | None) -> None:
+        """Write one product of one piece, zero where there is no gas."""
+        target = self.values[product][piece]
+        target[...] = plain(number)
+        found = slopes_of(number)
+        slopes = {name: slope[piece] for name, slope in self.slopes.get(product, {}).items()}
+        for name, slope in slopes.items():
+            slope[...] = found.get(name, 0.0)
+        if is_empty is not None:
+            where = np.broadcast_to(is_empty, target.shape)
+            for array in (target, *slopes.values()):
+                array[where] = 0.0
+        unknown = np.isnan(target) if slopes else None
+        for slope in slopes.values():
+            slope[unknown] = np.nan
+
     def shaped(self, shape: tuple[int, ...]) -> Prediction:
         rate = self.values["sigma_sfr"].reshape(shape)
         fraction = self.values.get("f_mol")
@@ -326,4 +339,3 @@ class _Blank:
 
 
 LAWS = Registry[Law]("relation")
-

@@ -1,5 +1,7 @@
-"""Atomic layers of dusty clouds in a dissociating field: the atomic column does not depend on the
-gas behind it, which is all molecular."""
+"""Atomic layers of dusty clouds in a dissociating field.
+
+The atomic column does not depend on the gas behind it, which is all molecular.
+"""
 
 from __future__ import annotations
 

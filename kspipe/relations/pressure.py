@@ -29,7 +29,7 @@ def blitz_pressure(
 
 
 def _from_pressure(pressure: Any, given: Mapping[str, float]) -> Outcome:
-    """f = R / (1 + R), R = (P / P0)^exponent."""
+    """F = R / (1 + R), R = (P / P0)^exponent."""
     return Outcome(1.0 / (1.0 + np.exp(np.log(pressure / given["p0"]) * -given["exponent"])))
 
 

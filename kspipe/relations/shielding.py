@@ -101,6 +101,11 @@ def _mckee2010(own: Mapping[str, Any], given: Mapping[str, float]) -> Outcome:
     return Outcome(mckee2010_fraction(given["clumping"] * own["sigma_gas"], z, two_phase_chi(z)))
 
 
+def _is_shielded(own: Mapping[str, Any], given: Mapping[str, float]) -> Any:
+    z = own["z_prime"]
+    return mckee2010_fraction(given["clumping"] * own["sigma_gas"], z, two_phase_chi(z)) > 0
+
+
 LAW_RANGES = {"z_prime": (0.05, 10.0)}
 
 LAWS.add(
@@ -151,16 +156,11 @@ LAWS.add(
         metallicity_anchor="metals, solar neighbourhood = 1",
         ranges=LAW_RANGES,
         monotonic={
-            "sigma_gas": Direction(1, "where s < 2", lambda own, p: _is_shielded(own, p)),
-            "oh": Direction(1, "where s < 2", lambda own, p: _is_shielded(own, p)),
+            "sigma_gas": Direction(1, "where s < 2", _is_shielded),
+            "oh": Direction(1, "where s < 2", _is_shielded),
         },
         kinks="the slope jumps at s = 2, below which the fraction is exactly 0",
         note="Predicts no molecular gas at all where s > 2: logarithms of its prediction do not "
         "exist there, and such pixels are counted.",
     )
 )
-
-
-def _is_shielded(own: Mapping[str, Any], given: Mapping[str, float]) -> Any:
-    z = own["z_prime"]
-    return mckee2010_fraction(given["clumping"] * own["sigma_gas"], z, two_phase_chi(z)) > 0

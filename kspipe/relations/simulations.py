@@ -51,7 +51,7 @@ def gnedin2011_cell_fraction(density_cm3: Any, u: Any, d: Any) -> Any:
     return 1.0 / (1.0 + np.exp(-x * (4.0 + 3.0 * x * x)))
 
 
-def _gnedin2011(own: Mapping[str, Any], given: Mapping[str, float]) -> Outcome:
+def _gnedin2011(own: Mapping[str, Any], _given: Mapping[str, float]) -> Outcome:
     ratio = 1.0 + gnedin2011_critical(own["g0"], own["z_prime"]) / own["sigma_gas"]
     return Outcome(1.0 / (ratio * ratio))
 
@@ -83,9 +83,7 @@ def gnedin2014_half(u: Any, d: Any, scale_pc: float, *, erratum: bool) -> tuple[
 
 def _gnedin2014(*, erratum: bool) -> Any:
     def function(own: Mapping[str, Any], given: Mapping[str, float]) -> Outcome:
-        half, exponent = gnedin2014_half(
-            own["g0"], own["z_prime"], given["scale"], erratum=erratum
-        )
+        half, exponent = gnedin2014_half(own["g0"], own["z_prime"], given["scale"], erratum=erratum)
         return Outcome(1.0 / (1.0 + np.exp(-exponent * np.log(own["sigma_gas"] / half))))
 
     return function
@@ -135,7 +133,7 @@ def _polzin2024(own: Mapping[str, Any], given: Mapping[str, float]) -> Outcome:
     return Outcome(polzin2024(column, own["z_prime"], own["g0"], given["scale"]))
 
 
-def _is_thin_to_field(own: Mapping[str, Any], given: Mapping[str, float]) -> Any:
+def _is_thin_to_field(own: Mapping[str, Any], _given: Mapping[str, float]) -> Any:
     """U D^2 < 0.1: there Sigma_c rises with U."""
     return own["g0"] * own["z_prime"] ** 2 < 0.1
 
@@ -201,9 +199,7 @@ for _key, _label, _cite, _s1, _is_erratum in (
             ranges={"z_prime": (0.01, 3.0), "g0": (0.01, 1000.0)},
             monotonic={
                 "sigma_gas": Direction(1),
-                "g0": Direction(
-                    -1, "where f_H2 >= 1/2", _is_mostly_molecular(erratum=_is_erratum)
-                ),
+                "g0": Direction(-1, "where f_H2 >= 1/2", _is_mostly_molecular(erratum=_is_erratum)),
             },
             note="The erratum lowers S1, by a factor 2.9 at U = 1."
             if _is_erratum
@@ -227,7 +223,7 @@ LAWS.add(
         monotonic={
             "sigma_gas": Direction(1),
             "g0": Direction(
-                -1, "where N_tr rises with U, Z' < 10^0.8", lambda o, p: o["z_prime"] < 10**0.8
+                -1, "where N_tr rises with U, Z' < 10^0.8", lambda o, _p: o["z_prime"] < 10**0.8
             ),
         },
         note="N_tr is the foot of the rise: there the fraction is 1.65e-4. The ranges of Z' and U "

@@ -186,9 +186,7 @@ def main() -> None:
     for key, (expression, given) in CLOSED.items():
         law = LAWS.get(key)
         plain = best(lambda e=expression: e(inputs), options.runs)
-        lean = best(
-            lambda w=law, g=given: w.predict(inputs, g, slopes=False), options.runs
-        )
+        lean = best(lambda w=law, g=given: w.predict(inputs, g, slopes=False), options.runs)
         full = best(lambda w=law, g=given: w.predict(inputs, g), options.runs)
         off = np.abs(law.predict(inputs, given, slopes=False).sigma_sfr - expression(inputs)).max()
         print(
