@@ -88,7 +88,7 @@ def solve_falling(
             newton = x - step
             good = (newton >= bracket[0]) & (newton <= bracket[1]) & (np.abs(step) <= 0.5 * before)
             stepped = np.where(good, newton, 0.5 * (bracket[0] + bracket[1]))
-            stepped = np.where(at.value == 0.0, x, stepped)
+            stepped = np.where((at.value == 0.0) | np.isnan(at.value), x + at.value, stepped)
             before, last = last, np.abs(stepped - x)
             root[index] = stepped
             moving = last > LAST_STEP * np.abs(stepped)

@@ -25,9 +25,9 @@ PARTICLES: Final = 1.1
 SOLAR_SFR_MSUN_YR_KPC2: Final = 2.5e-3
 # 1 km/s/kpc is 1.0227e-3 per Myr.
 LN2: Final = np.log(2.0)
-# Fraction that is small, and ln(2/s) that is large: s = 2e-11, which no gas reaches.
+# Fraction that is small, and ln(2/s) that is large: there is no field at s = 2e-26.
 SMALL: Final = 1e-6
-MOST_W: Final = 25.0
+MOST_W: Final = 60.0
 PER_MYR_PER_KMS_KPC: Final = 1.0227121650537077e-3
 
 
@@ -37,13 +37,15 @@ def two_phase_density(g0: Any, z_prime: Any) -> Any:
 
 
 def krumholz2013_chi(
-    f_mol: Any, sigma_gas_msun_pc2: Any, rho_sd_msun_pc3: Any, g0: Any, two_phase_chi: Any
+    f_atom: Any, sigma_gas_msun_pc2: Any, rho_sd_msun_pc3: Any, g0: Any, two_phase_chi: Any
 ) -> Any:
     """Field over density where the density is the larger of two-phase and hydrostatic balance.
 
     Parameters
     ----------
-    f_mol, sigma_gas_msun_pc2, rho_sd_msun_pc3, g0 : float64 array or Dual
+    f_atom : float64 array or Dual
+        1 - f_H2.
+    sigma_gas_msun_pc2, rho_sd_msun_pc3, g0 : float64 array or Dual
     two_phase_chi : float64 array or Dual
         72 G0' over the two-phase density, which does not depend on G0'.
 
@@ -51,8 +53,8 @@ def krumholz2013_chi(
     ----------
     .. [1] krumholz2013: n = max(n_2p, P_th / (1.1 k 243 K)), chi = 7.2 G0' / (n / 10).
     """
-    bound = f_mol * sigma_gas_msun_pc2
-    pressure = thermal_pressure(sigma_gas_msun_pc2 - bound, bound, rho_sd_msun_pc3)
+    diffuse, bound = f_atom * sigma_gas_msun_pc2, (1.0 - f_atom) * sigma_gas_msun_pc2
+    pressure = thermal_pressure(diffuse, bound, rho_sd_msun_pc3)
     return np.minimum(two_phase_chi, 72.0 * PARTICLES * T_MAX_K * g0 / pressure)
 
 
@@ -87,7 +89,7 @@ def _solved(own: Mapping[str, Any], given: Mapping[str, float], field_of: Any) -
 
     def excess(w: Any, o: Mapping[str, Any]) -> Any:
         """Ln of s = 2 exp(-w) over the s of the pressure and the field that f(w) implies."""
-        ratio = _ratio_at(_fraction(w), o, given, field_of)
+        ratio = _ratio_at(*_fractions(w), o, given, field_of)
         return (LN2 - w) - np.log(ratio)
 
     bare = {name: plain(number) for name, number in taken.items()}
@@ -99,27 +101,31 @@ def _solved(own: Mapping[str, Any], given: Mapping[str, float], field_of: Any) -
     doubtful = s >= 2.0
     if "g0" not in bare:
         # Where little is molecular the field goes as f, and s with it.
-        per_fraction = _ratio_at(SMALL, bare, given, field_of) / SMALL
+        per_fraction = _ratio_at(SMALL, 1.0, bare, given, field_of) / SMALL
         thin = 3.0 / (3.0 + per_fraction)
         start = np.where(doubtful, thin, np.maximum(start, thin))
         doubtful = np.zeros(np.shape(s), dtype=bool)
     start, doubtful = np.broadcast_to(start, shape), np.broadcast_to(doubtful, shape)
     root = solve_falling(excess, bare, 0.0, MOST_W, start, doubtful)
     # Where even pure atomic gas is not shielded the fraction is exactly zero.
-    at_zero = root == 0.0
-    f = _fraction(implicit(excess, root, taken))
-    return choose(at_zero, 0.0 * f, f) if at_zero.any() else f
+    f, _ = _fractions(implicit(excess, root, taken))
+    for is_end, value in ((root == 0.0, 0.0), (root > 0.999 * MOST_W, 1.0)):
+        f = choose(is_end, value, f) if is_end.any() else f
+    return f
 
 
-def _fraction(w: Any) -> Any:
-    """f_H2 of mckee2010 by w = ln(2/s), in which both ends keep their accuracy."""
-    drop = -np.expm1(-w)
-    return drop / (1.5 - 0.5 * drop)
+def _fractions(w: Any) -> tuple[Any, Any]:
+    """f_H2 of mckee2010 and 1 - f_H2 by w = ln(2/s), each accurate where it is small."""
+    s_half = np.exp(-w)
+    below = 1.0 + 0.5 * s_half
+    return -np.expm1(-w) / below, 1.5 * s_half / below
 
 
-def _ratio_at(f: Any, o: Mapping[str, Any], given: Mapping[str, float], field_of: Any) -> Any:
+def _ratio_at(
+    f: Any, f_atom: Any, o: Mapping[str, Any], given: Mapping[str, float], field_of: Any
+) -> Any:
     """S of the pressure and field that a fraction implies."""
-    chi = krumholz2013_chi(f, o["sigma_gas"], o["rho_sd"], field_of(f, o), o["two_phase"])
+    chi = krumholz2013_chi(f_atom, o["sigma_gas"], o["rho_sd"], field_of(f, o), o["two_phase"])
     return mckee2010_ratio(given["clumping"] * o["sigma_gas"], o["z_prime"], chi)
 
 
@@ -148,9 +154,9 @@ def _is_on_floor(own: Mapping[str, Any], given: Mapping[str, float]) -> Any:
 
 def _floor(own: Mapping[str, Any], f: Any, g0: Any) -> Any:
     two_phase = 72.0 * (1.0 + 3.1 * own["z_prime"] ** 0.365) / (23.0 * 4.1)
-    return (krumholz2013_chi(f, own["sigma_gas"], own["rho_sd"], g0, two_phase) < two_phase) & (
-        f > 0
-    )
+    return (
+        krumholz2013_chi(1.0 - f, own["sigma_gas"], own["rho_sd"], g0, two_phase) < two_phase
+    ) & (f > 0)
 
 
 def _is_on_own_floor(own: Mapping[str, Any], given: Mapping[str, float]) -> Any:
