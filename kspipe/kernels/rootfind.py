@@ -67,7 +67,9 @@ def solve_falling(
         asked = np.flatnonzero(doubtful.reshape(-1) & ~np.isnan(root))
         if asked.size:
             part = {n: a[asked] if np.size(a) > 1 else a for n, a in taken.items()}
-            root[asked[~(residual(np.full(asked.size, low), part) > 0)]] = low
+            at_low = residual(np.full(asked.size, low), part)
+            root[asked[~(at_low > 0)]] = low
+            root[asked[np.isnan(at_low)]] = np.nan
         bracket = np.full(root.size, low), np.full(root.size, high)
         last = before = np.full(root.size, high - low)
         moving = root > low

@@ -138,9 +138,12 @@ def _is_thin_to_field(own: Mapping[str, Any], _given: Mapping[str, float]) -> An
     return own["g0"] * own["z_prime"] ** 2 < 0.1
 
 
-def _is_mostly_molecular(*, erratum: bool) -> Any:
+def _is_molecular(*, erratum: bool, mostly: bool) -> Any:
+    """Whether more than half of the gas is molecular, or less."""
+
     def holds(own: Mapping[str, Any], given: Mapping[str, float]) -> Any:
-        return _gnedin2014(erratum=erratum)(own, given).f_mol >= 0.5
+        f = _gnedin2014(erratum=erratum)(own, given).f_mol
+        return f >= 0.5 if mostly else f <= 0.5
 
     return holds
 
@@ -199,7 +202,12 @@ for _key, _label, _cite, _s1, _is_erratum in (
             ranges={"z_prime": (0.01, 3.0), "g0": (0.01, 1000.0)},
             monotonic={
                 "sigma_gas": Direction(1),
-                "g0": Direction(-1, "where f_H2 >= 1/2", _is_mostly_molecular(erratum=_is_erratum)),
+                "oh": Direction(
+                    1, "where f_H2 <= 1/2", _is_molecular(erratum=_is_erratum, mostly=False)
+                ),
+                "g0": Direction(
+                    -1, "where f_H2 >= 1/2", _is_molecular(erratum=_is_erratum, mostly=True)
+                ),
             },
             note="The erratum lowers S1, by a factor 2.9 at U = 1."
             if _is_erratum
@@ -222,9 +230,8 @@ LAWS.add(
         ranges={"z_prime": (0.01, 3.0), "g0": (0.01, 1000.0)},
         monotonic={
             "sigma_gas": Direction(1),
-            "g0": Direction(
-                -1, "where N_tr rises with U, Z' < 10^0.8", lambda o, _p: o["z_prime"] < 10**0.8
-            ),
+            "oh": Direction(1, "where Z' >= 0.2", lambda own, _given: own["z_prime"] >= 0.2),
+            "g0": Direction(-1),
         },
         note="N_tr is the foot of the rise: there the fraction is 1.65e-4. The ranges of Z' and U "
         "are from memory.",
