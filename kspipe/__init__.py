@@ -21,12 +21,13 @@ _FACE = {
     "alternatives": "kspipe.api",
     "chain": "kspipe.api",
     "compare": "kspipe.api",
-    "explain": "kspipe.conversions.shelf",
+    "explain": "kspipe.recipe.shelf",
     "figures": "kspipe.api",
-    "list_family": "kspipe.conversions.shelf",
+    "list_family": "kspipe.recipe.shelf",
     "load_recipe": "kspipe.recipe",
     "reduce": "kspipe.api",
     "run": "kspipe.api",
+    "tracks": "kspipe.api",
 }
 
 __all__ = [
@@ -47,13 +48,24 @@ __all__ = [
     "load_recipe",
     "reduce",
     "run",
+    "tracks",
 ]
 
 if TYPE_CHECKING:
-    from kspipe.api import Comparison, Reduction, alternatives, chain, compare, figures, reduce, run
-    from kspipe.conversions.shelf import explain, list_family
+    from kspipe.api import (
+        Comparison,
+        Reduction,
+        alternatives,
+        chain,
+        compare,
+        figures,
+        reduce,
+        run,
+        tracks,
+    )
     from kspipe.core.errors import KspipeError, KspipeWarning, MapError, RecipeError
     from kspipe.recipe import Recipe, load_recipe
+    from kspipe.recipe.shelf import explain, list_family
 
 
 def __getattr__(name: str) -> Any:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 from collections.abc import Mapping, Sequence
 from html import escape
 from pathlib import Path
@@ -14,12 +15,14 @@ from astropy.io import fits
 from astropy.table import Table
 from astropy.wcs import WCS
 
-from kspipe.core.errors import Fault, OutputError
+from kspipe.core.errors import Fault, InputError, OutputError
 from kspipe.core.progress import Progress, no_progress
 from kspipe.core.report import relation_rows, total_rows
 from kspipe.maps.product import read_image
 from kspipe.products import draw_figures
+from kspipe.products.tracks import tracks_table, write_tracks
 from kspipe.recipe import Recipe, load_recipe
+from kspipe.relations import tracks as make_tracks
 from kspipe.stages.alternatives import ALTERNATIVES_FILE, weigh_alternatives
 from kspipe.stages.chain import pixel_chain
 from kspipe.stages.compare import compare_relations
@@ -34,6 +37,7 @@ __all__ = [
     "figures",
     "reduce",
     "run",
+    "tracks",
 ]
 
 Maps = Mapping[str, fits.PrimaryHDU | tuple[fits.PrimaryHDU, fits.PrimaryHDU | None]]
@@ -339,6 +343,62 @@ def run(
     comparison = compare(out, maps=maps, overwrite=overwrite, progress=progress)
     figures(out, overwrite=overwrite, progress=progress)
     return comparison
+
+
+def tracks(
+    relation: str,
+    *,
+    low: float = 1.0,
+    high: float = 1000.0,
+    n: int = 200,
+    at: Mapping[str, Sequence[float]] | None = None,
+    parameters: Mapping[str, float] | None = None,
+    out: str | Path | None = None,
+    overwrite: bool = False,
+) -> Table:
+    """Curves of a relation against gas, without any map.
+
+    Parameters
+    ----------
+    relation : str
+        Its key; ``kspipe.list_family("relations")`` has them all.
+    low, high : float
+        Gas [Msun/pc2, with helium] from least to most, in logarithmic steps.
+    n : int
+        Points of a curve.
+    at : mapping of str to sequence of float, optional
+        Values of the relation's other inputs, of which all combinations are drawn: ``oh``,
+        ``g0``, ``rho_sd``, ``sigma_star``, ``omega``, ``beta``.
+    parameters : mapping of str to float, optional
+        Of the relation.
+    out : path, optional
+        Folder that tracks.ecsv, tracks.pdf and tracks.png are written to.
+    overwrite : bool
+        Whether older ones may be replaced.
+
+    Returns
+    -------
+    astropy.table.Table
+        A row for each point of each curve, with units.
+
+    Raises
+    ------
+    InputError
+        If an input or a parameter is missing or unknown, or the gas is no range.
+
+    Examples
+    --------
+    >>> import kspipe
+    >>> kspipe.tracks("leroy2013_depletion", low=10, high=100, n=2)["sigma_sfr"].tolist()
+    [0.004545454545454545, 0.045454545454545456]
+    """
+    if not (0 < low < high < math.inf and n >= 2):
+        what = f"{n} points from {low:g} to {high:g} Msun/pc2 are no curve"
+        raise InputError(Fault("tracks", what, "type a positive --low below --high"))
+    curves = make_tracks(relation, np.geomspace(low, high, n), at or {}, parameters)
+    if out is not None:
+        write_tracks(curves, Path(out), overwrite=overwrite)
+    return tracks_table(curves)
 
 
 def _memory(maps: Maps | None) -> dict[str, tuple[fits.PrimaryHDU, fits.PrimaryHDU | None]] | None:

@@ -8,6 +8,7 @@ from typing import Annotated
 import typer
 
 from kspipe import __version__
+from kspipe.cli.tracks import tracks_command
 
 __all__ = ["app", "main"]
 
@@ -170,11 +171,11 @@ def list_command(
     ] = None,
     debug: DebugOption = False,
 ) -> None:
-    """List the published conversions of a family, or the families."""
+    """List the published conversions of a family, the relations, or the families."""
     from kspipe.cli.session import session
 
     with session(quiet=True, debug=debug):
-        from kspipe.conversions.shelf import list_family
+        from kspipe.recipe.shelf import list_family
 
         rows = list_family(family)
     for key, *rest in rows:
@@ -190,12 +191,18 @@ def explain_command(
     from kspipe.cli.session import session
 
     with session(quiet=True, debug=debug):
-        from kspipe.conversions.shelf import explain
+        from kspipe.recipe.shelf import explain
 
         rows = explain(key)
     width = max(len(name) for name, _ in rows)
     for name, text in rows:
         typer.echo(f"{name:<{width}}  {text}")
+
+
+app.command(
+    "tracks",
+    epilog="Example: kspipe tracks krumholz2009 --metallicity 8.7 --parameter clumping=5 --out DIR",
+)(tracks_command)
 
 
 def main() -> None:

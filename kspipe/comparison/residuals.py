@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
-from typing import Final
+from typing import Final, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -14,7 +14,7 @@ from kspipe.kernels.noise import NoiseTerm, covariance, propagate, total_error
 from kspipe.maps.skymap import Flag
 from kspipe.relations import LAWS, Prediction
 
-__all__ = ["Residuals", "predict_residuals"]
+__all__ = ["Known", "Residuals", "compared", "predict_residuals", "prediction_noise"]
 
 Array = NDArray[np.float64]
 
@@ -24,6 +24,18 @@ _NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(32)
 _WEIGHTS = _WEIGHTS / _WEIGHTS.sum()
 
 
+class Known(Protocol):
+    """A quantity in each pixel with the noise that it carries: a `Surface`, for example."""
+
+    @property
+    def value(self) -> Array:
+        """Broadcasts with the grid."""
+
+    @property
+    def noise(self) -> tuple[NoiseTerm, ...]:
+        """Empty where it has no random error."""
+
+
 @dataclass(frozen=True)
 class Residuals:
     """One relation held against the galaxy.
@@ -31,7 +43,7 @@ class Residuals:
     Attributes
     ----------
     predicted, predicted_error : (ny, nx) float64 array
-        Sigma_SFR [Msun/yr/kpc2] and its random error, which comes from that of sigma_gas.
+        Sigma_SFR [Msun/yr/kpc2] and its random error, which comes from those of all inputs.
     predicted_f_mol : (ny, nx) float64 array or None
     difference : (ny, nx) float64 array
         Observed - predicted [Msun/yr/kpc2], wherever both are.
@@ -61,9 +73,8 @@ class Residuals:
 
 
 def predict_residuals(
-    gas: Surface,
+    inputs: Mapping[str, Known],
     sfr: Surface,
-    oh: Array,
     flags: NDArray[np.int32],
     law: str,
     parameters: Mapping[str, float],
@@ -72,10 +83,10 @@ def predict_residuals(
 
     Parameters
     ----------
-    gas, sfr : Surface
-        sigma_gas [Msun/pc2] and sigma_sfr [Msun/yr/kpc2] with their noise.
-    oh : (ny, nx) float64 array
-        12 + log10(O/H).
+    inputs : mapping of str to Known
+        By the names of `LAW_INPUTS`; at least those that the relation needs.
+    sfr : Surface
+        Observed sigma_sfr [Msun/yr/kpc2] with its noise.
     flags : (ny, nx) int32 array
         Of the surface densities; the relation's are added.
     law : str
@@ -92,19 +103,41 @@ def predict_residuals(
     share (distance, inclination, alpha_CO, calibration) stays out of it.
     """
     relation = LAWS.get(law)
+    taken = {name: inputs[name] for name in relation.takes(inputs)}
 
-    def evaluate(sigma_gas: Array) -> Prediction:
-        return relation.predict({"sigma_gas": sigma_gas, "oh": oh}, parameters)
+    def evaluate(values: Mapping[str, Array]) -> Array:
+        return relation.predict(values, parameters, slopes=False).sigma_sfr
 
-    prediction = evaluate(gas.value)
-    slope = prediction.derivatives["sigma_sfr"]["sigma_gas"]
-    noise = propagate({"gas": gas.noise}, {"gas": slope})
-    linear = total_error(noise)
-    integrated = _integrated_error(evaluate, gas.value, gas.error)
+    prediction = relation.predict({n: known.value for n, known in taken.items()}, parameters)
+    noise = prediction_noise(prediction, taken)
+    linear = np.broadcast_to(total_error(noise), sfr.value.shape)
+    gas = relation.gas
+    integrated = linear
+    if taken[gas].noise and not relation.is_linear:
+        slopes = prediction.derivatives["sigma_sfr"]
+        integrated = _integrated_error(evaluate, taken, slopes, gas, linear)
     with np.errstate(invalid="ignore"):
         is_curved = np.abs(integrated - linear) > LINEAR_TOLERANCE * integrated
     error = np.where(is_curved, integrated, linear)
+    return compared(prediction, sfr, noise, error, flags, n_integrated=int(np.sum(is_curved)))
 
+
+def prediction_noise(prediction: Prediction, inputs: Mapping[str, Known]) -> tuple[NoiseTerm, ...]:
+    """Noise of a prediction from that of its inputs; what inputs share adds with its sign."""
+    slopes = prediction.derivatives["sigma_sfr"]
+    return propagate({n: k.noise for n, k in inputs.items()}, {n: slopes[n] for n in inputs})
+
+
+def compared(
+    prediction: Prediction,
+    sfr: Surface,
+    noise: tuple[NoiseTerm, ...],
+    error: Array,
+    flags: NDArray[np.int32],
+    *,
+    n_integrated: int,
+) -> Residuals:
+    """Hold a prediction with its noise against the observed star formation."""
     shared = np.broadcast_to(covariance(sfr.noise, noise), error.shape)
     difference = sfr.value - prediction.sigma_sfr
     with np.errstate(invalid="ignore", divide="ignore"):
@@ -125,22 +158,38 @@ def predict_residuals(
         covariance=np.asarray(shared),
         noise=noise,
         flags=flags,
-        n_integrated=int(np.sum(is_curved)),
+        n_integrated=n_integrated,
     )
 
 
 def _integrated_error(
-    evaluate: Callable[[Array], Prediction], sigma_gas: Array, error: Array
+    evaluate: Callable[[Mapping[str, Array]], Array],
+    inputs: Mapping[str, Known],
+    slopes: Mapping[str, Array],
+    gas: str,
+    linear: Array,
 ) -> Array:
-    """Standard deviation of the prediction over the noise of its input.
+    """Standard deviation of the prediction over the noise of its inputs.
 
-    Gauss-Hermite quadrature stands in for random draws: exact for smooth relations and the same
-    at every run. Where the noise reaches below zero gas, no gas forms no stars.
+    Gauss-Hermite quadrature over the noise of the gas stands in for random draws: exact for smooth
+    relations and the same at every run. Inputs that share noise with the gas move with it, by
+    their regression on it; what they have besides is added to first order. Where the noise reaches
+    below zero gas, no gas forms no stars.
     """
-    first, second = np.zeros(sigma_gas.shape), np.zeros(sigma_gas.shape)
+    error = total_error(inputs[gas].noise)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        along = {
+            name: np.where(error > 0, covariance(known.noise, inputs[gas].noise) / error, 0.0)
+            for name, known in inputs.items()
+            if known.noise
+        }
+    first, second = np.zeros(linear.shape), np.zeros(linear.shape)
+    values = {name: known.value for name, known in inputs.items()}
     for node, weight in zip(_NODES, _WEIGHTS, strict=True):
-        shifted = np.maximum(sigma_gas + node * error, 0.0)
-        predicted = evaluate(shifted).sigma_sfr
+        moved = {n: np.maximum(values[n] + node * step, 0.0) for n, step in along.items()}
+        predicted = evaluate({**values, **moved})
         first += weight * predicted
         second += weight * predicted**2
-    return np.sqrt(np.maximum(second - first**2, 0.0))
+    along_gas = sum(slopes[name] * step for name, step in along.items())
+    besides = np.maximum(linear**2 - along_gas**2, 0.0)
+    return np.asarray(np.sqrt(np.maximum(second - first**2, 0.0) + besides))

@@ -99,6 +99,26 @@ CITATIONS = _citations(
     Citation("wolfire2010", "Wolfire, Hollenbach & McKee 2010", "ApJ 716, 1191"),
     Citation("wyder2007", "Wyder et al. 2007", "ApJS 173, 293"),
     Citation("yajima2021", "Yajima et al. 2021", "PASJ 73, 257"),
+    Citation("mckee2010", "McKee & Krumholz 2010", "ApJ 709, 308", "2010ApJ...709..308M"),
+    Citation("krumholz2012", "Krumholz, Dekel & McKee 2012", "ApJ 745, 69"),
+    Citation("krumholz2013", "Krumholz 2013", "MNRAS 436, 2747", "2013MNRAS.436.2747K"),
+    Citation("sternberg2014", "Sternberg et al. 2014", "ApJ 790, 10", "2014ApJ...790...10S"),
+    Citation("bialy2016", "Bialy & Sternberg 2016", "ApJ 822, 83", "2016ApJ...822...83B"),
+    Citation("gnedin2011", "Gnedin & Kravtsov 2011", "ApJ 728, 88", "2011ApJ...728...88G"),
+    Citation("gnedin2014", "Gnedin & Draine 2014", "ApJ 795, 37", "2014ApJ...795...37G"),
+    Citation("gnedin2016", "Gnedin & Draine 2016 (erratum to 2014)", "ApJ 830, 54"),
+    Citation("polzin2024", "Polzin et al. 2024", "ApJ 966, 172", "2024ApJ...966..172P"),
+    Citation("elmegreen1989", "Elmegreen 1989", "ApJ 338, 178", "1989ApJ...338..178E"),
+    Citation("blitz2006", "Blitz & Rosolowsky 2006", "ApJ 650, 933", "2006ApJ...650..933B"),
+    Citation("ostriker2010", "Ostriker, McKee & Leroy 2010", "ApJ 721, 975", "2010ApJ...721..975O"),
+    Citation("kim2011", "Kim, Kim & Ostriker 2011", "ApJ 743, 25", "2011ApJ...743...25K"),
+    Citation("leroy2013", "Leroy et al. 2013", "AJ 146, 19", "2013AJ....146...19L"),
+    Citation("bigiel2008", "Bigiel et al. 2008", "AJ 136, 2846", "2008AJ....136.2846B"),
+    Citation("bigiel2011", "Bigiel et al. 2011", "ApJ 730, L13"),
+    Citation("kennicutt1998_law", "Kennicutt 1998", "ApJ 498, 541", "1998ApJ...498..541K"),
+    Citation(
+        "delosreyes2019", "De los Reyes & Kennicutt 2019", "ApJ 872, 16", "2019ApJ...872...16D"
+    ),
 )
 
 

@@ -13,9 +13,10 @@ from kspipe.conversions import z_prime
 from kspipe.core.constants import OH_SOLAR
 from kspipe.products.read import Products
 from kspipe.products.style import HALO, relation_look
-from kspipe.relations import track
+from kspipe.products.tracks import OUTSIDE_LINE, in_and_out
+from kspipe.relations import LAWS, Prediction
 
-__all__ = ["draw_depletion_times", "draw_tracks", "galaxy_z_prime"]
+__all__ = ["draw_depletion_times", "draw_tracks", "galaxy_z_prime", "other_inputs"]
 
 Array = NDArray[np.float64]
 
@@ -57,11 +58,24 @@ def galaxy_z_prime(products: Products) -> Array:
     return z_prime(products.oh[next(where for where in (good, covered, known) if where.any())])
 
 
+def other_inputs(products: Products, name: str) -> dict[str, float]:
+    """Medians over the galaxy of what a relation takes besides gas and metallicity."""
+    inputs = products.summary["relations"][name].get("inputs", {})
+    law = LAWS.get(products.recipe.relations[name].law)
+    return {
+        need: float("nan") if entry["median"] is None else float(entry["median"])
+        for need, entry in inputs.items()
+        if need not in ("oh", law.gas)
+    }
+
+
 def draw_tracks(axes: Axes, products: Products, name: str) -> None:
     """Draw a band over the galaxy's own metallicities, their median, and labelled thin lines.
 
     A single relation has its thin lines at round metallicities; of several only the edges of the
-    bands are drawn, or the frame would be full.
+    bands are drawn, or the frame would be full. Further inputs are at their medians over the
+    galaxy, and a relation of molecular gas is drawn as if all gas were molecular. Short dashes:
+    outside the range of the relation.
 
     Parameters
     ----------
@@ -76,17 +90,33 @@ def draw_tracks(axes: Axes, products: Products, name: str) -> None:
     look = relation_look(index)
     x = np.geomspace(*axes.get_xlim(), 300)
 
+    law = LAWS.get(table.law)
+    others = other_inputs(products, name)
+
+    def predict(z: float) -> Prediction:
+        fixed = {**others, "oh": OH_SOLAR + math.log10(z), law.gas: x}
+        inputs = {key: np.asarray(value) for key, value in fixed.items()}
+        return law.predict(inputs, table.parameters, slopes=False)
+
     def curve(z: float) -> Array:
-        return track(table.law, x, OH_SOLAR + math.log10(z), table.parameters)
+        return predict(z).sigma_sfr
 
     own = np.quantile(galaxy_z_prime(products), [0.0, 0.5, 1.0])
     low, middle, high = (float(z) for z in own)
     axes.fill_between(x, curve(low), curve(high), color=look["color"], alpha=0.22, lw=0, zorder=3)
-    axes.plot(x, curve(middle), **look, lw=1.8, zorder=5)
+    at_median = predict(middle)
+    inside, outside = in_and_out(at_median.sigma_sfr, at_median.outside_range)
+    axes.plot(x, inside, **look, lw=1.8, zorder=5)
+    axes.plot(x, outside, color=look["color"], ls=OUTSIDE_LINE, lw=1.0, zorder=5)
+    if "oh" not in law.needs:
+        return
     height = LABEL_HEIGHT + LABEL_STEP * index
     for z in ROUND_Z_PRIME if len(names) == 1 else (low, high):
-        y = curve(z)
-        axes.plot(x, y, **look, lw=0.7, zorder=4)
+        prediction = predict(z)
+        y = prediction.sigma_sfr
+        inside, outside = in_and_out(y, prediction.outside_range)
+        axes.plot(x, inside, **look, lw=0.7, zorder=4)
+        axes.plot(x, outside, color=look["color"], ls=OUTSIDE_LINE, lw=0.7, zorder=4)
         _label_curve(axes, x, y, f"Z′ = {z:.3g}", look["color"], height)
 
 

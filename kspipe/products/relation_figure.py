@@ -19,6 +19,7 @@ from kspipe.products.relation_curves import (
     draw_depletion_times,
     draw_tracks,
     galaxy_z_prime,
+    other_inputs,
 )
 from kspipe.products.running import running_quantiles
 from kspipe.products.style import (
@@ -31,7 +32,7 @@ from kspipe.products.style import (
     relation_look,
 )
 from kspipe.products.words import parameter_text
-from kspipe.relations import LAWS
+from kspipe.relations import LAW_INPUTS, LAWS
 
 __all__ = ["draw_star_formation_law"]
 
@@ -194,6 +195,7 @@ def _notes(products: Products) -> list[str]:
             f"where S/N ≥ {snr}; thick line: its median, {np.median(z):.3g}",
             f"(Z′ = 1 is 12 + log(O/H) = {OH_SOLAR:g}).",
         ]
+    lines += _input_notes(products)
     return [
         *lines,
         f"{flags['nonpositive_sfr']} of {n} pixels have {SIGMA['sigma_sfr']} ≤ 0,",
@@ -202,6 +204,19 @@ def _notes(products: Products) -> list[str]:
         products.size_text,
         f"Beam {products.beam_text}",
     ]
+
+
+def _input_notes(products: Products) -> list[str]:
+    """At what the curves of relations with further inputs are drawn."""
+    lines = []
+    for name, table in products.recipe.relations.items():
+        others = other_inputs(products, name)
+        text = ", ".join(f"{LAW_INPUTS[n].symbol} = {v:.3g}" for n, v in others.items())
+        if text:
+            lines += textwrap.wrap(f"{name}: medians {text}", KEY_CHARACTERS + 6)
+        if LAWS.get(table.law).gas == "sigma_mol":
+            lines += textwrap.wrap(f"{name}: as if all gas were molecular", KEY_CHARACTERS + 6)
+    return lines
 
 
 def _outside(products: Products) -> int:

@@ -19,6 +19,7 @@ from kspipe.recipe.check_records import (
     metallicity_faults,
     stars_faults,
 )
+from kspipe.recipe.check_relations import rate_choice_faults, relation_faults
 from kspipe.recipe.check_star_formation import map_extra_faults, star_formation_faults
 from kspipe.recipe.located import region_faults
 from kspipe.recipe.map_table import MapTable
@@ -51,6 +52,7 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
         faults += stars_faults(tables["stars"], tables["maps"])
         if any(table.tracer == "Sigma_star" for table in maps.values()):
             faults.append(Fault("stars", "a map of Sigma_star is there, too", "remove one"))
+    faults += relation_faults(tables)
     faults += map_extra_faults(maps, tables["galaxy"])
     if isinstance(tables["star_formation"], StarFormationTable):
         faults += star_formation_faults(tables["star_formation"], tables["maps"])
@@ -177,7 +179,7 @@ def check_relation(name: str, raw: object, faults: list[Fault]) -> RelationTable
                 Fault(f"{where}.{key}", f"{value!r} is not a number between {low:g} and {high:g}")
             )
     for key, parameter in known.items():
-        if key not in raw and parameter.default is None:
+        if key not in raw and parameter.default is None and key not in law.one_of:
             faults.append(
                 Fault(
                     f"{where}.{key}",
@@ -185,6 +187,7 @@ def check_relation(name: str, raw: object, faults: list[Fault]) -> RelationTable
                     f"type {key} = ...",
                 )
             )
+    faults += rate_choice_faults(where, law.key, raw)
     if len(faults) > before:
         return None
     given = {key: float(value) for key, value in raw.items() if key != "law"}

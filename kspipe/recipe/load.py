@@ -13,6 +13,7 @@ from kspipe.conversions import Record
 from kspipe.conversions.shelf import FAMILIES
 from kspipe.core.errors import Fault, RecipeError, nearest
 from kspipe.recipe.checks import check_relation, check_together
+from kspipe.recipe.disc_tables import MidplaneTable, RadiationFieldTable, RotationTable
 from kspipe.recipe.located import locate, located
 from kspipe.recipe.map_table import MapTable, NoiseFile, NoiseTyped
 from kspipe.recipe.models import (
@@ -42,8 +43,13 @@ _TABLES: Final[dict[str, type[BaseModel]]] = {
     "star_formation": StarFormationTable,
     "stars": StarsTable,
     "comparison": ComparisonTable,
+    "midplane": MidplaneTable,
+    "radiation_field": RadiationFieldTable,
+    "rotation": RotationTable,
 }
-_OPTIONAL: Final = ("relations", "comparison", "stars")
+_OPTIONAL: Final = (
+    "relations", "comparison", "stars", "midplane", "radiation_field", "rotation",
+)  # fmt: skip
 _TOP: Final = ("seed", "maps", "gas", "relations", "records", "regions", *_TABLES)
 
 

@@ -24,6 +24,7 @@ from kspipe.conversions import (
     LineRatio,
     StarFormation,
 )
+from kspipe.recipe.disc_tables import MidplaneTable, RadiationFieldTable, RotationTable
 from kspipe.recipe.kinds import ALPHA_CO_VALUE, RATIO, Ratio, Reddening
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.metallicity_table import MetallicityTable
@@ -234,6 +235,9 @@ class Recipe(Table):
     records: dict[str, RecordTable] = Field(default_factory=dict)
     relations: dict[str, RelationTable] = Field(default_factory=dict)
     comparison: ComparisonTable = ComparisonTable()
+    midplane: MidplaneTable | None = None
+    radiation_field: RadiationFieldTable | None = None
+    rotation: RotationTable | None = None
 
     def map_of(self, *tracers: str) -> str | None:
         """Name of the first map of one of these tracers."""

@@ -47,6 +47,11 @@ def resolved_recipe(recipe: Recipe, found: Mapping[str, Mapping[str, str]]) -> s
         tables.insert(2, "gas")
     if recipe.stars is not None:
         tables.insert(-1, "stars")
+    tables += [
+        name
+        for name in ("midplane", "radiation_field", "rotation")
+        if getattr(recipe, name) is not None
+    ]
     for name in tables:
         lines += _table(name, getattr(recipe, name))
     for family, group in (("regions", recipe.regions), ("records", recipe.records)):

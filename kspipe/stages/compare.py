@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import logging
+from collections.abc import Mapping
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -24,9 +26,12 @@ from kspipe.maps.skymap import Flag
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe, load_recipe
 from kspipe.relations import LAWS
+from kspipe.stages.atomic_only import from_atomic, summaries
 from kspipe.stages.folder import ProductFolder
+from kspipe.stages.law_inputs import law_inputs
 from kspipe.stages.pixels import pixel_table, write_pixels
 from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
+from kspipe.stages.relation_notes import history_lines, relation_notes
 from kspipe.stages.steps import read_findings
 from kspipe.stages.summary import make_summary, summary_text
 from kspipe.stages.surface import surfaces_of
@@ -36,6 +41,11 @@ __all__ = ["compare_relations", "reduced_plan"]
 log = logging.getLogger(__name__)
 
 SFR_UNIT = "solMass yr-1 kpc-2"
+INVERTED_LINES = (
+    "without CO: the primary image takes the atomic gas for all gas",
+    "INVERTED: for the smallest gas whose atomic part, by the relation, is the HI that is seen",
+    "INVERTED_ROOTS: 0 where no amount of gas leaves so much HI atomic",
+)
 
 
 def compare_relations(
@@ -86,39 +96,48 @@ def compare_relations(
     independent = independent_samples(
         grid.shape, grid.centre_pixel, beam_axes(beam)[0] / grid.pixel_arcsec
     )
-    residuals, headlines = {}, {}
+    inputs = law_inputs(recipe, disc)
+    residuals, headlines, notes = {}, {}, {}
     names = list(recipe.relations)
     for done, name in enumerate(names):
         progress(done, len(names), f"comparing with {name}")
         table = recipe.relations[name]
-        residuals[name] = predict_residuals(
-            gas, sfr, disc.oh, disc.flags, table.law, table.parameters
-        )
+        residuals[name] = predict_residuals(inputs, sfr, disc.flags, table.law, table.parameters)
+        notes[name] = relation_notes(recipe, name, inputs, disc, used)
         rng = generator(recipe.seed, "compare", name)
         headlines[name] = headline(
             residuals[name], sfr, used, independent, grid.jacobian_arcsec(), rng
         )
+    inverted = from_atomic(recipe, inputs, disc)
     progress(len(names), len(names), "compared")
     drop = tuple(stage for stage in folder.stages if stage == "figures")
     with folder.publish({"compare": print_}, drop=drop) as staging:
         (staging / "residuals").mkdir()
         for name in names:
-            _write_residuals(
-                staging / "residuals" / f"{name}.fits", recipe, name, residuals, beam, grid
-            )
+            more = inverted[name].extensions if name in inverted else {}
+            lines = history_lines(notes[name])
+            path = staging / "residuals" / f"{name}.fits"
+            _write_residuals(path, recipe, name, residuals, beam, grid, more, lines)
         meta = {
             "galaxy": recipe.galaxy.name,
             "kspipe": __version__,
             "imf": recipe.star_formation.imf,
             "flags": Flag.meanings(),
         }
-        write_pixels(
-            pixel_table(disc, residuals, used, independent, grid, meta), staging / "pixels.ecsv"
-        )
+        pixels = pixel_table(disc, residuals, used, independent, grid, meta)
+        for name, one in inverted.items():
+            one.add_columns(pixels, name, used)
+        write_pixels(pixels, staging / "pixels.ecsv")
         findings = read_findings(out)
         summary = make_summary(
             plan, disc, headlines, residuals, used, independent, matched, findings
         )
+        for name, note in notes.items():
+            summary["relations"][name] |= note
+        for name, sums in summaries(
+            recipe, inverted, disc, used, independent, grid.jacobian_arcsec()
+        ).items():
+            summary["relations"][name]["from_atomic"] = sums
         (staging / "summary.json").write_text(summary_text(summary), encoding="utf-8")
     return True
 
@@ -175,6 +194,8 @@ def _write_residuals(
     residuals: dict[str, Residuals],
     beam: NDArray[np.float64],
     grid: Grid,
+    more: Mapping[str, tuple[NDArray[Any], str]],
+    lines: list[str],
 ) -> None:
     r, table = residuals[name], recipe.relations[name]
     law = LAWS.get(table.law)
@@ -190,11 +211,14 @@ def _write_residuals(
             "DIFFERENCE": (r.difference, SFR_UNIT),
             "NORMALISED": (r.normalised, ""),
             "FLAGS": (r.flags, ""),
+            **more,
         },
         history=[
             f"{law.key} ({law.cite}, {law.where}): {law.formula}",
             f"parameters: {', '.join(f'{k} = {v:g}' for k, v in table.parameters.items())}",
             f"primary image: log10(observed / predicted) in dex; a {law.statistic} is predicted",
             f"predicted error: random; integrated over the noise in {r.n_integrated} pixels",
+            *lines,
+            *(INVERTED_LINES if more else ()),
         ],
     )

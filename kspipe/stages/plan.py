@@ -335,6 +335,8 @@ def compare_print(recipe: Recipe, reduction_print: str) -> str:
             "reduction": reduction_print,
             "relations": {n: _values(t) | {"defaults": None} for n, t in recipe.relations.items()},
             "laws": [LAWS.get(t.law).formula for t in recipe.relations.values()],
+            "disc": [t and _values(t) for t in (recipe.midplane, recipe.radiation_field)],
+            "rotation": recipe.rotation and _values(recipe.rotation),
             "comparison": _values(recipe.comparison),
             "seed": recipe.seed,
         }
