@@ -79,11 +79,12 @@ def takeover_depth(chi: Array, zeta_prime: Array, z_prime: Array) -> tuple[Array
     """
     with np.errstate(invalid="ignore", divide="ignore"):
         depth = np.log(HEATING_RATIO * chi * z_prime / zeta_prime)
-    return np.where(np.isfinite(depth), depth, np.nan), {
-        "chi": 1.0 / np.asarray(chi),
-        "zeta_prime": -1.0 / np.asarray(zeta_prime),
-        "z_prime": 1.0 / np.asarray(z_prime),
-    }
+        partials = {
+            "chi": 1.0 / np.asarray(chi),
+            "zeta_prime": -1.0 / np.asarray(zeta_prime),
+            "z_prime": 1.0 / np.asarray(z_prime),
+        }
+    return np.where(np.isfinite(depth), depth, np.nan), partials
 
 
 def alpha_g(
