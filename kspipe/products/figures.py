@@ -16,6 +16,7 @@ from kspipe.products.map_figures import draw_surface_densities
 from kspipe.products.read import Products, read_products, read_recipe
 from kspipe.products.relation_figure import draw_star_formation_law
 from kspipe.products.residual_figure import draw_residual
+from kspipe.products.state_figure import draw_gas_state
 from kspipe.products.style import figure_style, save_figure
 from kspipe.recipe import Recipe
 from kspipe.stages.folder import ProductFolder, fingerprint
@@ -59,6 +60,8 @@ def draw_figures(
         return False
     products = read_products(folder, recipe)
     drawings = _drawings(products)
+    if recipe.gas_state:
+        drawings["gas_state"] = partial(draw_gas_state, products, folder)
     with products_folder.publish({"figures": print_}) as staging, figure_style():
         (staging / "figures").mkdir()
         for done, (name, draw) in enumerate(drawings.items()):

@@ -17,6 +17,7 @@ from kspipe.recipe.check_records import (
     listed,
     stars_faults,
 )
+from kspipe.recipe.gas_state import gas_state_faults
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.models import (
     GalaxyTable,
@@ -46,6 +47,7 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
     if isinstance(tables.get("stars"), StarsTable):
         faults += stars_faults(tables["stars"], tables["maps"])
     faults += _map_extras(maps)
+    faults += gas_state_faults(tables)
     if isinstance(tables["star_formation"], StarFormationTable):
         faults += _star_formation_faults(tables["star_formation"], tables["maps"])
         faults += convention_faults(

@@ -10,6 +10,7 @@ from pydantic import BaseModel, ValidationError
 
 from kspipe.core.errors import Fault, RecipeError, nearest
 from kspipe.recipe.checks import check_relation, check_together
+from kspipe.recipe.gas_state import GasStateTable, InsideBeamTable, LinewidthMap
 from kspipe.recipe.map_table import MapTable, NoiseFile, NoiseTyped
 from kspipe.recipe.models import (
     ComparisonTable,
@@ -36,9 +37,10 @@ _TABLES: Final[dict[str, type[BaseModel]]] = {
     "star_formation": StarFormationTable,
     "stars": StarsTable,
     "comparison": ComparisonTable,
+    "inside_beam": InsideBeamTable,
 }
-_OPTIONAL: Final = ("relations", "comparison", "stars")
-_TOP: Final = ("seed", "maps", "gas", "relations", *_TABLES)
+_OPTIONAL: Final = ("relations", "comparison", "stars", "inside_beam")
+_TOP: Final = ("seed", "maps", "gas", "relations", "gas_state", *_TABLES)
 
 
 def load_recipe(path: str | Path, *, in_memory: frozenset[str] = frozenset()) -> Recipe:
@@ -113,6 +115,8 @@ def parse_recipe(
     tables["gas"] = _gas(raw, faults)
     tables["maps"] = _maps(raw, folder, in_memory, faults)
     tables["relations"] = _relations(raw, faults)
+    if "gas_state" in raw:
+        tables["gas_state"] = _gas_state(raw["gas_state"], folder, faults)
     if isinstance(tables["metallicity"], MetallicityTable) and tables["metallicity"].map:
         located = _locate(tables["metallicity"].map, folder, "metallicity.map", faults)
         tables["metallicity"] = tables["metallicity"].model_copy(update={"map": located})
@@ -221,6 +225,28 @@ def _maps(
             changes["psf"] = _locate(model.psf, folder, f"{where}.psf", faults)
         found[name] = model.model_copy(update=changes)
     return found
+
+
+def _gas_state(raw: object, folder: Path, faults: list[Fault]) -> GasStateTable | None:
+    """Check the state of the gas and find the files that it names."""
+    is_faulty = False
+    if isinstance(raw, dict) and "finer_map" in raw:
+        found: list[Fault] = []
+        nested = _maps({"maps": {"finer_map": raw["finer_map"]}}, folder, frozenset(), found)
+        faults += [
+            Fault(fault.where.replace("maps.", "gas_state."), fault.what, fault.do)
+            for fault in found
+        ]
+        raw = {**raw, "finer_map": nested["finer_map"]}
+        is_faulty = bool(found)
+    state = _table(GasStateTable, raw, "gas_state", faults)
+    if state is None or is_faulty:
+        return None
+    if not isinstance(state.linewidth, LinewidthMap):
+        return state
+    located = _locate(state.linewidth.map, folder, "gas_state.linewidth.map", faults)
+    linewidth = state.linewidth.model_copy(update={"map": located})
+    return state.model_copy(update={"linewidth": linewidth})
 
 
 def _map(table: object, where: str, faults: list[Fault]) -> MapTable | None:

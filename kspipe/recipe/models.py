@@ -13,6 +13,7 @@ from pydantic import AfterValidator, BeforeValidator, Field, model_validator
 
 from kspipe.conversions import ALPHA_CO, EXTINCTION, LINE_RATIO, OH_SCALES, STAR_FORMATION, STARS
 from kspipe.core.errors import nearest
+from kspipe.recipe.gas_state import GasStateTable, InsideBeamTable
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.quantity import Measured, Position, parse_centre, parse_measured
 from kspipe.recipe.values import (
@@ -251,6 +252,8 @@ class Recipe(Table):
     stars: StarsTable | None = None
     relations: dict[str, RelationTable] = Field(default_factory=dict)
     comparison: ComparisonTable = ComparisonTable()
+    gas_state: GasStateTable | None = None
+    inside_beam: InsideBeamTable | None = None
 
     def map_of(self, *tracers: str) -> str | None:
         """Name of the first map of one of these tracers."""

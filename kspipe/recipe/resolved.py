@@ -45,6 +45,7 @@ def resolved_recipe(recipe: Recipe, found: Mapping[str, Mapping[str, str]]) -> s
         tables.insert(2, "gas")
     if recipe.stars is not None:
         tables.insert(-1, "stars")
+    tables += [name for name in ("gas_state", "inside_beam") if getattr(recipe, name)]
     for name in tables:
         lines += _table(name, getattr(recipe, name))
     for name, relation in recipe.relations.items():

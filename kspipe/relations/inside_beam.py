@@ -4,14 +4,15 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Mapping
-from typing import Final
+from typing import Final, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.relations.law import Law
+from kspipe.relations.law import Prediction
 
 __all__ = [
+    "Relation",
     "beam_bias_dex",
     "clumping_of_beam",
     "clumping_of_moments",
@@ -29,6 +30,17 @@ LARGE_BEAM_CLUMPING: Final = 5.0
 
 _NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(32)
 _WEIGHTS = _WEIGHTS / _WEIGHTS.sum()
+
+
+class Relation(Protocol):
+    """What is needed of a `Law`."""
+
+    @property
+    def needs(self) -> tuple[str, ...]:
+        """Names of the inputs, the gas first."""
+
+    def predict(self, inputs: Mapping[str, Array], parameters: Mapping[str, float]) -> Prediction:
+        """Evaluate it."""
 
 
 def clumping_of_beam(beam_pc: Array | float) -> Array:
@@ -75,7 +87,7 @@ def clumping_of_moments(mean: Array, mean_square: Array, mean_variance: Array | 
 
 
 def mean_over_lognormal(
-    law: Law,
+    law: Relation,
     inputs: Mapping[str, Array],
     parameters: Mapping[str, float],
     scatter_dex: Array | float,
@@ -84,9 +96,9 @@ def mean_over_lognormal(
 
     Parameters
     ----------
-    law : Law
+    law : Law or other Relation
     inputs : mapping of str to float64 array
-        As in `Law.predict`; ``sigma_gas`` is the mean over the beam.
+        As in `Law.predict`; its gas is the mean over the beam.
     parameters : mapping of str to float
     scatter_dex : float64 array or float
         Standard deviation of log10 Sigma_gas inside the beam.
@@ -98,7 +110,7 @@ def mean_over_lognormal(
         0.3 % where the gas lies about a kink such as that of krumholz2009 at 85 Msun/pc2.
     """
     sigma_ln = np.log(10.0) * np.asarray(scatter_dex)
-    gas = np.asarray(inputs["sigma_gas"], dtype=float)
+    gas = np.asarray(inputs[law.needs[0]], dtype=float)
 
     def at(node: float) -> Array:
         return np.asarray(gas * np.exp(sigma_ln * node - sigma_ln**2 / 2.0))
@@ -107,7 +119,7 @@ def mean_over_lognormal(
 
 
 def beam_bias_dex(
-    law: Law,
+    law: Relation,
     inputs: Mapping[str, Array],
     parameters: Mapping[str, float],
     scatter_dex: Array | float,
@@ -122,58 +134,58 @@ def beam_bias_dex(
 
 
 def mean_over_noise(
-    law: Law,
+    law: Relation,
     inputs: Mapping[str, Array],
     parameters: Mapping[str, float],
-    sigma_gas_error: Array,
+    gas_error: Array,
 ) -> Array:
     """Mean Sigma_SFR that a relation gives where Sigma_gas is known with Gaussian noise.
 
     Parameters
     ----------
     law, inputs, parameters
-        As in `mean_over_lognormal`; ``sigma_gas`` stands for the truth.
-    sigma_gas_error : float64 array
+        As in `mean_over_lognormal`; the gas stands for the truth.
+    gas_error : float64 array
         Random 1-sigma error [Msun/pc2].
 
     Notes
     -----
     Where noise reaches below zero gas, no gas forms no stars.
     """
-    gas = np.asarray(inputs["sigma_gas"], dtype=float)
+    gas = np.asarray(inputs[law.needs[0]], dtype=float)
 
     def at(node: float) -> Array:
-        shifted = gas + node * sigma_gas_error
+        shifted = gas + node * gas_error
         return np.where(shifted < 0.0, 0.0, shifted)
 
     return _average(law, inputs, parameters, at)
 
 
 def noise_bias(
-    law: Law,
+    law: Relation,
     inputs: Mapping[str, Array],
     parameters: Mapping[str, float],
-    sigma_gas_error: Array,
+    gas_error: Array,
 ) -> Array:
     """Factor by which noise in Sigma_gas makes a relation predict too much on average.
 
     Parameters are those of `mean_over_noise`. NaN where nothing is predicted without noise.
     """
     plain = law.predict(inputs, parameters).sigma_sfr
-    noisy = mean_over_noise(law, inputs, parameters, sigma_gas_error)
+    noisy = mean_over_noise(law, inputs, parameters, gas_error)
     with np.errstate(invalid="ignore", divide="ignore"):
         return np.where(plain > 0, noisy / plain, np.nan)
 
 
 def _average(
-    law: Law,
+    law: Relation,
     inputs: Mapping[str, Array],
     parameters: Mapping[str, float],
     at: Callable[[float], Array],
 ) -> Array:
     total: Array | float = 0.0
     for node, weight in zip(_NODES, _WEIGHTS, strict=True):
-        predicted = law.predict({**inputs, "sigma_gas": at(float(node))}, parameters)
+        predicted = law.predict({**inputs, law.needs[0]: at(float(node))}, parameters)
         total = total + weight * predicted.sigma_sfr
     return np.asarray(total)
 

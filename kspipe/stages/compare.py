@@ -25,8 +25,10 @@ from kspipe.matching import Grid
 from kspipe.recipe import Recipe, load_recipe
 from kspipe.relations import LAWS
 from kspipe.stages.folder import ProductFolder
+from kspipe.stages.inside_beam import add_inside_beam
 from kspipe.stages.pixels import pixel_table, write_pixels
 from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
+from kspipe.stages.state import gas_state_of
 from kspipe.stages.steps import read_findings
 from kspipe.stages.summary import make_summary, summary_text
 from kspipe.stages.surface import surfaces_of
@@ -99,6 +101,7 @@ def compare_relations(
             residuals[name], sfr, used, independent, grid.jacobian_arcsec(), rng
         )
     progress(len(names), len(names), "compared")
+    state = gas_state_of(plan, disc)
     drop = tuple(stage for stage in folder.stages if stage == "figures")
     with folder.publish({"compare": print_}, drop=drop) as staging:
         (staging / "residuals").mkdir()
@@ -112,13 +115,20 @@ def compare_relations(
             "imf": recipe.star_formation.imf,
             "flags": Flag.meanings(),
         }
-        write_pixels(
-            pixel_table(disc, residuals, used, independent, grid, meta), staging / "pixels.ecsv"
+        pixels = pixel_table(disc, residuals, used, independent, grid, meta)
+        biases = add_inside_beam(
+            recipe, {"sigma_gas": gas.value, "oh": disc.oh}, {"sigma_gas": gas.error}, used, pixels
         )
+        if state:
+            state.write(staging)
+            state.add_columns(pixels, used)
+        write_pixels(pixels, staging / "pixels.ecsv")
         findings = read_findings(out)
         summary = make_summary(
             plan, disc, headlines, residuals, used, independent, matched, findings
         )
+        summary |= {"inside_beam": biases} if biases else {}
+        summary |= {"gas_state": state.summary(used)} if state else {}
         (staging / "summary.json").write_text(summary_text(summary), encoding="utf-8")
     return True
 

@@ -36,6 +36,7 @@ from kspipe.matching import Grid, choose_beam
 from kspipe.recipe import Recipe
 from kspipe.relations import LAWS
 from kspipe.stages.folder import file_checksum, fingerprint
+from kspipe.stages.state_files import state_files_print, state_values
 
 __all__ = ["InMemory", "Plan", "choices_of", "compare_print", "convert_print", "make_plan"]
 
@@ -283,6 +284,7 @@ def convert_print(recipe: Recipe, match_prints: Mapping[str, str]) -> str:
             "ratios": {n: [t.nii_ratio, t.as_24um] for n, t in recipe.maps.items()},
             "low_snr": recipe.comparison.low_snr,
             "records": [f"{r.key}: {r.formula}" for r in records_of(recipe)],
+            **({"gas state files": state_files_print(recipe)} if recipe.gas_state else {}),
         }
     )
 
@@ -296,5 +298,7 @@ def compare_print(recipe: Recipe, reduction_print: str) -> str:
             "laws": [LAWS.get(t.law).formula for t in recipe.relations.values()],
             "comparison": _values(recipe.comparison),
             "seed": recipe.seed,
+            **({"gas state": state_values(recipe.gas_state)} if recipe.gas_state else {}),
+            **({"inside beam": _values(recipe.inside_beam)} if recipe.inside_beam else {}),
         }
     )

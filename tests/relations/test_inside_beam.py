@@ -1,13 +1,14 @@
 """What a beam hides: clumping three ways, structure inside the beam, noise in the gas."""
 
 import math
+from dataclasses import dataclass
 
 import numpy as np
 import pytest
 from scipy.integrate import quad
 from scipy.optimize import brentq
 
-from kspipe.relations import LAWS, Law, Prediction
+from kspipe.relations import LAWS, Prediction
 from kspipe.relations.inside_beam import (
     beam_bias_dex,
     clumping_of_beam,
@@ -22,17 +23,15 @@ KPC = {"clumping": 5.0}
 OH = np.array(8.69)
 
 
-def power_law(exponent: float) -> Law:
-    def function(inputs, _):
+@dataclass
+class PowerLaw:
+    exponent: float
+    needs: tuple[str, ...] = ("sigma_gas",)
+
+    def predict(self, inputs, _) -> Prediction:
         sigma = np.asarray(inputs["sigma_gas"], dtype=float)
         nothing = np.zeros(sigma.shape, dtype=bool)
-        return Prediction(2.5e-4 * sigma**exponent, None, {}, nothing, nothing)
-
-    return Law(
-        key="power", label="", cite="", where="", formula="", certainty="verified",
-        function=function, needs=("sigma_gas",), parameters=(), helium_factor=1.36,
-        metallicity_anchor="none", field_unit=None,
-    )  # fmt: skip
+        return Prediction(2.5e-4 * sigma**self.exponent, None, {}, nothing, nothing)
 
 
 # --- clumping ------------------------------------------------------------------------------------
@@ -76,7 +75,7 @@ def test_what_no_clumping_can_be_told_of() -> None:
 
 def test_a_power_law_over_a_log_normal() -> None:
     # <S^N> = <S>^N exp[N (N - 1) sigma_ln^2 / 2]: +20 % for N = 1.4 over 0.35 dex.
-    law, inputs = power_law(1.4), {"sigma_gas": np.array([3.0, 50.0])}
+    law, inputs = PowerLaw(1.4), {"sigma_gas": np.array([3.0, 50.0])}
     ratio = mean_over_lognormal(law, inputs, {}, 0.35) / law.predict(inputs, {}).sigma_sfr
     exact = math.exp(1.4 * 0.4 * (0.35 * math.log(10)) ** 2 / 2)
     np.testing.assert_allclose(ratio, exact, rtol=1e-12)
@@ -86,7 +85,7 @@ def test_a_power_law_over_a_log_normal() -> None:
 
 def test_a_linear_law_does_not_see_structure() -> None:
     inputs = {"sigma_gas": np.array([3.0, 50.0])}
-    np.testing.assert_allclose(beam_bias_dex(power_law(1.0), inputs, {}, 0.5), 0.0, atol=1e-13)
+    np.testing.assert_allclose(beam_bias_dex(PowerLaw(1.0), inputs, {}, 0.5), 0.0, atol=1e-13)
     np.testing.assert_allclose(beam_bias_dex(KMT, {**inputs, "oh": OH}, KPC, 0.0), 0.0, atol=1e-13)
 
 
