@@ -172,8 +172,8 @@ class GasState:
 
     def summary(self, used: NDArray[np.bool_]) -> dict[str, Any]:
         """Sum up as nested plain values."""
-        keys = sorted({key for name in self.quantities for key in QUANTITIES[name].records})
-        records = [_record(key) for key in keys]
+        keys = {key for name in self.quantities for key in QUANTITIES[name].records}
+        records = [_record(key) for key in sorted(keys | self._choice_records())]
         return {
             "label": MODEL_IMPLIED if self.beam_pc > CLOUD_BEAM_PC else "see each quantity",
             "beam_pc": self.beam_pc,
@@ -186,6 +186,18 @@ class GasState:
             "records": {r.key: {"formula": r.formula, "certainty": r.certainty} for r in records},
             "sources": {r.cite: str(cite(r.cite)) for r in records},
         }
+
+    def _choice_records(self) -> set[str]:
+        """Keys of the records that choices name."""
+        table = _table(self.plan)
+        density = {"two-phase": ("two_phase",), "hydrostatic": ("hydrostatic",)}.get(
+            str(table.density), ("two_phase", "hydrostatic") if table.density == "larger" else ()
+        )
+        keys = {f"krumholz2013_{name}" for name in density}
+        keys |= {"krumholz2013_field"} if table.field == "star formation" else set()
+        keys |= {table.linewidth} if isinstance(table.linewidth, str) else set()
+        keys |= {f"jeans_{table.jeans}", f"bonnor_ebert_{table.bonnor_ebert}"}
+        return keys
 
     def _count(self, name: str, used: NDArray[np.bool_], flag: Flag) -> int:
         return int(np.sum((self.flags[name][used] & int(flag)) != 0))
@@ -316,7 +328,10 @@ def _table(plan: Plan) -> GasStateTable:
 
 
 def _record(key: str) -> Any:
-    return STATE.get(key) if key in STATE else TURBULENCE.get(key)
+    for shelf in (STATE, TURBULENCE):
+        if key in shelf:
+            return shelf.get(key)
+    return LINEWIDTH_SIZE.get(key)
 
 
 def _error(

@@ -73,6 +73,8 @@ def gas_temperature(
     z_prime: Array,
     depth: Array | float,
     density_clumping: float = 1.0,
+    *,
+    slopes: bool = True,
 ) -> Temperature:
     """Equilibrium temperature at a density, with both kinds of heating.
 
@@ -90,6 +92,8 @@ def gas_temperature(
         Optical depth of dust between the gas and the surface.
     density_clumping : float
         <n^2> / <n>^2 of what the density is the mean of.
+    slopes : bool
+        Whether derivatives are wanted.
 
     Returns
     -------
@@ -102,24 +106,32 @@ def gas_temperature(
     """
     photoelectric = PHOTOELECTRIC_ERG_S * z_prime * np.exp(-np.asarray(depth))
     heating = photoelectric * chi + COSMIC_RAY_ERG_S * zeta_prime
-    kelvin, per_log, no_cold = _balance(density_clumping * density_cm3 * z_prime, heating)
-    share = photoelectric * chi / heating
-    return Temperature(
-        kelvin,
-        {
-            "density": per_log / density_cm3,
-            "chi": -per_log * photoelectric / heating,
-            "zeta_prime": -per_log * COSMIC_RAY_ERG_S / heating,
-            "z_prime": per_log * (1.0 - share) / z_prime,
-            "depth": per_log * share,
-        },
-        no_cold,
-        kelvin < COLDEST_C_PLUS_K,
+    kelvin, no_cold = _balance(
+        COOLING_ERG_CM3_S * density_clumping * density_cm3 * z_prime, heating
     )
+    partials: dict[str, Array] = {}
+    if slopes:
+        per_log = _per_log(kelvin)
+        partials = {"density": per_log / density_cm3}
+        partials |= _heat_partials(per_log, photoelectric, chi, heating, z_prime)
+    return Temperature(kelvin, partials, no_cold, kelvin < COLDEST_C_PLUS_K)
+
+
+def _heat_partials(
+    per_log: Array, photoelectric: Array, chi: Array, heating: Array, z_prime: Array
+) -> dict[str, Array]:
+    """Derivatives by what heats, from that by the logarithm of cooling over heating."""
+    share = photoelectric * chi / heating
+    return {
+        "chi": -per_log * photoelectric / heating,
+        "zeta_prime": -per_log * COSMIC_RAY_ERG_S / heating,
+        "z_prime": per_log * (1.0 - share) / z_prime,
+        "depth": per_log * share,
+    }
 
 
 def photoelectric_temperature(
-    density_cm3: Array, chi: Array, density_clumping: float = 1.0
+    density_cm3: Array, chi: Array, density_clumping: float = 1.0, *, slopes: bool = True
 ) -> Temperature:
     """Unshielded regime: FUV light alone heats; metallicity drops out.
 
@@ -128,13 +140,23 @@ def photoelectric_temperature(
     .. [1] krumholz2011: T = 91 K / ln[1.1056e-27 C n / (4e-26 chi)].
     """
     heating = PHOTOELECTRIC_ERG_S * np.asarray(chi)
-    kelvin, per_log, no_cold = _balance(density_clumping * np.asarray(density_cm3), heating)
-    partials = {"density": per_log / density_cm3, "chi": -per_log / chi}
+    kelvin, no_cold = _balance(
+        COOLING_ERG_CM3_S * density_clumping * np.asarray(density_cm3), heating
+    )
+    partials: dict[str, Array] = {}
+    if slopes:
+        per_log = _per_log(kelvin)
+        partials = {"density": per_log / density_cm3, "chi": -per_log / chi}
     return Temperature(kelvin, partials, no_cold, kelvin < COLDEST_C_PLUS_K)
 
 
 def cosmic_ray_temperature(
-    density_cm3: Array, zeta_prime: Array, z_prime: Array, density_clumping: float = 1.0
+    density_cm3: Array,
+    zeta_prime: Array,
+    z_prime: Array,
+    density_clumping: float = 1.0,
+    *,
+    slopes: bool = True,
 ) -> Temperature:
     """Shielded regime: cosmic rays alone heat.
 
@@ -143,22 +165,32 @@ def cosmic_ray_temperature(
     .. [1] krumholz2011: T = 91 K / ln[1.1056e-27 Z' C n / (2e-27 zeta')].
     """
     heating = COSMIC_RAY_ERG_S * np.asarray(zeta_prime)
-    kelvin, per_log, no_cold = _balance(density_clumping * density_cm3 * z_prime, heating)
-    partials = {
-        "density": per_log / density_cm3,
-        "zeta_prime": -per_log / zeta_prime,
-        "z_prime": per_log / z_prime,
-    }
+    kelvin, no_cold = _balance(
+        COOLING_ERG_CM3_S * density_clumping * density_cm3 * z_prime, heating
+    )
+    partials: dict[str, Array] = {}
+    if slopes:
+        per_log = _per_log(kelvin)
+        partials = {
+            "density": per_log / density_cm3,
+            "zeta_prime": -per_log / zeta_prime,
+            "z_prime": per_log / z_prime,
+        }
     return Temperature(kelvin, partials, no_cold, kelvin < COLDEST_C_PLUS_K)
 
 
-def _balance(cooling_density: Array, heating_erg_s: Array) -> tuple[Array, Array, Mask]:
-    """Temperature, its derivative by the logarithm of cooling over heating, no solution."""
+def _balance(cooling_erg_s: Array, heating_erg_s: Array) -> tuple[Array, Mask]:
+    """Temperature, and where there is no cold solution; the cooling is that of infinite T."""
     with np.errstate(invalid="ignore", divide="ignore"):
-        log_ratio = np.log(COOLING_ERG_CM3_S * cooling_density / heating_erg_s)
-        hot = log_ratio < C_PLUS_LEVEL_K / HOTTEST_COLD_K
-        kelvin = C_PLUS_LEVEL_K / np.where(hot, np.nan, log_ratio)
-    return kelvin, -(kelvin**2) / C_PLUS_LEVEL_K, np.asarray(hot)
+        log_ratio = np.asarray(np.log(cooling_erg_s / heating_erg_s))
+        hot = np.asarray(log_ratio < C_PLUS_LEVEL_K / HOTTEST_COLD_K)
+        np.putmask(log_ratio, hot, np.nan)
+        return np.asarray(C_PLUS_LEVEL_K / log_ratio), hot
+
+
+def _per_log(kelvin: Array) -> Array:
+    """Derivative of a temperature by the logarithm of cooling over heating, at a density."""
+    return np.asarray(-(kelvin**2) / C_PLUS_LEVEL_K)
 
 
 def isobaric_temperature(
@@ -168,6 +200,8 @@ def isobaric_temperature(
     z_prime: Array,
     depth: Array | float,
     density_clumping: float = 1.0,
+    *,
+    slopes: bool = True,
 ) -> Temperature:
     """Equilibrium temperature at a pressure: the density follows from it.
 
@@ -177,7 +211,7 @@ def isobaric_temperature(
     ----------
     pressure_k_cm3 : float64 array
         Density of H nuclei times temperature; P/k is 1.1 of it in atomic gas with helium.
-    chi, zeta_prime, z_prime, depth, density_clumping
+    chi, zeta_prime, z_prime, depth, density_clumping, slopes
         As in `gas_temperature`.
 
     Returns
@@ -207,20 +241,12 @@ def isobaric_temperature(
         for _ in range(_STEPS):
             u = u * (np.log(u) + excess) / (u - 1.0)
     kelvin = C_PLUS_LEVEL_K / u
-    per_log = -kelvin / (u - 1.0)
-    share = photoelectric * chi / heating
-    return Temperature(
-        kelvin,
-        {
-            "pressure": per_log / pressure_k_cm3,
-            "chi": -per_log * photoelectric / heating,
-            "zeta_prime": -per_log * COSMIC_RAY_ERG_S / heating,
-            "z_prime": per_log * (1.0 - share) / z_prime,
-            "depth": per_log * share,
-        },
-        no_cold,
-        kelvin < COLDEST_C_PLUS_K,
-    )
+    partials: dict[str, Array] = {}
+    if slopes:
+        per_log = -kelvin / (u - 1.0)
+        partials = {"pressure": per_log / pressure_k_cm3}
+        partials |= _heat_partials(per_log, photoelectric, chi, heating, z_prime)
+    return Temperature(kelvin, partials, no_cold, kelvin < COLDEST_C_PLUS_K)
 
 
 _RATES = (
