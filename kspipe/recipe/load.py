@@ -9,6 +9,7 @@ from typing import Any, Final, TypeVar
 from pydantic import BaseModel, ValidationError
 
 from kspipe.core.errors import Fault, RecipeError, nearest
+from kspipe.recipe.beam_clumping import with_beam_clumping
 from kspipe.recipe.checks import check_relation, check_together
 from kspipe.recipe.gas_state import GasStateTable, InsideBeamTable, LinewidthMap
 from kspipe.recipe.map_table import MapTable, NoiseFile, NoiseTyped
@@ -114,7 +115,7 @@ def parse_recipe(
     tables["seed"] = _seed(raw, faults)
     tables["gas"] = _gas(raw, faults)
     tables["maps"] = _maps(raw, folder, in_memory, faults)
-    tables["relations"] = _relations(raw, faults)
+    tables["relations"] = with_beam_clumping(raw, tables, _relations, faults)
     if "gas_state" in raw:
         tables["gas_state"] = _gas_state(raw["gas_state"], folder, faults)
     if isinstance(tables["metallicity"], MetallicityTable) and tables["metallicity"].map:

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from kspipe.conversions import z_prime
 from kspipe.core.citations import cite
 from kspipe.core.errors import KspipeWarning
-from kspipe.kernels.noise import NoiseTerm, propagate, total_error
+from kspipe.kernels.noise import NoiseTerm
 from kspipe.maps.product import write_product
 from kspipe.maps.skymap import Flag
 from kspipe.recipe.gas_state import GasStateTable, LinewidthMap
@@ -32,6 +32,7 @@ from kspipe.relations.state import (
     gas_state,
 )
 from kspipe.stages.plan import Plan
+from kspipe.stages.state_errors import state_errors
 from kspipe.stages.state_files import finer_clumping, linewidth_map
 from kspipe.stages.surface import Disc
 
@@ -55,7 +56,7 @@ class GasState:
     quantities : dict of str to Traced
         By the names of `QUANTITIES`.
     errors : dict of str to (ny, nx) float64 array
-        Random, to first order; zero where a quantity rests on choices only.
+        Random, half of a 68 % interval; zero where a quantity rests on choices only.
     thinner, denser : dict of str to Traced
         The same at a third and at three times the density.
     flags : dict of str to (ny, nx) int32 array
@@ -119,7 +120,9 @@ class GasState:
         lines += [line for word, line in self._definitions() if name.startswith(word)]
         lines += [f"{choice}: {origin}" for choice, origin in self.choices.items()]
         lines += self.story
-        lines.append("ERROR: random, to first order; what all pixels share is not in it")
+        lines.append(
+            "ERROR: random, half of the interval that holds 68 %, without what all pixels share"
+        )
         if quantity.follows_density:
             lines.append("AT_N_OVER_3, AT_3N: the same at a third and at three times the density")
         return lines
@@ -293,7 +296,9 @@ def gas_state_of(plan: Plan, disc: Disc) -> GasState | None:
     return GasState(
         plan=plan,
         quantities=found,
-        errors={name: _error(traced, noise, grid.shape) for name, traced in found.items()},
+        errors=state_errors(
+            lambda moved: gas_state(moved, conditions), inputs, noise, found, grid.shape
+        ),
         thinner=thinner,
         denser=denser,
         flags={
@@ -332,16 +337,6 @@ def _record(key: str) -> Any:
         if key in shelf:
             return shelf.get(key)
     return LINEWIDTH_SIZE.get(key)
-
-
-def _error(
-    traced: Traced, noise: dict[str, tuple[NoiseTerm, ...]], shape: tuple[int, int]
-) -> Array:
-    """Random error to first order; NaN where there is no value."""
-    slopes = {name: slope for name, slope in traced.slopes.items() if name in noise}
-    terms = propagate({name: noise[name] for name in slopes}, slopes)
-    error = total_error(terms) if terms else np.zeros(shape)
-    return np.where(np.isfinite(traced.value), np.broadcast_to(error, shape), np.nan)
 
 
 def _flags(

@@ -141,3 +141,26 @@ def test_the_resolved_recipe_says_the_same(folder, tmp_path, name: str) -> None:
     table = tomllib.loads(text)["gas_state"]
     assert table["jeans"] == "cube"
     assert 'jeans = "cube"  # default' in text
+
+
+def test_the_clumping_of_the_beam_in_a_relation(folder, tmp_path) -> None:
+    # 500 pc: 5^(log10 5), between 1 at 100 pc and 5 at 1 kpc.
+    relations = {
+        "beam": {"law": "krumholz2009", "clumping": "beam"},
+        "typed": {"law": "krumholz2009", "clumping": 5},
+    }
+    recipe = parse(folder, relations=relations, grid={"beam": "500 pc"})
+    assert recipe.relations["beam"].parameters["clumping"] == pytest.approx(3.0802, rel=1e-4)
+    assert recipe.relations["typed"].parameters["clumping"] == 5.0
+    assert "clumping" in recipe.relations["beam"].defaults
+    path = tmp_path / "recipe.toml"
+    path.write_text(resolved_recipe(recipe, {}), encoding="utf-8")
+    again = load_recipe(path)
+    assert again.relations["beam"].parameters == recipe.relations["beam"].parameters
+
+
+def test_no_clumping_of_a_beam_that_is_not_known_yet(folder) -> None:
+    relations = {"beam": {"law": "krumholz2009", "clumping": "beam"}}
+    with pytest.raises(RecipeError, match=r"relations\.beam\.clumping.*type a number") as caught:
+        parse(folder, relations=relations, grid={"beam": "common"})
+    assert len(caught.value.faults) == 1

@@ -9,12 +9,14 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+import astropy.units as u
 import numpy as np
 import pytest
 from astropy.io import fits
 from astropy.table import Table
 from helpers import assert_maps_close, demo_recipe, make_wcs
 
+import kspipe
 from kspipe.core.errors import KspipeWarning, MapError, OutputError
 from kspipe.maps.product import read_image, read_matched
 from kspipe.maps.skymap import Flag
@@ -141,6 +143,17 @@ def test_errors_are_the_scatter_of_noisy_gas(typed) -> None:
     for name, draws in (("temperature_shielded", cold.kelvin), ("jeans_mass_shielded", mass)):
         ratio = image(typed, name, "ERROR")[sure] / draws.std(axis=0)
         np.testing.assert_allclose(ratio, 1.0, atol=0.06)
+    # Fainter gas moves its temperature far from linearly: half of the central 68 % of draws.
+    faint = (gas > 2 * error) & (gas < 8 * error)
+    assert faint.sum() > 5
+    drawn = gas[faint] + error[faint] * rng.normal(size=(20_000, int(faint.sum())))
+    one = np.ones(drawn.shape)
+    depth = 0.066850 * 5 * np.maximum(drawn, 0.0) * z[faint]
+    cold = gas_temperature(100 * one, one, one, z[faint] * one, depth).kelvin
+    low, high = np.percentile(cold, [15.866, 84.134], axis=0)
+    ratio = image(typed, "temperature_shielded", "ERROR")[faint] / (0.5 * (high - low))
+    # A percentile half-width of 20000 draws is good to about 1 %.
+    np.testing.assert_allclose(ratio, 1.0, atol=0.05)
     # What rests on choices alone has no random error.
     assert np.nanmax(image(typed, "temperature_unshielded", "ERROR")) == 0.0
 
@@ -180,6 +193,16 @@ def test_the_summary(typed) -> None:
     assert told["choices"]["mass per particle"].count("the default") == 2
     assert told["records"]["virial_parameter"]["certainty"] == "verified"
     assert "krumholz2011" in told["sources"]
+
+
+def test_the_same_in_a_script(typed) -> None:
+    comparison = kspipe.Comparison(typed)
+    got = comparison.state("jeans_mass_shielded")
+    assert got.unit == u.Msun
+    np.testing.assert_array_equal(got.value, image(typed, "jeans_mass_shielded"))
+    assert comparison.state("temperature_shielded", "AT_3N").unit == u.K
+    with pytest.raises(KeyError, match="'jeans_mas' is not among the state of the gas"):
+        comparison.state("jeans_mas")
 
 
 def test_inside_the_beam(typed) -> None:
@@ -230,9 +253,11 @@ def test_field_and_density_from_the_maps(galaxy, folder) -> None:
     # in two phases the density follows the field and the transition stays where it is.
     error = got.errors["depth_transition"]
     assert np.all(error[floor] > 0)
-    in_two_phases = seen & (density < two * (1 + 1e-12))
-    assert in_two_phases.any()
-    np.testing.assert_allclose(error[in_two_phases], 0.0, atol=1e-15)
+    two_phase = {k: v for k, v in choices.items() if k != "midplane_density"}
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", KspipeWarning)
+        still = state_of(galaxy, folder, two_phase | {"density": "two-phase"})
+    np.testing.assert_allclose(still.errors["depth_transition"][seen], 0.0, atol=1e-15)
     assert f"5 for a beam of {BEAM_PC:.0f} pc" in got.choices["clumping"]
     # Without star formation there is no field, and no value.
     assert np.isnan(got.quantities["temperature_unshielded"].value[sfr <= 0]).all()
@@ -284,7 +309,11 @@ def test_a_map_of_linewidths(typed) -> None:
     alpha = 5 * sigma**2 / (4.30092e-3 * np.pi * BEAM_PC / 2 * complex_)
     seen = np.isfinite(got) & (gas > 0)
     np.testing.assert_allclose(image(typed, "virial_parameter")[seen], alpha[seen], rtol=1e-4)
-    relative = np.hypot(2 * 0.3 / sigma, error / gas)
+    # Half of the span of 1/(1 +- 1/snr) along the gas, and the linewidth to first order.
+    snr = gas / error
+    span = np.where(snr > 1, 1 / (1 - np.minimum(1 / snr, 0.999) ** 2) / snr, np.nan)
+    relative = np.hypot(2 * 0.3 / sigma, span)
+    seen &= snr > 1.01
     got_error = image(typed, "virial_parameter", "ERROR") / image(typed, "virial_parameter")
     np.testing.assert_allclose(got_error[seen], relative[seen], rtol=1e-4)
     history = " ".join(fits.getheader(typed / "state" / "linewidth.fits")["HISTORY"])
