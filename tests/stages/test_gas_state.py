@@ -263,6 +263,20 @@ def test_field_and_density_from_the_maps(galaxy, folder) -> None:
     assert np.isnan(got.quantities["temperature_unshielded"].value[sfr <= 0]).all()
 
 
+def test_without_co_the_midplane_holds_atoms_alone(galaxy, folder) -> None:
+    plan, disc = galaxy
+    atoms = {name: s for name, s in disc.surfaces.items() if name != "sigma_mol"}
+    choices = TYPED | {"density": "hydrostatic", "midplane_density": "0.05 Msun/pc3"}
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", KspipeWarning)
+        got = state_of((plan, replace(disc, surfaces=atoms)), folder, choices)
+        whole = state_of(galaxy, folder, choices)
+    assert "no CO map" in got.choices["molecular gas"]
+    assert "molecular gas" not in whole.choices
+    both = np.isfinite(got.quantities["density"].value) & (disc.surfaces["sigma_mol"].value > 0)
+    assert np.all(whole.quantities["density"].value[both] > got.quantities["density"].value[both])
+
+
 def test_gas_without_a_cold_solution_is_flagged_counted_and_warned_of(galaxy, folder) -> None:
     with pytest.warns(KspipeWarning, match=r"gas_state\.density .*no cold solution in \d+ of"):
         got = state_of(galaxy, folder, TYPED | {"density": "30 cm-3"})

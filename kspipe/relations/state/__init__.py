@@ -9,7 +9,8 @@ from kspipe.relations.state.pixels import gas_state
 from kspipe.relations.state.quantities import QUANTITIES, Quantity
 from kspipe.relations.state.record import STATE, StateRecord
 from kspipe.relations.state.traced import Traced
-from kspipe.relations.state.turbulence import TURBULENCE, Forcing, TurbulenceModel
+from kspipe.relations.state.turbulence import Forcing
+from kspipe.relations.state.turbulence_models import TURBULENCE, TurbulenceModel
 
 __all__ = [
     "LENGTHS",

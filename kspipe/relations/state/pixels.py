@@ -30,7 +30,7 @@ from kspipe.relations.state.thermal import (
     photoelectric_temperature,
 )
 from kspipe.relations.state.traced import Traced, chain
-from kspipe.relations.state.turbulence import TURBULENCE
+from kspipe.relations.state.turbulence_models import TURBULENCE
 
 __all__ = ["gas_state"]
 

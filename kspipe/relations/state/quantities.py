@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Final
 
-from kspipe.relations.state.turbulence import TURBULENCE
+from kspipe.relations.state.turbulence_models import TURBULENCE
 
 __all__ = ["QUANTITIES", "Quantity"]
 
