@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+import re
 import tomllib
 from pathlib import Path
 from typing import Any
 
 import pytest
-from helpers import demo_recipe
+from helpers import CHECKOUT, demo_recipe
 
 from kspipe.core.errors import RecipeError
 from kspipe.recipe import Recipe, load_recipe, parse_recipe
@@ -164,3 +165,19 @@ def test_no_clumping_of_a_beam_that_is_not_known_yet(folder) -> None:
     with pytest.raises(RecipeError, match=r"relations\.beam\.clumping.*type a number") as caught:
         parse(folder, relations=relations, grid={"beam": "common"})
     assert len(caught.value.faults) == 1
+
+
+def test_the_long_recipe_shows_keys_that_there_are(folder) -> None:
+    text = (CHECKOUT / "recipes" / "orrinda_full.toml").read_text(encoding="utf-8")
+    block = text[text.index("# [gas_state]") :]
+    shown = tomllib.loads(re.sub(r"^# (?=\[|[a-z_]+ = )", "", block, flags=re.MULTILINE))
+    finer = shown["gas_state"].pop("finer_map") | {"file": "co.fits"}
+    alternatives = {"density": "larger", "clumping": "finer map"}
+    recipe = parse(
+        folder,
+        shown["gas_state"] | alternatives | {"finer_map": finer},
+        inside_beam=shown["inside_beam"],
+    )
+    assert recipe.gas_state is not None
+    assert recipe.inside_beam is not None
+    assert shown["gas_state"]["density"] == "100 cm-3"
