@@ -172,6 +172,30 @@ class Comparison(Reduction):
         value, _ = read_image(self.folder / "residuals" / f"{relation}.fits")
         return u.Quantity(value, u.dex)
 
+    def state(self, quantity: str, extension: str | int = 0) -> u.Quantity:
+        """Map of one quantity of the state of the gas, NaN where it has no value.
+
+        Parameters
+        ----------
+        quantity : str
+            For example ``temperature_shielded`` or ``jeans_mass_shielded``.
+        extension : str or int
+            ``ERROR``, or ``AT_N_OVER_3`` and ``AT_3N`` for other densities.
+
+        Raises
+        ------
+        KeyError
+            If the recipe did not ask for it.
+        """
+        known = sorted(path.stem for path in (self.folder / "state").glob("*.fits"))
+        if quantity not in known:
+            raise KeyError(
+                f"{quantity!r} is not among the state of the gas: "
+                f"{known or 'the recipe has no [gas_state]'}"
+            )
+        value, header = read_image(self.folder / "state" / f"{quantity}.fits", extension)
+        return u.Quantity(value, u.Unit(header.get("BUNIT", ""), format="fits"))
+
     def __repr__(self) -> str:
         return f"<Comparison in {self.folder}: {', '.join(self.relations)}>"
 

@@ -31,6 +31,8 @@ class Flag(IntFlag):
     BRIDGED = 128
     # alpha_CO depends on the gas that it gives, and CO is negative: taken at zero CO.
     NEGATIVE_CO = 256
+    # Neither C+ nor anything colder than 500 K can carry off the heat.
+    NO_COLD_SOLUTION = 512
     # Without CO, more than one amount of gas leaves the observed HI atomic.
     SEVERAL_ROOTS = 1024
 

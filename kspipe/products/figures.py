@@ -16,6 +16,7 @@ from kspipe.products.map_figures import draw_surface_densities
 from kspipe.products.read import Products, read_products, read_recipe
 from kspipe.products.relation_figure import draw_star_formation_law
 from kspipe.products.residual_figure import draw_residual
+from kspipe.products.state_figure import draw_gas_state
 from kspipe.products.style import figure_style, save_figure
 from kspipe.recipe import Recipe
 from kspipe.stages.folder import ProductFolder, fingerprint
@@ -58,7 +59,7 @@ def draw_figures(
         log.info("figures: nothing changed, %s is reused", folder)
         return False
     products = read_products(folder, recipe)
-    drawings = _drawings(products)
+    drawings = _drawings(products, folder)
     with products_folder.publish({"figures": print_}) as staging, figure_style():
         (staging / "figures").mkdir()
         for done, (name, draw) in enumerate(drawings.items()):
@@ -68,11 +69,16 @@ def draw_figures(
     return True
 
 
-def _drawings(products: Products) -> dict[str, Callable[[], Figure]]:
+def _drawings(products: Products, folder: Path) -> dict[str, Callable[[], Figure]]:
     """What to draw, by file name."""
     return {
         "star_formation_law": partial(draw_star_formation_law, products),
         "surface_densities": partial(draw_surface_densities, products),
+        **(
+            {"gas_state": partial(draw_gas_state, products, folder)}
+            if products.recipe.gas_state
+            else {}
+        ),
         **{
             f"residual_{name}": partial(draw_residual, products, name)
             for name in products.residuals

@@ -21,6 +21,7 @@ from kspipe.recipe.check_records import (
 )
 from kspipe.recipe.check_relations import rate_choice_faults, relation_faults
 from kspipe.recipe.check_star_formation import map_extra_faults, star_formation_faults
+from kspipe.recipe.gas_state import gas_state_faults
 from kspipe.recipe.located import region_faults
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.models import (
@@ -54,6 +55,7 @@ def check_together(tables: Mapping[str, Any]) -> list[Fault]:
             faults.append(Fault("stars", "a map of Sigma_star is there, too", "remove one"))
     faults += relation_faults(tables)
     faults += map_extra_faults(maps, tables["galaxy"])
+    faults += gas_state_faults(tables)
     if isinstance(tables["star_formation"], StarFormationTable):
         faults += star_formation_faults(tables["star_formation"], tables["maps"])
         faults += convention_faults(

@@ -12,8 +12,10 @@ from pydantic import BaseModel, ValidationError
 from kspipe.conversions import Record
 from kspipe.conversions.shelf import FAMILIES
 from kspipe.core.errors import Fault, RecipeError, nearest
+from kspipe.recipe.beam_clumping import with_beam_clumping
 from kspipe.recipe.checks import check_relation, check_together
 from kspipe.recipe.disc_tables import MidplaneTable, RadiationFieldTable, RotationTable
+from kspipe.recipe.gas_state import GasStateTable, InsideBeamTable, LinewidthMap
 from kspipe.recipe.located import locate, located
 from kspipe.recipe.map_table import MapTable, NoiseFile, NoiseTyped
 from kspipe.recipe.models import (
@@ -46,11 +48,18 @@ _TABLES: Final[dict[str, type[BaseModel]]] = {
     "midplane": MidplaneTable,
     "radiation_field": RadiationFieldTable,
     "rotation": RotationTable,
+    "inside_beam": InsideBeamTable,
 }
 _OPTIONAL: Final = (
-    "relations", "comparison", "stars", "midplane", "radiation_field", "rotation",
-)  # fmt: skip
-_TOP: Final = ("seed", "maps", "gas", "relations", "records", "regions", *_TABLES)
+    "relations",
+    "comparison",
+    "stars",
+    "midplane",
+    "radiation_field",
+    "rotation",
+    "inside_beam",
+)
+_TOP: Final = ("seed", "maps", "gas", "relations", "records", "regions", "gas_state", *_TABLES)
 
 
 def load_recipe(path: str | Path, *, in_memory: frozenset[str] = frozenset()) -> Recipe:
@@ -127,7 +136,9 @@ def parse_recipe(
     tables["seed"] = _seed(raw, faults)
     tables["gas"] = _gas(raw, faults, context)
     tables["maps"] = _maps(raw, folder, in_memory, faults)
-    tables["relations"] = _relations(raw, faults)
+    tables["relations"] = with_beam_clumping(raw, tables, _relations, faults)
+    if "gas_state" in raw:
+        tables["gas_state"] = _gas_state(raw["gas_state"], folder, faults)
     for name in ("metallicity", "foreground", "gas", "stars", "star_formation"):
         if isinstance(tables.get(name), BaseModel):
             tables[name] = located(tables[name], folder, name, faults)
@@ -276,6 +287,28 @@ def _maps(
             model = model.model_copy(update={"noise": noise})
         found[name] = model
     return found
+
+
+def _gas_state(raw: object, folder: Path, faults: list[Fault]) -> GasStateTable | None:
+    """Check the state of the gas and find the files that it names."""
+    is_faulty = False
+    if isinstance(raw, dict) and "finer_map" in raw:
+        found: list[Fault] = []
+        nested = _maps({"maps": {"finer_map": raw["finer_map"]}}, folder, frozenset(), found)
+        faults += [
+            Fault(fault.where.replace("maps.", "gas_state."), fault.what, fault.do)
+            for fault in found
+        ]
+        raw = {**raw, "finer_map": nested["finer_map"]}
+        is_faulty = bool(found)
+    state = _table(GasStateTable, raw, "gas_state", faults)
+    if state is None or is_faulty:
+        return None
+    if not isinstance(state.linewidth, LinewidthMap):
+        return state
+    file = locate(state.linewidth.map, folder, "gas_state.linewidth.map", faults)
+    linewidth = state.linewidth.model_copy(update={"map": file})
+    return state.model_copy(update={"linewidth": linewidth})
 
 
 def _map(table: object, where: str, faults: list[Fault]) -> MapTable | None:

@@ -25,6 +25,7 @@ from kspipe.conversions import (
     StarFormation,
 )
 from kspipe.recipe.disc_tables import MidplaneTable, RadiationFieldTable, RotationTable
+from kspipe.recipe.gas_state import GasStateTable, InsideBeamTable
 from kspipe.recipe.kinds import ALPHA_CO_VALUE, RATIO, Ratio, Reddening
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.metallicity_table import MetallicityTable
@@ -238,6 +239,8 @@ class Recipe(Table):
     midplane: MidplaneTable | None = None
     radiation_field: RadiationFieldTable | None = None
     rotation: RotationTable | None = None
+    gas_state: GasStateTable | None = None
+    inside_beam: InsideBeamTable | None = None
 
     def map_of(self, *tracers: str) -> str | None:
         """Name of the first map of one of these tracers."""

@@ -49,7 +49,7 @@ def resolved_recipe(recipe: Recipe, found: Mapping[str, Mapping[str, str]]) -> s
         tables.insert(-1, "stars")
     tables += [
         name
-        for name in ("midplane", "radiation_field", "rotation")
+        for name in ("midplane", "radiation_field", "rotation", "gas_state", "inside_beam")
         if getattr(recipe, name) is not None
     ]
     for name in tables:

@@ -21,6 +21,7 @@ from kspipe.core.errors import Fault, OutputError
 from kspipe.core.progress import Progress, no_progress
 from kspipe.core.seeds import generator
 from kspipe.kernels.geometry import beam_axes
+from kspipe.kernels.noise import total_error
 from kspipe.maps.product import read_matched, write_product
 from kspipe.maps.skymap import Flag
 from kspipe.matching import Grid
@@ -28,10 +29,12 @@ from kspipe.recipe import Recipe, load_recipe
 from kspipe.relations import LAWS
 from kspipe.stages.atomic_only import from_atomic, summaries
 from kspipe.stages.folder import ProductFolder
+from kspipe.stages.inside_beam import add_inside_beam
 from kspipe.stages.law_inputs import law_inputs
 from kspipe.stages.pixels import pixel_table, write_pixels
 from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
 from kspipe.stages.relation_notes import history_lines, relation_notes
+from kspipe.stages.state import gas_state_of
 from kspipe.stages.steps import read_findings
 from kspipe.stages.summary import make_summary, summary_text
 from kspipe.stages.surface import surfaces_of
@@ -110,6 +113,7 @@ def compare_relations(
         )
     inverted = from_atomic(recipe, inputs, disc)
     progress(len(names), len(names), "compared")
+    state = gas_state_of(plan, disc)
     drop = tuple(stage for stage in folder.stages if stage == "figures")
     with folder.publish({"compare": print_}, drop=drop) as staging:
         (staging / "residuals").mkdir()
@@ -127,6 +131,16 @@ def compare_relations(
         pixels = pixel_table(disc, residuals, used, independent, grid, meta)
         for name, one in inverted.items():
             one.add_columns(pixels, name, used)
+        biases = add_inside_beam(
+            recipe,
+            {key: known.value for key, known in inputs.items()},
+            {key: total_error(known.noise) for key, known in inputs.items() if known.noise},
+            used,
+            pixels,
+        )
+        if state:
+            state.write(staging)
+            state.add_columns(pixels, used)
         write_pixels(pixels, staging / "pixels.ecsv")
         findings = read_findings(out)
         summary = make_summary(
@@ -138,6 +152,8 @@ def compare_relations(
             recipe, inverted, disc, used, independent, grid.jacobian_arcsec()
         ).items():
             summary["relations"][name]["from_atomic"] = sums
+        summary |= {"inside_beam": biases} if biases else {}
+        summary |= {"gas_state": state.summary(used)} if state else {}
         (staging / "summary.json").write_text(summary_text(summary), encoding="utf-8")
     return True
 

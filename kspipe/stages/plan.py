@@ -45,6 +45,7 @@ from kspipe.recipe.varying import ByRegion, OnMap, Profile, typed_as
 from kspipe.relations import LAWS
 from kspipe.stages.folder import file_checksum, fingerprint
 from kspipe.stages.metallicity import metallicity_warnings
+from kspipe.stages.state_files import state_files_print, state_values
 
 __all__ = ["InMemory", "Plan", "choices_of", "compare_print", "convert_print", "make_plan"]
 
@@ -324,6 +325,7 @@ def convert_print(recipe: Recipe, match_prints: Mapping[str, str]) -> str:
             },
             "low_snr": recipe.comparison.low_snr,
             "records": [f"{r.key}: {r.formula}" for r in records_of(recipe)],
+            **({"gas state files": state_files_print(recipe)} if recipe.gas_state else {}),
         }
     )
 
@@ -339,5 +341,7 @@ def compare_print(recipe: Recipe, reduction_print: str) -> str:
             "rotation": recipe.rotation and _values(recipe.rotation),
             "comparison": _values(recipe.comparison),
             "seed": recipe.seed,
+            **({"gas state": state_values(recipe.gas_state)} if recipe.gas_state else {}),
+            **({"inside beam": _values(recipe.inside_beam)} if recipe.inside_beam else {}),
         }
     )
