@@ -27,6 +27,7 @@ from kspipe.relations import LAWS
 from kspipe.stages.folder import ProductFolder
 from kspipe.stages.pixels import pixel_table, write_pixels
 from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
+from kspipe.stages.profiles import profile_table, write_profiles
 from kspipe.stages.steps import read_findings
 from kspipe.stages.summary import make_summary, summary_text
 from kspipe.stages.surface import surfaces_of
@@ -115,6 +116,7 @@ def compare_relations(
         write_pixels(
             pixel_table(disc, residuals, used, independent, grid, meta), staging / "pixels.ecsv"
         )
+        write_profiles(profile_table(recipe, disc, used, grid, beam, {}), staging)
         findings = read_findings(out)
         summary = make_summary(
             plan, disc, headlines, residuals, used, independent, matched, findings
