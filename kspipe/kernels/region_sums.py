@@ -15,6 +15,8 @@ __all__ = ["region_covariance", "upper_limit"]
 
 Array = NDArray[np.float64]
 Terms = tuple[NoiseTerm, ...]
+# Source and correlation: what makes noise the same noise.
+Key = tuple[str, int, bytes]
 
 LEAST_CORRELATION: Final = 1e-6
 
@@ -56,8 +58,8 @@ def region_covariance(
     box = np.s_[rows[0] : rows[-1] + 1, columns[0] : columns[-1] + 1]
     where = labels[box]
     totals = np.zeros((len(pairs), 2 * count + 1))
-    by_noise: dict[tuple[object, ...], list[tuple[int, Array, Array]]] = {}
-    terms: dict[tuple[object, ...], NoiseTerm] = {}
+    by_noise: dict[Key, list[tuple[int, Array, Array]]] = {}
+    terms: dict[Key, NoiseTerm] = {}
     for i, (first, second) in enumerate(pairs):
         by_source = {term.source: term for term in second}
         for term in first:

@@ -150,7 +150,7 @@ def _totals(
     total = {name: float(entry["value"]) for name, entry in totals.items()}
     for entry in totals.values():
         value, error = float(entry["value"]), float(entry["random_error"])
-        if 0 < error and value < DETECTED_SIGMA * error:
+        if error > 0 and value < DETECTED_SIGMA * error:
             entry["upper_limit"] = float(upper_limit(value, error, DETECTED_SIGMA))
     for name, (top, bottom, unit) in _RATIOS.items():
         if top in total and bottom in total:
