@@ -66,7 +66,6 @@ def massive_stars_per_msun(imf: str, least_msun: float = MASSIVE_MSUN) -> float:
     mass = function.mass_per_massive_star * function.number(PIVOT_MSUN)
     edges = (least_msun, *(edge for edge in function.breaks if edge > least_msun), HIGHEST_MSUN)
     number = math.fsum(
-        quad(function.number, low, high, epsrel=1e-10)[0]
-        for low, high in itertools.pairwise(edges)
+        quad(function.number, low, high, epsrel=1e-10)[0] for low, high in itertools.pairwise(edges)
     )
     return number / mass

@@ -22,6 +22,7 @@ from kspipe.recipe.models import (
     RelationTable,
     StarFormationTable,
     StarsTable,
+    SystematicsTable,
 )
 
 __all__ = ["load_recipe", "parse_recipe"]
@@ -36,8 +37,9 @@ _TABLES: Final[dict[str, type[BaseModel]]] = {
     "star_formation": StarFormationTable,
     "stars": StarsTable,
     "comparison": ComparisonTable,
+    "systematics": SystematicsTable,
 }
-_OPTIONAL: Final = ("relations", "comparison", "stars")
+_OPTIONAL: Final = ("relations", "comparison", "stars", "systematics")
 _TOP: Final = ("seed", "maps", "gas", "relations", *_TABLES)
 
 

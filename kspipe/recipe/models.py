@@ -15,6 +15,7 @@ from kspipe.conversions import ALPHA_CO, EXTINCTION, LINE_RATIO, OH_SCALES, STAR
 from kspipe.core.errors import nearest
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.quantity import Measured, Position, parse_centre, parse_measured
+from kspipe.recipe.systematics_table import SystematicsTable
 from kspipe.recipe.values import (
     Abundance,
     Angle,
@@ -42,6 +43,7 @@ __all__ = [
     "RelationTable",
     "StarFormationTable",
     "StarsTable",
+    "SystematicsTable",
 ]
 
 
@@ -251,6 +253,7 @@ class Recipe(Table):
     stars: StarsTable | None = None
     relations: dict[str, RelationTable] = Field(default_factory=dict)
     comparison: ComparisonTable = ComparisonTable()
+    systematics: SystematicsTable | None = None
 
     def map_of(self, *tracers: str) -> str | None:
         """Name of the first map of one of these tracers."""

@@ -45,6 +45,8 @@ def resolved_recipe(recipe: Recipe, found: Mapping[str, Mapping[str, str]]) -> s
         tables.insert(2, "gas")
     if recipe.stars is not None:
         tables.insert(-1, "stars")
+    if recipe.systematics is not None:
+        tables.append("systematics")
     for name in tables:
         lines += _table(name, getattr(recipe, name))
     for name, relation in recipe.relations.items():

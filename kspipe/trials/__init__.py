@@ -1,1 +1,1 @@
-"""Trials: the stages again with other inputs. What the conclusion hangs on, and whether it holds."""
+"""Trials: the stages again with other inputs, to see what the conclusion hangs on."""
