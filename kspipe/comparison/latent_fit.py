@@ -68,7 +68,8 @@ class PopulationPrior:
         """Return components side by side about the centre."""
         k = self.components
         means = self.centre - 0.1 + 0.5 * (np.arange(k) - 0.5 * (k - 1))
-        return GaussianMixture(np.ones(k) / k, means, 0.35 * np.ones(k))
+        weights, widths = np.full((2, k), [[1.0 / k], [0.35]])
+        return GaussianMixture(weights, np.asarray(means, dtype=float), widths)
 
     def log_density(self, parameters: Array) -> tuple[float, Array, Array]:
         """Log prior, its gradient, and minus its second derivatives, at a mixture's parameters."""
