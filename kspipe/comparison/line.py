@@ -1,0 +1,233 @@
+"""A straight line through noisy measurements, fitted with one generative model."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, field
+from typing import Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kspipe.comparison.latent_fit import (
+    LEAST_SCATTER_DEX,
+    GaussianPrior,
+    LatentModel,
+    Optimum,
+    PopulationPrior,
+    maximise,
+)
+from kspipe.comparison.samples import LinearSamples
+from kspipe.kernels.latent import Mean, Measurements
+from kspipe.kernels.mixture import GaussianMixture
+
+__all__ = ["LineFit", "fit_line", "line_model"]
+
+Array = NDArray[np.float64]
+
+# Twice the log-likelihood ratio at one-sided 95 %.
+_ONE_SIDED_95: Final = 2.705543454095404
+_NONE: Final = GaussianPrior(0.0, math.inf)
+
+
+@dataclass(frozen=True)
+class LineFit:
+    """log10 y = intercept + slope (log10 x - pivot), with log-normal scatter in y.
+
+    Attributes
+    ----------
+    n : int
+        Independent samples used.
+    slope, slope_error : float
+    intercept, intercept_error : float
+        log10 of the median of y at the pivot [dex].
+    pivot : float
+        log10 x at which slope and intercept are uncorrelated.
+    scatter_dex, scatter_error : float
+        Intrinsic scatter; where `is_limit`, the upper limit at 95 % and NaN.
+    covariance : (3, 3) float64 array
+        Of slope, intercept, scatter.
+    is_limit : bool
+        Whether the scatter is an upper limit.
+    mean_over_median_dex : float
+        What log10 of the mean of y lies above that of the median.
+    log_likelihood : float
+    n_parameters : int
+        Free ones, those of the population included.
+    population : dict of str to list of float
+        Weights, means and widths of the mixture of log10 x.
+    message : str
+        Why there is no result, or what to beware of; empty where all is well.
+    is_fitted : bool
+        Where False every number is NaN.
+    """
+
+    n: int
+    slope: float = math.nan
+    slope_error: float = math.nan
+    intercept: float = math.nan
+    intercept_error: float = math.nan
+    pivot: float = math.nan
+    scatter_dex: float = math.nan
+    scatter_error: float = math.nan
+    covariance: Array = field(default_factory=lambda: np.full((3, 3), math.nan))
+    is_limit: bool = False
+    mean_over_median_dex: float = math.nan
+    log_likelihood: float = math.nan
+    n_parameters: int = 0
+    population: dict[str, list[float]] = field(default_factory=dict)
+    message: str = ""
+    is_fitted: bool = False
+
+    def at(self, log_x: float) -> tuple[float, float]:
+        """Median of log10 y at log10 x, and its error."""
+        lever = np.array([log_x - self.pivot, 1.0])
+        variance = float(lever @ self.covariance[:2, :2] @ lever)
+        return self.intercept + self.slope * lever[0], math.sqrt(variance)
+
+
+def fit_line(samples: LinearSamples, *, components: int = 2) -> LineFit:
+    """Fit slope, intercept and intrinsic scatter by maximum likelihood.
+
+    Parameters
+    ----------
+    samples : LinearSamples
+        Independent; negative and undetected values as measured.
+    components : int
+        Gaussians in the population of log10 x.
+
+    Returns
+    -------
+    LineFit
+        Without numbers, and with a message, where there are fewer than 10 samples, nothing is
+        detected, or the fit did not converge.
+
+    Notes
+    -----
+    The errors are from the observed information, population parameters marginalised.
+    """
+    return fit_line_with_optimum(samples, components=components)[0]
+
+
+def fit_line_with_optimum(
+    samples: LinearSamples, *, components: int = 2
+) -> tuple[LineFit, LatentModel | None, Optimum | None]:
+    """As `fit_line`, with the model and its peak for what builds on them."""
+    obstacle = samples.obstacle()
+    if obstacle:
+        return LineFit(samples.n, message=obstacle), None, None
+    data = samples.measurements()
+    model = line_model(data, components)
+    best = maximise(model, data)
+    if best.is_converged and math.exp(best.parameters[2]) < LEAST_SCATTER_DEX:
+        best = maximise(model, data, _with_scatter(best.parameters, LEAST_SCATTER_DEX), held=(2,))
+    return _summarise(model, data, best), model, best
+
+
+def line_model(data: Measurements, components: int = 2) -> LatentModel:
+    """A line through the mean of the data, log10 y against log10 x."""
+    centre = math.log10(data.x.sum() / data.x.size)
+    level = math.log10(data.y.sum() / data.x.size)
+
+    def mean(theta: Array) -> tuple[Mean, Mean]:
+        def value(x: Array, _rows: slice) -> Array:
+            return np.asarray(theta[1] + theta[0] * (x - centre))
+
+        def gradient(x: Array, _rows: slice) -> Array:
+            return np.stack([x - centre, np.ones_like(x)])
+
+        return value, gradient
+
+    return LatentModel(
+        names=("slope", "intercept"),
+        mean=mean,
+        start=np.array([1.0, level - 0.1]),
+        priors=(_NONE, _NONE),
+        population=PopulationPrior(components, centre),
+    )
+
+
+def _with_scatter(parameters: Array, scatter_dex: float) -> Array:
+    out = parameters.copy()
+    out[2] = math.log(scatter_dex)
+    return out
+
+
+def _summarise(model: LatentModel, data: Measurements, best: Optimum) -> LineFit:
+    n = data.x.size
+    if not best.is_converged:
+        return LineFit(n, message="the fit did not converge: no result")
+    scatter = math.exp(best.parameters[2])
+    limit = _scatter_limit(model, data, best)
+    covariance = _covariance(best, hold_scatter=limit is not None)
+    if covariance is None:
+        return LineFit(n, message="the likelihood has no peak in slope and intercept: no result")
+    variance, shared = covariance[0, 0], covariance[0, 1]
+    centre = model.population.centre
+    lever = -shared / variance
+    turn = np.array([[1.0, 0.0, 0.0], [lever, 1.0, 0.0], [0.0, 0.0, scatter]])
+    covariance = turn @ np.nan_to_num(covariance) @ turn.T
+    if limit is not None:
+        covariance[2, :] = covariance[:, 2] = math.nan
+    errors = np.sqrt(np.diag(covariance))
+    mixture = best.parameters[3:]
+    return LineFit(
+        n=n,
+        slope=float(best.parameters[0]),
+        slope_error=float(errors[0]),
+        intercept=float(best.parameters[1] + lever * best.parameters[0]),
+        intercept_error=float(errors[1]),
+        pivot=float(centre + lever),
+        scatter_dex=scatter if limit is None else limit,
+        scatter_error=float(errors[2]) if limit is None else math.nan,
+        covariance=covariance,
+        is_limit=limit is not None,
+        mean_over_median_dex=0.5 * scatter**2 * math.log(10.0) if limit is None else math.nan,
+        log_likelihood=best.log_likelihood,
+        n_parameters=best.parameters.size,
+        population=_population(mixture),
+        is_fitted=True,
+    )
+
+
+def _population(parameters: Array) -> dict[str, list[float]]:
+    mixture = GaussianMixture.from_parameters(parameters)
+    return {name: getattr(mixture, name).tolist() for name in ("weights", "means", "widths")}
+
+
+def _covariance(best: Optimum, *, hold_scatter: bool) -> Array | None:
+    """Covariance of slope, intercept and ln(scatter); None where it is not positive."""
+    keep = np.array([i for i in range(best.parameters.size) if not (hold_scatter and i == 2)])
+    information = best.information[np.ix_(keep, keep)]
+    if np.linalg.eigvalsh(information)[0] <= 0:
+        return None
+    full = np.full((best.parameters.size,) * 2, math.nan)
+    full[np.ix_(keep, keep)] = np.linalg.inv(information)
+    return full[:3, :3]
+
+
+def _scatter_limit(model: LatentModel, data: Measurements, best: Optimum) -> float | None:
+    """Upper limit at 95 % where the scatter is not told from zero; else None."""
+    information = best.information[2, 2]
+    at_floor = math.exp(best.parameters[2]) <= LEAST_SCATTER_DEX * 1.001
+    if not at_floor and information > 0 and information**-0.5 < 0.2:
+        return None
+    floor = maximise(model, data, _with_scatter(best.parameters, LEAST_SCATTER_DEX), held=(2,))
+    peak = max(best.log_posterior, floor.log_posterior)
+    if 2.0 * (peak - floor.log_posterior) > _ONE_SIDED_95:
+        return None
+    low, high, at = math.exp(best.parameters[2]), None, best
+    scatter = max(2.0 * low, 0.02)
+    for _ in range(12):
+        at = maximise(model, data, _with_scatter(at.parameters, scatter), held=(2,))
+        if 2.0 * (peak - at.log_posterior) < _ONE_SIDED_95:
+            low = scatter
+        else:
+            high = scatter
+        if high is None:
+            scatter *= 1.6
+        elif high / low < 1.03:
+            break
+        else:
+            scatter = math.sqrt(low * high)
+    return scatter
