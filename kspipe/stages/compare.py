@@ -24,7 +24,7 @@ from kspipe.maps.skymap import Flag
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe, load_recipe
 from kspipe.relations import LAWS
-from kspipe.stages.folder import ProductFolder
+from kspipe.stages.folder import TRIAL_STAGES, ProductFolder
 from kspipe.stages.pixels import pixel_table, write_pixels
 from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
 from kspipe.stages.profiles import profile_table, write_profiles
@@ -100,7 +100,7 @@ def compare_relations(
             residuals[name], sfr, used, independent, grid.jacobian_arcsec(), rng
         )
     progress(len(names), len(names), "compared")
-    drop = tuple(stage for stage in folder.stages if stage == "figures")
+    drop = tuple(stage for stage in folder.stages if stage in ("figures", *TRIAL_STAGES))
     with folder.publish({"compare": print_}, drop=drop) as staging:
         (staging / "residuals").mkdir()
         for name in names:

@@ -23,7 +23,7 @@ from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import match_map, measure_noise, measure_noise_correlation
 from kspipe.recipe import Recipe
 from kspipe.recipe.resolved import resolved_recipe
-from kspipe.stages.folder import ProductFolder
+from kspipe.stages.folder import TRIAL_STAGES, ProductFolder
 from kspipe.stages.plan import InMemory, Plan, make_plan, records_of
 from kspipe.stages.steps import (
     STEPS_FILE,
@@ -94,7 +94,9 @@ def reduce_maps(
         return False
     to_match = [name for name in plan.sources if f"match.{name}" in stale]
     drop = tuple(
-        stage for stage in folder.stages if stage in ("compare", "figures") or _is_gone(stage, plan)
+        stage
+        for stage in folder.stages
+        if stage in ("compare", "figures", *TRIAL_STAGES) or _is_gone(stage, plan)
     )
     if drop:
         log.info("reduce: out-of-date products of %s are removed", ", ".join(drop))

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from typing import Final
 
 import numpy as np
@@ -238,7 +238,7 @@ def _one_at_a_time(
     response: LineResponse | None,
     middle: Mapping[str, Array],
 ) -> dict[str, Array]:
-    """Shift of each quantity for one sigma of each assumption; both sides averaged if it has two."""
+    """Shift of each quantity for one sigma of each assumption, the mean of both sides."""
     n = len(priors)
     sides = _evaluate(inputs, priors, np.concatenate([np.eye(n), -np.eye(n)]), response)
     one_sided = np.array([prior.is_one_sided for prior in priors], dtype=bool)
@@ -256,11 +256,16 @@ def _random_errors(inputs: SampleInputs, reduced: Reduced, fit: LineFit) -> dict
     n = inputs.oh.size
     rng = generator(reduced.recipe.seed, "budget", "bootstrap")
     picks = rng.integers(0, n, (RESAMPLES, n))
-    resampled = Drawn(
-        **{
-            name: None if value is None else np.broadcast_to(value, (1, n))[0][picks]
-            for name, value in vars(drawn).items()
-        }
+
+    def resample(value: Array) -> Array:
+        return np.asarray(np.broadcast_to(value, (1, n))[0][picks])
+
+    resampled = replace(
+        drawn,
+        gas=resample(drawn.gas),
+        sfr=resample(drawn.sfr),
+        mol=None if drawn.mol is None else resample(drawn.mol),
+        oh=resample(drawn.oh),
     )
     sums = sums_of(resampled, inputs.recipe)
     return errors | {name: float(np.nanstd(values)) for name, values in sums.items()}

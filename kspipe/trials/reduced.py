@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import tomllib
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -67,6 +67,35 @@ class Reduced:
         )
         return np.asarray(lattice & self.used)
 
+    def with_maps(self, matched: dict[str, SkyMap]) -> Reduced:
+        """Return the same galaxy from other matched maps on the same grid.
+
+        Raises
+        ------
+        OutputError
+            If no pixel is covered by all of them.
+        """
+        disc = surfaces_of(self.recipe, matched, self.grid)
+        used = covered_by_all(disc, self.folder.path)
+        return replace(self, matched=matched, disc=disc, used=used)
+
+
+def covered_by_all(disc: Disc, where: Path) -> Mask:
+    """Pixels with gas and star formation, of any sign.
+
+    Raises
+    ------
+    OutputError
+        If there are none.
+    """
+    gas, sfr = disc.surfaces["sigma_gas"], disc.surfaces["sigma_sfr"]
+    used = np.isfinite(gas.value) & np.isfinite(sfr.value)
+    if not used.any():
+        raise OutputError(
+            Fault(str(where), "no pixel is covered by all maps", "check coverage in DIR/matched")
+        )
+    return np.asarray(used)
+
 
 def open_reduced(out: Path) -> Reduced:
     """Open a product folder that holds a reduction.
@@ -109,13 +138,7 @@ def open_reduced(out: Path) -> Reduced:
     shape = (first.value.shape[0], first.value.shape[1])
     grid = Grid.like(first.wcs, shape, recipe.galaxy.centre.degrees, f"{out}/matched")
     disc = surfaces_of(recipe, matched, grid)
-    gas, sfr = disc.surfaces["sigma_gas"], disc.surfaces["sigma_sfr"]
-    used = np.isfinite(gas.value) & np.isfinite(sfr.value)
-    if not used.any():
-        raise OutputError(
-            Fault(str(out), "no pixel is covered by all maps", "check coverage in DIR/matched")
-        )
-    return Reduced(folder, recipe, matched, grid, disc, used, print_)
+    return Reduced(folder, recipe, matched, grid, disc, covered_by_all(disc, out), print_)
 
 
 def line_samples(disc: Disc, chosen: Mask) -> LinearSamples:

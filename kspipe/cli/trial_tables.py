@@ -1,0 +1,80 @@
+"""Tables of trials on stdout."""
+
+from __future__ import annotations
+
+import json
+import sys
+from pathlib import Path
+from typing import Any
+
+from rich.console import Console
+from rich.markup import escape
+from rich.table import Table
+
+from kspipe.core.trial_report import (
+    budget_notes,
+    flip_lines,
+    ladder_rows,
+    quantity_rows,
+    shift_rows,
+)
+
+__all__ = ["print_budget", "print_ladder"]
+
+
+def _read(path: Path) -> dict[str, Any]:
+    return dict(json.loads(path.read_text(encoding="utf-8")))
+
+
+def _console() -> Console:
+    return Console(highlight=False, width=None if sys.stdout.isatty() else 160)
+
+
+def _table(head: tuple[str, ...], rows: list[tuple[str, ...]]) -> Table:
+    table = Table(*head, box=None)
+    for row in rows:
+        table.add_row(*(escape(cell) for cell in row))
+    return table
+
+
+def print_budget(folder: Path) -> None:
+    """Print the budget of a product folder."""
+    budget, console = _read(folder / "budget.json"), _console()
+    console.print(
+        f"{budget['galaxy']}: {budget['n_draws']} draws of {len(budget['priors'])} assumptions on "
+        f"{budget['n_samples']} independent samples",
+        markup=False,
+    )
+    head = ("quantity", "value and random error", "systematic, 16 to 84 %", "moved most by")
+    console.print(_table(head, quantity_rows(budget)))
+    keys, rows = shift_rows(budget)
+    console.print("shift for one sigma of each assumption:")
+    console.print(_table(("assumption", *keys), rows))
+    console.print("the smallest change to one assumption that turns a conclusion around:")
+    for line in flip_lines(budget):
+        console.print(f"  {line}", markup=False)
+    for line in budget_notes(budget):
+        console.print(f"note: {line}", markup=False)
+    console.print(f"products in {folder}", markup=False)
+
+
+def print_ladder(folder: Path) -> None:
+    """Print the resolution ladder of a product folder."""
+    ladder, console = _read(folder / "ladder.json"), _console()
+    head = (
+        "beam [pc]",
+        "independent / fitted",
+        "ages [Myr]",
+        "massive stars / few",
+        "slope",
+        "scatter",
+        "observed / predicted",
+        "",
+    )
+    console.print(_table(head, ladder_rows(ladder)))
+    console.print(
+        "ages: youngest, mean, 90 percent; massive stars: expected per beam (8 Msun and more, in "
+        "the shortest 90-percent age), and share of detected samples with fewer than 10",
+        markup=False,
+    )
+    console.print(f"products in {folder}", markup=False)
