@@ -29,7 +29,7 @@ def _number(value: float | None, digits: str = ".3g") -> str:
 
 def quantity_rows(budget: dict[str, Any]) -> list[tuple[str, ...]]:
     """Name, value with random error, systematic range, and what moves it most."""
-    rows = []
+    rows: list[tuple[str, ...]] = []
     for key, q in budget["quantities"].items():
         leading = [
             f"{entry['assumption']} {entry['shift']:+.3f}"
@@ -107,7 +107,7 @@ def budget_notes(budget: dict[str, Any]) -> list[str]:
 
 def ladder_rows(ladder: dict[str, Any]) -> list[tuple[str, ...]]:
     """Beam, samples, massive stars, slope, scatter, ratio of each relation, and the label."""
-    rows = []
+    rows: list[tuple[str, ...]] = []
     for rung in ladder["rungs"]:
         line = rung["line"]
         if line["is_fitted"]:

@@ -10,6 +10,7 @@ from typing import Any, Final
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from matplotlib.ticker import FuncFormatter
 
 from kspipe import __version__
 from kspipe.core.errors import Fault, OutputError
@@ -75,21 +76,24 @@ _TITLES: Final = {
     "slope": "slope",
     "level": r"log$_{10}$ $\Sigma_\mathrm{SFR}$ at the pivot",
     "scatter": "intrinsic scatter [dex]",
-    "t_dep": r"log$_{10}$ depletion time, molecular",
-    "t_dep_gas": r"log$_{10}$ depletion time, total gas",
+    "t_dep": r"log$_{10}$ $t_\mathrm{dep}$, molecular",
+    "t_dep_gas": r"log$_{10}$ $t_\mathrm{dep}$, total gas",
 }
 
 
 def _title(name: str) -> str:
-    bias = name.removeprefix("bias ").replace("_", r"\_") if "$" in name else name[5:]
-    return _TITLES.get(name, f"observed / predicted [dex]:\n{bias}")
+    if name in _TITLES:
+        return _TITLES[name]
+    relation = name.removeprefix("bias ")
+    shown = relation if len(relation) <= 22 else relation[:21] + "…"
+    return f"obs. / pred. [dex]: {shown}"
 
 
 def _budget_figure(budget: dict[str, Any]) -> Figure:
     names = list(budget["quantities"])
     rows = math.ceil(len(names) / PANEL_COLUMNS)
-    height, width, left, gap = 1.45, 1.05, 1.28, 0.75
-    figure = new_figure(rows * (height + gap) + 0.75)
+    height, width, left, gap = 1.45, 1.05, 1.28, 0.5
+    figure = new_figure(rows * (height + gap) + 0.55)
     for i, name in enumerate(names):
         row, column = divmod(i, PANEL_COLUMNS)
         bottom = (rows - 1 - row) * (height + gap) + 0.5
@@ -136,7 +140,9 @@ def _draw_bars(axes: Axes, budget: dict[str, Any], name: str) -> None:
     axes.tick_params(axis="y", length=0)
     axes.tick_params(axis="x", labelsize=7)
     axes.locator_params(axis="x", nbins=4)
-    axes.set_title(_title(name), size=8, pad=3)
+    title = _title(name)
+    # Centred on panel and labels together: a long title would run into the next panel.
+    axes.set_title(title, size=8, pad=3, x=0.5 if len(title) < 16 else 0.0)
 
 
 # --- The ladder ----------------------------------------------------------------------------------
@@ -154,6 +160,8 @@ def _ladder_figure(ladder: dict[str, Any]) -> Figure:
     for axes in panels:
         axes.set(xscale="log", xlim=(beams[0] / 1.4, beams[-1] * 1.4), xlabel="beam [pc]")
         axes.axvspan(1.0, 500.0, color="0.93", zorder=0)
+        axes.set_xticks(beams, [f"{beam:.3g}" if beam < 1e3 else f"{beam:.0f}" for beam in beams])
+        axes.set_xticks([], minor=True)
     for key, error, axes, label in (
         ("slope", "slope_error", panels[0], "slope"),
         ("scatter_dex", "scatter_error", panels[1], "intrinsic scatter [dex]"),
@@ -171,10 +179,19 @@ def _ladder_figure(ladder: dict[str, Any]) -> Figure:
             if key == "scatter_dex" and upper.any():
                 errors = np.where(upper, 0.3 * values, errors)
                 axes.errorbar(
-                    beams[chosen], values, errors, fmt="o", uplims=upper, color="black", mfc=face
+                    beams[chosen],
+                    values,
+                    errors,
+                    fmt="o",
+                    markersize=4,
+                    uplims=upper,
+                    color="black",
+                    mfc=face,
                 )
             else:
-                axes.errorbar(beams[chosen], values, errors, fmt="o", color="black", mfc=face)
+                axes.errorbar(
+                    beams[chosen], values, errors, fmt="o", markersize=4, color="black", mfc=face
+                )
         axes.set_ylabel(label)
     panels[0].axhline(1.0, color="0.6", linewidth=0.6, linestyle=":")
     names = list(rungs[0]["relations"])
@@ -183,6 +200,8 @@ def _ladder_figure(ladder: dict[str, Any]) -> Figure:
         panels[2].plot(beams, ratios, marker="o", markersize=3, label=name, **relation_look(i))
     panels[2].axhline(1.0, color="0.6", linewidth=0.6, linestyle=":")
     panels[2].set(yscale="log", ylabel="sum observed / predicted")
+    for which in (panels[2].yaxis.set_major_formatter, panels[2].yaxis.set_minor_formatter):
+        which(FuncFormatter(lambda value, _: f"{value:g}"))
     if names:
         panels[2].legend(fontsize=7, loc="best")
     write_name(

@@ -1,7 +1,7 @@
 """A painted sky seen through given headers; shares no smoothing or regridding with the chain."""
 
 from kspipe.simulate.blur import blur, sample, steps_of
-from kspipe.simulate.instrument import add_noise, look
+from kspipe.simulate.instrument import add_noise, look, look_at
 from kspipe.simulate.sky import DiscModel, FinePlane, PaintedDisc, paint_disc
 
 __all__ = [
@@ -11,6 +11,7 @@ __all__ = [
     "add_noise",
     "blur",
     "look",
+    "look_at",
     "paint_disc",
     "sample",
     "steps_of",

@@ -11,10 +11,13 @@ from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.ndimage import convolve1d
 
 __all__ = ["blur", "sample", "steps_of"]
 
 Array = NDArray[np.float64]
+# Steps along the rows and columns of an array.
+_AXES: Final = {(1, 0): 1, (-1, 0): 1, (0, 1): 0, (0, -1): 0}
 Step = tuple[int, int]
 
 # A Gaussian holds 1 - 2e-9 of its weight within this many sigma.
@@ -22,6 +25,7 @@ REACH_SIGMA: Final = 6.0
 # Sigma [pixel] of the Gaussian by which values are taken between the pixels: sums over pixels of
 # a Gaussian this wide are exact to exp(-2 pi^2 1.4^2) = 2e-17.
 SAMPLING_SIGMA: Final = 1.4
+SAMPLING_REACH: Final = 5.0
 
 
 def steps_of(covariance_pix2: Array) -> list[tuple[Step, float]]:
@@ -104,6 +108,8 @@ def blur(image: Array, covariance_pix2: Array) -> Array:
 
 def _along(image: Array, dx: int, dy: int, weights: Array) -> Array:
     """Weighted sum of copies shifted by whole steps."""
+    if (dx, dy) in _AXES:
+        return np.asarray(convolve1d(image, weights, axis=_AXES[dx, dy], mode="constant"))
     ny, nx = image.shape
     reach = len(weights) // 2
     total = np.multiply(image, weights[reach])
@@ -138,7 +144,7 @@ def sample(image: Array, x: Array, y: Array) -> Array:
     float64 array
         Zero where the position is off the image by more than the Gaussian's reach.
     """
-    reach = math.ceil(REACH_SIGMA * SAMPLING_SIGMA)
+    reach = math.ceil(SAMPLING_REACH * SAMPLING_SIGMA)
     padded = np.pad(image, reach + 1)
     ny, nx = image.shape
     near = (x > -1) & (x < nx) & (y > -1) & (y < ny)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import Final
 
 import numpy as np
 from astropy.wcs import WCS
@@ -19,7 +20,9 @@ __all__ = ["add_noise", "look", "look_at"]
 Array = NDArray[np.float64]
 
 # Two Gauss-Legendre nodes a side have the mean and the variance of a pixel's box exactly.
-_NODE = 0.5 / math.sqrt(3.0)
+_NODE: Final = 0.5 / math.sqrt(3.0)
+# The plane is averaged over blocks before it is smoothed, down to so many pixels per sigma.
+PIXELS_PER_SIGMA: Final = 3.0
 
 
 def look(
@@ -58,14 +61,14 @@ def look(
     ValueError
         If the plane's pixels are too wide for the beam.
     """
-    seen = blur(image, _kernel(beam_arcsec2, plane))
+    seen, coarse = _through_beam(image, plane, beam_arcsec2)
     y, x = np.indices(shape, dtype=float)
     nodes = (-_NODE, _NODE) if averages_pixels else (0.0,)
     total = np.zeros(shape)
     for dx in nodes:
         for dy in nodes:
             lon, lat = sky_of_pixels(wcs, x + dx, y + dy)
-            total += sample(seen, *plane.pixels_of(*position_offsets(lon, lat, *centre_deg)))
+            total += sample(seen, *coarse.pixels_of(*position_offsets(lon, lat, *centre_deg)))
     return total / len(nodes) ** 2
 
 
@@ -73,16 +76,27 @@ def look_at(
     image: Array, plane: FinePlane, east_arcsec: Array, north_arcsec: Array, beam_arcsec2: Array
 ) -> Array:
     """See a painted plane with a beam at given offsets from its centre."""
-    seen = blur(image, _kernel(beam_arcsec2, plane))
-    return sample(seen, *plane.pixels_of(east_arcsec, north_arcsec))
+    seen, coarse = _through_beam(image, plane, beam_arcsec2)
+    return sample(seen, *coarse.pixels_of(east_arcsec, north_arcsec))
 
 
-def _kernel(beam_arcsec2: Array, plane: FinePlane) -> Array:
-    """What the beam leaves to smooth before the sampling adds its own Gaussian [pixel2]."""
-    kernel = beam_arcsec2 / plane.pixel_arcsec**2 - SAMPLING_SIGMA**2 * np.eye(2)
+def _through_beam(image: Array, plane: FinePlane, beam_arcsec2: Array) -> tuple[Array, FinePlane]:
+    """Smooth by what the beam leaves once blocks of pixels and the sampling have smoothed."""
+    narrowest = math.sqrt(float(np.linalg.eigvalsh(beam_arcsec2)[0])) / plane.pixel_arcsec
+    # Odd, so that the centre of the plane stays the centre of a block.
+    block = 2 * math.floor((narrowest / PIXELS_PER_SIGMA - 1.0) / 2.0) + 1
+    coarse, means = plane, image
+    if block > 1:
+        coarse = FinePlane(plane.pixel_arcsec * block, 2 * math.ceil(plane.n / (2 * block)) + 1)
+        margin = (coarse.n * block - plane.n) // 2
+        padded = np.pad(image, margin)
+        means = padded.reshape(coarse.n, block, coarse.n, block).mean(axis=(1, 3))
+    # A block of points has the variance (block^2 - 1) / 12 in squared points.
+    inside = (1.0 - 1.0 / block**2) / 12.0 + SAMPLING_SIGMA**2
+    kernel = beam_arcsec2 / coarse.pixel_arcsec**2 - inside * np.eye(2)
     if float(np.linalg.eigvalsh(kernel)[0]) <= 0:
         raise ValueError("the plane's pixels are too wide for the beam")
-    return kernel
+    return blur(means, kernel), coarse
 
 
 def add_noise(
