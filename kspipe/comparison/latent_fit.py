@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
@@ -108,6 +108,8 @@ class LatentModel:
     population : PopulationPrior
     is_linear : bool
         Whether the mean is linear in its parameters; else curvatures are differenced.
+    rows : (n,) int array or None
+        Points of a larger set that the model is for now used on.
     """
 
     names: tuple[str, ...]
@@ -116,6 +118,11 @@ class LatentModel:
     priors: tuple[GaussianPrior, ...]
     population: PopulationPrior
     is_linear: bool = True
+    rows: NDArray[np.intp] | None = None
+
+    def at(self, rows: NDArray[np.intp]) -> LatentModel:
+        """Return the same model for part of the points it was made for."""
+        return replace(self, rows=rows)
 
     @property
     def n_mean(self) -> int:
@@ -132,7 +139,7 @@ class LatentModel:
     ) -> Marginal:
         """Likelihood of every point, without priors."""
         m = self.n_mean
-        mean, gradient = self.mean(parameters[:m])
+        mean, gradient = (self._at_rows(f) for f in self.mean(parameters[:m]))
         return marginal_likelihood(
             data,
             mean,
@@ -141,6 +148,12 @@ class LatentModel:
             GaussianMixture.from_parameters(parameters[m + 1 :]),
             nodes=nodes,
         )
+
+    def _at_rows(self, function: Mean) -> Mean:
+        if self.rows is None:
+            return function
+        rows = self.rows
+        return lambda x, part: function(x, rows[part])
 
     def log_prior(self, parameters: Array) -> tuple[float, Array, Array]:
         """Log prior, its gradient, and minus its second derivatives."""

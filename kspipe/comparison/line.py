@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from typing import Final
 
@@ -17,11 +18,12 @@ from kspipe.comparison.latent_fit import (
     PopulationPrior,
     maximise,
 )
+from kspipe.comparison.phases import Phase, average_optima
 from kspipe.comparison.samples import LinearSamples
-from kspipe.kernels.latent import Mean, Measurements
+from kspipe.kernels.latent import Mean, Measurements, Rows
 from kspipe.kernels.mixture import GaussianMixture
 
-__all__ = ["LineFit", "fit_line", "line_model"]
+__all__ = ["LineFit", "PhasedLine", "fit_line", "fit_line_phases", "line_model"]
 
 Array = NDArray[np.float64]
 
@@ -106,22 +108,79 @@ def fit_line(samples: LinearSamples, *, components: int = 2) -> LineFit:
     -----
     The errors are from the observed information, population parameters marginalised.
     """
-    return fit_line_with_optimum(samples, components=components)[0]
+    positions = np.arange(samples.x.size, dtype=float)[:, None] * [1.0, 0.0]
+    return fit_line_phases([Phase(samples, positions)], 1e-3, components=components).mean
 
 
-def fit_line_with_optimum(
-    samples: LinearSamples, *, components: int = 2
-) -> tuple[LineFit, LatentModel | None, Optimum | None]:
-    """As `fit_line`, with the model and its peak for what builds on them."""
-    obstacle = samples.obstacle()
+@dataclass(frozen=True)
+class PhasedLine:
+    """A line fitted to every phase of a lattice.
+
+    Attributes
+    ----------
+    mean : LineFit
+        Average over the phases; its error counts how samples correlate, within and between them.
+        ``n`` is that of one phase.
+    phases : tuple of LineFit
+        Each alone, its samples taken as independent.
+    models, optima : tuple
+        What the fits stand on.
+    """
+
+    mean: LineFit
+    phases: tuple[LineFit, ...] = ()
+    models: tuple[LatentModel, ...] = ()
+    optima: tuple[Optimum, ...] = ()
+
+
+def fit_line_phases(
+    phases: Sequence[Phase], correlation_length: float, *, components: int = 2
+) -> PhasedLine:
+    """Fit a line to each phase of a lattice and average.
+
+    Parameters
+    ----------
+    phases : sequence of Phase
+        The first is the one whose samples are counted.
+    correlation_length : float
+        At which residuals correlate by 1/e, in the unit of the positions.
+    components : int
+
+    Returns
+    -------
+    PhasedLine
+    """
+    first = phases[0].samples
+    obstacle = first.obstacle()
     if obstacle:
-        return LineFit(samples.n, message=obstacle), None, None
-    data = samples.measurements()
-    model = line_model(data, components)
-    best = maximise(model, data)
+        return PhasedLine(LineFit(first.n, message=obstacle))
+    usable = [phase for phase in phases if phase.samples.obstacle() is None]
+    models: list[LatentModel] = []
+    optima: list[Optimum] = []
+    fits: list[LineFit] = []
+    start: Array | None = None
+    reference = first.measurements()
+    for phase in usable:
+        data = phase.samples.measurements()
+        model = line_model(reference, components)
+        best = _peak(model, data, start)
+        fit = _alone(model, data, best)
+        if not fit.is_fitted:
+            return PhasedLine(fit)
+        start = best.parameters
+        models.append(model)
+        optima.append(best)
+        fits.append(fit)
+    mean = _average(models[0], optima, fits, usable, correlation_length)
+    return PhasedLine(mean, tuple(fits), tuple(models), tuple(optima))
+
+
+def _peak(model: LatentModel, data: Measurements, start: Array | None = None) -> Optimum:
+    """Maximise, with the scatter held at its floor where it wants to be below."""
+    best = maximise(model, data, start)
     if best.is_converged and math.exp(best.parameters[2]) < LEAST_SCATTER_DEX:
         best = maximise(model, data, _with_scatter(best.parameters, LEAST_SCATTER_DEX), held=(2,))
-    return _summarise(model, data, best), model, best
+    return best
 
 
 def line_model(data: Measurements, components: int = 2) -> LatentModel:
@@ -130,10 +189,10 @@ def line_model(data: Measurements, components: int = 2) -> LatentModel:
     level = math.log10(data.y.sum() / data.x.size)
 
     def mean(theta: Array) -> tuple[Mean, Mean]:
-        def value(x: Array, _rows: slice) -> Array:
+        def value(x: Array, _rows: Rows) -> Array:
             return np.asarray(theta[1] + theta[0] * (x - centre))
 
-        def gradient(x: Array, _rows: slice) -> Array:
+        def gradient(x: Array, _rows: Rows) -> Array:
             return np.stack([x - centre, np.ones_like(x)])
 
         return value, gradient
@@ -153,39 +212,80 @@ def _with_scatter(parameters: Array, scatter_dex: float) -> Array:
     return out
 
 
-def _summarise(model: LatentModel, data: Measurements, best: Optimum) -> LineFit:
+def _alone(model: LatentModel, data: Measurements, best: Optimum) -> LineFit:
+    """One phase, its samples taken as independent."""
     n = data.x.size
     if not best.is_converged:
         return LineFit(n, message="the fit did not converge: no result")
-    scatter = math.exp(best.parameters[2])
     limit = _scatter_limit(model, data, best)
-    covariance = _covariance(best, hold_scatter=limit is not None)
-    if covariance is None:
+    keep = _free(best, limit is not None)
+    information = best.information[np.ix_(keep, keep)]
+    if np.linalg.eigvalsh(information)[0] <= 0:
         return LineFit(n, message="the likelihood has no peak in slope and intercept: no result")
-    variance, shared = covariance[0, 0], covariance[0, 1]
+    size = 2 if limit is not None else 3
+    covariance = np.asarray(np.linalg.inv(information)[:size, :size], dtype=float)
+    return _written(n, best, best.parameters[:3], covariance, model.population.centre, limit)
+
+
+def _average(
+    model: LatentModel,
+    optima: Sequence[Optimum],
+    fits: Sequence[LineFit],
+    phases: Sequence[Phase],
+    correlation_length: float,
+) -> LineFit:
+    """All phases together; the scatter is a limit where it is one in half of them or more."""
+    is_limit = sum(fit.is_limit for fit in fits) * 2 >= len(fits)
+    limit = float(np.median([f.scatter_dex for f in fits if f.is_limit])) if is_limit else None
+    parameters, covariance = average_optima(
+        optima,
+        [phase.kept_positions() for phase in phases],
+        _free(optima[0], is_limit),
+        2 if is_limit else 3,
+        correlation_length,
+    )
     centre = model.population.centre
-    lever = -shared / variance
-    turn = np.array([[1.0, 0.0, 0.0], [lever, 1.0, 0.0], [0.0, 0.0, scatter]])
-    covariance = turn @ np.nan_to_num(covariance) @ turn.T
-    if limit is not None:
-        covariance[2, :] = covariance[:, 2] = math.nan
-    errors = np.sqrt(np.diag(covariance))
-    mixture = best.parameters[3:]
+    return _written(fits[0].n, optima[0], parameters, covariance, centre, limit)
+
+
+def _free(best: Optimum, is_limit: bool) -> NDArray[np.intp]:
+    """Parameters that are not held: all but the scatter where that is a limit."""
+    return np.array([i for i in range(best.parameters.size) if not (is_limit and i == 2)])
+
+
+def _written(
+    n: int,
+    best: Optimum,
+    parameters: Array,
+    covariance: Array,
+    centre: float,
+    limit: float | None,
+) -> LineFit:
+    """Turn slope, intercept and ln(scatter) into numbers at the decorrelated pivot."""
+    lever = -covariance[0, 1] / covariance[0, 0]
+    scatter = math.exp(parameters[2]) if limit is None else math.nan
+    turn: Array = np.identity(covariance.shape[0])
+    turn[1, 0] = lever
+    if limit is None:
+        turn[2, 2] = scatter
+    full = np.full((3, 3), math.nan)
+    full[: len(turn), : len(turn)] = turn @ covariance @ turn.T
+    errors = np.sqrt(np.diag(full))
     return LineFit(
         n=n,
-        slope=float(best.parameters[0]),
+        slope=float(parameters[0]),
         slope_error=float(errors[0]),
-        intercept=float(best.parameters[1] + lever * best.parameters[0]),
+        intercept=float(parameters[1] + lever * parameters[0]),
         intercept_error=float(errors[1]),
         pivot=float(centre + lever),
         scatter_dex=scatter if limit is None else limit,
-        scatter_error=float(errors[2]) if limit is None else math.nan,
-        covariance=covariance,
+        scatter_error=float(errors[2]),
+        covariance=full,
         is_limit=limit is not None,
-        mean_over_median_dex=0.5 * scatter**2 * math.log(10.0) if limit is None else math.nan,
+        mean_over_median_dex=0.5 * scatter**2 * math.log(10.0),
         log_likelihood=best.log_likelihood,
         n_parameters=best.parameters.size,
-        population=_population(mixture),
+        population=_population(best.parameters[3:]),
         is_fitted=True,
     )
 
@@ -193,17 +293,6 @@ def _summarise(model: LatentModel, data: Measurements, best: Optimum) -> LineFit
 def _population(parameters: Array) -> dict[str, list[float]]:
     mixture = GaussianMixture.from_parameters(parameters)
     return {name: getattr(mixture, name).tolist() for name in ("weights", "means", "widths")}
-
-
-def _covariance(best: Optimum, *, hold_scatter: bool) -> Array | None:
-    """Covariance of slope, intercept and ln(scatter); None where it is not positive."""
-    keep = np.array([i for i in range(best.parameters.size) if not (hold_scatter and i == 2)])
-    information = best.information[np.ix_(keep, keep)]
-    if np.linalg.eigvalsh(information)[0] <= 0:
-        return None
-    full = np.full((best.parameters.size,) * 2, math.nan)
-    full[np.ix_(keep, keep)] = np.linalg.inv(information)
-    return full[:3, :3]
 
 
 def _scatter_limit(model: LatentModel, data: Measurements, best: Optimum) -> float | None:

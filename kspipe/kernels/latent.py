@@ -17,11 +17,12 @@ from numpy.typing import NDArray
 
 from kspipe.kernels.mixture import GaussianMixture
 
-__all__ = ["Marginal", "Mean", "Measurements", "marginal_likelihood"]
+__all__ = ["Marginal", "Mean", "Measurements", "Rows", "marginal_likelihood"]
 
 Array = NDArray[np.float64]
 # Values of f at nodes (points, nodes) of the rows given; then its gradient, (parameters, ...).
-Mean = Callable[[Array, slice], Array]
+Rows = slice | NDArray[np.intp]
+Mean = Callable[[Array, Rows], Array]
 
 LN10: Final = math.log(10.0)
 # Where the integrand is exp(-DEPTH) of its peak it is left out.
@@ -50,7 +51,7 @@ class Measurements:
     var_y: Array
     cov: Array
 
-    def rows(self, rows: slice) -> Measurements:
+    def take(self, rows: Rows) -> Measurements:
         """Return part of the points."""
         return Measurements(*(getattr(self, name)[rows] for name in _FIELDS))
 
@@ -123,7 +124,7 @@ def marginal_likelihood(
     n = data.x.size
     blocks = [slice(i, min(i + _BLOCK, n)) for i in range(0, n, _BLOCK)]
     parts = [
-        _block(data.rows(rows), rows, mean, gradient, scatter_dex, population, nodes)
+        _block(data.take(rows), rows, mean, gradient, scatter_dex, population, nodes)
         for rows in blocks
     ]
     return Marginal(
@@ -135,7 +136,7 @@ def marginal_likelihood(
 
 def _block(
     data: Measurements,
-    rows: slice,
+    rows: Rows,
     mean: Mean,
     gradient: Mean,
     s: float,
@@ -218,7 +219,7 @@ def _cost(at: Array, mu: Array, s: float, y: Array, sigma: Array) -> Array:
 def _outer_nodes(
     data: Measurements,
     conditional: _Conditional,
-    rows: slice,
+    rows: Rows,
     mean: Mean,
     s: float,
     population: GaussianMixture,
