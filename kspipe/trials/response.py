@@ -15,7 +15,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kspipe.comparison.latent_fit import LatentModel, Optimum, maximise
-from kspipe.comparison.line import LineFit, fit_line_with_optimum, line_model
+from kspipe.comparison.line import LineFit, fit_line_phases, line_model
+from kspipe.comparison.phases import Phase
 from kspipe.comparison.samples import LinearSamples
 
 __all__ = ["LineResponse", "Moved", "line_response", "refit"]
@@ -103,9 +104,13 @@ class LineResponse:
 
 def line_response(samples: LinearSamples) -> tuple[LineFit, LineResponse | None]:
     """Fit the line and prepare its response; without one where there is nothing to fit."""
-    fit, model, best = fit_line_with_optimum(samples)
-    if model is None or best is None or not fit.is_fitted:
+    # Positions far apart: samples of one phase count as independent.
+    places = np.arange(samples.x.size, dtype=float)[:, None] * [1.0, 0.0]
+    phased = fit_line_phases([Phase(samples, places)], 1e-3)
+    fit = phased.mean
+    if not fit.is_fitted:
         return fit, None
+    model, best = phased.models[0], phased.optima[0]
     usable = samples.usable
     kept = samples.take(usable)
     free = np.array([i for i in range(best.parameters.size) if not (fit.is_limit and i == 2)])
