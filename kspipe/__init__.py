@@ -18,9 +18,12 @@ _FACE = {
     "Recipe": "kspipe.recipe",
     "RecipeError": "kspipe.core.errors",
     "Reduction": "kspipe.api",
+    "budget": "kspipe.api",
+    "closure": "kspipe.api",
     "compare": "kspipe.api",
     "explain": "kspipe.conversions.shelf",
     "figures": "kspipe.api",
+    "ladder": "kspipe.api",
     "list_family": "kspipe.conversions.shelf",
     "load_recipe": "kspipe.recipe",
     "reduce": "kspipe.api",
@@ -36,9 +39,12 @@ __all__ = [
     "RecipeError",
     "Reduction",
     "__version__",
+    "budget",
+    "closure",
     "compare",
     "explain",
     "figures",
+    "ladder",
     "list_family",
     "load_recipe",
     "reduce",
@@ -46,7 +52,17 @@ __all__ = [
 ]
 
 if TYPE_CHECKING:
-    from kspipe.api import Comparison, Reduction, compare, figures, reduce, run
+    from kspipe.api import (
+        Comparison,
+        Reduction,
+        budget,
+        closure,
+        compare,
+        figures,
+        ladder,
+        reduce,
+        run,
+    )
     from kspipe.conversions.shelf import explain, list_family
     from kspipe.core.errors import KspipeError, KspipeWarning, MapError, RecipeError
     from kspipe.recipe import Recipe, load_recipe

@@ -13,13 +13,15 @@ from rich.table import Table
 
 from kspipe.core.trial_report import (
     budget_notes,
+    closure_lines,
+    closure_rows,
     flip_lines,
     ladder_rows,
     quantity_rows,
     shift_rows,
 )
 
-__all__ = ["print_budget", "print_ladder"]
+__all__ = ["print_budget", "print_closure", "print_ladder"]
 
 
 def _read(path: Path) -> dict[str, Any]:
@@ -77,4 +79,21 @@ def print_ladder(folder: Path) -> None:
         "the shortest 90-percent age), and share of detected samples with fewer than 10",
         markup=False,
     )
+    console.print(f"products in {folder}", markup=False)
+
+
+def print_closure(folder: Path) -> None:
+    """Print the closure test of a product folder."""
+    closure, console = _read(folder / "closure.json"), _console()
+    noise = ", ".join(f"{name} x {factor:g}" for name, factor in closure["paint"]["noise"].items())
+    console.print(
+        f"{closure['galaxy']}: {closure['n_mocks']} painted skies, {closure['n_samples']:.0f} "
+        f"independent samples each, {closure['finer']:.3g} times finer than the grid"
+        + (f"; noise of {noise}" if noise else ""),
+        markup=False,
+    )
+    head = ("parameter", "truth", "bias", "stated error", "in 68 %", "in 95 %", "mocks")
+    console.print(_table(head, closure_rows(closure)))
+    for line in closure_lines(closure):
+        console.print(line, markup=False)
     console.print(f"products in {folder}", markup=False)

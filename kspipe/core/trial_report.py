@@ -7,7 +7,15 @@ from typing import Any
 
 from kspipe.core.report import measured
 
-__all__ = ["budget_notes", "flip_lines", "ladder_rows", "quantity_rows", "shift_rows"]
+__all__ = [
+    "budget_notes",
+    "closure_lines",
+    "closure_rows",
+    "flip_lines",
+    "ladder_rows",
+    "quantity_rows",
+    "shift_rows",
+]
 
 _NAMES = {
     "slope": "slope",
@@ -136,3 +144,49 @@ def ladder_rows(ladder: dict[str, Any]) -> list[tuple[str, ...]]:
             )
         )
     return rows
+
+
+def closure_rows(closure: dict[str, Any]) -> list[tuple[str, ...]]:
+    """Parameter, truth at the final beam, bias, stated error, coverage of both intervals."""
+    return [
+        (
+            f["name"],
+            measured(f["truth"], f["truth_error"]),
+            measured(f["bias"], f["bias_error"]),
+            _number(f["stated_error"], ".2g"),
+            f"{100 * f['within_68']:.0f} +- {100 * f['coverage_error_68']:.0f} %",
+            f"{100 * f['within_95']:.0f} +- {100 * f['coverage_error_95']:.0f} %",
+            str(f["n"]),
+        )
+        for f in closure["found"]
+    ]
+
+
+def closure_lines(closure: dict[str, Any]) -> list[str]:
+    """What was painted, what the beam does to it, power, the wrong run, and what failed."""
+    paint, lines = closure["paint"], []
+    painted = paint["relation"] or f"a line of slope {paint['slope']:g}"
+    for key, shift in closure["law_shift"].items():
+        unit = "dex in zero point" if key == "zero_point_dex" else "in slope"
+        lines.append(f"averaging in the beam moves {painted} by {_number(shift, '+.3f')} {unit}")
+    lines += [
+        f"{painted} against {p['rival']}, {p['footing']}: preferred in {p['preferred']:.0%}, "
+        f"called better in {p['separated']:.0%}, called worse in {p['wrongly_separated']:.0%} "
+        f"of {p['n']} mocks"
+        for p in closure["power"]
+    ]
+    wrong = closure["wrong"]
+    ratios = ", ".join(
+        f"{name.removeprefix('sigma_')} {found:.3f} ({expected:.3f} expected)"
+        for name, (expected, found) in wrong["ratios"].items()
+    )
+    lines.append(
+        f"with the true inclination {wrong['inclination_off_deg']:+g} deg and alpha_CO x "
+        f"{wrong['alpha_co_off']:g} off the recipe, sums found over true: {ratios}"
+    )
+    if wrong["slope_found"] is not None:
+        slope = measured(wrong["slope_found"], wrong["slope_error"])
+        true = _number(wrong["slope_true"])
+        lines.append(f"  and the line's slope {slope}, of the true sky {true}")
+    lines += [f"{n} fits without a result: {why}" for why, n in closure["failures"].items()]
+    return lines

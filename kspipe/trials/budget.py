@@ -24,7 +24,7 @@ from kspipe.trials.priors import Prior, priors_of
 from kspipe.trials.reduced import Reduced, line_samples
 from kspipe.trials.response import LineResponse, Moved, line_response, refit
 
-__all__ = ["Budget", "Check", "Flip", "Quantity", "make_budget"]
+__all__ = ["Budget", "Check", "Flip", "Quantity", "make_budget", "plain_budget"]
 
 Array = NDArray[np.float64]
 

@@ -29,7 +29,7 @@ from kspipe.stages.surface import Disc
 from kspipe.trials.painted import Paint, Painter, Sky
 from kspipe.trials.reduced import covered_by_all, line_samples
 
-__all__ = ["Closure", "Found", "Power", "WrongRun", "run_closure"]
+__all__ = ["Closure", "Found", "Power", "WrongRun", "plain_closure", "run_closure"]
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property
 from typing import Any, Final
@@ -37,7 +37,7 @@ from kspipe.stages.reduce import load_one, match_one
 from kspipe.stages.surface import Disc, parameters_of, surfaces_of
 from kspipe.trials.intensity import intensities_of
 
-__all__ = ["Paint", "Painter", "Sky"]
+__all__ = ["Paint", "Painter", "Sky", "noise_factors"]
 
 Array = NDArray[np.float64]
 
@@ -98,6 +98,26 @@ class Paint:
             return np.asarray(factor * law.predict(inputs, table.parameters).sigma_sfr)
 
         return predict
+
+
+def noise_factors(typed: Sequence[str]) -> dict[str, float]:
+    """Read ``co=0.5``: the noise of a map over that of the recipe.
+
+    Raises
+    ------
+    InputError
+        If it is no name with a number.
+    """
+    factors = {}
+    for word in typed:
+        name, _, number = word.partition("=")
+        try:
+            factors[name.strip()] = float(number)
+        except ValueError:
+            raise InputError(
+                Fault("--noise", f"{word!r} cannot be read", "type, for example, --noise co=0.5")
+            ) from None
+    return factors
 
 
 @dataclass(frozen=True)

@@ -14,17 +14,21 @@ from astropy.table import Column, Table
 
 from kspipe import __version__
 from kspipe.core.progress import Progress, no_progress
-from kspipe.stages.folder import fingerprint
-from kspipe.stages.plan import compare_print
+from kspipe.recipe import Recipe
+from kspipe.stages.folder import ProductFolder, fingerprint
+from kspipe.stages.plan import InMemory, compare_print, make_plan
 from kspipe.trials.budget import make_budget, plain_budget
+from kspipe.trials.closure import Found, plain_closure, run_closure
 from kspipe.trials.ladder import FACTORS, climb, plain_ladder
+from kspipe.trials.painted import Paint
 from kspipe.trials.reduced import Reduced, open_reduced
 
-__all__ = ["write_budget", "write_ladder"]
+__all__ = ["write_budget", "write_closure", "write_ladder"]
 
 log = logging.getLogger(__name__)
 
 DRAWS: Final = 2000
+MOCKS: Final = 20
 
 
 def write_budget(
@@ -71,7 +75,7 @@ def write_budget(
     for name, shifts in budget.shifts.items():
         _add(table, f"shift {name}", shifts, f"of {name} for one sigma; dex but for the slope")
     _add(table, "origin", [prior.origin for prior in budget.priors], "who said so")
-    _publish(reduced, "budget", print_, plain, table, ("budget_figure",))
+    _publish(reduced.folder, "budget", print_, plain, table)
     return True
 
 
@@ -127,8 +131,84 @@ def write_ladder(
         sums = [rung.relations[name].sum_ratio for rung in rungs]
         _add(table, f"sum_ratio_{name}", sums, "sum of observed over sum of predicted")
     _add(table, "sampling_limited", ["; ".join(r.limits) for r in rungs], "why; empty where not")
-    _publish(reduced, "ladder", print_, plain, table, ("ladder_figure",))
+    _publish(reduced.folder, "ladder", print_, plain, table)
     return True
+
+
+def write_closure(
+    recipe: Recipe,
+    out: Path,
+    paint: Paint,
+    *,
+    n_mocks: int = MOCKS,
+    zero_point_width_dex: float = 0.2,
+    wrong: tuple[float, float] = (5.0, 1.5),
+    overwrite: bool = False,
+    memory: InMemory | None = None,
+    progress: Progress = no_progress,
+) -> bool:
+    """Run the closure test of a recipe: ``closure.json`` and ``closure.ecsv``.
+
+    Parameters
+    ----------
+    recipe : Recipe
+    out : Path
+        Product folder; that of a reduction, or one of its own.
+    paint, n_mocks, zero_point_width_dex, wrong, memory
+        As in `run_closure`.
+    overwrite, progress
+        As for `write_budget`.
+
+    Raises
+    ------
+    InputError
+        If a name is not known or a map cannot be painted; nothing is written then.
+    """
+    folder = ProductFolder.open(out)
+    print_ = fingerprint(
+        {
+            "kspipe": __version__,
+            "convert": make_plan(recipe, memory).prints["convert"],
+            "relations": {n: [t.law, t.parameters] for n, t in recipe.relations.items()},
+            "seed": recipe.seed,
+            "paint": paint,
+            "settings": [n_mocks, zero_point_width_dex, *wrong],
+        }
+    )
+    if not folder.check({"closure": print_}, overwrite=overwrite):
+        log.info("closure: nothing changed, %s is reused", out)
+        return False
+    closure = run_closure(
+        recipe,
+        paint,
+        n_mocks=n_mocks,
+        zero_point_width_dex=zero_point_width_dex,
+        wrong=wrong,
+        memory=memory,
+        progress=progress,
+    )
+    meta = {"kspipe": __version__, "galaxy": recipe.galaxy.name}
+    table = Table(meta=meta)
+    for name in Found.__dataclass_fields__:
+        _add(table, name, [getattr(found, name) for found in closure.found], _FOUND[name])
+    plain = {**meta, **plain_closure(closure)}
+    _publish(folder, "closure", print_, plain, table)
+    return True
+
+
+_FOUND: Final = {
+    "name": "parameter, or sum of a product over its truth",
+    "truth": "at the final beam, mean over the skies",
+    "truth_error": "of that mean",
+    "n": "mocks with a result",
+    "bias": "mean of found less true of the same sky",
+    "bias_error": "of that mean",
+    "stated_error": "median of the stated errors",
+    "within_68": "share of 68 % intervals that hold the truth",
+    "within_95": "share of 95 % intervals that hold the truth",
+    "coverage_error_68": "binomial error of a share of 68 %",
+    "coverage_error_95": "binomial error of a share of 95 %",
+}
 
 
 def _print(reduced: Reduced, **settings: Any) -> str:
@@ -137,15 +217,11 @@ def _print(reduced: Reduced, **settings: Any) -> str:
 
 
 def _publish(
-    reduced: Reduced,
-    stage: str,
-    print_: str,
-    plain: Mapping[str, Any],
-    table: Table,
-    drop: tuple[str, ...],
+    folder: ProductFolder, stage: str, print_: str, plain: Mapping[str, Any], table: Table
 ) -> None:
-    gone = tuple(name for name in drop if name in reduced.folder.stages)
-    with reduced.folder.publish({stage: print_}, drop=gone) as staging:
+    """Write a trial as JSON and as a table; a figure of an older one goes."""
+    gone = tuple(name for name in (f"{stage}_figure",) if name in folder.stages)
+    with folder.publish({stage: print_}, drop=gone) as staging:
         text = json.dumps(as_json(plain), indent=1) + "\n"
         (staging / f"{stage}.json").write_text(text, encoding="utf-8")
         table.write(staging / f"{stage}.ecsv", format="ascii.ecsv")
