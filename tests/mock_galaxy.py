@@ -10,6 +10,9 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.ndimage import gaussian_filter
 
+from kspipe.comparison.phases import Phase
+from kspipe.comparison.samples import LinearSamples
+
 PIXELS_PER_BEAM = 6.0
 SIGMA_PIX = PIXELS_PER_BEAM / 2.3548200450309493
 N_PIXELS = 144
@@ -67,3 +70,28 @@ def paint(
         mol_error=float(mol_error),
         radius=radius,
     )
+
+
+def samples_of(galaxy: MockGalaxy, mask: np.ndarray) -> LinearSamples:
+    """Pixels of a lattice; gas and star formation share no noise."""
+    return LinearSamples(
+        galaxy.gas[mask],
+        galaxy.sfr[mask],
+        galaxy.gas_error[mask] ** 2,
+        galaxy.sfr_error[mask] ** 2,
+        np.zeros(int(mask.sum())),
+    )
+
+
+def phase_of(galaxy: MockGalaxy, mask: np.ndarray) -> Phase:
+    """The same with positions."""
+    y, x = np.nonzero(mask)
+    return Phase(samples_of(galaxy, mask), np.stack([x, y], axis=1).astype(float))
+
+
+def clouds(
+    rng: np.random.Generator, slope: float, width_dex: float, n: int = 2_000_000
+) -> tuple[np.ndarray, np.ndarray]:
+    """Log-normal clouds in one beam, each forming stars by a power law."""
+    gas = 10 ** (1.0 + width_dex * rng.normal(size=n))
+    return gas, gas**slope

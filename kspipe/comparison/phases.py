@@ -78,7 +78,8 @@ def average_optima(
     A fit moves by the sum of its points' influences, inverse information times score. Influences
     of two points a distance d apart covary by A exp(-(d / length)^2); the matrix A is measured
     from all pairs, in one phase or two, so that the mean of overlapping phases and neighbours
-    that are not quite independent are both counted.
+    that are not quite independent are both counted. Variances are raised by n / (n - p), n being
+    the samples of one phase.
 
     References
     ----------
@@ -101,7 +102,10 @@ def average_optima(
         product = (influence[:, first] * rho) @ influence[:, second].T
         # Each pair counts twice.
         together = (product + product.T) * rho.sum() / np.sum(rho**2)
-    return mean, (alone + _positive_part(together, alone)) / len(optima) ** 2
+    n, p = optima[0].scores.shape[1], keep.size
+    # Fitted points scatter less about a fit than about the truth.
+    few = n / max(n - p, 1)
+    return mean, few * (alone + _positive_part(together, alone)) / len(optima) ** 2
 
 
 def _positive_part(matrix: Array, scale: Array) -> Array:

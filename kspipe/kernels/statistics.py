@@ -8,7 +8,7 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["clipped_scatter", "correlation_area", "median_error"]
+__all__ = ["beam_averaging_dex", "clipped_scatter", "correlation_area", "median_error"]
 
 Array = NDArray[np.float64]
 
@@ -61,3 +61,21 @@ def median_error(values: Array, rng: np.random.Generator, n_draws: int = 1000) -
         return math.nan
     picks = rng.integers(0, values.size, (n_draws, values.size))
     return float(np.std(np.median(values[picks], axis=1)))
+
+
+def beam_averaging_dex(slope: float, width_dex: float) -> float:
+    """How far a power law of clouds is raised when a beam averages them.
+
+    Parameters
+    ----------
+    slope : float
+        Of y = x^slope for each cloud.
+    width_dex : float
+        Standard deviation of log10 x among the clouds of one beam.
+
+    Returns
+    -------
+    float
+        log10 of <x^slope> / <x>^slope, (slope^2 - slope) width^2 ln(10) / 2 for a log-normal x.
+    """
+    return 0.5 * (slope**2 - slope) * width_dex**2 * math.log(10.0)
