@@ -13,6 +13,7 @@ from rich.table import Table
 
 from kspipe.core.trial_report import (
     budget_notes,
+    choice_rows,
     closure_lines,
     closure_rows,
     flip_lines,
@@ -52,6 +53,12 @@ def print_budget(folder: Path) -> None:
     keys, rows = shift_rows(budget)
     console.print("shift for one sigma of each assumption:")
     console.print(_table(("assumption", *keys), rows))
+    dimensions, rows = choice_rows(budget)
+    console.print(
+        f"choices: range over each alone, and over {budget['choices']['n_universes']} sets of "
+        "them; share of sets on the same side (slope: of 1)"
+    )
+    console.print(_table(("quantity", *dimensions, "same side"), rows))
     console.print("the smallest change to one assumption that turns a conclusion around:")
     for line in flip_lines(budget):
         console.print(f"  {line}", markup=False)

@@ -9,6 +9,7 @@ from kspipe.core.report import measured
 
 __all__ = [
     "budget_notes",
+    "choice_rows",
     "closure_lines",
     "closure_rows",
     "flip_lines",
@@ -72,6 +73,21 @@ def shift_rows(budget: dict[str, Any]) -> tuple[list[str], list[tuple[str, ...]]
         for name in sorted(shifts, key=share, reverse=True)
     ]
     return [key.removeprefix("bias ") for key in keys], rows
+
+
+def choice_rows(budget: dict[str, Any]) -> tuple[list[str], list[tuple[str, ...]]]:
+    """Head and rows: range of each quantity over one choice alone, and over all sets of them."""
+    ranges = budget["choices"]["ranges"]
+    dimensions = list(next(iter(ranges.values()))) if ranges else []
+    rows: list[tuple[str, ...]] = []
+    for key, by_choice in ranges.items():
+        cells = (
+            f"{_number(low)} to {_number(high)}" if low != high else "-"
+            for low, high in by_choice.values()
+        )
+        share = budget["choices"]["share_of_same_sign"].get(key)
+        rows.append((_name(key), *cells, "" if share is None else f"{share:.0%}"))
+    return dimensions, rows
 
 
 def flip_lines(budget: dict[str, Any]) -> list[str]:

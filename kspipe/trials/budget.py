@@ -23,6 +23,7 @@ from kspipe.trials.draws import Drawn, SampleInputs, convert_draws, inputs_of, s
 from kspipe.trials.priors import Prior, priors_of
 from kspipe.trials.reduced import Reduced, line_samples
 from kspipe.trials.response import LineResponse, Moved, line_response, refit
+from kspipe.trials.universes import Universe, explore, ranges_of, share_holding
 
 __all__ = ["Budget", "Check", "Flip", "Quantity", "make_budget", "plain_budget"]
 
@@ -116,6 +117,8 @@ class Budget:
         By quantity, its shift for one sigma of each assumption.
     checks : list of Check
     flips : list of Flip
+    universes : list of Universe
+        Sets of choices, the recipe's own first.
     line : LineFit
     pivot_msun_pc2 : float
         Sigma_gas at which ``level`` is taken.
@@ -129,6 +132,7 @@ class Budget:
     shifts: dict[str, Array]
     checks: list[Check]
     flips: list[Flip]
+    universes: list[Universe]
     line: LineFit
     pivot_msun_pc2: float
 
@@ -157,26 +161,28 @@ def make_budget(
     """
     if n_draws < 100:
         raise InputError(Fault("--draws", f"{n_draws}: percentiles need 100 or more"))
-    progress(0, 4, "fitting the line")
+    progress(0, 5, "fitting the line")
     lattice = reduced.lattice()
     inputs = inputs_of(reduced, lattice)
     priors, fixed = priors_of(reduced.recipe, reduced.matched, set(inputs.intensity))
     fit, response = line_response(line_samples(reduced.disc, lattice))
 
-    progress(1, 4, f"{n_draws} draws")
+    progress(1, 5, f"{n_draws} draws")
     rng = generator(reduced.recipe.seed, "budget", "draws")
     normal = rng.standard_normal((n_draws, len(priors)))
     middle = _evaluate(inputs, priors, np.zeros((1, len(priors))), response)
     together = _evaluate(inputs, priors, normal, response)
     alone = _one_at_a_time(inputs, priors, response, middle)
 
-    progress(2, 4, "what would turn the conclusion")
+    progress(2, 5, "what would turn the conclusion")
     random = _random_errors(inputs, reduced, fit)
     flips = _find_flips(inputs, priors, response, middle, random)
 
-    progress(3, 4, f"{CHECKED} draws fitted in full")
+    progress(3, 5, f"{CHECKED} draws fitted in full")
     checks = _check(inputs, priors, normal[:CHECKED], response, together)
-    progress(4, 4, "budget made")
+    progress(4, 5, "other records, samples and beams")
+    universes = explore(reduced, inputs, response)
+    progress(5, 5, "budget made")
     return Budget(
         n_draws=n_draws,
         n_samples=int(lattice.sum()),
@@ -189,6 +195,7 @@ def make_budget(
         shifts=alone,
         checks=checks,
         flips=flips,
+        universes=universes,
         line=fit,
         pivot_msun_pc2=10.0**fit.pivot,
     )
@@ -419,4 +426,17 @@ def plain_budget(budget: Budget) -> dict[str, object]:
         "fixed": budget.fixed,
         "response_minus_full_fit": [asdict(check) for check in budget.checks],
         "flips": [asdict(flip) for flip in budget.flips],
+        "choices": {
+            "n_universes": len(budget.universes),
+            "ranges": ranges_of(budget.universes),
+            "share_of_same_sign": share_holding(
+                budget.universes,
+                {
+                    name: 1.0 if name == "slope" else 0.0
+                    for name in budget.universes[0].values
+                    if name == "slope" or name.startswith("bias ")
+                },
+            ),
+            "universes": [asdict(universe) for universe in budget.universes],
+        },
     }
