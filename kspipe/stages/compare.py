@@ -24,6 +24,7 @@ from kspipe.maps.skymap import Flag
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe, load_recipe
 from kspipe.relations import LAWS
+from kspipe.stages.fits import fit_all, write_fits_table
 from kspipe.stages.folder import ProductFolder
 from kspipe.stages.pixels import pixel_table, write_pixels
 from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
@@ -119,6 +120,10 @@ def compare_relations(
         summary = make_summary(
             plan, disc, headlines, residuals, used, independent, matched, findings
         )
+        if recipe.comparison.fits:
+            sections = fit_all(recipe, disc, grid, used, residuals, beam)
+            write_fits_table(sections["fits"], staging / "fits.ecsv")
+            summary.update(sections)
         (staging / "summary.json").write_text(summary_text(summary), encoding="utf-8")
     return True
 
