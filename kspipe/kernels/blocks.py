@@ -52,11 +52,10 @@ def correlation_length(values: Array, used: NDArray[np.bool_]) -> float:
     return min(last - 1 + float(fall), smaller_side)
 
 
-def square_blocks(x: Array, y: Array, side: float, centre: tuple[float, float]) -> NDArray[np.intp]:
-    """Number the squares of a lattice about `centre` that positions fall in, from 0 up."""
-    column = np.floor((x - centre[0]) / side).astype(int)
-    row = np.floor((y - centre[1]) / side).astype(int)
-    return np.unique(np.stack([row, column]), axis=1, return_inverse=True)[1].reshape(-1)
+def square_blocks(positions: Array, side: float, centre: tuple[float, float]) -> NDArray[np.intp]:
+    """Number the squares of a lattice about `centre` that (n, 2) positions fall in, from 0 up."""
+    squares = np.floor((positions - np.asarray(centre)) / side).astype(int)
+    return np.unique(squares, axis=0, return_inverse=True)[1].reshape(-1)
 
 
 def block_bootstrap_error(

@@ -10,6 +10,7 @@ from pydantic import BaseModel, ValidationError
 
 from kspipe.core.errors import Fault, RecipeError, nearest
 from kspipe.recipe.checks import check_relation, check_together
+from kspipe.recipe.environment import environment_faults, locate_regions
 from kspipe.recipe.map_table import MapTable, NoiseFile, NoiseTyped
 from kspipe.recipe.models import (
     ComparisonTable,
@@ -122,6 +123,11 @@ def parse_recipe(
     if isinstance(grid, GridTable) and grid.like is not None and grid.like not in tables["maps"]:
         located = _locate(Path(grid.like), folder, "grid.like", faults)
         tables["grid"] = grid.model_copy(update={"like": str(located)})
+    comparison = tables.get("comparison")
+    if isinstance(comparison, ComparisonTable):
+        places = locate_regions(comparison.environments, folder, faults)
+        tables["comparison"] = comparison.model_copy(update={"environments": places})
+        faults += environment_faults(comparison.free, tables["relations"])
     faults += check_together(tables)
     if faults:
         raise RecipeError(*faults)

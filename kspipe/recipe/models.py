@@ -13,6 +13,7 @@ from pydantic import AfterValidator, BeforeValidator, Field, model_validator
 
 from kspipe.conversions import ALPHA_CO, EXTINCTION, LINE_RATIO, OH_SCALES, STAR_FORMATION, STARS
 from kspipe.core.errors import nearest
+from kspipe.recipe.environment import Environment, FreeWidth
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.quantity import Measured, Position, parse_centre, parse_measured
 from kspipe.recipe.systematics_table import SystematicsTable
@@ -230,6 +231,13 @@ class ComparisonTable(Table):
     """How the comparison is made."""
 
     low_snr: float = Field(default=5.0, ge=0.0)
+    fits: bool = True
+    lattice_phases: int = Field(default=4, ge=1, le=4)
+    population_components: int = Field(default=2, ge=1, le=3)
+    zero_point_prior: float = Field(default=0.2, gt=0.0, le=2.0)
+    free: dict[str, dict[str, FreeWidth]] = Field(default_factory=dict)
+    environments: dict[str, Environment] = Field(default_factory=dict)
+    posterior_draws: int = Field(default=0, ge=0, le=100_000)
 
 
 class Recipe(Table):

@@ -95,6 +95,9 @@ def _value(value: Any) -> str:
     if isinstance(value, str | Path):
         # A JSON string is a TOML basic string.
         return json.dumps(str(value), ensure_ascii=False)
+    if isinstance(value, Mapping):
+        pairs = [f"{key} = {_value(entry)}" for key, entry in value.items()]
+        return "{" + ", ".join(pairs) + "}"
     if isinstance(value, BaseModel):
         pairs = [
             f"{field.alias or key} = {_value(getattr(value, key))}"

@@ -24,6 +24,8 @@ from kspipe.maps.skymap import Flag
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe, load_recipe
 from kspipe.relations import LAWS
+from kspipe.stages.environments import environment_areas
+from kspipe.stages.fits import fit_all, write_fits_table
 from kspipe.stages.folder import TRIAL_STAGES, ProductFolder
 from kspipe.stages.pixels import pixel_table, write_pixels
 from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
@@ -116,11 +118,16 @@ def compare_relations(
         write_pixels(
             pixel_table(disc, residuals, used, independent, grid, meta), staging / "pixels.ecsv"
         )
-        write_profiles(profile_table(recipe, disc, used, grid, beam, {}), staging)
+        regions = environment_areas(recipe, disc.radius_kpc, grid)
+        write_profiles(profile_table(recipe, disc, used, grid, beam, regions), staging)
         findings = read_findings(out)
         summary = make_summary(
             plan, disc, headlines, residuals, used, independent, matched, findings
         )
+        if recipe.comparison.fits:
+            sections = fit_all(recipe, disc, grid, used, residuals, beam)
+            write_fits_table(sections["fits"], staging / "fits.ecsv")
+            summary.update(sections)
         (staging / "summary.json").write_text(summary_text(summary), encoding="utf-8")
     return True
 

@@ -355,7 +355,7 @@ def _rank(
     rows, columns = np.nonzero(chosen)
     side = BLOCK_LENGTHS * beam_correlation_length(fwhm_pix)
     centre = painter.plan.grid.centre_pixel
-    blocks = square_blocks(columns.astype(float), rows.astype(float), side, centre)
+    blocks = square_blocks(np.stack([columns, rows], axis=1).astype(float), side, centre)
     rivals = [name for name in names if name != paint.relation]
     for width, rival in itertools.product((0.0, zero_point_width_dex), rivals):
         rng = generator(painter.recipe.seed, "closure", f"ranking {width:g} {rival}", number)

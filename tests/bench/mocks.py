@@ -69,7 +69,10 @@ def one_kind(slope: float, scatter: float, number: int, phases: int) -> None:
         )
     names = [one.method for one in older]
     means = np.nanmean(classical, axis=0)
-    print("  slope - true: " + ", ".join(f"{n} {m:+.2f}" for n, m in zip(names, means)), flush=True)
+    print(
+        "  slope - true: " + ", ".join(f"{n} {m:+.2f}" for n, m in zip(names, means, strict=True)),
+        flush=True,
+    )
 
 
 def law_of_clouds(slope: float = 1.4, width_dex: float = 0.35) -> None:
