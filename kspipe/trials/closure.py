@@ -4,10 +4,9 @@ from __future__ import annotations
 
 import itertools
 import math
-from collections.abc import Mapping, Sequence
-from dataclasses import asdict, dataclass, field, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import Any, Final
+from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,10 +25,11 @@ from kspipe.kernels.noise import sum_covariance
 from kspipe.recipe import Recipe
 from kspipe.stages.plan import InMemory
 from kspipe.stages.surface import Disc
+from kspipe.trials.closure_result import Closure, WrongRun, power_of, summed_up
 from kspipe.trials.painted import Paint, Painter, Sky
 from kspipe.trials.reduced import covered_by_all, line_samples
 
-__all__ = ["Closure", "Found", "Power", "WrongRun", "plain_closure", "run_closure"]
+__all__ = ["run_closure"]
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
@@ -37,120 +37,6 @@ Mask = NDArray[np.bool_]
 # log10 Sigma_gas at which the level of the line is compared: 10 Msun/pc2.
 AT_LOG_GAS: Final = 1.0
 PRODUCTS: Final[tuple[str, ...]] = ("sigma_atom", "sigma_mol", "sigma_gas", "sigma_sfr")
-
-
-@dataclass(frozen=True)
-class Found:
-    """How one parameter came back.
-
-    Attributes
-    ----------
-    name : str
-    truth, truth_error : float
-        At the final beam: the mean over the painted skies, and its error. For a sum the ratio
-        to the truth, 1.
-    n : int
-        Mocks with a result.
-    bias, bias_error : float
-        Mean of found less true of the same sky.
-    stated_error : float
-        Median of the errors that the mocks state.
-    within_68, within_95 : float
-        Share of mocks whose central 68 and 95 % intervals hold the truth of the population.
-    coverage_error_68, coverage_error_95 : float
-        Binomial 1-sigma errors of these shares, were they what they should be.
-    """
-
-    name: str
-    truth: float
-    truth_error: float
-    n: int
-    bias: float
-    bias_error: float
-    stated_error: float
-    within_68: float
-    within_95: float
-    coverage_error_68: float
-    coverage_error_95: float
-
-
-@dataclass(frozen=True)
-class Power:
-    """How often the painted relation is told from another.
-
-    Attributes
-    ----------
-    footing : str
-        Which errors are allowed for.
-    rival : str
-    n : int
-        Mocks with a ranking.
-    preferred : float
-        Share in which the painted relation predicts better.
-    separated, wrongly_separated : float
-        Share in which it is called better, and the rival is.
-    """
-
-    footing: str
-    rival: str
-    n: int
-    preferred: float
-    separated: float
-    wrongly_separated: float
-
-
-@dataclass(frozen=True)
-class WrongRun:
-    """One sky whose inclination and alpha_CO are not what the recipe believes.
-
-    Attributes
-    ----------
-    inclination_off_deg, alpha_co_off : float
-        True inclination less believed; true alpha_CO over believed.
-    ratios : dict of str to (float, float)
-        By product, sum found over sum true: expected from the two errors alone, and found.
-    slope_true, slope_found, slope_error : float
-    """
-
-    inclination_off_deg: float
-    alpha_co_off: float
-    ratios: dict[str, tuple[float, float]]
-    slope_true: float
-    slope_found: float
-    slope_error: float
-
-
-@dataclass(frozen=True)
-class Closure:
-    """A whole closure test.
-
-    Attributes
-    ----------
-    paint : Paint
-    n_mocks : int
-    n_samples : float
-        Independent samples per mock.
-    found : list of Found
-    law_shift : dict of str to float
-        What averaging in the beam does to the painted law, before any noise: ``slope`` (lines),
-        ``zero_point_dex`` (relations), each found at the final beam less painted.
-    power : list of Power
-    wrong : WrongRun
-    failures : dict of str to int
-        Messages of fits without a result, counted.
-    finer : float
-        Pixels of the painted sky per pixel of the grid.
-    """
-
-    paint: Paint
-    n_mocks: int
-    n_samples: float
-    found: list[Found]
-    law_shift: dict[str, float]
-    power: list[Power]
-    wrong: WrongRun
-    failures: dict[str, int]
-    finer: float
 
 
 @dataclass
@@ -217,9 +103,9 @@ def run_closure(
         paint=paint,
         n_mocks=n_mocks,
         n_samples=float(np.mean(mocks.n_samples)),
-        found=[_found(name, np.array(rows)) for name, rows in mocks.found.items()],
+        found=[summed_up(name, np.array(rows)) for name, rows in mocks.found.items()],
         law_shift=_law_shift(paint, mocks),
-        power=[_power(key, rows) for key, rows in mocks.rankings.items()],
+        power=[power_of(key, rows) for key, rows in mocks.rankings.items()],
         wrong=wrong_run,
         failures=mocks.failures,
         finer=painter.plan.grid.pixel_arcsec / painter.plane.pixel_arcsec,
@@ -412,39 +298,8 @@ def _run_wrong(
     )
 
 
-def _found(name: str, rows: Array) -> Found:
-    """Sum up one parameter over the mocks, (mocks, 3): found, error, truth of its own sky."""
-    value, error, own = rows.T
-    n = len(value)
-    truth = float(own.mean())
-    off = np.abs(value - truth) / error
-    return Found(
-        name=name,
-        truth=truth,
-        truth_error=float(own.std(ddof=1) / math.sqrt(n)) if n > 1 else math.nan,
-        n=n,
-        bias=float(np.mean(value - own)),
-        bias_error=float(np.std(value - own, ddof=1) / math.sqrt(n)) if n > 1 else math.nan,
-        stated_error=float(np.median(error)),
-        within_68=float(np.mean(off < 0.9944579)),
-        within_95=float(np.mean(off < 1.9599640)),
-        coverage_error_68=math.sqrt(0.68 * 0.32 / n),
-        coverage_error_95=math.sqrt(0.95 * 0.05 / n),
-    )
-
-
 def _law_shift(paint: Paint, mocks: _Mocks) -> dict[str, float]:
     if paint.is_line:
         true = [own for _, _, own in mocks.found.get("slope", [])]
         return {"slope": float(np.mean(true)) - paint.slope} if true else {}
     return {"zero_point_dex": float(np.mean(mocks.zero_points)) - paint.shift_dex}
-
-
-def _power(key: tuple[str, str], rows: Sequence[tuple[bool, bool, bool]]) -> Power:
-    shares = np.mean(np.array(rows, dtype=float), axis=0)
-    return Power(*key, len(rows), *(float(share) for share in shares))
-
-
-def plain_closure(closure: Closure) -> Mapping[str, Any]:
-    """The closure as nested plain values, for the file."""
-    return asdict(closure)

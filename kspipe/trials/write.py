@@ -18,7 +18,8 @@ from kspipe.recipe import Recipe
 from kspipe.stages.folder import ProductFolder, fingerprint
 from kspipe.stages.plan import InMemory, compare_print, make_plan
 from kspipe.trials.budget import make_budget, plain_budget
-from kspipe.trials.closure import Found, plain_closure, run_closure
+from kspipe.trials.closure import run_closure
+from kspipe.trials.closure_result import Found, plain_closure
 from kspipe.trials.ladder import FACTORS, climb, plain_ladder
 from kspipe.trials.painted import Paint
 from kspipe.trials.reduced import Reduced, open_reduced

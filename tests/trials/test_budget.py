@@ -14,8 +14,9 @@ import pytest
 
 from kspipe.comparison.samples import LinearSamples
 from kspipe.core.errors import InputError
-from kspipe.trials.budget import _first_crossing, make_budget
+from kspipe.trials.budget import make_budget
 from kspipe.trials.draws import convert_draws, inputs_of, sums_of
+from kspipe.trials.flips import _first_crossing
 from kspipe.trials.priors import Prior
 from kspipe.trials.reduced import line_samples
 from kspipe.trials.response import line_response, refit

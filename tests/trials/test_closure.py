@@ -10,7 +10,8 @@ import pytest
 
 from kspipe.core.errors import InputError
 from kspipe.recipe import load_recipe
-from kspipe.trials.closure import Found, _found, run_closure
+from kspipe.trials.closure import run_closure
+from kspipe.trials.closure_result import Found, summed_up
 from kspipe.trials.painted import Paint, Painter, noise_factors
 
 RECIPES = Path(__file__).resolve().parents[2] / "recipes"
@@ -77,7 +78,7 @@ def test_coverage_is_counted_from_the_population():
     own = 1.0 + 0.1 * rng.standard_normal(4000)
     found = own + 0.1 * rng.standard_normal(4000)
     rows = np.stack([found, np.full(4000, math.sqrt(0.02)), own], axis=1)
-    summary = _found("x", rows)
+    summary = summed_up("x", rows)
     assert isinstance(summary, Found)
     # Half widths of 68 and 95 % of a normal distribution, as in any table.
     assert summary.within_68 == pytest.approx(0.68, abs=0.02)
