@@ -29,8 +29,9 @@ Array = NDArray[np.float64]
 LEAST_SCATTER_DEX: Final = 1e-3
 # A gradient this small moves no parameter by a hundredth of its error.
 _GRADIENT: Final = 1e-2
-_COARSE: Final = (8, 14)
 _FINE: Final = (10, 18)
+# Nodes to climb with and to check with; more where noise and relation run nearly in parallel.
+_NODES: Final = (((8, 14), _FINE), ((16, 18), (20, 24)))
 # Most steps; a fit that needs more is reported as not converged.
 _STEPS: Final = 60
 
@@ -48,13 +49,16 @@ class PopulationPrior:
     """What is assumed of the Gaussian mixture of latent log10 x.
 
     Weights have a Dirichlet(2) prior, which keeps a component from dying; means are normal about
-    `centre` with `spread`, logarithms of the widths are normal about ln(`width`).
+    `centre` with `spread`, and ln of what widths exceed
+    `least_width` by, in quadrature, about ln(`width`).
 
     Attributes
     ----------
     components : int
     centre, spread, width : float
         [dex]
+    least_width : float
+        No component is narrower [dex].
     ln_width_spread : float
     """
 
@@ -62,19 +66,20 @@ class PopulationPrior:
     centre: float
     spread: float = 1.5
     width: float = 0.4
-    ln_width_spread: float = 0.8
+    ln_width_spread: float = 0.5
+    least_width: float = 0.1
 
     def start(self) -> GaussianMixture:
         """Return components side by side about the centre."""
         k = self.components
         means = self.centre - 0.1 + 0.5 * (np.arange(k) - 0.5 * (k - 1))
         weights, widths = np.full((2, k), [[1.0 / k], [0.35]])
-        return GaussianMixture(weights, np.asarray(means, dtype=float), widths)
+        return GaussianMixture(weights, np.asarray(means, dtype=float), widths, self.least_width)
 
     def log_density(self, parameters: Array) -> tuple[float, Array, Array]:
         """Log prior, its gradient, and minus its second derivatives, at a mixture's parameters."""
         k = self.components
-        mixture = GaussianMixture.from_parameters(parameters)
+        mixture = GaussianMixture.from_parameters(parameters, self.least_width)
         value = float(np.log(mixture.weights).sum())
         gradient, curvature = np.zeros(parameters.size), np.zeros((parameters.size,) * 2)
         w = mixture.weights[:-1]
@@ -145,7 +150,7 @@ class LatentModel:
             mean,
             gradient,
             max(math.exp(parameters[m]), LEAST_SCATTER_DEX),
-            GaussianMixture.from_parameters(parameters[m + 1 :]),
+            GaussianMixture.from_parameters(parameters[m + 1 :], self.population.least_width),
             nodes=nodes,
         )
 
@@ -200,7 +205,7 @@ class _Objective:
     def __init__(self, model: LatentModel, data: Measurements, full: Array, free: Array) -> None:
         self.model, self.data, self.full, self.free = model, data, full.copy(), free
         self._at: Array | None = None
-        self.nodes = _COARSE
+        self.nodes = _FINE
 
     def _evaluate(self, x: Array) -> None:
         if self._at is not None and np.array_equal(self._at, x):
@@ -218,9 +223,9 @@ class _Objective:
             self.gradient[scatter] = 0.0
         self._at = x.copy()
 
-    def refine(self, x: Array) -> None:
-        """Evaluate once more, with all nodes."""
-        self.nodes, self._at = _FINE, None
+    def refine(self, x: Array, nodes: tuple[int, int]) -> None:
+        """Evaluate with other nodes, from here on."""
+        self.nodes, self._at = nodes, None
         self._evaluate(x)
 
     def cost(self, x: Array) -> float:
@@ -260,16 +265,22 @@ def maximise(
     full = model.begin() if start is None else start
     free = np.setdiff1d(np.arange(full.size), held)
     objective = _Objective(model, data, full, free)
-    result = minimize(
-        objective.cost,
-        full[free],
-        jac=objective.slope,
-        hess=objective.curvature,
-        method="trust-exact",
-        options={"gtol": _GRADIENT, "maxiter": _STEPS, "initial_trust_radius": 0.5},
-    )
-    objective.refine(result.x)
-    is_converged = bool(np.abs(objective.gradient[free]).max() < 10 * _GRADIENT)
+    place = full[free]
+    for climbing, checking in _NODES:
+        objective.refine(place, climbing)
+        result = minimize(
+            objective.cost,
+            place,
+            jac=objective.slope,
+            hess=objective.curvature,
+            method="trust-exact",
+            options={"gtol": _GRADIENT, "maxiter": _STEPS, "initial_trust_radius": 0.5},
+        )
+        place = result.x
+        objective.refine(place, checking)
+        is_converged = bool(np.abs(objective.gradient[free]).max() < 10 * _GRADIENT)
+        if is_converged:
+            break
     information = objective.information
     if not model.is_linear:
         information = _differenced(model, data, objective.full, information)

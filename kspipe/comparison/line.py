@@ -224,7 +224,7 @@ def _alone(model: LatentModel, data: Measurements, best: Optimum) -> LineFit:
         return LineFit(n, message="the likelihood has no peak in slope and intercept: no result")
     size = 2 if limit is not None else 3
     covariance = np.asarray(np.linalg.inv(information)[:size, :size], dtype=float)
-    return _written(n, best, best.parameters[:3], covariance, model.population.centre, limit)
+    return _written(n, best, best.parameters[:3], covariance, model.population, limit)
 
 
 def _average(
@@ -244,8 +244,7 @@ def _average(
         2 if is_limit else 3,
         correlation_length,
     )
-    centre = model.population.centre
-    return _written(fits[0].n, optima[0], parameters, covariance, centre, limit)
+    return _written(fits[0].n, optima[0], parameters, covariance, model.population, limit)
 
 
 def _free(best: Optimum, is_limit: bool) -> NDArray[np.intp]:
@@ -258,7 +257,7 @@ def _written(
     best: Optimum,
     parameters: Array,
     covariance: Array,
-    centre: float,
+    population: PopulationPrior,
     limit: float | None,
 ) -> LineFit:
     """Turn slope, intercept and ln(scatter) into numbers at the decorrelated pivot."""
@@ -277,7 +276,7 @@ def _written(
         slope_error=float(errors[0]),
         intercept=float(parameters[1] + lever * parameters[0]),
         intercept_error=float(errors[1]),
-        pivot=float(centre + lever),
+        pivot=float(population.centre + lever),
         scatter_dex=scatter if limit is None else limit,
         scatter_error=float(errors[2]),
         covariance=full,
@@ -285,13 +284,13 @@ def _written(
         mean_over_median_dex=0.5 * scatter**2 * math.log(10.0),
         log_likelihood=best.log_likelihood,
         n_parameters=best.parameters.size,
-        population=_population(best.parameters[3:]),
+        population=_population(best.parameters[3:], population.least_width),
         is_fitted=True,
     )
 
 
-def _population(parameters: Array) -> dict[str, list[float]]:
-    mixture = GaussianMixture.from_parameters(parameters)
+def _population(parameters: Array, least_width: float) -> dict[str, list[float]]:
+    mixture = GaussianMixture.from_parameters(parameters, least_width)
     return {name: getattr(mixture, name).tolist() for name in ("weights", "means", "widths")}
 
 

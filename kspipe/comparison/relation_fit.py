@@ -135,6 +135,7 @@ def fit_relation(
     use: RelationUse,
     *,
     components: int = 2,
+    population: Array | None = None,
 ) -> tuple[RelationFit, LatentModel | None, Optimum | None]:
     """Fit the free parameters of a relation and the scatter about it.
 
@@ -148,6 +149,8 @@ def fit_relation(
     use : RelationUse
     components : int
         Gaussians in the population of log10 Sigma_gas.
+    population : (3 components - 1,) float64 array, optional
+        Where to begin with it, from another fit of the same samples.
 
     Returns
     -------
@@ -181,8 +184,11 @@ def fit_relation(
     data = kept.measurements()
     known = {name: value[valid] for name, value in known.items()}
     model = relation_model(data, known, use, components)
-    best = maximise(model, data)
     scatter = model.n_mean
+    begin = model.begin()
+    if population is not None:
+        begin[scatter + 1 :] = population
+    best = maximise(model, data, begin)
     if best.is_converged and math.exp(best.parameters[scatter]) < LEAST_SCATTER_DEX:
         start = best.parameters.copy()
         start[scatter] = math.log(LEAST_SCATTER_DEX)
@@ -283,10 +289,13 @@ def relation_model(
         return value, gradient
 
     centre = math.log10(data.x.sum() / data.x.size)
+    log_gas = np.log10(np.maximum(data.x, 0.1 * np.sqrt(data.var_x)))[:, None]
+    total = np.sum(10.0 ** predicted(np.zeros(len(names)), log_gas, slice(None)))
+    level = math.log10(data.y.sum() / total) if total > 0 else 0.0
     return LatentModel(
         names=names,
         mean=mean,
-        start=np.zeros(len(names)),
+        start=np.array([level if name == ZERO_POINT else 0.0 for name in names]),
         priors=tuple(GaussianPrior(0.0, free.prior_width_dex) for free in use.free),
         population=PopulationPrior(components, centre),
         is_linear=set(names) <= {ZERO_POINT},

@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cache
 from typing import Final
 
 import numpy as np
@@ -252,24 +253,30 @@ def _outer_nodes(
         high = np.take_along_axis(grid, last[:, None], axis=1)
     grid = low + (high - low) * unit
     mu = mean(grid, rows)
-    with np.errstate(over="ignore", divide="ignore"):
-        noise_y = conditional.sigma[:, None] / (LN10 * np.exp(LN10 * np.minimum(mu, 150.0)))
-        slope = np.diff(mu, axis=1) / np.diff(grid, axis=1)
-        from_y = slope**2 / (s**2 + (0.5 * (noise_y[:, 1:] + noise_y[:, :-1])) ** 2)
-    shrink = (conditional.sigma**2 / data.var_y)[:, None]
+    # How fast the mean runs away from what is measured, over how far it may be from it.
+    expected = np.exp(LN10 * np.minimum(mu, 100.0))
+    y, sigma_y = conditional.at(grid)
+    apart = np.diff(expected - y, axis=1) / np.diff(grid, axis=1)
+    spread = LN10 * s * 0.5 * (expected[:, 1:] + expected[:, :-1])
     middle = 0.5 * (grid[:, 1:] + grid[:, :-1])
     per_dex = np.sqrt(
-        1.0 / population.widths.min() ** 2
-        + (LN10 * np.exp(LN10 * middle) / sigma_x) ** 2 / shrink
-        + np.nan_to_num(from_y, posinf=0.0)
+        population.local_precision(middle)
+        + (LN10 * np.exp(LN10 * middle) / sigma_x) ** 2
+        + apart**2 / (sigma_y**2 + spread**2)
     )
     cuts = _equal_shares(grid, per_dex)
-    node, weight = np.polynomial.legendre.leggauss(n_nodes)
+    node, weight = _gauss_legendre(n_nodes)
     half = 0.5 * np.diff(cuts, axis=1)[:, :, None]
     centre = 0.5 * (cuts[:, 1:] + cuts[:, :-1])[:, :, None]
     n = data.x.size
     with np.errstate(divide="ignore"):
         return (centre + half * node).reshape(n, -1), np.log(half * weight).reshape(n, -1)
+
+
+@cache
+def _gauss_legendre(n: int) -> tuple[Array, Array]:
+    node, weight = np.polynomial.legendre.leggauss(n)
+    return np.asarray(node), np.asarray(weight)
 
 
 def _equal_shares(grid: Array, density: Array) -> Array:

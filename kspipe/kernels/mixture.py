@@ -19,16 +19,19 @@ class GaussianMixture:
     """Density sum_k w_k N(means_k, widths_k).
 
     Its free parameters, in this order, are the logits of all weights but the last (relative to
-    it), the means, and the natural logarithms of the widths.
+    it), the means, and p of the widths hypot(`least_width`, exp(p)).
 
     Attributes
     ----------
     weights, means, widths : (k,) float64 array
+    least_width : float
+        Below the narrowest of the widths; keeps a component from closing in on one point.
     """
 
     weights: Array
     means: Array
     widths: Array
+    least_width: float = 0.0
 
     @property
     def size(self) -> int:
@@ -36,21 +39,28 @@ class GaussianMixture:
         return int(self.means.size)
 
     @classmethod
-    def from_parameters(cls, parameters: Array) -> GaussianMixture:
+    def from_parameters(cls, parameters: Array, least_width: float = 0.0) -> GaussianMixture:
         """Read a mixture off its 3 k - 1 free parameters."""
         k = (parameters.size + 1) // 3
         logits = np.append(parameters[: k - 1], 0.0)
         return cls(
             np.exp(logits - logsumexp(logits)),
             parameters[k - 1 : 2 * k - 1],
-            np.exp(parameters[2 * k - 1 :]),
+            np.hypot(least_width, np.exp(parameters[2 * k - 1 :])),
+            least_width,
         )
 
     @property
     def parameters(self) -> Array:
         """The 3 k - 1 free parameters."""
         logits = np.log(self.weights / self.weights[-1])[:-1]
-        return np.concatenate([logits, self.means, np.log(self.widths)])
+        log_free = 0.5 * np.log(self.widths**2 - self.least_width**2)
+        return np.concatenate([logits, self.means, log_free])
+
+    @property
+    def _per_parameter(self) -> Array:
+        """Derivative of ln(width) with respect to its parameter."""
+        return np.asarray(1.0 - (self.least_width / self.widths) ** 2)
 
     def log_parts(self, x: Array) -> Array:
         """Log of each weighted component at x, (k, ...)."""
@@ -64,6 +74,13 @@ class GaussianMixture:
         parts = self.log_parts(x)
         top = parts.max(axis=0)
         return np.asarray(top + np.log(np.exp(parts - top).sum(axis=0)))
+
+    def local_precision(self, x: Array) -> Array:
+        """Inverse variance of the component that dominates at x, averaged over the components."""
+        parts = self.log_parts(x)
+        share = np.exp(parts - parts.max(axis=0))
+        inverse = (self.widths**-2.0).reshape((-1,) + (1,) * x.ndim)
+        return np.asarray((share * inverse).sum(axis=0) / share.sum(axis=0))
 
     def sample(self, n: int, rng: np.random.Generator) -> Array:
         """Draw n values."""
@@ -95,7 +112,7 @@ class GaussianMixture:
             for other in range(k - 1):
                 scores[j, other] = float(other == j) - self.weights[other]
             scores[j, k - 1 + j] = u / self.widths[j]
-            scores[j, 2 * k - 1 + j] = u**2 - 1.0
+            scores[j, 2 * k - 1 + j] = (u**2 - 1.0) * self._per_parameter[j]
         return share, scores
 
     def complete_information(self, x: Array, posterior: Array) -> Array:
@@ -121,6 +138,9 @@ class GaussianMixture:
             u = (x - self.means[j]) / self.widths[j]
             mean, width = k - 1 + j, 2 * k - 1 + j
             out[mean, mean] = share[j].sum() / self.widths[j] ** 2
-            out[mean, width] = out[width, mean] = 2.0 * (share[j] * u).sum() / self.widths[j]
-            out[width, width] = 2.0 * (share[j] * u**2).sum()
+            slope = self._per_parameter[j]
+            bend = 2.0 * slope * (1.0 - slope)
+            cross = 2.0 * slope * (share[j] * u).sum() / self.widths[j]
+            out[mean, width] = out[width, mean] = cross
+            out[width, width] = (share[j] * (2.0 * (slope * u) ** 2 - bend * (u**2 - 1.0))).sum()
         return out
