@@ -11,11 +11,11 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.comparison import independent_samples
-from kspipe.comparison.line import fit_line
-from kspipe.comparison.phases import beam_correlation_length
+from kspipe.comparison.line import LineFit, fit_line_phases
+from kspipe.comparison.phases import Phase, beam_correlation_length
 from kspipe.comparison.ranking import BLOCK_LENGTHS, rank_relations
 from kspipe.comparison.relation_fit import ZERO_POINT, FreeParameter, RelationUse, fit_relation
+from kspipe.comparison.samples import lattice_phases
 from kspipe.conversions import Surface
 from kspipe.core.errors import Fault, InputError
 from kspipe.core.progress import Progress, no_progress
@@ -131,11 +131,24 @@ def _check(recipe: Recipe, paint: Paint, n_mocks: int) -> None:
         raise InputError(*faults)
 
 
-def _lattice(painter: Painter, disc: Disc) -> Mask:
-    grid = painter.plan.grid
+def _lattices(painter: Painter, disc: Disc) -> list[Mask]:
+    """Samples of each phase of the lattice, as the comparison takes them."""
+    grid, table = painter.plan.grid, painter.recipe.comparison
     used = covered_by_all(disc, Path("closure"))
     fwhm_pix = painter.plan.fwhm_arcsec / grid.pixel_arcsec
-    return np.asarray(independent_samples(grid.shape, grid.centre_pixel, fwhm_pix) & used)
+    masks = lattice_phases(grid.shape, grid.centre_pixel, fwhm_pix, table.lattice_phases)
+    return [np.asarray(mask & used) for mask in masks]
+
+
+def _fit_line(painter: Painter, disc: Disc, lattices: list[Mask]) -> LineFit:
+    """The line of the comparison: all phases averaged, their correlation in its error."""
+    phases = [
+        Phase(line_samples(disc, mask), np.argwhere(mask)[:, ::-1].astype(float))
+        for mask in lattices
+    ]
+    length = beam_correlation_length(painter.plan.fwhm_arcsec / painter.plan.grid.pixel_arcsec)
+    components = painter.recipe.comparison.population_components
+    return fit_line_phases(phases, length, components=components).mean
 
 
 def _compare(
@@ -148,23 +161,25 @@ def _compare(
     mocks: _Mocks,
 ) -> None:
     """Hold one reduced mock against the truth of its sky."""
-    chosen = _lattice(painter, disc)
+    lattices = _lattices(painter, disc)
+    chosen = lattices[0]
     mocks.n_samples.append(int(chosen.sum()))
     used = covered_by_all(disc, Path("closure"))
     for name in PRODUCTS:
         if name in disc.surfaces:
             mocks.add(f"sum of {name}", *_sum_ratio(painter, disc, sky, name, used), 1.0)
     if paint.is_line:
-        _line(sky, disc, chosen, mocks)
+        _line(painter, sky, disc, lattices, mocks)
     else:
         _relation(painter, paint, sky, disc, chosen, mocks)
         _rank(painter, paint, disc, chosen, number, zero_point_width_dex, mocks)
 
 
-def _line(sky: Sky, disc: Disc, chosen: Mask, mocks: _Mocks) -> None:
+def _line(painter: Painter, sky: Sky, disc: Disc, lattices: list[Mask], mocks: _Mocks) -> None:
     """The painted line, found and true; of a law that is no line a line has no true slope."""
-    slope, level, scatter = _true_line(sky.truth, chosen)
-    fit = fit_line(line_samples(disc, chosen))
+    true = np.mean([_true_line(sky.truth, mask) for mask in lattices], axis=0)
+    slope, level, scatter = (float(value) for value in true)
+    fit = _fit_line(painter, disc, lattices)
     if not fit.is_fitted:
         mocks.fail(f"line: {fit.message}")
         return
@@ -271,7 +286,7 @@ def _run_wrong(
     untrue = replace(paint, inclination_off_deg=tilt_deg, alpha_co_off=alpha)
     sky = painter.sky(untrue, number)
     disc = painter.reduce(sky, untrue, number)
-    chosen, used = _lattice(painter, disc), covered_by_all(disc, Path("closure"))
+    lattices, used = _lattices(painter, disc), covered_by_all(disc, Path("closure"))
     believed = painter.recipe.galaxy.inclination.value
     tilt = math.cos(math.radians(believed)) / math.cos(math.radians(believed + tilt_deg))
     ratios: dict[str, tuple[float, float]] = {}
@@ -287,12 +302,12 @@ def _run_wrong(
         expected["sigma_gas"] = gas / true_sums["sigma_gas"]
     for name, total in true_sums.items():
         ratios[name] = (expected[name], float(disc.surfaces[name].value[used].sum()) / total)
-    fit = fit_line(line_samples(disc, chosen))
+    fit = _fit_line(painter, disc, lattices)
     return WrongRun(
         inclination_off_deg=tilt_deg,
         alpha_co_off=alpha,
         ratios=ratios,
-        slope_true=_true_line(sky.truth, chosen)[0],
+        slope_true=float(np.mean([_true_line(sky.truth, mask)[0] for mask in lattices])),
         slope_found=fit.slope,
         slope_error=fit.slope_error,
     )

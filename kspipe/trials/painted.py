@@ -63,7 +63,10 @@ class Paint:
     shift_dex : float
         Star formation above the law.
     scatter_dex : float
-        Log-normal, about the law.
+        Log-normal, about the law, before the beam averages it.
+    scatter_beams : float
+        FWHM of its correlation in final beams. Samples 1.5 beams apart share a scatter that is
+        smooth over a beam or more, and no longer count as independent.
     inclination_off_deg : float
         True inclination less the recipe's: the chain believes the recipe.
     alpha_co_off : float
@@ -76,6 +79,7 @@ class Paint:
     slope: float = 1.4
     shift_dex: float = 0.0
     scatter_dex: float = 0.2
+    scatter_beams: float = 0.5
     inclination_off_deg: float = 0.0
     alpha_co_off: float = 1.0
     noise: Mapping[str, float] = field(default_factory=dict)
@@ -206,7 +210,7 @@ class Painter:
             star_scale_kpc=0.25 * r25,
             atom_radius_kpc=1.3 * r25,
             clump_kpc=0.7 * beam,
-            scatter_kpc=1.2 * beam,
+            scatter_kpc=paint.scatter_beams * beam,
             scatter_dex=paint.scatter_dex,
         )
 
