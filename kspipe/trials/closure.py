@@ -36,6 +36,8 @@ Mask = NDArray[np.bool_]
 
 # log10 Sigma_gas at which the level of the line is compared: 10 Msun/pc2.
 AT_LOG_GAS: Final = 1.0
+# Rounds in which weights, slope and scatter of the truth settle.
+TRUTH_ROUNDS: Final = 10
 PRODUCTS: Final[tuple[str, ...]] = ("sigma_atom", "sigma_mol", "sigma_gas", "sigma_sfr")
 
 
@@ -177,7 +179,7 @@ def _compare(
 
 def _line(painter: Painter, sky: Sky, disc: Disc, lattices: list[Mask], mocks: _Mocks) -> None:
     """The painted line, found and true; of a law that is no line a line has no true slope."""
-    true = np.mean([_true_line(sky.truth, mask) for mask in lattices], axis=0)
+    true = np.mean([_true_line(sky.truth, disc, mask) for mask in lattices], axis=0)
     slope, level, scatter = (float(value) for value in true)
     fit = _fit_line(painter, disc, lattices)
     if not fit.is_fitted:
@@ -202,16 +204,25 @@ def _sum_ratio(
     return float(surface.value[used].sum()) / truth, math.sqrt(max(variance, 0.0)) / truth
 
 
-def _true_line(truth: Disc, chosen: Mask) -> tuple[float, float, float]:
+def _true_line(truth: Disc, disc: Disc, chosen: Mask) -> tuple[float, float, float]:
     """Slope, level and scatter of the noise-free truth at the final beam.
 
-    Without noise, scatter in y alone makes least squares of y on x the likelihood's peak.
+    Averaged in a beam, a law is no straight line any more: what slope it has depends on where it
+    is looked at. Samples therefore count by the errors that the maps have there, taken at the
+    true values, beside the scatter: weighted least squares, which needs no model of the fit.
     """
-    gas, sfr = (truth.surfaces[name].value[chosen] for name in ("sigma_gas", "sigma_sfr"))
+    names = ("sigma_gas", "sigma_sfr")
+    gas, sfr = (truth.surfaces[name].value[chosen] for name in names)
+    gas_error, sfr_error = (disc.surfaces[name].error[chosen] for name in names)
     positive = (gas > 0) & (sfr > 0)
     x, y = np.log10(gas[positive]), np.log10(sfr[positive])
-    slope, intercept = np.polyfit(x, y, 1)
-    scatter = float(np.std(y - slope * x - intercept))
+    e_x = (gas_error[positive] / gas[positive]) / math.log(10.0)
+    e_y = (sfr_error[positive] / sfr[positive]) / math.log(10.0)
+    slope, intercept, scatter = 1.0, 0.0, 0.2
+    for _ in range(TRUTH_ROUNDS):
+        weight = 1.0 / (scatter**2 + e_y**2 + (slope * e_x) ** 2)
+        slope, intercept = np.polyfit(x, y, 1, w=np.sqrt(weight))
+        scatter = math.sqrt(float(np.average((y - slope * x - intercept) ** 2, weights=weight)))
     return float(slope), float(intercept + slope * AT_LOG_GAS), scatter
 
 
@@ -307,7 +318,7 @@ def _run_wrong(
         inclination_off_deg=tilt_deg,
         alpha_co_off=alpha,
         ratios=ratios,
-        slope_true=float(np.mean([_true_line(sky.truth, mask)[0] for mask in lattices])),
+        slope_true=float(np.mean([_true_line(sky.truth, disc, mask)[0] for mask in lattices])),
         slope_found=fit.slope,
         slope_error=fit.slope_error,
     )
