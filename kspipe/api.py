@@ -21,20 +21,26 @@ from kspipe.core.report import relation_rows, total_rows
 from kspipe.maps.product import read_image
 from kspipe.products import draw_figures
 from kspipe.products.tracks import tracks_table, write_tracks
+from kspipe.products.trial_figures import draw_budget, draw_ladder
 from kspipe.recipe import Recipe, load_recipe
 from kspipe.relations import tracks as make_tracks
 from kspipe.stages.alternatives import ALTERNATIVES_FILE, weigh_alternatives
 from kspipe.stages.chain import pixel_chain
 from kspipe.stages.compare import compare_relations
 from kspipe.stages.reduce import PRODUCT_UNITS, reduce_maps
+from kspipe.trials.painted import Paint
+from kspipe.trials.write import write_budget, write_closure, write_ladder
 
 __all__ = [
     "Comparison",
     "Reduction",
     "alternatives",
+    "budget",
     "chain",
+    "closure",
     "compare",
     "figures",
+    "ladder",
     "reduce",
     "run",
     "tracks",
@@ -423,6 +429,122 @@ def tracks(
     if out is not None:
         write_tracks(curves, Path(out), overwrite=overwrite)
     return tracks_table(curves)
+
+
+def budget(
+    out: str | Path,
+    *,
+    draws: int = 2000,
+    overwrite: bool = False,
+    progress: Progress = no_progress,
+) -> dict[str, Any]:
+    """Draw every assumption of a reduction and rank what moves the result.
+
+    Parameters
+    ----------
+    out : path
+        Product folder of a reduction; ``budget.json``, ``budget.ecsv`` and a figure are written.
+    draws : int
+    overwrite, progress
+        As in `reduce`.
+
+    Returns
+    -------
+    dict
+        What ``budget.json`` holds.
+
+    Raises
+    ------
+    OutputError
+        If the reduction is absent or stale.
+    """
+    write_budget(Path(out), n_draws=draws, overwrite=overwrite, progress=progress)
+    draw_budget(Path(out))
+    return _plain(out, "budget")
+
+
+def ladder(
+    out: str | Path, *, overwrite: bool = False, progress: Progress = no_progress
+) -> dict[str, Any]:
+    """Compare at 1, 2, 4 and 8 times the beam of a reduction.
+
+    Parameters
+    ----------
+    out : path
+        Product folder of a reduction; ``ladder.json``, ``ladder.ecsv`` and a figure are written.
+    overwrite, progress
+        As in `reduce`.
+
+    Returns
+    -------
+    dict
+        What ``ladder.json`` holds.
+
+    Raises
+    ------
+    OutputError
+        If the reduction is absent or stale.
+    """
+    write_ladder(Path(out), overwrite=overwrite, progress=progress)
+    draw_ladder(Path(out))
+    return _plain(out, "ladder")
+
+
+def closure(
+    recipe: Recipe | str | Path,
+    out: str | Path,
+    *,
+    relation: str = "",
+    slope: float = 1.4,
+    scatter_dex: float = 0.2,
+    noise: Mapping[str, float] | None = None,
+    mocks: int = 20,
+    maps: Maps | None = None,
+    overwrite: bool = False,
+    progress: Progress = no_progress,
+) -> dict[str, Any]:
+    """Paint skies through a recipe's headers, beams, coverage and noise, and find them again.
+
+    Parameters
+    ----------
+    recipe : Recipe or path
+    out : path
+        Where ``closure.json`` and ``closure.ecsv`` are written.
+    relation : str
+        The recipe's name of the relation to paint; a line of `slope` where it is empty.
+    slope, scatter_dex : float
+    noise : mapping of str to float, optional
+        Noise of a map over the recipe's, to plan a depth.
+    mocks : int
+    maps, overwrite, progress
+        As in `reduce`.
+
+    Returns
+    -------
+    dict
+        What ``closure.json`` holds.
+
+    Raises
+    ------
+    InputError
+        If a name is not known or a map cannot be painted.
+    """
+    memory = _memory(maps)
+    paint = Paint(relation=relation, slope=slope, scatter_dex=scatter_dex, noise=dict(noise or {}))
+    write_closure(
+        _loaded(recipe, memory),
+        Path(out),
+        paint,
+        n_mocks=mocks,
+        overwrite=overwrite,
+        memory=memory,
+        progress=progress,
+    )
+    return _plain(out, "closure")
+
+
+def _plain(out: str | Path, trial: str) -> dict[str, Any]:
+    return dict(json.loads((Path(out) / f"{trial}.json").read_text(encoding="utf-8")))
 
 
 def _memory(maps: Maps | None) -> dict[str, tuple[fits.PrimaryHDU, fits.PrimaryHDU | None]] | None:

@@ -2,13 +2,22 @@
 
 from __future__ import annotations
 
-from pathlib import Path
 from typing import Annotated
 
 import typer
 
 from kspipe import __version__
+from kspipe.cli.options import (
+    DebugOption,
+    FolderArgument,
+    OutOption,
+    OverwriteOption,
+    QuietOption,
+    RecipeArgument,
+    StepsOption,
+)
 from kspipe.cli.tracks import tracks_command
+from kspipe.cli.trials import add_trials
 
 __all__ = ["app", "main"]
 
@@ -20,18 +29,6 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     rich_markup_mode=None,
 )
-
-RecipeArgument = Annotated[Path, typer.Argument(metavar="RECIPE", help="TOML file of one galaxy.")]
-FolderArgument = Annotated[Path, typer.Argument(metavar="DIR", help="Product folder.")]
-OutOption = Annotated[Path, typer.Option("--out", metavar="DIR", help="Product folder to write.")]
-OverwriteOption = Annotated[
-    bool, typer.Option("--overwrite", help="Replace products made from something else.")
-]
-StepsOption = Annotated[
-    bool, typer.Option("--steps", help="Print what each step did to each map (DIR/steps.ecsv).")
-]
-QuietOption = Annotated[bool, typer.Option("--quiet", help="No progress, no log.")]
-DebugOption = Annotated[bool, typer.Option("--debug", help="Show where an error arose.")]
 
 
 def _version(wanted: bool) -> None:
@@ -203,6 +200,7 @@ app.command(
     "tracks",
     epilog="Example: kspipe tracks krumholz2009 --metallicity 8.7 --parameter clumping=5 --out DIR",
 )(tracks_command)
+add_trials(app)
 
 
 def main() -> None:

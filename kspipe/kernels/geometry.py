@@ -17,6 +17,7 @@ __all__ = [
     "beam_area",
     "beam_axes",
     "beam_covariance",
+    "disc_azimuth",
     "disc_radius",
     "hexagonal_lattice",
     "offset_positions",
@@ -195,6 +196,25 @@ def disc_radius(
     major = east_arcsec * math.sin(pa) + north_arcsec * math.cos(pa)
     minor = -east_arcsec * math.cos(pa) + north_arcsec * math.sin(pa)
     return np.hypot(major, minor / math.cos(math.radians(inclination_deg)))
+
+
+def disc_azimuth(
+    east_arcsec: Array, north_arcsec: Array, *, inclination_deg: float, pa_deg: float
+) -> Array:
+    """Angle in the plane of a thin tilted disc, from the major axis, 0 to 360 [deg].
+
+    Parameters
+    ----------
+    east_arcsec, north_arcsec : float64 array
+        Offsets from the galaxy's centre.
+    inclination_deg, pa_deg : float
+        As for `disc_radius`; on the sky of a face-on disc it grows from north towards east.
+    """
+    pa = math.radians(pa_deg)
+    major = east_arcsec * math.sin(pa) + north_arcsec * math.cos(pa)
+    minor = east_arcsec * math.cos(pa) - north_arcsec * math.sin(pa)
+    angle = np.arctan2(minor / math.cos(math.radians(inclination_deg)), major)
+    return np.asarray(np.degrees(angle) % 360.0)
 
 
 def hexagonal_lattice(

@@ -8,7 +8,14 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["clipped_scatter", "correlation_area", "median_error", "ratio_interval"]
+__all__ = [
+    "beam_averaging_dex",
+    "clipped_scatter",
+    "correlation_area",
+    "median_error",
+    "pareto_shape",
+    "ratio_interval",
+]
 
 Array = NDArray[np.float64]
 
@@ -113,3 +120,58 @@ def ratio_interval(
     upper = np.select([is_closed, is_below], [ends[1], ends[0]], np.inf)
     unknown = ~np.isfinite(top + bottom + var_top + var_bottom + shared)
     return np.where(unknown, np.nan, lower), np.where(unknown, np.nan, upper)
+
+
+def beam_averaging_dex(slope: float, width_dex: float) -> float:
+    """How far a power law of clouds is raised when a beam averages them.
+
+    Parameters
+    ----------
+    slope : float
+        Of y = x^slope for each cloud.
+    width_dex : float
+        Standard deviation of log10 x among the clouds of one beam.
+
+    Returns
+    -------
+    float
+        log10 of <x^slope> / <x>^slope, (slope^2 - slope) width^2 ln(10) / 2 for a log-normal x.
+    """
+    return 0.5 * (slope**2 - slope) * width_dex**2 * math.log(10.0)
+
+
+def pareto_shape(weights: Array) -> float:
+    """Shape of the generalised Pareto distribution of the largest weights.
+
+    Parameters
+    ----------
+    weights : (n,) float64 array
+        Positive, of importance sampling.
+
+    Returns
+    -------
+    float
+        Above 0.7 their mean cannot be trusted; infinite for fewer than 25 weights.
+
+    References
+    ----------
+    .. [1] Zhang & Stephens 2009, Technometrics 51, 316: the estimator.
+    .. [2] Vehtari et al. 2024, J. Mach. Learn. Res. 25 (72): the number of weights in the tail,
+       min(n / 5, 3 sqrt(n)).
+    """
+    n_tail = math.ceil(min(0.2 * weights.size, 3.0 * math.sqrt(weights.size)))
+    if n_tail < 5:
+        return math.inf
+    ordered = np.sort(weights)
+    excess = ordered[-n_tail:] - ordered[-n_tail - 1]
+    if excess[-1] <= 0:
+        return -math.inf
+    quarter = max(excess[max(int(n_tail / 4 + 0.5) - 1, 0)], 1e-300)
+    n_grid = 30 + int(math.sqrt(n_tail))
+    grid = np.arange(1, n_grid + 1)
+    theta = 1.0 / excess[-1] + (1.0 - np.sqrt(n_grid / (grid - 0.5))) / (3.0 * quarter)
+    shape = np.mean(np.log1p(-theta[:, None] * excess), axis=1)
+    log_profile = n_tail * (np.log(-theta / shape) - shape - 1.0)
+    share = np.exp(log_profile - log_profile.max())
+    best = float(np.sum(theta * share) / share.sum())
+    return float(np.mean(np.log1p(-best * excess)))

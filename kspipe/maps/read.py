@@ -13,7 +13,7 @@ from kspipe.maps.psf_records import psf_record
 from kspipe.maps.skymap import CommonError, NoiseTerm, SkyMap
 from kspipe.maps.source import MapSource, StoredImage
 
-__all__ = ["load_map", "relative_noise", "with_photon_noise"]
+__all__ = ["load_map", "relative_area_of", "relative_noise", "with_photon_noise"]
 
 Array = NDArray[np.float64]
 
@@ -49,7 +49,7 @@ def load_map(source: MapSource) -> SkyMap:
     if not np.isfinite(value).any():
         raise MapError(Fault(where, "no pixel of the map is finite"))
 
-    relative_area = _relative_area(source)
+    relative_area = relative_area_of(source)
     value = source.door.intensity(value, relative_area)
     record = psf_record(request.tracer, source.beam_arcsec2) if source.psf is None else None
     history += [source.door.reason, source.beam.story]
@@ -118,7 +118,7 @@ def _zeros(value: Array, source: MapSource, where: str) -> list[str]:
     return []
 
 
-def _relative_area(source: MapSource) -> Array | float:
+def relative_area_of(source: MapSource) -> Array | float:
     """Area of each pixel over that at the galaxy's centre; one where no unit counts per pixel."""
     if not (source.door.per_pixel or source.noise_door.per_pixel):
         return 1.0

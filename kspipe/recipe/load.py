@@ -15,6 +15,7 @@ from kspipe.core.errors import Fault, RecipeError, nearest
 from kspipe.recipe.beam_clumping import with_beam_clumping
 from kspipe.recipe.checks import check_relation, check_together
 from kspipe.recipe.disc_tables import MidplaneTable, RadiationFieldTable, RotationTable
+from kspipe.recipe.environment import environment_faults, locate_regions
 from kspipe.recipe.gas_state import GasStateTable, InsideBeamTable, LinewidthMap
 from kspipe.recipe.located import locate, located
 from kspipe.recipe.map_table import MapTable, NoiseFile, NoiseTyped
@@ -29,6 +30,7 @@ from kspipe.recipe.models import (
     RelationTable,
     StarFormationTable,
     StarsTable,
+    SystematicsTable,
 )
 from kspipe.recipe.own_records import RecordTable
 from kspipe.recipe.regions import RegionTable
@@ -49,6 +51,7 @@ _TABLES: Final[dict[str, type[BaseModel]]] = {
     "radiation_field": RadiationFieldTable,
     "rotation": RotationTable,
     "inside_beam": InsideBeamTable,
+    "systematics": SystematicsTable,
 }
 _OPTIONAL: Final = (
     "relations",
@@ -58,6 +61,7 @@ _OPTIONAL: Final = (
     "radiation_field",
     "rotation",
     "inside_beam",
+    "systematics",
 )
 _TOP: Final = ("seed", "maps", "gas", "relations", "records", "regions", "gas_state", *_TABLES)
 
@@ -150,6 +154,11 @@ def parse_recipe(
     if isinstance(grid, GridTable) and grid.like is not None and grid.like not in tables["maps"]:
         like = locate(Path(grid.like), folder, "grid.like", faults)
         tables["grid"] = grid.model_copy(update={"like": str(like)})
+    comparison = tables.get("comparison")
+    if isinstance(comparison, ComparisonTable):
+        places = locate_regions(comparison.environments, folder, faults)
+        tables["comparison"] = comparison.model_copy(update={"environments": places})
+        faults += environment_faults(comparison.free, tables["relations"])
     faults += check_together(tables)
     if faults:
         raise RecipeError(*faults)

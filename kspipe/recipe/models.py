@@ -25,6 +25,7 @@ from kspipe.conversions import (
     StarFormation,
 )
 from kspipe.recipe.disc_tables import MidplaneTable, RadiationFieldTable, RotationTable
+from kspipe.recipe.environment import Environment, FreeWidth
 from kspipe.recipe.gas_state import GasStateTable, InsideBeamTable
 from kspipe.recipe.kinds import ALPHA_CO_VALUE, RATIO, Ratio, Reddening
 from kspipe.recipe.map_table import MapTable
@@ -32,6 +33,7 @@ from kspipe.recipe.metallicity_table import MetallicityTable
 from kspipe.recipe.own_records import RecordTable
 from kspipe.recipe.quantity import Measured, Position, parse_centre, parse_measured
 from kspipe.recipe.regions import RegionTable
+from kspipe.recipe.systematics_table import SystematicsTable
 from kspipe.recipe.values import (
     Angle,
     Arcsec,
@@ -59,6 +61,7 @@ __all__ = [
     "RelationTable",
     "StarFormationTable",
     "StarsTable",
+    "SystematicsTable",
 ]
 
 
@@ -211,6 +214,13 @@ class ComparisonTable(Table):
     """How the comparison is made."""
 
     low_snr: float = Field(default=5.0, ge=0.0)
+    fits: bool = True
+    lattice_phases: int = Field(default=4, ge=1, le=4)
+    population_components: int = Field(default=2, ge=1, le=3)
+    zero_point_prior: float = Field(default=0.2, gt=0.0, le=2.0)
+    free: dict[str, dict[str, FreeWidth]] = Field(default_factory=dict)
+    environments: dict[str, Environment] = Field(default_factory=dict)
+    posterior_draws: int = Field(default=0, ge=0, le=100_000)
 
 
 class Recipe(Table):
@@ -241,6 +251,7 @@ class Recipe(Table):
     rotation: RotationTable | None = None
     gas_state: GasStateTable | None = None
     inside_beam: InsideBeamTable | None = None
+    systematics: SystematicsTable | None = None
 
     def map_of(self, *tracers: str) -> str | None:
         """Name of the first map of one of these tracers."""

@@ -47,11 +47,15 @@ def resolved_recipe(recipe: Recipe, found: Mapping[str, Mapping[str, str]]) -> s
         tables.insert(2, "gas")
     if recipe.stars is not None:
         tables.insert(-1, "stars")
-    tables += [
-        name
-        for name in ("midplane", "radiation_field", "rotation", "gas_state", "inside_beam")
-        if getattr(recipe, name) is not None
-    ]
+    optional = (
+        "midplane",
+        "radiation_field",
+        "rotation",
+        "gas_state",
+        "inside_beam",
+        "systematics",
+    )
+    tables += [name for name in optional if getattr(recipe, name) is not None]
     for name in tables:
         lines += _table(name, getattr(recipe, name))
     for family, group in (("regions", recipe.regions), ("records", recipe.records)):
@@ -114,6 +118,9 @@ def _value(value: Any) -> str:
         # A JSON string is a TOML basic string.
         text = value.key if isinstance(value, Record) else str(value)
         return json.dumps(text, ensure_ascii=False)
+    if isinstance(value, Mapping):
+        pairs = [f"{key} = {_value(entry)}" for key, entry in value.items()]
+        return "{" + ", ".join(pairs) + "}"
     if isinstance(value, BaseModel):
         pairs = [
             f"{field.alias or key} = {_value(getattr(value, key))}"

@@ -28,11 +28,14 @@ from kspipe.matching import Grid
 from kspipe.recipe import Recipe, load_recipe
 from kspipe.relations import LAWS
 from kspipe.stages.atomic_only import from_atomic, summaries
-from kspipe.stages.folder import ProductFolder
+from kspipe.stages.environments import environment_areas
+from kspipe.stages.fits import fit_all, write_fits_table
+from kspipe.stages.folder import TRIAL_STAGES, ProductFolder
 from kspipe.stages.inside_beam import add_inside_beam
 from kspipe.stages.law_inputs import law_inputs
 from kspipe.stages.pixels import pixel_table, write_pixels
 from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
+from kspipe.stages.profiles import profile_table, write_profiles
 from kspipe.stages.relation_notes import history_lines, relation_notes
 from kspipe.stages.state import gas_state_of
 from kspipe.stages.steps import read_findings
@@ -114,7 +117,7 @@ def compare_relations(
     inverted = from_atomic(recipe, inputs, disc)
     progress(len(names), len(names), "compared")
     state = gas_state_of(plan, disc)
-    drop = tuple(stage for stage in folder.stages if stage == "figures")
+    drop = tuple(stage for stage in folder.stages if stage in ("figures", *TRIAL_STAGES))
     with folder.publish({"compare": print_}, drop=drop) as staging:
         (staging / "residuals").mkdir()
         for name in names:
@@ -142,6 +145,8 @@ def compare_relations(
             state.write(staging)
             state.add_columns(pixels, used)
         write_pixels(pixels, staging / "pixels.ecsv")
+        regions = environment_areas(recipe, disc.radius_kpc, grid)
+        write_profiles(profile_table(recipe, disc, used, grid, beam, regions), staging)
         findings = read_findings(out)
         summary = make_summary(
             plan, disc, headlines, residuals, used, independent, matched, findings
@@ -154,6 +159,10 @@ def compare_relations(
             summary["relations"][name]["from_atomic"] = sums
         summary |= {"inside_beam": biases} if biases else {}
         summary |= {"gas_state": state.summary(used)} if state else {}
+        if recipe.comparison.fits:
+            sections = fit_all(recipe, disc, grid, used, residuals, beam)
+            write_fits_table(sections["fits"], staging / "fits.ecsv")
+            summary.update(sections)
         (staging / "summary.json").write_text(summary_text(summary), encoding="utf-8")
     return True
 

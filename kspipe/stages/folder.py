@@ -16,9 +16,11 @@ from typing import Any, Final
 from kspipe import __version__
 from kspipe.core.errors import Fault, OutputError
 
-__all__ = ["ProductFolder", "file_checksum", "fingerprint"]
+__all__ = ["TRIAL_STAGES", "ProductFolder", "file_checksum", "fingerprint"]
 
 MANIFEST: Final = "manifest.json"
+# Made from a reduction and its relations: out of date with either.
+TRIAL_STAGES: Final = ("budget", "budget_figure", "ladder", "ladder_figure")
 
 
 def file_checksum(path: Path) -> str:

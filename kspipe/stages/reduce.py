@@ -22,7 +22,7 @@ from kspipe.recipe import Recipe
 from kspipe.recipe.quantity import Measured
 from kspipe.recipe.resolved import resolved_recipe
 from kspipe.stages.blank_sky import outside_galaxy, without_background
-from kspipe.stages.folder import ProductFolder
+from kspipe.stages.folder import TRIAL_STAGES, ProductFolder
 from kspipe.stages.plan import InMemory, Plan, choices_of, make_plan, records_of
 from kspipe.stages.steps import (
     STEPS_FILE,
@@ -34,7 +34,7 @@ from kspipe.stages.steps import (
 )
 from kspipe.stages.surface import Disc, surfaces_of
 
-__all__ = ["PRODUCT_UNITS", "match_one", "reduce_maps"]
+__all__ = ["PRODUCT_UNITS", "load_one", "match_one", "reduce_maps"]
 
 log = logging.getLogger(__name__)
 
@@ -92,7 +92,7 @@ def reduce_maps(
     drop = tuple(
         stage
         for stage in folder.stages
-        if stage in ("compare", "figures", "alternatives") or _is_gone(stage, plan)
+        if stage in ("compare", "figures", "alternatives", *TRIAL_STAGES) or _is_gone(stage, plan)
     )
     if drop:
         log.info("reduce: out-of-date products of %s are removed", ", ".join(drop))
@@ -126,8 +126,8 @@ def _is_gone(stage: str, plan: Plan) -> bool:
     return stage.startswith("match.") and stage not in plan.prints
 
 
-def match_one(plan: Plan, name: str) -> SkyMap:
-    """Read one map, measure its noise if asked, and bring it to the target beam and grid."""
+def load_one(plan: Plan, name: str) -> SkyMap:
+    """Read one map on its own pixels, and measure its noise if asked."""
     source, recipe = plan.sources[name], plan.recipe
     sky = note_shift(load_map(source), source)
     stated = source.request.noise
@@ -146,12 +146,18 @@ def match_one(plan: Plan, name: str) -> SkyMap:
         sky = with_photon_noise(sky, source)
     if source.request.background == "subtract":
         sky = without_background(sky, recipe)
+    return sky
+
+
+def match_one(plan: Plan, name: str) -> SkyMap:
+    """Read one map, measure its noise if asked, and bring it to the target beam and grid."""
+    source, sky = plan.sources[name], load_one(plan, name)
     log.info("match %s: %d pixels observed", name, int(np.isfinite(sky.value).sum()))
     matched = match_map(
         sky,
         plan.target_arcsec2,
         plan.grid,
-        minimum_coverage=recipe.grid.minimum_coverage,
+        minimum_coverage=plan.recipe.grid.minimum_coverage,
         regrid=source.request.regrid,
         workers=os.cpu_count() or 1,
     )

@@ -5,16 +5,18 @@ from __future__ import annotations
 import json
 import math
 from dataclasses import asdict
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
 
 from kspipe import __version__
 from kspipe.comparison import Headline, Residuals, independent_beams
+from kspipe.conversions import Surface
 from kspipe.core.citations import CITATIONS
 from kspipe.kernels.geometry import beam_axes
 from kspipe.kernels.noise import sum_covariance
+from kspipe.kernels.region_sums import upper_limit
 from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe
@@ -22,7 +24,16 @@ from kspipe.relations import LAWS
 from kspipe.stages.plan import Plan, records_of
 from kspipe.stages.surface import Disc
 
-__all__ = ["left_out", "make_summary", "summary_text"]
+__all__ = ["common_errors", "left_out", "make_summary", "summary_text"]
+
+# A sum fainter than this many of its errors comes with an upper limit (common practice).
+DETECTED_SIGMA: Final = 3.0
+# Ratios of totals: top, bottom, unit.
+_RATIOS: Final = {
+    "f_mol": ("mass_mol", "mass_gas", ""),
+    "t_dep": ("mass_mol", "sfr", "Gyr"),
+    "t_dep_gas": ("mass_gas", "sfr", "Gyr"),
+}
 
 
 def make_summary(
@@ -127,7 +138,7 @@ def _totals(
         pixel = float(np.mean(areas)) * weights[product]
         random = math.sqrt(max(sum_covariance(surface.noise, surface.noise, used, jacobian), 0.0))
         face_on = areas * weights[product]
-        errors = _common_errors(disc, product, used, face_on)
+        errors = common_errors(disc, product, used, face_on)
         factor = _shift_error(disc, product, used, face_on)
         errors["calibration_error"] = math.hypot(errors["calibration_error"], factor)
         totals[name] = {
@@ -137,18 +148,46 @@ def _totals(
             "unit": unit,
         }
     total = {name: float(entry["value"]) for name, entry in totals.items()}
-    if "mass_mol" in total:
-        totals["f_mol"] = {"value": _over(total["mass_mol"], total["mass_gas"]), "unit": ""}
-        totals["t_dep"] = {"value": _over(total["mass_mol"], total["sfr"]) / 1e9, "unit": "Gyr"}
-    totals["t_dep_gas"] = {"value": _over(total["mass_gas"], total["sfr"]) / 1e9, "unit": "Gyr"}
+    for entry in totals.values():
+        value, error = float(entry["value"]), float(entry["random_error"])
+        if error > 0 and value < DETECTED_SIGMA * error:
+            entry["upper_limit"] = float(upper_limit(value, error, DETECTED_SIGMA))
+    for name, (top, bottom, unit) in _RATIOS.items():
+        if top in total and bottom in total:
+            per = 1e9 if unit == "Gyr" else 1.0
+            ratio = _over(total[top], total[bottom])
+            above, below = (
+                disc.surfaces[next(p for p, (n, _) in names.items() if n == mass)]
+                for mass in (top, bottom)
+            )
+            error = _ratio_error(above, below, used, jacobian)
+            totals[name] = {"value": ratio / per, "random_error": error * ratio / per, "unit": unit}
     return totals
+
+
+def _ratio_error(
+    top: Surface, bottom: Surface, used: NDArray[np.bool_], jacobian_arcsec: NDArray[np.float64]
+) -> float:
+    """Relative random error of the ratio of two sums; what they share cancels."""
+    sums = [float(np.sum(surface.value[used])) for surface in (top, bottom)]
+    if min(sums) <= 0:
+        return math.nan
+    variance = sum(
+        factor * sum_covariance(a.noise, b.noise, used, jacobian_arcsec)
+        for a, b, factor in (
+            (top, top, 1.0 / sums[0] ** 2),
+            (bottom, bottom, 1.0 / sums[1] ** 2),
+            (top, bottom, -2.0 / (sums[0] * sums[1])),
+        )
+    )
+    return math.sqrt(max(variance, 0.0))
 
 
 def _over(top: float, bottom: float) -> float:
     return top / bottom if bottom > 0 else math.nan
 
 
-def _common_errors(
+def common_errors(
     disc: Disc, product: str, used: NDArray[np.bool_], areas: NDArray[np.float64]
 ) -> dict[str, float]:
     """Errors of a sum that all pixels of a map share: flux scale and zero level, and matching."""

@@ -30,7 +30,10 @@ def made(tmp_path_factory):
     return out, result
 
 
-@pytest.mark.parametrize("command", [[], ["reduce"], ["compare"], ["figures"], ["run"]])
+@pytest.mark.parametrize(
+    "command",
+    [[], *([c] for c in ("reduce", "compare", "figures", "run", "budget", "ladder", "closure"))],
+)
 def test_help_fits_a_screen_and_is_light(command):
     code = (
         f"import sys; sys.argv = ['kspipe', *{command!r}, '--help']\n"
@@ -98,6 +101,9 @@ def test_outputs_are_the_contract(made):
 def test_pixel_table_is_the_contract(made):
     out, _ = made
     table = Table.read(out / "pixels.ecsv")
+    profiles = Table.read(out / "profiles.ecsv")
+    assert profiles["region"][-1] == "all"
+    assert all(profiles[name].description for name in profiles.colnames)
     expected = (
         "x y ra dec radius_kpc sigma_atom sigma_atom_err sigma_mol sigma_mol_err sigma_gas "
         "sigma_gas_err sigma_sfr sigma_sfr_err z_prime flags independent predicted_shielding_kpc "
@@ -184,9 +190,53 @@ def test_editing_relations_needs_no_new_reduction(made, tmp_path):
     assert kspipe("figures", folder).returncode == 0
 
 
+@pytest.mark.slow
+def test_trials_print_tables_and_write_files(made, tmp_path):
+    out, _ = made
+    folder = tmp_path / "copy"
+    shutil.copytree(out, folder)
+    budget = kspipe("budget", folder, "--draws", "200")
+    assert budget.returncode == 0, budget.stderr
+    for words in ("slope", "alpha_CO", "turns a conclusion", "choices", "fitted in full"):
+        assert words in budget.stdout
+    assert "fitting the line" in budget.stderr
+    ladder = kspipe("ladder", folder)
+    assert ladder.returncode == 0, ladder.stderr
+    assert "massive stars" in ladder.stdout
+    for trial in ("budget", "ladder"):
+        json.loads((folder / f"{trial}.json").read_text())
+        assert len(Table.read(folder / f"{trial}.ecsv")) > 3
+        assert (folder / "figures" / f"{trial}.png").is_file()
+    # A second time all is reused; another setting asks for a word.
+    assert kspipe("budget", folder, "--draws", "200").returncode == 0
+    refused = kspipe("budget", folder, "--draws", "300")
+    assert refused.returncode == 2
+    assert "--overwrite" in refused.stderr
+    # Another reduction takes them away.
+    changed = tmp_path / "changed.toml"
+    text = SHORT.read_text().replace("../demo_maps", str(ROOT / "demo_maps"))
+    changed.write_text(text.replace("line_ratio = 0.65", "line_ratio = 0.8"))
+    assert kspipe("reduce", changed, "--out", folder, "--overwrite").returncode == 0
+    assert not (folder / "budget.json").exists()
+    assert not (folder / "figures" / "ladder.png").exists()
+
+
+@pytest.mark.slow
+def test_closure_prints_bias_and_coverage(tmp_path):
+    out = tmp_path / "test"
+    done = kspipe("closure", SHORT, "--out", out, "--mocks", "2", "--noise", "co=0.5")
+    assert done.returncode == 0, done.stderr
+    for words in ("slope", "in 68 %", "co x 0.5", "averaging in the beam", "true inclination"):
+        assert words in done.stdout
+    assert (out / "closure.json").is_file()
+    assert len(Table.read(out / "closure.ecsv")) >= 6
+
+
 @pytest.mark.parametrize(
     ("arguments", "words"),
     [
+        (["budget", "nowhere"], "holds no reduction"),
+        (["closure", SHORT, "--out", "x", "--noise", "co"], "--noise co=0.5"),
         (["reduce", "nowhere.toml", "--out", "x"], "does not exist"),
         (["compare", "nowhere"], "holds no reduction"),
         (["figures", "nowhere"], "comparison"),
