@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kspipe.comparison.samples import LinearSamples
-from kspipe.conversions import Choices, Converted, Parameters, convert
+from kspipe.conversions import Choices, Converted, Field, Parameters, convert
 from kspipe.core.tracers import CO_LINES
 from kspipe.kernels.geometry import beam_axes, disc_radius
 from kspipe.recipe import Recipe
@@ -72,11 +72,11 @@ def inputs_of(reduced: Reduced, chosen: NDArray[np.bool_]) -> SampleInputs:
     """
     disc = reduced.disc
     east, north = reduced.grid.offsets_arcsec()
-    oh = disc.oh[chosen]
+    fields = {name: _chosen(field, chosen) for name, field in disc.fields.items()}
     return SampleInputs(
         recipe=reduced.recipe,
         choices=choices_of(reduced.recipe),
-        parameters=parameters_of(reduced.recipe, oh),
+        parameters=parameters_of(reduced.recipe, fields),
         intensity={tracer: sky.value[chosen] for tracer, sky in disc.intensity.items()},
         sigma={
             tracer: {term.source: term.sigma[chosen] for term in sky.noise}
@@ -84,9 +84,16 @@ def inputs_of(reduced: Reduced, chosen: NDArray[np.bool_]) -> SampleInputs:
         },
         east_arcsec=east[chosen],
         north_arcsec=north[chosen],
-        oh=oh,
+        oh=disc.oh[chosen],
         level={t: _ring_means(sky.value, reduced)[chosen] for t, sky in disc.intensity.items()},
     )
+
+
+def _chosen(field: Field, chosen: NDArray[np.bool_]) -> Field:
+    """The same quantity at some pixels; a number stays a number."""
+    if np.ndim(field.value) == 0:
+        return field
+    return Field(np.broadcast_to(field.value, chosen.shape)[chosen])
 
 
 def _ring_means(value: Array, reduced: Reduced) -> Array:
@@ -185,7 +192,9 @@ def _convert_block(
         elif prior.effect == "sfr":
             sfr_factor = sfr_factor * 10.0**amount
     cos_i, oh = _geometry(inputs, amounts, normal.shape[0])
-    parameters = replace(inputs.parameters, cos_i=cos_i, oh=oh, **numbers)
+    parameters = replace(inputs.parameters, cos_i=cos_i, oh=oh)
+    for name, number in numbers.items():
+        parameters = parameters.changed(name, number)
     scaled = {tracer: value * scale[tracer] for tracer, value in intensity.items()}
     converted = convert(scaled, choices, parameters)
     return _with_errors(inputs, converted, scale, sfr_factor, oh)

@@ -15,7 +15,7 @@ from kspipe.conversions import (
     Parameters,
     imf_factor,
 )
-from kspipe.conversions.corrections import apply, corrections_of
+from kspipe.conversions.corrections import apply, terms_of
 from kspipe.core.tracers import CO_LINES
 from kspipe.simulate import PaintedDisc
 
@@ -83,11 +83,13 @@ def _line(disc: PaintedDisc, choices: Choices, parameters: Parameters) -> Array:
         "sigma_star": disc.sigma_star,
         "sigma_total": disc.sigma_star + disc.sigma_atom + disc.sigma_mol,
     }
-    for name in ("ms_offset_dex", "g0_over_n"):
+    for name in ("ms_offset_dex", "g0_over_n", "alpha_co"):
         value = getattr(parameters, name)
         if value is not None:
             inputs[name] = np.asarray(value, dtype=float)
-    alpha = ALPHA_CO.get(str(choices.alpha_co))(inputs)
+    if choices.alpha_co is None:
+        raise KeyError("no record of the recipe says how bright CO is")
+    alpha = ALPHA_CO.get(choices.alpha_co)(inputs)
     ratio: Array = np.asarray(parameters.line_ratio, dtype=float)
     if choices.line_ratio is not None:
         record = LINE_RATIO.get(choices.line_ratio)
@@ -105,16 +107,23 @@ def _star_formation(
     """Intensities whose calibrated sum is the painted star formation."""
     record = STAR_FORMATION.get(choices.calibration)
     imf = imf_factor(str(record.imf), choices.imf)
-    corrections = corrections_of(record, dict.fromkeys(tracers, np.zeros(1)), choices, parameters)
-    has_dust = any(tracer in _DUST for tracer in corrections) and len(corrections) > 1
+    terms = list(terms_of(record, dict.fromkeys(tracers, np.zeros(1)), choices, parameters))
+    names = [term.tracer for term in terms]
+    if len(set(names)) < len(names) or any(term.decrement for term in terms):
+        raise KeyError(
+            f"record {record.key!r} with a total of infrared bands or a Balmer decrement has more "
+            "maps than terms: a sky is not painted for it"
+        )
+    has_dust = any(name in _DUST for name in names) and len(names) > 1
     made = {}
-    for tracer, (source, corrected) in corrections.items():
+    for term in terms:
+        tracer = term.tracer
         share = 1.0
         if has_dust:
-            share = DUST_SHARE if tracer in _DUST else (1.0 - DUST_SHARE) / (len(corrections) - 1)
+            share = DUST_SHARE if tracer in _DUST else (1.0 - DUST_SHARE) / (len(names) - 1)
         face_on = share * disc.sigma_sfr / (record.coefficients[tracer] * imf)
         power = record.powers.get(tracer)
         if power is not None:
             face_on = face_on ** (1.0 / power)
-        made[source] = face_on / apply(np.asarray(cos_i), corrected)
+        made[term.source] = face_on / apply(np.asarray(cos_i), term.corrections)
     return made

@@ -18,6 +18,7 @@ from kspipe.core.progress import Progress, no_progress
 from kspipe.core.seeds import generator
 from kspipe.kernels.geometry import beam_area, beam_axes
 from kspipe.matching import match_map
+from kspipe.stages.law_inputs import law_inputs
 from kspipe.stages.summary import DETECTED_SIGMA
 from kspipe.trials.reduced import Reduced, line_samples
 
@@ -189,12 +190,10 @@ def _limits(beam_pc: float, share_of_few: float) -> list[str]:
 
 
 def _relations(at: Reduced) -> dict[str, Headline]:
-    gas, sfr = at.disc.surfaces["sigma_gas"], at.disc.surfaces["sigma_sfr"]
+    inputs, sfr = law_inputs(at.recipe, at.disc), at.disc.surfaces["sigma_sfr"]
     found = {}
     for name, table in at.recipe.relations.items():
-        residuals = predict_residuals(
-            gas, sfr, at.disc.oh, at.disc.flags, table.law, table.parameters
-        )
+        residuals = predict_residuals(inputs, sfr, at.disc.flags, table.law, table.parameters)
         rng = generator(at.recipe.seed, "ladder", f"{name} {beam_axes(at.beam_arcsec2)[0]:.6g}")
         found[name] = headline(
             residuals, sfr, at.used, at.lattice(), at.grid.jacobian_arcsec(), rng

@@ -12,7 +12,7 @@ import numpy as np
 from astropy.io import fits
 from numpy.typing import NDArray
 
-from kspipe.conversions import Parameters
+from kspipe.conversions import Field, Parameters
 from kspipe.core.errors import Fault, InputError
 from kspipe.core.seeds import generator
 from kspipe.kernels.geometry import beam_axes
@@ -21,6 +21,7 @@ from kspipe.maps.read import relative_area_of
 from kspipe.maps.skymap import NoiseTerm, SkyMap
 from kspipe.recipe import Recipe
 from kspipe.recipe.map_table import MapTable, NoiseTyped, noise_value
+from kspipe.recipe.quantity import Measured
 from kspipe.relations import LAWS
 from kspipe.simulate import (
     DiscModel,
@@ -32,9 +33,10 @@ from kspipe.simulate import (
     paint_disc,
 )
 from kspipe.simulate.sky import SfrLaw
+from kspipe.stages.place import Place
 from kspipe.stages.plan import InMemory, Plan, choices_of, make_plan
 from kspipe.stages.reduce import load_one, match_one
-from kspipe.stages.surface import Disc, parameters_of, surfaces_of
+from kspipe.stages.surface import Disc, fields_of, parameters_of, surfaces_of
 from kspipe.trials.intensity import intensities_of
 
 __all__ = ["Paint", "Painter", "Sky", "noise_factors"]
@@ -174,14 +176,23 @@ class Painter:
         """
         plan = make_plan(recipe, memory)
         faults = [fault for source in plan.sources.values() for fault in _unpaintable(source)]
-        if recipe.metallicity.map is not None:
+        if not isinstance(recipe.metallicity.oh, Measured):
             faults.append(
-                Fault("metallicity.map", "a sky is painted with a gradient only", "type oh = ...")
+                Fault("metallicity", "a sky is painted with a gradient only", "type oh = ...")
             )
+        faults += [
+            Fault(name, "varies over the disc: a sky is painted with numbers only", "type a number")
+            for name, field in fields_of(recipe, Place.of(recipe, plan.grid)).items()
+            if name != "oh" and np.ndim(field.value) > 0
+        ]
         if faults:
             raise InputError(*faults)
         loaded = {name: load_one(plan, name) for name in plan.sources}
         return cls(recipe, plan, loaded, _plane(plan), memory)
+
+    @cached_property
+    def _fields(self) -> dict[str, Field]:
+        return fields_of(self.recipe, Place.of(self.recipe, self.plan.grid))
 
     @cached_property
     def tracers(self) -> list[str]:
@@ -191,7 +202,8 @@ class Painter:
     def _parameters(self, paint: Paint) -> Parameters:
         """The recipe's numbers with the true inclination."""
         tilt = self.recipe.galaxy.inclination.value + paint.inclination_off_deg
-        parameters = parameters_of(self.recipe, np.asarray(0.0))
+        numbers = {n: f for n, f in self._fields.items() if np.ndim(f.value) == 0}
+        parameters = parameters_of(self.recipe, numbers)
         return replace(parameters, cos_i=math.cos(math.radians(tilt)))
 
     def _model(self, paint: Paint) -> DiscModel:
@@ -241,7 +253,7 @@ class Painter:
         if per == "r25" and galaxy.r25 is not None:
             slope /= galaxy.r25.value * galaxy.pc_per_arcsec / 1e3
         centre = self.recipe.metallicity.oh
-        return (centre.value if centre else math.nan) + slope * radius_kpc
+        return (centre.value if isinstance(centre, Measured) else math.nan) + slope * radius_kpc
 
     def _intensities(self, disc: PaintedDisc, paint: Paint) -> dict[str, Array]:
         made = intensities_of(disc, self.tracers, choices_of(self.recipe), self._parameters(paint))

@@ -9,7 +9,15 @@ from typing import Final, Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.conversions import ALPHA_CO, LINE_RATIO, STAR_FORMATION, USUAL_SHIFT_DEX, imf_factor
+from kspipe.conversions import (
+    ALPHA_CO,
+    LINE_RATIO,
+    STAR_FORMATION,
+    USUAL_SHIFT_DEX,
+    AlphaCO,
+    LineRatio,
+    imf_factor,
+)
 from kspipe.core.constants import HELIUM_FACTOR
 from kspipe.core.tracers import CO_LINES
 from kspipe.maps.skymap import SkyMap
@@ -17,6 +25,7 @@ from kspipe.matching.short_spacings import USUALLY_MISSING
 from kspipe.recipe import Recipe
 from kspipe.recipe.models import SystematicsTable
 from kspipe.recipe.quantity import Measured
+from kspipe.recipe.varying import Varying
 
 __all__ = ["Effect", "Prior", "priors_of"]
 
@@ -134,9 +143,11 @@ def priors_of(
 
 
 def _stated(
-    name: str, measured: Measured, effect: Effect, unit: str, key: str, target: str = ""
+    name: str, measured: Varying, effect: Effect, unit: str, key: str, target: str = ""
 ) -> Prior:
     """A prior whose width is the error typed beside a value."""
+    if not isinstance(measured, Measured):
+        return Prior(name, effect, 0.0, unit, f"{key} varies over the disc: not drawn", target)
     scale = measured.value if effect == "distance" else 1.0
     origin = f"recipe: {key} = {measured}" if measured.error else f"{key} has no +- error"
     return Prior(
@@ -183,15 +194,17 @@ def _gas(recipe: Recipe, typed: SystematicsTable, used: set[str]) -> list[Prior]
     if isinstance(recipe.gas, str):
         return priors
     line = next(line for line in CO_LINES if line in used)
-    record = ALPHA_CO.get(recipe.gas.alpha_co)
-    width, said = _width(typed.alpha_co, "alpha_co", record.scatter_dex, record.key, _ALPHA_CO_DEX)
+    width, said = _width(
+        typed.alpha_co, "alpha_co", *_scatter_of(recipe.gas.alpha_co), _ALPHA_CO_DEX
+    )
     priors.append(Prior("alpha_CO", "factor", width, "dex", said, line))
     ratio = recipe.gas.line_ratio
     if isinstance(ratio, Measured) and ratio.error > 0 and typed.line_ratio is None:
         priors.append(_stated("line ratio", ratio, "parameter", "", "gas.line_ratio", "line_ratio"))
     elif line != "CO(1-0)":
-        scatter = LINE_RATIO.get(ratio).scatter_dex if isinstance(ratio, str) else None
-        width, said = _width(typed.line_ratio, "line_ratio", scatter, str(ratio), _LINE_RATIO_DEX)
+        scatter = LINE_RATIO.get(ratio).scatter_dex if isinstance(ratio, str | LineRatio) else None
+        said = ratio.key if isinstance(ratio, LineRatio) else str(ratio)
+        width, said = _width(typed.line_ratio, "line_ratio", scatter, said, _LINE_RATIO_DEX)
         priors.append(Prior("line ratio", "factor", width, "dex", said, line))
     if recipe.gas.hi_opacity is not None:
         opacity = recipe.gas.hi_opacity
@@ -203,6 +216,16 @@ def _gas(recipe: Recipe, typed: SystematicsTable, used: set[str]) -> list[Prior]
         ratio = recipe.stars.mass_to_light
         priors.append(_stated("mass to light", ratio, "parameter", "", key, "mass_to_light"))
     return priors
+
+
+def _scatter_of(alpha_co: str | AlphaCO | Varying) -> tuple[float | None, str]:
+    """Scatter of an alpha_CO record or typed error [dex], and what it is the scatter of."""
+    if isinstance(alpha_co, str | AlphaCO):
+        record = ALPHA_CO.get(alpha_co)
+        return record.scatter_dex, record.key
+    if isinstance(alpha_co, Measured) and alpha_co.error > 0:
+        return alpha_co.error / alpha_co.value / math.log(10.0), f"gas.alpha_co = {alpha_co}"
+    return None, ""
 
 
 def _stars(recipe: Recipe, typed: SystematicsTable, used: set[str]) -> list[Prior]:
@@ -252,8 +275,8 @@ def _stars(recipe: Recipe, typed: SystematicsTable, used: set[str]) -> list[Prio
 
 def _metallicity(recipe: Recipe, typed: SystematicsTable) -> list[Prior]:
     table = recipe.metallicity
-    centre = table.oh.value if table.oh else math.nan
-    if typed.metallicity is None and table.oh is not None and table.oh.error > 0:
+    centre = table.oh.value if isinstance(table.oh, Measured) else math.nan
+    if typed.metallicity is None and isinstance(table.oh, Measured) and table.oh.error > 0:
         return [_stated("metallicity zero point", table.oh, "oh", "", "metallicity.oh")]
     width, said = _width(typed.metallicity, "metallicity", None, "", USUAL_SHIFT_DEX[0])
     return [Prior("metallicity zero point", "oh", width, "", said, "", centre)]

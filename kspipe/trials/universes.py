@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from kspipe.comparison.estimators import classical_fits
 from kspipe.comparison.samples import LinearSamples, lattice_phases
-from kspipe.conversions import ALPHA_CO, STAR_FORMATION, Choices
+from kspipe.conversions import ALPHA_CO, STAR_FORMATION, AlphaCO, Choices, StarFormation
 from kspipe.core.progress import Progress, no_progress
 from kspipe.kernels.geometry import beam_axes
 from kspipe.trials.draws import SampleInputs, convert_draws, inputs_of, sums_of
@@ -99,13 +99,19 @@ def _records(inputs: SampleInputs, response: LineResponse | None) -> Iterator[Un
     for alpha, calibration in itertools.product(_alpha_records(inputs), _calibrations(inputs)):
         choices = replace(own, alpha_co=alpha or None, calibration=calibration)
         sums, line, samples = _evaluate(inputs, choices, response)
-        yield Universe(alpha, calibration, GENERATIVE, 0, 1.0, sums | line)
+        where = (_key(alpha), _key(calibration))
+        yield Universe(*where, GENERATIVE, 0, 1.0, sums | line)
         if response is not None:
             for estimator, slope in _classical(samples, response.fit.pivot).items():
-                yield Universe(alpha, calibration, estimator, 0, 1.0, {"slope": slope})
+                yield Universe(*where, estimator, 0, 1.0, {"slope": slope})
 
 
-def _alpha_records(inputs: SampleInputs) -> list[str]:
+def _key(record: str | AlphaCO | StarFormation) -> str:
+    """How a record is called: its key, also where it is the user's own."""
+    return record if isinstance(record, str) else record.key
+
+
+def _alpha_records(inputs: SampleInputs) -> list[str | AlphaCO]:
     own = inputs.choices.alpha_co
     if own is None:
         return [""]
@@ -113,16 +119,18 @@ def _alpha_records(inputs: SampleInputs) -> list[str]:
     for name in ("ms_offset_dex", "g0_over_n"):
         if getattr(inputs.parameters, name) is not None:
             given.add(name)
-    others = [r.key for r in ALPHA_CO if set(r.needs) <= given and r.key != own]
+    others = [r.key for r in ALPHA_CO if set(r.needs) <= given and r.key != _key(own)]
     return [own, *others]
 
 
-def _calibrations(inputs: SampleInputs) -> list[str]:
+def _calibrations(inputs: SampleInputs) -> list[str | StarFormation]:
     """Records of the maps at hand; power laws, which lose the pixels below zero, are left out."""
     own = inputs.choices.calibration
     have = set(inputs.intensity) | ({"24um"} if "22um" in inputs.intensity else set())
     others = [
-        r.key for r in STAR_FORMATION if set(r.tracers) <= have and r.is_linear and r.key != own
+        r.key
+        for r in STAR_FORMATION
+        if set(r.tracers) <= have and r.is_linear and r.key != _key(own)
     ]
     return [own, *others]
 
@@ -158,7 +166,7 @@ def _samples(
         chosen = np.asarray(lattice & at.used)
         moved_inputs = inputs_of(at, chosen)
         sums, _, _ = _evaluate(moved_inputs, own, None)
-        where = (own.alpha_co or "", own.calibration)
+        where = (_key(own.alpha_co or ""), _key(own.calibration))
         line = {}
         samples = line_samples(at.disc, chosen)
         if response is not None:
