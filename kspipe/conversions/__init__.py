@@ -28,7 +28,7 @@ from kspipe.conversions.solar import SOLAR_ANCHORS, anchor_shift_dex, oh_of_z_pr
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
 from kspipe.conversions.stars import STARS, Stars, midplane_density_msun_pc3
 from kspipe.conversions.strong_lines import STRONG_LINES, StrongLine
-from kspipe.conversions.surface import Surface, carry_noise, make_surface
+from kspipe.conversions.surface import Surface, bend_errors, carry_noise, make_surface
 from kspipe.conversions.total_infrared import TOTAL_INFRARED, TotalInfrared
 
 __all__ = [
@@ -75,6 +75,7 @@ __all__ = [
     "Surface",
     "TotalInfrared",
     "anchor_shift_dex",
+    "bend_errors",
     "carry_noise",
     "combine",
     "convert",

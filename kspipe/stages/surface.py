@@ -14,6 +14,7 @@ from kspipe.conversions import (
     Field,
     Parameters,
     Surface,
+    bend_errors,
     carry_noise,
     convert,
     parameter_shifts,
@@ -97,7 +98,9 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
         for name, field in fields.items()
         if field.random is not None
     }
-    surfaces = carry_noise(shifts.converted, noise)
+    surfaces = bend_errors(
+        carry_noise(shifts.converted, noise), converted, intensity, noise, choices, parameters
+    )
     coverage = {
         name: np.min([used[t].coverage for t in surface.slopes if t in used], axis=0)
         for name, surface in surfaces.items()
