@@ -18,15 +18,18 @@ from kspipe.conversions.imf import IMFS, Imf, imf_factor
 from kspipe.conversions.inputs import INPUTS, Input
 from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
 from kspipe.conversions.mass_metallicity import MASS_METALLICITY, MassMetallicity
+from kspipe.conversions.mass_to_light import MASS_TO_LIGHT, MassToLight
 from kspipe.conversions.metallicity import oh_from_gradient, z_prime
+from kspipe.conversions.midplane import midplane_density_msun_pc3, scale_height_from_length
 from kspipe.conversions.nitrogen import NITROGEN, Nitrogen
 from kspipe.conversions.oh_scales import OH_SCALES, USUAL_SHIFT_DEX, scale_shift_dex
 from kspipe.conversions.own import GIVEN_ALPHA_CO, OwnForm, own_record
+from kspipe.conversions.radiation_field import FIELD_UNITS, convert_field, field_from_sfr
 from kspipe.conversions.record import Range, Record
 from kspipe.conversions.shifts import Shifts, parameter_shifts
 from kspipe.conversions.solar import SOLAR_ANCHORS, anchor_shift_dex, oh_of_z_prime
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
-from kspipe.conversions.stars import STARS, Stars, midplane_density_msun_pc3
+from kspipe.conversions.stars import STARS, Stars
 from kspipe.conversions.strong_lines import STRONG_LINES, StrongLine
 from kspipe.conversions.surface import Surface, bend_errors, carry_noise, make_surface
 from kspipe.conversions.total_infrared import TOTAL_INFRARED, TotalInfrared
@@ -36,6 +39,7 @@ __all__ = [
     "ATOMIC",
     "BALMER",
     "EXTINCTION",
+    "FIELD_UNITS",
     "FINISHED",
     "FINISHED_SFR",
     "GIVEN_ALPHA_CO",
@@ -43,6 +47,7 @@ __all__ = [
     "INPUTS",
     "LINE_RATIO",
     "MASS_METALLICITY",
+    "MASS_TO_LIGHT",
     "NITROGEN",
     "OH_SCALES",
     "SOLAR_ANCHORS",
@@ -63,6 +68,7 @@ __all__ = [
     "Input",
     "LineRatio",
     "MassMetallicity",
+    "MassToLight",
     "Nitrogen",
     "OwnForm",
     "Parameters",
@@ -79,6 +85,8 @@ __all__ = [
     "carry_noise",
     "combine",
     "convert",
+    "convert_field",
+    "field_from_sfr",
     "imf_factor",
     "make_surface",
     "midplane_density_msun_pc3",
@@ -86,6 +94,7 @@ __all__ = [
     "oh_of_z_prime",
     "own_record",
     "parameter_shifts",
+    "scale_height_from_length",
     "scale_shift_dex",
     "z_prime",
 ]

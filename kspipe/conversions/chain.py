@@ -119,7 +119,7 @@ def chains_of(
         made.append(Chain("sigma_mol", line, tuple(links)))
     if choices.stars is not None:
         record = STARS.get(choices.stars)
-        light = float(np.asarray(parameters.mass_to_light))
+        light = float(converted.factors["mass_to_light"])
         links = [
             Link("stars at M/L of 1", record.msun_pc2_per_intensity, _GAS),
             Link("M/L", light, _GAS),

@@ -36,6 +36,8 @@ class Choices:
     stars : str or None
         Stellar-mass record, where a map of its tracer is given; its ``sigma_star`` replaces the
         parameter.
+    mass_to_light : str or None
+        Mass-to-light record; None where it is a number among the parameters.
     imf : str
         Initial mass function of the star-formation rates that come out.
     line_ratio : str or LineRatio or None
@@ -59,6 +61,7 @@ class Choices:
     atomic: str = "leroy2008_thin"
     line_ratio: str | LineRatio | None = None
     stars: str | None = None
+    mass_to_light: str | None = None
     imf: str = "Kroupa"
     ebv_scale: EbvScale | None = None
     balmer: str | None = None

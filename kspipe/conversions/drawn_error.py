@@ -39,6 +39,7 @@ def is_linear(choices: Choices) -> bool:
     return (
         STAR_FORMATION.get(choices.calibration).is_linear
         and choices.balmer is None
+        and choices.mass_to_light is None
         and not bends
         and not (ratio is not None and ratio.needs)
     )

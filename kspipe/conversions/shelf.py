@@ -15,6 +15,7 @@ from kspipe.conversions.imf import IMFS, Imf, imf_factor
 from kspipe.conversions.inputs import INPUTS
 from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
 from kspipe.conversions.mass_metallicity import MASS_METALLICITY, MassMetallicity
+from kspipe.conversions.mass_to_light import MASS_TO_LIGHT, MassToLight
 from kspipe.conversions.nitrogen import NITROGEN, Nitrogen
 from kspipe.conversions.record import Record
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
@@ -36,6 +37,7 @@ FAMILIES: Final[dict[str, Registry[Any]]] = {
     "imf": IMFS,
     "line_ratio": LINE_RATIO,
     "mass_metallicity": MASS_METALLICITY,
+    "mass_to_light": MASS_TO_LIGHT,
     "nitrogen": NITROGEN,
     "star_formation": STAR_FORMATION,
     "stars": STARS,
@@ -149,6 +151,15 @@ def _balmer(record: Balmer) -> str:
     return f"Halpha/Hbeta = 4: E(B-V) = {excess:.5g} mag, Halpha x {factor:.5g}"
 
 
+def _mass_to_light(record: MassToLight) -> str:
+    ratio, _ = record.solve(np.asarray(1e-11))
+    direct = float(record.at(np.asarray(-10.6)))
+    return (
+        f"log10 sSFR = -10.6: M/L = {direct:.5g}; solved for 1e-11 /yr at M/L = 1: "
+        f"{float(ratio):.5g}"
+    )
+
+
 def _nitrogen(record: Nitrogen) -> str:
     return f"M_B = -20: [NII]6583/Halpha = {record(-20.0):.5g}"
 
@@ -210,6 +221,7 @@ _WORKED: Final[dict[str, Callable[[Any], str]]] = {
     "imf": _imf,
     "line_ratio": _line_ratio,
     "mass_metallicity": _mass_metallicity,
+    "mass_to_light": _mass_to_light,
     "nitrogen": _nitrogen,
     "star_formation": _star_formation,
     "stars": _stars,

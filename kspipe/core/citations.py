@@ -87,6 +87,12 @@ CITATIONS = _citations(
     Citation("marino2013", "Marino et al. 2013", "A&A 559, A114"),
     Citation("murphy2011", "Murphy et al. 2011", "ApJ 737, 67", "2011ApJ...737...67M"),
     Citation("odonnell1994", "O'Donnell 1994", "ApJ 422, 158"),
+    Citation(
+        "ostriker2010",
+        "Ostriker, McKee & Leroy 2010",
+        "ApJ 721, 975",
+        "2010ApJ...721..975O",
+    ),
     Citation("pettini2004", "Pettini & Pagel 2004", "MNRAS 348, L59"),
     Citation("pilyugin2016", "Pilyugin & Grebel 2016", "MNRAS 457, 3678", "2016MNRAS.457.3678P"),
     Citation("rieke2009", "Rieke et al. 2009", "ApJ 692, 556"),

@@ -17,6 +17,7 @@ from kspipe.conversions import (
     EXTINCTION,
     FINISHED_SFR,
     LINE_RATIO,
+    MASS_TO_LIGHT,
     STAR_FORMATION,
     STARS,
     TOTAL_INFRARED,
@@ -24,7 +25,7 @@ from kspipe.conversions import (
     LineRatio,
     StarFormation,
 )
-from kspipe.recipe.kinds import ALPHA_CO_VALUE, RATIO, Ratio, Reddening
+from kspipe.recipe.kinds import ALPHA_CO_VALUE, RATIO, Reddening
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.metallicity_table import MetallicityTable
 from kspipe.recipe.own_records import RecordTable
@@ -173,11 +174,17 @@ class GasTable(Table):
 
 
 class StarsTable(Table):
-    """Stellar surface density from a near-infrared map."""
+    """Stellar surface density from a near-infrared map.
+
+    ``mass_to_light`` is a number, varies over the disc, or is the key of a record.
+    """
 
     record: Annotated[str, key_of(STARS)]
     map: str
-    mass_to_light: Ratio = Measured(0.5, 0.0, "0.5")
+    mass_to_light: Annotated[
+        str | Varying,
+        key_or(MASS_TO_LIGHT, lambda typed: read_varying(typed, RATIO), "or a number such as 0.5"),
+    ] = Measured(0.5, 0.0, "0.5")
 
 
 class StarFormationTable(Table):

@@ -24,6 +24,7 @@ from kspipe.conversions import (
     GIVEN_ALPHA_CO,
     LINE_RATIO,
     MASS_METALLICITY,
+    MASS_TO_LIGHT,
     NITROGEN,
     STAR_FORMATION,
     STARS,
@@ -238,6 +239,7 @@ def choices_of(recipe: Recipe) -> Choices:
         total_infrared=recipe.star_formation.total_infrared,
         alpha_co=_or(gas.alpha_co, str | AlphaCO, GIVEN_ALPHA_CO) if gas else None,
         stars=recipe.stars.record if recipe.stars else None,
+        mass_to_light=_or(recipe.stars.mass_to_light, str, None) if recipe.stars else None,
         imf=recipe.star_formation.imf,
         ebv_scale=recipe.foreground.ebv_scale,
         line_ratio=_or(gas.line_ratio, str | LineRatio, None) if gas else None,
@@ -264,6 +266,8 @@ def records_of(recipe: Recipe) -> list[Any]:
         records.append(LINE_RATIO.get(choices.line_ratio))
     if choices.stars is not None:
         records.append(STARS.get(choices.stars))
+    if choices.mass_to_light is not None:
+        records.append(MASS_TO_LIGHT.get(choices.mass_to_light))
     calibration = STAR_FORMATION.get(choices.calibration)
     records.append(calibration)
     keys = {choices.extinction[t] for t in calibration.tracers if t in choices.extinction}
