@@ -14,6 +14,13 @@ from kspipe.conversions.convert import Converted, convert
 from kspipe.conversions.extinction import EXTINCTION, Extinction
 from kspipe.conversions.field import Field, combine
 from kspipe.conversions.finished import FINISHED, FINISHED_SFR, Finished
+from kspipe.conversions.gas_to_dust import (
+    CIRCULARITY,
+    GAS_TO_DUST,
+    GasToDust,
+    JointFit,
+    fit_alpha_co_and_gas_to_dust,
+)
 from kspipe.conversions.imf import IMFS, Imf, imf_factor
 from kspipe.conversions.inputs import INPUTS, Input
 from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
@@ -38,10 +45,12 @@ __all__ = [
     "ALPHA_CO",
     "ATOMIC",
     "BALMER",
+    "CIRCULARITY",
     "EXTINCTION",
     "FIELD_UNITS",
     "FINISHED",
     "FINISHED_SFR",
+    "GAS_TO_DUST",
     "GIVEN_ALPHA_CO",
     "IMFS",
     "INPUTS",
@@ -64,8 +73,10 @@ __all__ = [
     "Extinction",
     "Field",
     "Finished",
+    "GasToDust",
     "Imf",
     "Input",
+    "JointFit",
     "LineRatio",
     "MassMetallicity",
     "MassToLight",
@@ -87,6 +98,7 @@ __all__ = [
     "convert",
     "convert_field",
     "field_from_sfr",
+    "fit_alpha_co_and_gas_to_dust",
     "imf_factor",
     "make_surface",
     "midplane_density_msun_pc3",

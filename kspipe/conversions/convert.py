@@ -17,6 +17,7 @@ from kspipe.conversions.atomic import ATOMIC
 from kspipe.conversions.choices import Choices, Parameters
 from kspipe.conversions.corrections import apply, terms_of
 from kspipe.conversions.finished import FINISHED, finished_factor
+from kspipe.conversions.gas_to_dust import GAS_TO_DUST
 from kspipe.conversions.imf import imf_factor
 from kspipe.conversions.line_ratio import LINE_RATIO
 from kspipe.conversions.mass_to_light import MASS_TO_LIGHT
@@ -96,6 +97,8 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
     _add_sfr(made, intensity, choices, parameters)
     if choices.stars is not None:
         _add_stars(made, intensity, choices, parameters)
+    if choices.gas_to_dust is not None:
+        _add_gas_of_dust(made, intensity, choices, parameters)
     if choices.alpha_co is not None:
         _add_molecular(made, intensity, choices, parameters)
     if "sigma_atom" in made.values:
@@ -157,6 +160,27 @@ def _add_stars(
         part = at_one * log_slope / safe * slope
         slopes[tracer] = slopes[tracer] + part if tracer in slopes else part
     made.add("sigma_star", at_one * ratio, slopes)
+
+
+def _add_gas_of_dust(
+    made: _Products, intensity: Mapping[str, Array], choices: Choices, parameters: Parameters
+) -> None:
+    """Molecular gas as what all gas of the dust has beyond the atomic gas; negatives are kept."""
+    record = GAS_TO_DUST.get(choices.gas_to_dust or "")
+    if "Sigma_dust" not in intensity:
+        raise KeyError(f"record {record.key!r} needs Sigma_dust, which is not among the maps")
+    oh = np.asarray(parameters.oh, dtype=float)
+    ratio = record(oh)
+    cos_i = np.asarray(parameters.cos_i, dtype=float)
+    per_dust = ratio * finished_factor(choices.finished["Sigma_dust"], cos_i, "Kroupa")
+    atom = made.values["sigma_atom"]
+    slopes = {tracer: -slope for tracer, slope in made.derivatives["sigma_atom"].items()}
+    made.add(
+        "sigma_mol", per_dust * intensity["Sigma_dust"] - atom, slopes | {"Sigma_dust": per_dust}
+    )
+    made.factors["gas_to_dust"] = ratio
+    shape = made.values["sigma_mol"].shape
+    made.flags["outside_range"] = np.broadcast_to(record.outside({"oh": oh}), shape)
 
 
 def _add_molecular(

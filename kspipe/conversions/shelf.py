@@ -11,6 +11,7 @@ from kspipe.conversions.alpha_co import ALPHA_CO, AlphaCO
 from kspipe.conversions.atomic import ATOMIC, AtomicGas
 from kspipe.conversions.balmer import BALMER, Balmer
 from kspipe.conversions.extinction import EXTINCTION, Extinction
+from kspipe.conversions.gas_to_dust import GAS_TO_DUST, GasToDust
 from kspipe.conversions.imf import IMFS, Imf, imf_factor
 from kspipe.conversions.inputs import INPUTS
 from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
@@ -34,6 +35,7 @@ FAMILIES: Final[dict[str, Registry[Any]]] = {
     "atomic": ATOMIC,
     "balmer": BALMER,
     "extinction": EXTINCTION,
+    "gas_to_dust": GAS_TO_DUST,
     "imf": IMFS,
     "line_ratio": LINE_RATIO,
     "mass_metallicity": MASS_METALLICITY,
@@ -175,6 +177,10 @@ def _extinction(record: Extinction) -> str:
     return "E(B-V) = 0.05: " + ", ".join(f"A_{t} = {a:.5g} mag" for t, a in mags.items())
 
 
+def _gas_to_dust(record: GasToDust) -> str:
+    return f"OH = 8.5: G/D = {float(record(np.asarray(8.5))):.5g}"
+
+
 def _imf(record: Imf) -> str:
     others = [imf.name for imf in IMFS if imf.name != record.name]
     return ", ".join(
@@ -218,6 +224,7 @@ _WORKED: Final[dict[str, Callable[[Any], str]]] = {
     "atomic": _atomic,
     "balmer": _balmer,
     "extinction": _extinction,
+    "gas_to_dust": _gas_to_dust,
     "imf": _imf,
     "line_ratio": _line_ratio,
     "mass_metallicity": _mass_metallicity,

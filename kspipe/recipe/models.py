@@ -16,6 +16,7 @@ from kspipe.conversions import (
     BALMER,
     EXTINCTION,
     FINISHED_SFR,
+    GAS_TO_DUST,
     LINE_RATIO,
     MASS_TO_LIGHT,
     STAR_FORMATION,
@@ -157,13 +158,14 @@ class GasTable(Table):
     """
 
     alpha_co: Annotated[
-        str | AlphaCO | Varying,
+        str | AlphaCO | Varying | None,
         key_or(
             ALPHA_CO,
             lambda typed: read_varying(typed, ALPHA_CO_VALUE),
             "or alpha_CO itself, such as 4.35 [Msun/pc2 per K km/s]",
         ),
-    ]
+    ] = None
+    gas_to_dust: Annotated[str | None, key_of(GAS_TO_DUST)] = None
     line_ratio: Annotated[
         str | LineRatio | Varying | None,
         key_or(LINE_RATIO, lambda typed: read_varying(typed, RATIO), "or a number such as 0.65"),
@@ -171,6 +173,15 @@ class GasTable(Table):
     ms_offset: Offset | None = None
     g0_over_n: FieldOverDensity | None = None
     hi_opacity: Opacity | None = None
+
+    @model_validator(mode="after")
+    def _one_way(self) -> GasTable:
+        if (self.alpha_co is None) == (self.gas_to_dust is None):
+            raise ValueError(
+                "give either alpha_co (molecular gas from CO) or gas_to_dust (from a map of "
+                "Sigma_dust)"
+            )
+        return self
 
 
 class StarsTable(Table):
