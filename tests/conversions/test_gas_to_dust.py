@@ -108,7 +108,7 @@ def test_dust_that_is_not_there(out, change, where, why) -> None:
 
 
 def region(
-    alpha: float, ratio: float, rng: np.random.Generator, n: int = 400, scatter_dex: float = 0.05
+    alpha: float, ratio: float, rng: np.random.Generator, n: int = 200, scatter_dex: float = 0.05
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Dust, atoms and CO of a region with one gas-to-dust ratio up to a scatter."""
     atom = rng.uniform(4.0, 12.0, n)
@@ -121,22 +121,24 @@ def region(
 def test_a_known_alpha_co_is_found(alpha: float, ratio: float) -> None:
     rng = np.random.default_rng(8)
     pulls = []
-    for _ in range(8):
-        fit = fit_alpha_co_and_gas_to_dust(*region(alpha, ratio, rng), rng)
+    for _ in range(6):
+        fit = fit_alpha_co_and_gas_to_dust(*region(alpha, ratio, rng), rng, n_bootstrap=30)
         assert fit.is_bounded
         # Where CO is most of the gas, the ratio goes with alpha_CO and is as uncertain.
         share = fit.alpha_co_error / fit.alpha_co
         assert fit.gas_to_dust == pytest.approx(ratio, rel=max(0.05, 4 * share))
-        assert fit.scatter_dex == pytest.approx(0.05, rel=0.2)
+        assert fit.scatter_dex == pytest.approx(0.05, rel=0.3)
         pulls.append((fit.alpha_co - alpha) / fit.alpha_co_error)
-    # Eight fits: their mean within 3 of its error, and none absurd.
-    assert abs(np.mean(pulls)) < 3 / np.sqrt(8)
+    # Six fits: their mean within 3 of its error, and none absurd.
+    assert abs(np.mean(pulls)) < 3 / np.sqrt(6)
     assert np.max(np.abs(pulls)) < 4
 
 
 def test_without_scatter_it_is_exact() -> None:
     rng = np.random.default_rng(9)
-    fit = fit_alpha_co_and_gas_to_dust(*region(4.0, 120.0, rng, scatter_dex=0.0), rng)
+    fit = fit_alpha_co_and_gas_to_dust(
+        *region(4.0, 120.0, rng, scatter_dex=0.0), rng, n_bootstrap=5
+    )
     # To the step of the trials, 2.3 %.
     assert fit.alpha_co == pytest.approx(4.0, rel=0.0125)
     assert fit.scatter_dex < 0.005
