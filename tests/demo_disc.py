@@ -39,6 +39,7 @@ def matched_maps(out: Path) -> tuple[Grid, dict[str, SkyMap]]:
     maps["ha"] = replace(maps["ir"], name="ha", tracer="Halpha", unit="erg/s/cm2/sr")
     maps["hb"] = replace(maps["ir"], name="hb", tracer="Hbeta", unit="erg/s/cm2/sr")
     maps["hb"] = replace(maps["hb"], value=maps["ir"].value[::-1])
+    maps["dust"] = replace(maps["ir"], name="dust", tracer="Sigma_dust", unit="Msun/pc2")
     maps["nir"] = replace(maps["ir"], name="nir", tracer="3.6um")
     return make_plan(recipe).grid, maps
 

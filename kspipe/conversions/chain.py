@@ -111,6 +111,17 @@ def chains_of(
             state = choices.finished[tracer]
             factor = float(finished_factor(state, np.asarray(cos_i), "Kroupa"))
             made.append(Chain(product, tracer, (Link(f"was {state}", factor, _GAS),)))
+    if choices.gas_to_dust is not None:
+        state = choices.finished["Sigma_dust"]
+        factor = float(finished_factor(state, np.asarray(cos_i), "Kroupa"))
+        ratio = float(converted.factors["gas_to_dust"])
+        links = [Link(f"was {state}", factor, _GAS), Link("gas-to-dust ratio", ratio, _GAS)]
+        made.append(Chain("sigma_mol", "Sigma_dust", tuple(links)))
+        made += [
+            Chain("sigma_mol", c.tracer, (*c.links, Link("taken off", -1.0, _GAS)))
+            for c in made
+            if c.product == "sigma_atom"
+        ]
     if choices.alpha_co is not None:
         line = next(tracer for tracer in CO_LINES if tracer in intensity)
         ratio, alpha = (float(converted.factors[name]) for name in ("line_ratio", "alpha_co"))
@@ -119,7 +130,7 @@ def chains_of(
         made.append(Chain("sigma_mol", line, tuple(links)))
     if choices.stars is not None:
         record = STARS.get(choices.stars)
-        light = float(np.asarray(parameters.mass_to_light))
+        light = float(converted.factors["mass_to_light"])
         links = [
             Link("stars at M/L of 1", record.msun_pc2_per_intensity, _GAS),
             Link("M/L", light, _GAS),

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from kspipe.conversions.alpha_co import AlphaCO
 from kspipe.conversions.extinction import EbvScale
 from kspipe.conversions.finished import Finished
+from kspipe.conversions.gas_to_dust import GasToDust
 from kspipe.conversions.line_ratio import LineRatio
 from kspipe.conversions.star_formation import StarFormation
 from kspipe.core.constants import OH_SOLAR
@@ -33,9 +34,13 @@ class Choices:
         Star-formation record.
     alpha_co : str or AlphaCO or None
         alpha_CO record; None for atomic gas only.
+    gas_to_dust : str or None
+        Gas-to-dust record, where molecular gas is what dust says beyond the atomic gas.
     stars : str or None
         Stellar-mass record, where a map of its tracer is given; its ``sigma_star`` replaces the
         parameter.
+    mass_to_light : str or None
+        Mass-to-light record; None where it is a number among the parameters.
     imf : str
         Initial mass function of the star-formation rates that come out.
     line_ratio : str or LineRatio or None
@@ -56,9 +61,11 @@ class Choices:
 
     calibration: str | StarFormation
     alpha_co: str | AlphaCO | None = None
+    gas_to_dust: str | GasToDust | None = None
     atomic: str = "leroy2008_thin"
     line_ratio: str | LineRatio | None = None
     stars: str | None = None
+    mass_to_light: str | None = None
     imf: str = "Kroupa"
     ebv_scale: EbvScale | None = None
     balmer: str | None = None

@@ -17,8 +17,10 @@ from kspipe.conversions.atomic import ATOMIC
 from kspipe.conversions.choices import Choices, Parameters
 from kspipe.conversions.corrections import apply, terms_of
 from kspipe.conversions.finished import FINISHED, finished_factor
+from kspipe.conversions.gas_to_dust import GAS_TO_DUST
 from kspipe.conversions.imf import imf_factor
 from kspipe.conversions.line_ratio import LINE_RATIO
+from kspipe.conversions.mass_to_light import MASS_TO_LIGHT
 from kspipe.conversions.molecular import molecular_gas
 from kspipe.conversions.star_formation import STAR_FORMATION
 from kspipe.conversions.stars import STARS
@@ -48,7 +50,7 @@ class Converted:
         alpha_CO record) and ``no_solution`` (a power law of a pixel at or below zero), where they
         can occur.
     factors : dict of str to float64 array
-        ``alpha_co`` and ``line_ratio`` as they were used.
+        ``alpha_co``, ``line_ratio`` and ``mass_to_light`` as they were used.
     """
 
     values: dict[str, Array]
@@ -91,10 +93,12 @@ def convert(intensity: Mapping[str, Array], choices: Choices, parameters: Parame
             per_hi = per_hi * parameters.hi_opacity
         made.add("sigma_atom", per_hi * intensity["HI"], {"HI": per_hi})
     _add_finished(made, intensity, choices, cos_i)
+    # First, because a line ratio and a mass-to-light ratio may depend on it.
+    _add_sfr(made, intensity, choices, parameters)
     if choices.stars is not None:
         _add_stars(made, intensity, choices, parameters)
-    # First, because a line ratio may depend on it.
-    _add_sfr(made, intensity, choices, parameters)
+    if choices.gas_to_dust is not None:
+        _add_gas_of_dust(made, intensity, choices, parameters)
     if choices.alpha_co is not None:
         _add_molecular(made, intensity, choices, parameters)
     if "sigma_atom" in made.values:
@@ -136,9 +140,47 @@ def _add_stars(
     record = STARS.get(str(choices.stars))
     if record.tracer not in intensity:
         raise KeyError(f"record {record.key!r} needs {record.tracer}, which is not among the maps")
-    mass_to_light = np.asarray(parameters.mass_to_light, dtype=float)
-    slope = record.msun_pc2_per_intensity * mass_to_light * np.asarray(parameters.cos_i)
-    made.add("sigma_star", slope * intensity[record.tracer], {record.tracer: slope})
+    light = record.msun_pc2_per_intensity * np.asarray(parameters.cos_i, dtype=float)
+    if choices.mass_to_light is None:
+        made.factors["mass_to_light"] = np.asarray(parameters.mass_to_light, dtype=float)
+        slope = light * made.factors["mass_to_light"]
+        made.add("sigma_star", slope * intensity[record.tracer], {record.tracer: slope})
+        return
+    at_one = light * intensity[record.tracer]
+    rate = made.values["sigma_sfr"]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        per_light = np.where(at_one > 0, rate / at_one, np.where(rate > 0, np.inf, 0.0)) * 1e-6
+    per_light = np.where(np.isnan(at_one + rate), np.nan, per_light)
+    ratio, log_slope = MASS_TO_LIGHT.get(choices.mass_to_light).solve(per_light)
+    made.factors["mass_to_light"] = ratio
+    # d Sigma = light (m - m') dI + at_one m' d ln Sigma_SFR, with m' = dm / d ln(rate per light).
+    slopes = {record.tracer: light * (ratio - log_slope)}
+    safe = np.where(rate > 0, rate, 1.0)
+    for tracer, slope in made.derivatives["sigma_sfr"].items():
+        part = at_one * log_slope / safe * slope
+        slopes[tracer] = slopes[tracer] + part if tracer in slopes else part
+    made.add("sigma_star", at_one * ratio, slopes)
+
+
+def _add_gas_of_dust(
+    made: _Products, intensity: Mapping[str, Array], choices: Choices, parameters: Parameters
+) -> None:
+    """Molecular gas as what all gas of the dust has beyond the atomic gas; negatives are kept."""
+    record = GAS_TO_DUST.get(choices.gas_to_dust or "")
+    if "Sigma_dust" not in intensity:
+        raise KeyError(f"record {record.key!r} needs Sigma_dust, which is not among the maps")
+    oh = np.asarray(parameters.oh, dtype=float)
+    ratio = record(oh)
+    cos_i = np.asarray(parameters.cos_i, dtype=float)
+    per_dust = ratio * finished_factor(choices.finished["Sigma_dust"], cos_i, "Kroupa")
+    atom = made.values["sigma_atom"]
+    slopes = {tracer: -slope for tracer, slope in made.derivatives["sigma_atom"].items()}
+    made.add(
+        "sigma_mol", per_dust * intensity["Sigma_dust"] - atom, slopes | {"Sigma_dust": per_dust}
+    )
+    made.factors["gas_to_dust"] = ratio
+    shape = made.values["sigma_mol"].shape
+    made.flags["outside_range"] = np.broadcast_to(record.outside({"oh": oh}), shape)
 
 
 def _add_molecular(

@@ -11,10 +11,12 @@ from kspipe.conversions.alpha_co import ALPHA_CO, AlphaCO
 from kspipe.conversions.atomic import ATOMIC, AtomicGas
 from kspipe.conversions.balmer import BALMER, Balmer
 from kspipe.conversions.extinction import EXTINCTION, Extinction
+from kspipe.conversions.gas_to_dust import GAS_TO_DUST, GasToDust
 from kspipe.conversions.imf import IMFS, Imf, imf_factor
 from kspipe.conversions.inputs import INPUTS
 from kspipe.conversions.line_ratio import LINE_RATIO, LineRatio
 from kspipe.conversions.mass_metallicity import MASS_METALLICITY, MassMetallicity
+from kspipe.conversions.mass_to_light import MASS_TO_LIGHT, MassToLight
 from kspipe.conversions.nitrogen import NITROGEN, Nitrogen
 from kspipe.conversions.record import Record
 from kspipe.conversions.star_formation import STAR_FORMATION, StarFormation
@@ -33,9 +35,11 @@ FAMILIES: Final[dict[str, Registry[Any]]] = {
     "atomic": ATOMIC,
     "balmer": BALMER,
     "extinction": EXTINCTION,
+    "gas_to_dust": GAS_TO_DUST,
     "imf": IMFS,
     "line_ratio": LINE_RATIO,
     "mass_metallicity": MASS_METALLICITY,
+    "mass_to_light": MASS_TO_LIGHT,
     "nitrogen": NITROGEN,
     "star_formation": STAR_FORMATION,
     "stars": STARS,
@@ -149,6 +153,15 @@ def _balmer(record: Balmer) -> str:
     return f"Halpha/Hbeta = 4: E(B-V) = {excess:.5g} mag, Halpha x {factor:.5g}"
 
 
+def _mass_to_light(record: MassToLight) -> str:
+    ratio, _ = record.solve(np.asarray(1e-11))
+    direct = float(record.at(np.asarray(-10.6)))
+    return (
+        f"log10 sSFR = -10.6: M/L = {direct:.5g}; solved for 1e-11 /yr at M/L = 1: "
+        f"{float(ratio):.5g}"
+    )
+
+
 def _nitrogen(record: Nitrogen) -> str:
     return f"M_B = -20: [NII]6583/Halpha = {record(-20.0):.5g}"
 
@@ -162,6 +175,10 @@ def _total_infrared(record: TotalInfrared) -> str:
 def _extinction(record: Extinction) -> str:
     mags = {t: float(record.magnitudes(t, np.asarray(0.05))) for t in record.coefficients}
     return "E(B-V) = 0.05: " + ", ".join(f"A_{t} = {a:.5g} mag" for t, a in mags.items())
+
+
+def _gas_to_dust(record: GasToDust) -> str:
+    return f"OH = 8.5: G/D = {float(record(np.asarray(8.5))):.5g}"
 
 
 def _imf(record: Imf) -> str:
@@ -207,9 +224,11 @@ _WORKED: Final[dict[str, Callable[[Any], str]]] = {
     "atomic": _atomic,
     "balmer": _balmer,
     "extinction": _extinction,
+    "gas_to_dust": _gas_to_dust,
     "imf": _imf,
     "line_ratio": _line_ratio,
     "mass_metallicity": _mass_metallicity,
+    "mass_to_light": _mass_to_light,
     "nitrogen": _nitrogen,
     "star_formation": _star_formation,
     "stars": _stars,

@@ -3,22 +3,11 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Final, Literal
-
-import numpy as np
-from numpy.typing import NDArray
 
 from kspipe.conversions.record import Record
 from kspipe.core.registry import Registry
 
-__all__ = ["STARS", "ScaleHeight", "Stars", "midplane_density_msun_pc3"]
-
-Array = NDArray[np.float64]
-
-# What a stated scale height z0 is: of the profile sech^2(z / z0), or sech^2(z / (2 z0)), whose
-# wings fall as exp(-z / z0).
-ScaleHeight = Literal["sech2(z/z0)", "sech2(z/2z0)"]
-_COLUMN_OVER_MIDPLANE: Final = {"sech2(z/z0)": 2.0, "sech2(z/2z0)": 4.0}
+__all__ = ["STARS", "Stars"]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -70,25 +59,3 @@ STARS.add(
         msun_pc2_per_intensity=660.0,
     )
 )
-
-
-def midplane_density_msun_pc3(
-    sigma_star_msun_pc2: Array, scale_height_pc: Array | float, definition: ScaleHeight
-) -> Array:
-    """Density of stars in the midplane of a self-gravitating, isothermal disc.
-
-    Parameters
-    ----------
-    sigma_star_msun_pc2 : float64 array
-        Face-on.
-    scale_height_pc : float or float64 array
-        z0.
-    definition : {"sech2(z/z0)", "sech2(z/2z0)"}
-        Of z0: the two differ by a factor 2 in the density.
-
-    Notes
-    -----
-    Sigma = 2 rho z0 for sech^2(z/z0), 4 rho z0 for sech^2(z/(2 z0)).
-    """
-    factor = _COLUMN_OVER_MIDPLANE[definition]
-    return np.asarray(sigma_star_msun_pc2 / (factor * scale_height_pc))

@@ -10,10 +10,11 @@ from numpy.typing import NDArray
 
 from kspipe.conversions.choices import Choices, Parameters
 from kspipe.conversions.convert import Converted, convert
+from kspipe.conversions.drawn_error import drawn_over_linear
 from kspipe.kernels.noise import NoiseTerm, covariance, propagate, total_error
 from kspipe.kernels.statistics import ratio_interval
 
-__all__ = ["Ratio", "Surface", "carry_noise", "make_surface"]
+__all__ = ["Ratio", "Surface", "bend_errors", "carry_noise", "make_surface"]
 
 Array = NDArray[np.float64]
 Terms = tuple[NoiseTerm, ...]
@@ -105,7 +106,45 @@ def make_surface(
         ``sigma_atom sigma_gas sigma_sfr`` and, with CO, ``sigma_mol f_mol t_dep``; the last two
         are `Ratio`.
     """
-    return carry_noise(convert(intensity, choices, parameters), noise)
+    converted = convert(intensity, choices, parameters)
+    return bend_errors(
+        carry_noise(converted, noise), converted, intensity, noise, choices, parameters
+    )
+
+
+def bend_errors(
+    surfaces: dict[str, Surface],
+    converted: Converted,
+    intensity: Mapping[str, Array],
+    noise: Mapping[str, Terms],
+    choices: Choices,
+    parameters: Parameters,
+) -> dict[str, Surface]:
+    """Bring first-order errors to those of draws, where a product bends within its noise.
+
+    Each noise term keeps its share, so that sums and differences know of it, too. Ratios keep
+    their first-order errors: the ratio of two noisy numbers has no standard deviation.
+
+    Parameters
+    ----------
+    surfaces : dict of str to Surface
+        With first-order errors.
+    converted : Converted
+    intensity, noise, choices, parameters
+        As in `make_surface`; noise of parameters is not drawn.
+    """
+    error = {tracer: total_error(noise[tracer]) for tracer in intensity}
+    scales = drawn_over_linear(converted, intensity, error, choices, parameters)
+    maps = {term.source for tracer in intensity for term in noise[tracer]}
+    bent = {}
+    for product, scale in scales.items():
+        surface = surfaces[product]
+        terms = tuple(
+            term.with_sigma(term.sigma * scale) if term.source in maps else term
+            for term in surface.noise
+        )
+        bent[product] = Surface(surface.value, terms, surface.slopes)
+    return {**surfaces, **bent}
 
 
 def carry_noise(converted: Converted, noise: Mapping[str, Terms]) -> dict[str, Surface]:

@@ -9,6 +9,7 @@ from typing import Any
 from kspipe.conversions import (
     ALPHA_CO,
     EXTINCTION,
+    GAS_TO_DUST,
     LINE_RATIO,
     STAR_FORMATION,
     STARS,
@@ -52,7 +53,15 @@ def alternatives_of(recipe: Recipe) -> Iterator[Alternative]:
     A family is there if its record is used and one other can be; what a recipe gives as numbers
     or maps of its own has no alternatives.
     """
-    for family in (_alpha_co, _line_ratio, _star_formation, _extinction, _stars, _strong_lines):
+    for family in (
+        _alpha_co,
+        _gas_to_dust,
+        _line_ratio,
+        _star_formation,
+        _extinction,
+        _stars,
+        _strong_lines,
+    ):
         by_name: dict[str, list[Alternative]] = {}
         for found in family(recipe):
             by_name.setdefault(found.family, []).append(found)
@@ -75,7 +84,7 @@ def _own(recipe: Recipe, used: Any) -> list[Any]:
 
 def _alpha_co(recipe: Recipe) -> Iterator[Alternative]:
     gas = recipe.gas
-    if not isinstance(gas, GasTable):
+    if not isinstance(gas, GasTable) or gas.alpha_co is None:
         return
     has_stars = recipe.stars is not None or recipe.map_of("Sigma_star") is not None
     used = gas.alpha_co
@@ -88,9 +97,18 @@ def _alpha_co(recipe: Recipe) -> Iterator[Alternative]:
             yield Alternative("alpha_co", record, changed, "sigma_mol", key == used)
 
 
+def _gas_to_dust(recipe: Recipe) -> Iterator[Alternative]:
+    gas = recipe.gas
+    if isinstance(gas, GasTable) and gas.gas_to_dust is not None:
+        for record in GAS_TO_DUST:
+            changed = _changed(recipe, "gas", gas_to_dust=record.key)
+            is_used = record.key == gas.gas_to_dust
+            yield Alternative("gas_to_dust", record, changed, "sigma_mol", is_used)
+
+
 def _line_ratio(recipe: Recipe) -> Iterator[Alternative]:
     gas, line = recipe.gas, recipe.map_of(*CO_LINES)
-    if not isinstance(gas, GasTable) or line is None:
+    if not isinstance(gas, GasTable) or gas.alpha_co is None or line is None:
         return
     tracer = recipe.maps[line].tracer
     used: Any = gas.line_ratio
@@ -168,3 +186,14 @@ def _strong_lines(recipe: Recipe) -> Iterator[Alternative]:
             yield Alternative(
                 "strong_lines", record, changed, "sigma_mol", key == table.calibration
             )
+
+
+_FAMILIES = (
+    _alpha_co,
+    _gas_to_dust,
+    _line_ratio,
+    _star_formation,
+    _extinction,
+    _stars,
+    _strong_lines,
+)

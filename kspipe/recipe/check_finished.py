@@ -8,8 +8,9 @@ from typing import Final
 from kspipe.core.errors import Fault
 from kspipe.core.tracers import CO_LINES
 from kspipe.recipe.map_table import MapTable
+from kspipe.recipe.models import GasTable
 
-__all__ = ["finished_faults", "given_twice_faults"]
+__all__ = ["dust_faults", "finished_faults", "given_twice_faults"]
 
 # What each finished map says of itself.
 _STATES: Final = {
@@ -39,6 +40,25 @@ def finished_faults(name: str, table: MapTable) -> list[Fault]:
             )
         elif given and key not in states:
             faults.append(Fault(where, f"does not belong to a map of {table.tracer}"))
+    return faults
+
+
+def dust_faults(gas: GasTable, tracers: Mapping[str, str]) -> list[Fault]:
+    """Gas of dust without dust, or with what belongs to CO."""
+    faults = []
+    if "Sigma_dust" not in tracers:
+        faults.append(
+            Fault(
+                "gas.gas_to_dust",
+                f'"{gas.gas_to_dust}" needs a map of Sigma_dust, which the recipe does not list',
+                "add it, or type alpha_co in place of gas_to_dust",
+            )
+        )
+    faults += [
+        Fault(f"gas.{key}", "belongs to CO, and the gas is that of dust", "remove the key")
+        for key in ("line_ratio", "ms_offset", "g0_over_n")
+        if getattr(gas, key) is not None
+    ]
     return faults
 
 

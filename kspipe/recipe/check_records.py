@@ -76,6 +76,8 @@ _GAS_INPUTS: Final = {"ms_offset": "ms_offset_dex", "g0_over_n": "g0_over_n"}
 
 def alpha_co_faults(gas: GasTable, *, has_stars: bool) -> list[Fault]:
     """What an alpha_CO record needs and the recipe does not give, and the other way round."""
+    if gas.alpha_co is None:
+        return []
     if not isinstance(gas.alpha_co, str | AlphaCO):
         record = GIVEN_ALPHA_CO
         needs = {"oh"}

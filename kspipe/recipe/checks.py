@@ -10,7 +10,7 @@ from typing import Any, Final
 from kspipe.conversions import LINE_RATIO, LineRatio
 from kspipe.core.errors import Fault, nearest
 from kspipe.core.tracers import CO_LINES
-from kspipe.recipe.check_finished import given_twice_faults
+from kspipe.recipe.check_finished import dust_faults, given_twice_faults
 from kspipe.recipe.check_records import (
     alpha_co_faults,
     convention_faults,
@@ -120,6 +120,8 @@ def _gas_faults(gas: object, maps: Mapping[str, MapTable], *, complete: bool) ->
                 "type a table [gas] with alpha_co, or remove that map",
             )
         )
+    if isinstance(gas, GasTable) and gas.gas_to_dust is not None:
+        return faults + dust_faults(gas, tracers)
     if isinstance(gas, GasTable):
         if complete and not lines:
             faults.append(

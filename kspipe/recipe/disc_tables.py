@@ -8,7 +8,7 @@ from typing import Annotated, Any, Literal, get_args
 import numpy as np
 from pydantic import AfterValidator, BeforeValidator, Field, model_validator
 
-from kspipe.conversions.stars import ScaleHeight
+from kspipe.conversions.midplane import ScaleHeight
 from kspipe.core.errors import nearest
 from kspipe.core.radiation import FIELD_UNITS, FieldUnit
 from kspipe.recipe.quantity import Measured, parse_measured

@@ -16,7 +16,9 @@ from kspipe.conversions import (
     BALMER,
     EXTINCTION,
     FINISHED_SFR,
+    GAS_TO_DUST,
     LINE_RATIO,
+    MASS_TO_LIGHT,
     STAR_FORMATION,
     STARS,
     TOTAL_INFRARED,
@@ -27,7 +29,7 @@ from kspipe.conversions import (
 from kspipe.recipe.disc_tables import MidplaneTable, RadiationFieldTable, RotationTable
 from kspipe.recipe.environment import Environment, FreeWidth
 from kspipe.recipe.gas_state import GasStateTable, InsideBeamTable
-from kspipe.recipe.kinds import ALPHA_CO_VALUE, RATIO, Ratio, Reddening
+from kspipe.recipe.kinds import ALPHA_CO_VALUE, RATIO, Reddening
 from kspipe.recipe.map_table import MapTable
 from kspipe.recipe.metallicity_table import MetallicityTable
 from kspipe.recipe.own_records import RecordTable
@@ -161,13 +163,14 @@ class GasTable(Table):
     """
 
     alpha_co: Annotated[
-        str | AlphaCO | Varying,
+        str | AlphaCO | Varying | None,
         key_or(
             ALPHA_CO,
             lambda typed: read_varying(typed, ALPHA_CO_VALUE),
             "or alpha_CO itself, such as 4.35 [Msun/pc2 per K km/s]",
         ),
-    ]
+    ] = None
+    gas_to_dust: Annotated[str | None, key_of(GAS_TO_DUST)] = None
     line_ratio: Annotated[
         str | LineRatio | Varying | None,
         key_or(LINE_RATIO, lambda typed: read_varying(typed, RATIO), "or a number such as 0.65"),
@@ -176,13 +179,28 @@ class GasTable(Table):
     g0_over_n: FieldOverDensity | None = None
     hi_opacity: Opacity | None = None
 
+    @model_validator(mode="after")
+    def _one_way(self) -> GasTable:
+        if (self.alpha_co is None) == (self.gas_to_dust is None):
+            raise ValueError(
+                "give either alpha_co (molecular gas from CO) or gas_to_dust (from a map of "
+                "Sigma_dust)"
+            )
+        return self
+
 
 class StarsTable(Table):
-    """Stellar surface density from a near-infrared map."""
+    """Stellar surface density from a near-infrared map.
+
+    ``mass_to_light`` is a number, varies over the disc, or is the key of a record.
+    """
 
     record: Annotated[str, key_of(STARS)]
     map: str
-    mass_to_light: Ratio = Measured(0.5, 0.0, "0.5")
+    mass_to_light: Annotated[
+        str | Varying,
+        key_or(MASS_TO_LIGHT, lambda typed: read_varying(typed, RATIO), "or a number such as 0.5"),
+    ] = Measured(0.5, 0.0, "0.5")
 
 
 class StarFormationTable(Table):

@@ -79,7 +79,7 @@ def key_of(registry: Registry[Any], more: Mapping[str, Any] = MappingProxyType({
     kind = type(next(iter(registry)))
 
     def check(typed: Any, info: ValidationInfo) -> Any:
-        if isinstance(typed, kind):
+        if typed is None or isinstance(typed, kind):
             return typed
         own = {**(info.context or {}).get("records", {}), **more}
         if isinstance(typed, str) and isinstance(own.get(typed), kind):

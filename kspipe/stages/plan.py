@@ -19,11 +19,14 @@ from kspipe.conversions import (
     ALPHA_CO,
     ATOMIC,
     BALMER,
+    CIRCULARITY,
     EXTINCTION,
     FINISHED_SFR,
+    GAS_TO_DUST,
     GIVEN_ALPHA_CO,
     LINE_RATIO,
     MASS_METALLICITY,
+    MASS_TO_LIGHT,
     NITROGEN,
     STAR_FORMATION,
     STARS,
@@ -121,6 +124,7 @@ def make_plan(recipe: Recipe, memory: InMemory | None = None) -> Plan:
     _warn_inclination(recipe)
     _warn_metallicity(recipe)
     _warn_opacity(recipe)
+    _warn_circularity(recipe)
     prints = {f"match.{name}": _match_print(recipe, sources[name], grid, fwhm) for name in sources}
     prints["convert"] = convert_print(recipe, prints)
     return Plan(recipe, sources, target, grid, prints)
@@ -184,6 +188,14 @@ def _warn_opacity(recipe: Recipe) -> None:
         )
 
 
+def _warn_circularity(recipe: Recipe) -> None:
+    gas = None if isinstance(recipe.gas, str) else recipe.gas
+    if gas is not None and gas.gas_to_dust is not None and recipe.relations:
+        warnings.warn(
+            f'gas.gas_to_dust "{gas.gas_to_dust}": {CIRCULARITY}', KspipeWarning, stacklevel=3
+        )
+
+
 def _warn_metallicity(recipe: Recipe) -> None:
     alpha_co = choices_of(recipe).alpha_co
     record = None if alpha_co is None else ALPHA_CO.get(alpha_co)
@@ -238,8 +250,10 @@ def choices_of(recipe: Recipe) -> Choices:
         finished=finished,
         balmer=recipe.star_formation.attenuation,
         total_infrared=recipe.star_formation.total_infrared,
-        alpha_co=_or(gas.alpha_co, str | AlphaCO, GIVEN_ALPHA_CO) if gas else None,
+        alpha_co=_or(gas.alpha_co, str | AlphaCO | None, GIVEN_ALPHA_CO) if gas else None,
+        gas_to_dust=gas.gas_to_dust if gas else None,
         stars=recipe.stars.record if recipe.stars else None,
+        mass_to_light=_or(recipe.stars.mass_to_light, str, None) if recipe.stars else None,
         imf=recipe.star_formation.imf,
         ebv_scale=recipe.foreground.ebv_scale,
         line_ratio=_or(gas.line_ratio, str | LineRatio, None) if gas else None,
@@ -262,10 +276,14 @@ def records_of(recipe: Recipe) -> list[Any]:
     records: list[Any] = [ATOMIC.get(choices.atomic)] if recipe.map_of("HI") else []
     if choices.alpha_co is not None:
         records.append(ALPHA_CO.get(choices.alpha_co))
+    if choices.gas_to_dust is not None:
+        records.append(GAS_TO_DUST.get(choices.gas_to_dust))
     if choices.line_ratio is not None:
         records.append(LINE_RATIO.get(choices.line_ratio))
     if choices.stars is not None:
         records.append(STARS.get(choices.stars))
+    if choices.mass_to_light is not None:
+        records.append(MASS_TO_LIGHT.get(choices.mass_to_light))
     calibration = STAR_FORMATION.get(choices.calibration)
     records.append(calibration)
     keys = {choices.extinction[t] for t in calibration.tracers if t in choices.extinction}

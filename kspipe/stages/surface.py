@@ -14,6 +14,7 @@ from kspipe.conversions import (
     Field,
     Parameters,
     Surface,
+    bend_errors,
     carry_noise,
     convert,
     parameter_shifts,
@@ -97,7 +98,9 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
         for name, field in fields.items()
         if field.random is not None
     }
-    surfaces = carry_noise(shifts.converted, noise)
+    surfaces = bend_errors(
+        carry_noise(shifts.converted, noise), converted, intensity, noise, choices, parameters
+    )
     coverage = {
         name: np.min([used[t].coverage for t in surface.slopes if t in used], axis=0)
         for name, surface in surfaces.items()
@@ -117,7 +120,9 @@ def used_maps(recipe: Recipe, matched: dict[str, SkyMap]) -> dict[str, SkyMap]:
     """Maps that a surface density is made of, by tracer."""
     wanted = {*recipe.star_formation.maps, *({recipe.stars.map} if recipe.stars else ())}
     gas = {"HI", "Sigma_HI", "Sigma_star"}
-    gas |= {*CO_LINES, "Sigma_mol"} if recipe.has_molecular else set()
+    if recipe.has_molecular:
+        of_dust = not isinstance(recipe.gas, str) and recipe.gas.gas_to_dust is not None
+        gas |= {"Sigma_dust"} if of_dust else {*CO_LINES, "Sigma_mol"}
     return {
         sky.tracer: _without_diffuse(sky, recipe)
         for name, sky in matched.items()

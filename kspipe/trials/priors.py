@@ -25,7 +25,6 @@ from kspipe.matching.short_spacings import USUALLY_MISSING
 from kspipe.recipe import Recipe
 from kspipe.recipe.models import SystematicsTable
 from kspipe.recipe.quantity import Measured
-from kspipe.recipe.varying import Varying
 
 __all__ = ["Effect", "Prior", "priors_of"]
 
@@ -143,7 +142,7 @@ def priors_of(
 
 
 def _stated(
-    name: str, measured: Varying, effect: Effect, unit: str, key: str, target: str = ""
+    name: str, measured: object, effect: Effect, unit: str, key: str, target: str = ""
 ) -> Prior:
     """A prior whose width is the error typed beside a value."""
     if not isinstance(measured, Measured):
@@ -218,7 +217,7 @@ def _gas(recipe: Recipe, typed: SystematicsTable, used: set[str]) -> list[Prior]
     return priors
 
 
-def _scatter_of(alpha_co: str | AlphaCO | Varying) -> tuple[float | None, str]:
+def _scatter_of(alpha_co: object) -> tuple[float | None, str]:
     """Scatter of an alpha_CO record or typed error [dex], and what it is the scatter of."""
     if isinstance(alpha_co, str | AlphaCO):
         record = ALPHA_CO.get(alpha_co)

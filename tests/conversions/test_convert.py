@@ -374,3 +374,21 @@ def test_no_record_no_correction() -> None:
         convert(maps, choices, Parameters(cos_i=1.0, ebv=e)).values["sigma_sfr"] for e in (0.5, 0.0)
     )
     np.testing.assert_array_equal(dusty, clean)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("alpha_co", ["sun2020", "bolatto2013_eq31"])
+def test_a_thousand_draws_of_a_thousand_pixels(alpha_co: str) -> None:
+    n = 1000
+    choices = Choices("leroy2008_fuv_24um", alpha_co=alpha_co)
+    maps, draws = sky(choices, shape=(n,)), parameters((n, 1))
+    together = convert(maps, choices, draws)
+    for k in range(n):
+        single = convert(maps, choices, at(draws, (k, 0)))
+        for product, value in single.values.items():
+            # A sum of terms of either sign is good to the last bit of the terms.
+            atol = 1e-15 * np.abs(value).max()
+            np.testing.assert_allclose(together.values[product][k], value, rtol=1e-12, atol=atol)
+            for tracer, slope in single.derivatives[product].items():
+                got = together.derivatives[product][tracer][k]
+                np.testing.assert_allclose(got, slope, rtol=1e-12)

@@ -12,10 +12,12 @@ from kspipe.conversions import (
     ATOMIC,
     BALMER,
     EXTINCTION,
+    GAS_TO_DUST,
     IMFS,
     INPUTS,
     LINE_RATIO,
     MASS_METALLICITY,
+    MASS_TO_LIGHT,
     NITROGEN,
     STAR_FORMATION,
     STARS,
@@ -37,9 +39,11 @@ FAMILIES = {
     "alpha_co": ALPHA_CO,
     "balmer": BALMER,
     "extinction": EXTINCTION,
+    "gas_to_dust": GAS_TO_DUST,
     "imf": IMFS,
     "line_ratio": LINE_RATIO,
     "mass_metallicity": MASS_METALLICITY,
+    "mass_to_light": MASS_TO_LIGHT,
     "nitrogen": NITROGEN,
     "star_formation": STAR_FORMATION,
     "stars": STARS,
@@ -62,6 +66,7 @@ WITHOUT_MASS = [
         BALMER,
         NITROGEN,
         TOTAL_INFRARED,
+        MASS_TO_LIGHT,
     )
     for record in family
 ]
@@ -116,7 +121,7 @@ def test_a_record_cannot_be_changed(record) -> None:
 def test_conventions_are_stated(record: Record) -> None:
     assert record.helium_factor in (None, HELIUM_FACTOR)
     assert (record.helium_factor is None) == (record in WITHOUT_MASS)
-    assert (record.imf is None) == (record not in [*STAR_FORMATION, *IMFS, *STARS])
+    assert (record.imf is None) == (record not in [*STAR_FORMATION, *IMFS, *STARS, *MASS_TO_LIGHT])
     assert record.scatter_dex is None or 0 < record.scatter_dex < 1
     for limits in record.ranges:
         assert limits.low < limits.high
