@@ -17,6 +17,8 @@ Array = NDArray[np.float64]
 # Relative step after which a root is final: Newton's next step would be of the order of its square.
 LAST_STEP: Final = 1e-7
 MOST_STEPS: Final = 200
+# A function of order one that is this near to zero is at its root.
+CLOSE: Final = 1e-13
 # Pixels that are done are left out once fewer than this share still moves.
 WORTH_LEAVING_OUT: Final = 0.6
 
@@ -34,7 +36,7 @@ def solve_falling(
     Parameters
     ----------
     residual : callable
-        ``residual(x, inputs)``; for an array or a `Dual`, with the inputs of the same pixels.
+        ``residual(x, inputs)``, of order one; for an array or a `Dual`, with the inputs of the same pixels.
     inputs : mapping of str to float64 array
         Each a single value or of the shape of `start`.
     low, high : float
@@ -72,7 +74,8 @@ def solve_falling(
             root[asked[np.isnan(at_low)]] = np.nan
         bracket = np.full(root.size, low), np.full(root.size, high)
         last = before = np.full(root.size, high - low)
-        moving = root > low
+        # Many first guesses are the root, which their value alone shows.
+        moving = (root > low) & ~(np.abs(residual(root, taken)) <= CLOSE)
         for _ in range(MOST_STEPS):
             n_moving = np.count_nonzero(moving)
             if n_moving < WORTH_LEAVING_OUT * index.size or n_moving == 0:

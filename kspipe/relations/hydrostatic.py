@@ -13,7 +13,7 @@ from kspipe.kernels.rootfind import solve_falling
 from kspipe.relations.conventions import free_fall_myr
 from kspipe.relations.law import LAWS, Direction, Law, Outcome
 from kspipe.relations.parameters import ANCHOR, CLUMPING, Parameter
-from kspipe.relations.shielding import mckee2010_ratio
+from kspipe.relations.shielding import shielding_demand, shielding_reach
 from kspipe.relations.vertical import thermal_pressure
 
 __all__ = ["SOLAR_SFR_MSUN_YR_KPC2", "krumholz2013_chi", "toomre_time_myr", "two_phase_density"]
@@ -24,7 +24,6 @@ PARTICLES: Final = 1.1
 # Sigma_SFR of the solar neighbourhood, to which the radiation field is scaled (krumholz2013).
 SOLAR_SFR_MSUN_YR_KPC2: Final = 2.5e-3
 # 1 km/s/kpc is 1.0227e-3 per Myr.
-LN2: Final = np.log(2.0)
 # Fraction that is small, and ln(2/s) that is large: there is no field at s = 2e-26.
 SMALL: Final = 1e-6
 MOST_W: Final = 60.0
@@ -84,62 +83,63 @@ def _solved(own: Mapping[str, Any], given: Mapping[str, float], field_of: Any) -
     smaller fraction: there is one root.
     """
     z = own["z_prime"]
-    two_phase = 72.0 * (1.0 + 3.1 * z**0.365) / (23.0 * 4.1)
-    taken = {**own, "two_phase": two_phase}
+    reach = shielding_reach(given["clumping"] * own["sigma_gas"], z)
+    taken = {
+        **own,
+        "two_phase": 72.0 * (1.0 + 3.1 * z**0.365) / (23.0 * 4.1),
+        "most_w": np.log(2.0 * reach),
+    }
 
     def excess(w: Any, o: Mapping[str, Any]) -> Any:
         """Ln of s = 2 exp(-w) over the s of the pressure and the field that f(w) implies."""
-        ratio = _ratio_at(*_fractions(w), o, given, field_of)
-        return (LN2 - w) - np.log(ratio)
+        return o["most_w"] - w - np.log(shielding_demand(_chi_at(w, o, field_of)))
 
     bare = {name: plain(number) for name, number in taken.items()}
     shape = np.broadcast_shapes(*(np.shape(number) for number in bare.values()))
     # Two-phase balance gives most of the gas its fraction, and a floor only raises it.
-    complex_density = given["clumping"] * bare["sigma_gas"]
-    s = mckee2010_ratio(complex_density, bare["z_prime"], bare["two_phase"])
-    start = np.maximum(LN2 - np.log(s), 0.02)
-    doubtful = s >= 2.0
+    start = bare["most_w"] - np.log(shielding_demand(bare["two_phase"]))
+    doubtful = start <= 0.0
+    start = np.maximum(start, 0.02)
     if "g0" not in bare:
         # Where little is molecular the field goes as f, and s with it.
-        per_fraction = _ratio_at(SMALL, 1.0, bare, given, field_of) / SMALL
+        per_fraction = shielding_demand(_chi_at(1.5 * SMALL, bare, field_of)) / plain(reach) / SMALL
         thin = 3.0 / (3.0 + per_fraction)
         start = np.where(doubtful, thin, np.maximum(start, thin))
-        doubtful = np.zeros(np.shape(s), dtype=bool)
+        doubtful = np.zeros(np.shape(start), dtype=bool)
     start, doubtful = np.broadcast_to(start, shape), np.broadcast_to(doubtful, shape)
     root = solve_falling(excess, bare, 0.0, MOST_W, start, doubtful)
     # Where even pure atomic gas is not shielded the fraction is exactly zero.
-    f, _ = _fractions(implicit(excess, root, taken))
+    f = _fraction(implicit(excess, root, taken))
     for is_end, value in ((root == 0.0, 0.0), (root > 0.999 * MOST_W, 1.0)):
         f = choose(is_end, value, f) if is_end.any() else f
     return f
 
 
-def _fractions(w: Any) -> tuple[Any, Any]:
-    """f_H2 of mckee2010 and 1 - f_H2 by w = ln(2/s), each accurate where it is small."""
+def _fraction(w: Any) -> Any:
+    """f_H2 of mckee2010 by w = ln(2/s), accurate where it is small."""
+    below = -np.expm1(-w)
+    return below / (1.5 - 0.5 * below)
+
+
+def _chi_at(w: Any, o: Mapping[str, Any], field_of: Any) -> Any:
+    """Field over density where s = 2 exp(-w)."""
     s_half = np.exp(-w)
-    below = 1.0 + 0.5 * s_half
-    return -np.expm1(-w) / below, 1.5 * s_half / below
-
-
-def _ratio_at(
-    f: Any, f_atom: Any, o: Mapping[str, Any], given: Mapping[str, float], field_of: Any
-) -> Any:
-    """S of the pressure and field that a fraction implies."""
-    chi = krumholz2013_chi(f_atom, o["sigma_gas"], o["rho_sd"], field_of(f, o), o["two_phase"])
-    return mckee2010_ratio(given["clumping"] * o["sigma_gas"], o["z_prime"], chi)
+    # 1 - f, accurate where that is small.
+    f_atom = 1.5 * s_half / (1.0 + 0.5 * s_half)
+    return krumholz2013_chi(f_atom, o["sigma_gas"], o["rho_sd"], field_of(w, o), o["two_phase"])
 
 
 def _krumholz2013(own: Mapping[str, Any], given: Mapping[str, float]) -> Outcome:
     """Sigma_SFR = f_H2 eps_ff Sigma / t_ff at a given field."""
-    f = _solved(own, given, lambda _f, o: o["g0"])
+    f = _solved(own, given, lambda _w, o: o["g0"])
     return Outcome(f, f * own["sigma_gas"] * given["efficiency"] / _free_fall(own, given))
 
 
 def _krumholz2013_own_field(own: Mapping[str, Any], given: Mapping[str, float]) -> Outcome:
     """Take the field from the star formation that is predicted."""
     per_fraction = own["sigma_gas"] * given["efficiency"] / _free_fall(own, given)
-    taken = {**own, "rate": per_fraction}
-    f = _solved(taken, given, lambda f, o: f * o["rate"] / SOLAR_SFR_MSUN_YR_KPC2)
+    taken = {**own, "field": per_fraction / SOLAR_SFR_MSUN_YR_KPC2}
+    f = _solved(taken, given, lambda w, o: _fraction(w) * o["field"])
     return Outcome(f, f * per_fraction)
 
 

@@ -15,7 +15,13 @@ from kspipe.kernels.dual import choose
 from kspipe.relations.law import LAWS, Direction, Law, Outcome
 from kspipe.relations.parameters import ANCHOR, CLUMPING, RATE_CHOICES, Parameter
 
-__all__ = ["krumholz2009_fraction", "mckee2010_fraction", "mckee2010_ratio", "two_phase_chi"]
+__all__ = [
+    "krumholz2009_fraction",
+    "mckee2010_fraction",
+    "shielding_demand",
+    "shielding_reach",
+    "two_phase_chi",
+]
 
 
 def krumholz2009_fraction(sigma_complex_msun_pc2: Any, z_prime: Any) -> Any:
@@ -72,13 +78,18 @@ def mckee2010_fraction(sigma_complex_msun_pc2: Any, z_prime: Any, chi: Any) -> A
     -----
     f = 1 - (3/4) s / (1 + s/4), s = ln(1 + 0.6 chi + 0.01 chi^2) / (0.6 tau), tau = 0.066 Sigma Z'.
     """
-    s = mckee2010_ratio(sigma_complex_msun_pc2, z_prime, chi)
+    s = shielding_demand(chi) / shielding_reach(sigma_complex_msun_pc2, z_prime)
     return choose(s < 2.0, (1.0 - 0.5 * s) / (1.0 + 0.25 * s), 0.0 * s)
 
 
-def mckee2010_ratio(sigma_complex_msun_pc2: Any, z_prime: Any, chi: Any) -> Any:
-    """The s of `mckee2010_fraction`, which takes the same arguments."""
-    return np.log1p(chi * (0.6 + 0.01 * chi)) / (0.0396 * sigma_complex_msun_pc2 * z_prime)
+def shielding_demand(chi: Any) -> Any:
+    """Logarithm ln(1 + 0.6 chi + 0.01 chi^2) that shielding must make up for (mckee2010)."""
+    return np.log1p(chi * (0.6 + 0.01 * chi))
+
+
+def shielding_reach(sigma_complex_msun_pc2: Any, z_prime: Any) -> Any:
+    """0.6 tau of a complex, tau = 0.066 Sigma Z' (mckee2010): s is the demand over it."""
+    return sigma_complex_msun_pc2 * z_prime * (0.6 * 0.066)
 
 
 def two_phase_chi(z_prime: Any) -> Any:

@@ -49,10 +49,10 @@ def thermal_pressure(diffuse_msun_pc2: Any, bound_msun_pc2: Any, rho_sd_msun_pc3
     R = bound / diffuse, written so that it stays finite without diffuse gas.
     """
     pi_g = np.pi * G_PC_KMS2_MSUN
-    weight = diffuse_msun_pc2 * (diffuse_msun_pc2 + 2.0 * bound_msun_pc2)
     outer = 32.0 * SHAPE * PRESSURE_RATIO * WARM_FRACTION * WARM_SPEED_KMS**2 / pi_g
-    root = np.sqrt(weight * weight + outer * rho_sd_msun_pc3 * diffuse_msun_pc2 * diffuse_msun_pc2)
-    return (weight + root) * (pi_g / (4.0 * PRESSURE_RATIO) * PRESSURE_K_CM3)
+    inner = diffuse_msun_pc2 + 2.0 * bound_msun_pc2
+    height = inner + np.sqrt(inner * inner + outer * rho_sd_msun_pc3)
+    return diffuse_msun_pc2 * height * (pi_g / (4.0 * PRESSURE_RATIO) * PRESSURE_K_CM3)
 
 
 def dynamical_pressure(
