@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kspipe.conversions import STAR_FORMATION, imf_factor
-from kspipe.core.errors import KspipeWarning
+from kspipe.core.errors import Fault, KspipeWarning, OutputError, RecipeError
 from kspipe.core.progress import Progress, no_progress
 from kspipe.kernels.coarse import evaluate_smoothly
 from kspipe.kernels.geometry import disc_radius, position_offsets
@@ -21,10 +21,10 @@ from kspipe.maps.product import read_matched, write_matched, write_product
 from kspipe.maps.read import load_map, relative_noise, with_photon_noise
 from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import match_map, measure_noise, measure_noise_correlation
-from kspipe.recipe import Recipe
+from kspipe.recipe import Recipe, load_recipe
 from kspipe.recipe.resolved import resolved_recipe
 from kspipe.stages.folder import ProductFolder
-from kspipe.stages.plan import InMemory, Plan, make_plan, records_of
+from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan, records_of
 from kspipe.stages.steps import (
     STEPS_FILE,
     judge_maps,
@@ -89,6 +89,11 @@ def reduce_maps(
     totals = read_totals(plan)
     folder = ProductFolder.open(out)
     stale = folder.check(plan.prints, overwrite=overwrite)
+    if not stale and not _asks_the_same(out, recipe):
+        if not overwrite:
+            what = "the recipe asks for another comparison than the one kept in recipe.toml"
+            raise OutputError(Fault(str(out), what, "type --overwrite, or another --out"))
+        stale = ["convert"]
     if not stale:
         log.info("reduce: nothing changed, %s is reused", out)
         return False
@@ -122,6 +127,15 @@ def reduce_maps(
         )
         progress(steps, steps, "reduced")
     return True
+
+
+def _asks_the_same(out: Path, recipe: Recipe) -> bool:
+    """Whether DIR/recipe.toml, which the comparison reads, asks what the recipe asks."""
+    try:
+        kept = load_recipe(out / "recipe.toml", in_memory=frozenset(recipe.maps))
+    except RecipeError:
+        return True  # its files have moved, which changes no number
+    return compare_print(kept, "") == compare_print(recipe, "")
 
 
 def _is_gone(stage: str, plan: Plan) -> bool:
