@@ -12,18 +12,25 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kspipe.conversions import ALPHA_CO, STAR_FORMATION, Ratio, Surface, imf_factor
-from kspipe.core.errors import KspipeWarning
+from kspipe.core.errors import Fault, KspipeWarning, OutputError, RecipeError
 from kspipe.core.progress import Progress, no_progress
 from kspipe.maps.product import read_matched, write_matched, write_product
 from kspipe.maps.read import load_map, relative_noise, with_photon_noise
 from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import match_map, measure_noise, measure_noise_correlation
-from kspipe.recipe import Recipe
+from kspipe.recipe import Recipe, load_recipe
 from kspipe.recipe.quantity import Measured
 from kspipe.recipe.resolved import resolved_recipe
 from kspipe.stages.blank_sky import outside_galaxy, without_background
 from kspipe.stages.folder import TRIAL_STAGES, ProductFolder
-from kspipe.stages.plan import InMemory, Plan, choices_of, make_plan, records_of
+from kspipe.stages.plan import (
+    InMemory,
+    Plan,
+    choices_of,
+    compare_print,
+    make_plan,
+    records_of,
+)
 from kspipe.stages.steps import (
     STEPS_FILE,
     judge_maps,
@@ -85,6 +92,11 @@ def reduce_maps(
     totals = read_totals(plan)
     folder = ProductFolder.open(out)
     stale = folder.check(plan.prints, overwrite=overwrite)
+    if not stale and not _asks_the_same(out, recipe):
+        if not overwrite:
+            what = "the recipe asks for another comparison than the one kept in recipe.toml"
+            raise OutputError(Fault(str(out), what, "type --overwrite, or another --out"))
+        stale = ["convert"]
     if not stale:
         log.info("reduce: nothing changed, %s is reused", out)
         return False
@@ -120,6 +132,15 @@ def reduce_maps(
         )
         progress(steps, steps, "reduced")
     return True
+
+
+def _asks_the_same(out: Path, recipe: Recipe) -> bool:
+    """Whether DIR/recipe.toml, which the comparison reads, asks what the recipe asks."""
+    try:
+        kept = load_recipe(out / "recipe.toml", in_memory=frozenset(recipe.maps))
+    except RecipeError:
+        return True  # its files have moved, which changes no number
+    return compare_print(kept, "") == compare_print(recipe, "")
 
 
 def _is_gone(stage: str, plan: Plan) -> bool:

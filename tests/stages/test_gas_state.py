@@ -416,3 +416,21 @@ def test_what_makes_a_comparison_stale(typed, folder) -> None:
     write_linewidth(moved, "m/s", 7000.0)
     with pytest.raises(OutputError, match="stale"):
         compare_relations(out)
+
+
+def test_other_choices_reach_a_folder_that_is_there(typed, folder) -> None:
+    out = shutil.copytree(typed, folder / "other choices")
+    width = {"map": "width.fits", "is": "fwhm", "error": "0.3 km/s"}
+    same = TYPED | {"linewidth": width}
+    inside = {"scatter": "0.35 dex"}
+    assert not reduce_maps(recipe_of(folder, same, inside_beam=inside), out)
+    other = recipe_of(folder, same | {"jeans": "virial"}, inside_beam=inside)
+    with pytest.raises(OutputError, match="another comparison"):
+        reduce_maps(other, out)
+    matched = {path: path.stat().st_mtime_ns for path in (out / "matched").iterdir()}
+    before = image(out, "jeans_mass_shielded")
+    assert reduce_maps(other, out, overwrite=True)
+    compare_relations(out)
+    # (5^1.5 (3/(4 pi))^0.5) / pi^1.5; nothing is smoothed again.
+    assert_maps_close(image(out, "jeans_mass_shielded"), before * 0.98103, rtol=1e-4)
+    assert matched == {path: path.stat().st_mtime_ns for path in (out / "matched").iterdir()}
