@@ -294,7 +294,11 @@ def compare_print(recipe: Recipe, reduction_print: str) -> str:
             "reduction": reduction_print,
             "relations": {n: _values(t, "defaults") for n, t in recipe.relations.items()},
             "laws": [LAWS.get(t.law).formula for t in recipe.relations.values()],
-            "comparison": _values(recipe.comparison),
+            "comparison": _values(recipe.comparison, "environments"),
+            "environments": {
+                name: (table.radii_kpc or file_checksum(Path(table.where)), table.alpha_co_scale)
+                for name, table in recipe.comparison.environments.items()
+            },
             "seed": recipe.seed,
         }
     )

@@ -32,7 +32,7 @@ def folder(tmp_path_factory):
     folder = tmp_path_factory.mktemp("fits")
     raw = demo_recipe(folder, comparison=COMPARISON)
     position = parse_recipe({**raw, "comparison": {}}, folder=folder).galaxy.centre
-    (folder / "drawn.reg").write_text(DISC.format(ra=position.ra_deg, dec=position.dec_deg))
+    (folder / "drawn.reg").write_text(DISC.format(ra=position.lon_deg, dec=position.lat_deg))
     reduce_maps(parse_recipe(raw, folder=folder), folder / "out")
     compare_relations(folder / "out")
     return folder
