@@ -173,12 +173,13 @@ def _demo_hdus() -> dict[str, fits.PrimaryHDU]:
 def demo_recipe(folder: Path, **changes: Any) -> dict[str, Any]:
     """Write the demonstration maps to `folder`; return recipes/orrinda_short.toml on them.
 
-    Changes replace whole tables (``None`` takes one out).
+    Changes replace whole tables (``None`` takes one out). Fits take seconds and are off unless
+    ``comparison`` is among the changes.
     """
     text = (CHECKOUT / "recipes" / "orrinda_short.toml").read_text(encoding="utf-8")
     raw = tomllib.loads(text.replace("../demo_maps/", ""))
     for stem, hdu in _demo_hdus().items():
         if not (folder / f"{stem}.fits").exists():
             hdu.writeto(folder / f"{stem}.fits")
-    raw |= changes
+    raw |= {"comparison": {"fits": False}, **changes}
     return copy.deepcopy({key: value for key, value in raw.items() if value is not None})

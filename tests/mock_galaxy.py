@@ -25,6 +25,7 @@ class MockGalaxy:
     """Maps of 144 x 144 pixels, 6 of them in a beam."""
 
     true_gas: np.ndarray
+    true_mol: np.ndarray
     true_sfr: np.ndarray
     gas: np.ndarray
     sfr: np.ndarray
@@ -61,6 +62,7 @@ def paint(
     co_noise = mol_error * beam_noise(rng)
     return MockGalaxy(
         true_gas=gas,
+        true_mol=mol,
         true_sfr=sfr,
         gas=gas + co_noise + atom_error * beam_noise(rng),
         sfr=sfr + sfr_error * beam_noise(rng),

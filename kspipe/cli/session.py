@@ -20,7 +20,7 @@ from rich.table import Table
 from kspipe.core.errors import KspipeError, KspipeWarning
 from kspipe.core.progress import Progress as ProgressCall
 from kspipe.core.progress import no_progress
-from kspipe.core.report import noted_lines, relation_rows, total_rows
+from kspipe.core.report import fit_lines, noted_lines, relation_rows, total_rows
 
 __all__ = ["print_alternatives", "print_chain", "print_steps", "print_summary", "session"]
 
@@ -160,6 +160,8 @@ def print_summary(folder: Path) -> None:
         "flagged: " + (", ".join(f"{n} {name}" for name, n in counted.items()) or "none"),
         markup=False,
     )
+    for line in fit_lines(summary):
+        console.print(line, markup=False)
     for line in noted_lines(summary):
         console.print(f"note: {line}", markup=False)
     console.print(f"products in {folder}", markup=False)

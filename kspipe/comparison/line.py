@@ -29,6 +29,8 @@ Array = NDArray[np.float64]
 
 # Twice the log-likelihood ratio at one-sided 95 %.
 _ONE_SIDED_95: Final = 2.705543454095404
+# The same, above which a scatter is a value and not a limit: 3 sigma.
+_DETECTION: Final = 9.0
 _NONE: Final = GaussianPrior(0.0, math.inf)
 
 
@@ -154,6 +156,8 @@ def fit_line_phases(
     obstacle = first.obstacle()
     if obstacle:
         return PhasedLine(LineFit(first.n, message=obstacle))
+    if first.is_one_map:
+        return PhasedLine(_one_map(first))
     usable = [phase for phase in phases if phase.samples.obstacle() is None]
     models: list[LatentModel] = []
     optima: list[Optimum] = []
@@ -289,6 +293,23 @@ def _written(
     )
 
 
+def _one_map(samples: LinearSamples) -> LineFit:
+    """What a map against itself gives: there is nothing to fit."""
+    data = samples.measurements()
+    factor = float(np.sum(data.cov) / np.sum(data.var_x))
+    return LineFit(
+        samples.n,
+        slope=1.0,
+        slope_error=0.0,
+        intercept=math.log10(factor) if factor > 0 else math.nan,
+        intercept_error=0.0,
+        pivot=0.0,
+        scatter_dex=0.0,
+        scatter_error=0.0,
+        message="x and y carry the same noise: one map stands on both axes, nothing is measured",
+    )
+
+
 def _population(parameters: Array, least_width: float) -> dict[str, list[float]]:
     mixture = GaussianMixture.from_parameters(parameters, least_width)
     return {name: getattr(mixture, name).tolist() for name in ("weights", "means", "widths")}
@@ -302,7 +323,7 @@ def _scatter_limit(model: LatentModel, data: Measurements, best: Optimum) -> flo
         return None
     floor = maximise(model, data, _with_scatter(best.parameters, LEAST_SCATTER_DEX), held=(2,))
     peak = max(best.log_posterior, floor.log_posterior)
-    if 2.0 * (peak - floor.log_posterior) > _ONE_SIDED_95:
+    if 2.0 * (peak - floor.log_posterior) > _DETECTION:
         return None
     low, high, at = math.exp(best.parameters[2]), None, best
     scatter = max(2.0 * low, 0.02)

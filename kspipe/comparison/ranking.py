@@ -123,6 +123,8 @@ def rank_relations(
     rng: np.random.Generator,
     *,
     zero_point_width_dex: float = 0.0,
+    components: int = 2,
+    population: Array | None = None,
 ) -> Ranking:
     """Rank relations by what they predict of blocks they were not fitted to.
 
@@ -137,6 +139,8 @@ def rank_relations(
     rng : numpy.random.Generator
     zero_point_width_dex : float
         Prior width of each relation's zero point, for what all pixels share; 0 holds it fixed.
+    components, population
+        As for `fit_relation`.
 
     Returns
     -------
@@ -163,7 +167,9 @@ def rank_relations(
         free = tuple(f for f in use.free if f.name != ZERO_POINT)
         if zero_point_width_dex > 0:
             free = (FreeParameter(ZERO_POINT, zero_point_width_dex), *free)
-        fit, model, best = fit_relation(common, known, replace(use, free=free))
+        fit, model, best = fit_relation(
+            common, known, replace(use, free=free), components=components, population=population
+        )
         if model is None or best is None:
             left_out[use.name] = fit.message
         elif fit.n < common.n:

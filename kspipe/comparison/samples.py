@@ -91,9 +91,13 @@ class LinearSamples:
                     f"{name} is not detected: the sum of {kept.n} samples is {signal:.1f} times "
                     f"its error, less than {_DETECTION:g}"
                 )
-        if np.all(kept.cov**2 > 0.99 * kept.var_x * kept.var_y):
-            return "x and y carry the same noise: one map stands on both axes"
         return None
+
+    @property
+    def is_one_map(self) -> bool:
+        """Whether x and y carry the same noise to within 1 %, as multiples of one map do."""
+        kept = self.take(self.usable)
+        return bool(kept.x.size and np.all(kept.cov**2 > 0.99**2 * kept.var_x * kept.var_y))
 
 
 _VARIANCES: Final = ("var_x", "var_y", "cov")

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from typing import Any
 
-__all__ = ["measured", "noted_lines", "relation_rows", "total_rows"]
+__all__ = ["fit_lines", "measured", "noted_lines", "relation_rows", "total_rows"]
 
 _NAMES = {
     "mass_atom": "atomic gas",
@@ -46,6 +46,29 @@ def noted_lines(summary: dict[str, Any]) -> list[str]:
             lines.append(f"maps.{name}: {negative['text']}{masked}")
         if spacings.get("systematic"):
             lines.append(f"maps.{name}: {spacings['text']}")
+    return lines
+
+
+def fit_lines(summary: dict[str, Any]) -> list[str]:
+    """Fitted lines and what the ranking says, one line for each; empty where nothing was fitted."""
+    lines = []
+    for fit in summary.get("fits", {}).get("lines", []):
+        name = f"{fit['sample']}, log sigma_sfr against log {fit['x']}"
+        if fit["slope"] is None or not fit["is_fitted"]:
+            lines.append(f"{name}: {fit['message']}")
+            continue
+        scatter = (
+            f"below {fit['scatter_dex']:.2g} (95 %)"
+            if fit["is_limit"]
+            else measured(fit["scatter_dex"], fit["scatter_error"])
+        )
+        lines.append(
+            f"{name}: slope {measured(fit['slope'], fit['slope_error'])}, scatter {scatter} dex, "
+            f"{fit['n']} independent samples of {fit['n_pixels']} pixels"
+        )
+    for ranking in summary.get("ranking", []):
+        lines += [f"{ranking['footing']}: {d['sentence']}" for d in ranking["differences"]]
+        lines += [f"{name} is not ranked: {why}" for name, why in ranking["left_out"].items()]
     return lines
 
 

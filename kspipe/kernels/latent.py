@@ -199,6 +199,8 @@ def _closest(mu: Array, s: float, y: Array, sigma: Array, *, steps: int = 1) -> 
         weighted = (mu / s**2 + from_y / width**2) / (1.0 / s**2 + 1.0 / width**2)
         starts = np.array([mu, np.broadcast_to(from_y, mu.shape), weighted])
         costs = _cost(starts, mu, s, y, sigma)
+        if not steps:
+            return np.asarray(costs.min(axis=0))
         pick = costs.argmin(axis=0)[None]
         best = np.take_along_axis(costs, pick, axis=0)[0]
         at = np.take_along_axis(starts, pick, axis=0)[0]

@@ -127,6 +127,7 @@ def fit_all(
     if line.mean.is_fitted:
         measured = correlation_length(_line_residual(line.mean, gas, sfr), used)
         length = max(beam_length, measured) if math.isfinite(measured) else beam_length
+    population = line.optima[0].parameters[3:] if line.optima else None
     blocks = square_blocks(phases[0].positions, BLOCK_LENGTHS * length, grid.centre_pixel)
     return {
         "fits": {
@@ -135,9 +136,9 @@ def fit_all(
             "apertures": [
                 asdict(a) for a in peak_apertures(gas, sfr, used, fwhm, grid.jacobian_arcsec())
             ],
-            "relations": _relations(galaxy, phases[0].samples, masks[0] & used),
+            "relations": _relations(galaxy, phases[0].samples, masks[0] & used, population),
         },
-        "ranking": _ranking(galaxy, phases[0].samples, masks[0] & used, blocks),
+        "ranking": _ranking(galaxy, phases[0].samples, masks[0] & used, blocks, population),
         "trends": _trends(galaxy, residuals, masks[0] & used),
     }
 
@@ -296,27 +297,35 @@ def _uses(recipe: Recipe) -> list[RelationUse]:
     ]
 
 
-def _relations(galaxy: _Galaxy, samples: LinearSamples, mask: Mask) -> dict[str, Any]:
+def _relations(
+    galaxy: _Galaxy, samples: LinearSamples, mask: Mask, population: Array | None
+) -> dict[str, Any]:
     """Each relation with its free parameters; the molecular fraction where CO was observed."""
     disc = galaxy.disc
     inputs = _inputs(disc, mask)
     components = galaxy.recipe.comparison.population_components
     out: dict[str, Any] = {}
     for use in _uses(galaxy.recipe):
-        fit, _, _ = fit_relation(samples, inputs, use, components=components)
+        fit, _, _ = fit_relation(samples, inputs, use, components=components, population=population)
         out[use.name] = {"sigma_sfr": asdict(fit)}
         if "sigma_mol" in disc.surfaces:
             of_gas = _samples(disc.surfaces["sigma_gas"], disc.surfaces["sigma_mol"], mask)
             molecular = RelationUse(
                 use.name, use.law, use.parameters, (FreeParameter("zero_point"),), "f_mol"
             )
-            fit, _, _ = fit_relation(of_gas, inputs, molecular, components=components)
+            fit, _, _ = fit_relation(
+                of_gas, inputs, molecular, components=components, population=population
+            )
             out[use.name]["f_mol"] = asdict(fit)
     return out
 
 
 def _ranking(
-    galaxy: _Galaxy, samples: LinearSamples, mask: Mask, blocks: NDArray[np.intp]
+    galaxy: _Galaxy,
+    samples: LinearSamples,
+    mask: Mask,
+    blocks: NDArray[np.intp],
+    population: Array | None,
 ) -> list[dict[str, Any]]:
     """Both footings, side by side."""
     uses = _uses(galaxy.recipe)
@@ -326,7 +335,14 @@ def _ranking(
     for width in (0.0, galaxy.recipe.comparison.zero_point_prior):
         rng = generator(galaxy.recipe.seed, "ranking", f"{width:g}")
         ranking = rank_relations(
-            samples, _inputs(galaxy.disc, mask), uses, blocks, rng, zero_point_width_dex=width
+            samples,
+            _inputs(galaxy.disc, mask),
+            uses,
+            blocks,
+            rng,
+            zero_point_width_dex=width,
+            components=galaxy.recipe.comparison.population_components,
+            population=population,
         )
         out.append(asdict(ranking))
     return out

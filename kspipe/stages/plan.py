@@ -357,7 +357,11 @@ def compare_print(recipe: Recipe, reduction_print: str) -> str:
             "laws": [LAWS.get(t.law).formula for t in recipe.relations.values()],
             "disc": [t and _values(t) for t in (recipe.midplane, recipe.radiation_field)],
             "rotation": recipe.rotation and _values(recipe.rotation),
-            "comparison": _values(recipe.comparison),
+            "comparison": _values(recipe.comparison) | {"environments": None},
+            "environments": {
+                name: (table.radii_kpc or file_checksum(Path(table.where)), table.alpha_co_scale)
+                for name, table in recipe.comparison.environments.items()
+            },
             "seed": recipe.seed,
             **({"gas state": state_values(recipe.gas_state)} if recipe.gas_state else {}),
             **({"inside beam": _values(recipe.inside_beam)} if recipe.inside_beam else {}),
