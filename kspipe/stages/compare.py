@@ -4,14 +4,18 @@ from __future__ import annotations
 
 import logging
 from collections.abc import Mapping
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 import numpy as np
+from astropy.table import Table
 from numpy.typing import NDArray
 
 from kspipe import __version__
 from kspipe.comparison import (
+    Headline,
+    Known,
     Residuals,
     headline,
     independent_samples,
@@ -23,11 +27,11 @@ from kspipe.core.seeds import generator
 from kspipe.kernels.geometry import beam_axes
 from kspipe.kernels.noise import total_error
 from kspipe.maps.product import read_matched, write_product
-from kspipe.maps.skymap import Flag
+from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe, load_recipe
 from kspipe.relations import LAWS
-from kspipe.stages.atomic_only import from_atomic, summaries
+from kspipe.stages.atomic_only import FromAtomic, from_atomic, summaries
 from kspipe.stages.environments import environment_areas
 from kspipe.stages.fits import fit_all, write_fits_table
 from kspipe.stages.folder import TRIAL_STAGES, ProductFolder
@@ -37,12 +41,15 @@ from kspipe.stages.pixels import pixel_table, write_pixels
 from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan
 from kspipe.stages.profiles import profile_table, write_profiles
 from kspipe.stages.relation_notes import history_lines, relation_notes
-from kspipe.stages.state import gas_state_of
-from kspipe.stages.steps import read_findings
+from kspipe.stages.state import GasState, gas_state_of
+from kspipe.stages.steps import Findings, read_findings
 from kspipe.stages.summary import make_summary, summary_text
-from kspipe.stages.surface import surfaces_of
+from kspipe.stages.surface import Disc, surfaces_of
 
 __all__ = ["compare_relations", "reduced_plan"]
+
+Array = NDArray[np.float64]
+Mask = NDArray[np.bool_]
 
 log = logging.getLogger(__name__)
 
@@ -90,6 +97,57 @@ def compare_relations(
     if not folder.check({"compare": print_}, overwrite=overwrite):
         log.info("compare: nothing changed, %s is reused", out)
         return False
+    compared = _compare(plan, out, progress)
+    drop = tuple(stage for stage in folder.stages if stage in ("figures", *TRIAL_STAGES))
+    with folder.publish({"compare": print_}, drop=drop) as staging:
+        _write_all_residuals(compared, staging / "residuals")
+        pixels, biases = _pixels(compared)
+        write_pixels(pixels, staging / "pixels.ecsv")
+        if compared.state:
+            compared.state.write(staging)
+        write_profiles(_profiles(compared), staging)
+        summary = _summary(compared, read_findings(out), biases)
+        if recipe.comparison.fits:
+            sections = fit_all(
+                recipe, compared.disc, grid, compared.used, compared.residuals, compared.beam
+            )
+            write_fits_table(sections["fits"], staging / "fits.ecsv")
+            summary.update(sections)
+        (staging / "summary.json").write_text(summary_text(summary), encoding="utf-8")
+    return True
+
+
+@dataclass(frozen=True)
+class _Compared:
+    """A galaxy with everything that it was held against, before any file is written."""
+
+    plan: Plan
+    matched: dict[str, SkyMap]
+    disc: Disc
+    used: Mask
+    independent: Mask
+    inputs: dict[str, Known]
+    residuals: dict[str, Residuals]
+    headlines: dict[str, Headline]
+    notes: dict[str, dict[str, Any]]
+    inverted: dict[str, FromAtomic]
+    state: GasState | None
+
+    @property
+    def beam(self) -> Array:
+        """Covariance of the common beam [arcsec2]."""
+        return next(iter(self.matched.values())).beam_arcsec2
+
+
+def _compare(plan: Plan, out: Path, progress: Progress) -> _Compared:
+    """Evaluate every relation on every pixel.
+
+    Raises
+    ------
+    OutputError
+        If no pixel is covered by all maps.
+    """
+    recipe, grid = plan.recipe, plan.grid
     matched = {name: read_matched(out / "matched" / f"{name}.fits") for name in recipe.maps}
     disc = surfaces_of(recipe, matched, grid)
     gas, sfr = disc.surfaces["sigma_gas"], disc.surfaces["sigma_sfr"]
@@ -104,10 +162,8 @@ def compare_relations(
     )
     inputs = law_inputs(recipe, disc)
     residuals, headlines, notes = {}, {}, {}
-    names = list(recipe.relations)
-    for done, name in enumerate(names):
-        progress(done, len(names), f"comparing with {name}")
-        table = recipe.relations[name]
+    for done, (name, table) in enumerate(recipe.relations.items()):
+        progress(done, len(recipe.relations), f"comparing with {name}")
         residuals[name] = predict_residuals(inputs, sfr, disc.flags, table.law, table.parameters)
         notes[name] = relation_notes(recipe, name, inputs, disc, used)
         rng = generator(recipe.seed, "compare", name)
@@ -115,56 +171,90 @@ def compare_relations(
             residuals[name], sfr, used, independent, grid.jacobian_arcsec(), rng
         )
     inverted = from_atomic(recipe, inputs, disc)
-    progress(len(names), len(names), "compared")
+    progress(len(recipe.relations), len(recipe.relations), "compared")
     state = gas_state_of(plan, disc)
-    drop = tuple(stage for stage in folder.stages if stage in ("figures", *TRIAL_STAGES))
-    with folder.publish({"compare": print_}, drop=drop) as staging:
-        (staging / "residuals").mkdir()
-        for name in names:
-            more = inverted[name].extensions if name in inverted else {}
-            lines = history_lines(notes[name])
-            path = staging / "residuals" / f"{name}.fits"
-            _write_residuals(path, recipe, name, residuals, beam, grid, more, lines)
-        meta = {
-            "galaxy": recipe.galaxy.name,
-            "kspipe": __version__,
-            "imf": recipe.star_formation.imf,
-            "flags": Flag.meanings(),
-        }
-        pixels = pixel_table(disc, residuals, used, independent, grid, meta)
-        for name, one in inverted.items():
-            one.add_columns(pixels, name, used)
-        biases = add_inside_beam(
-            recipe,
-            {key: known.value for key, known in inputs.items()},
-            {key: total_error(known.noise) for key, known in inputs.items() if known.noise},
-            used,
-            pixels,
+    return _Compared(
+        plan, matched, disc, used, independent, inputs, residuals, headlines, notes, inverted, state
+    )
+
+
+def _write_all_residuals(compared: _Compared, folder: Path) -> None:
+    folder.mkdir()
+    for name in compared.residuals:
+        inverted = compared.inverted.get(name)
+        _write_residuals(
+            folder / f"{name}.fits",
+            compared.plan.recipe,
+            name,
+            compared.residuals,
+            compared.beam,
+            compared.plan.grid,
+            inverted.extensions if inverted else {},
+            history_lines(compared.notes[name]),
         )
-        if state:
-            state.write(staging)
-            state.add_columns(pixels, used)
-        write_pixels(pixels, staging / "pixels.ecsv")
-        regions = environment_areas(recipe, disc.radius_kpc, grid)
-        write_profiles(profile_table(recipe, disc, used, grid, beam, regions), staging)
-        findings = read_findings(out)
-        summary = make_summary(
-            plan, disc, headlines, residuals, used, independent, matched, findings
-        )
-        for name, note in notes.items():
-            summary["relations"][name] |= note
-        for name, sums in summaries(
-            recipe, inverted, disc, used, independent, grid.jacobian_arcsec()
-        ).items():
-            summary["relations"][name]["from_atomic"] = sums
-        summary |= {"inside_beam": biases} if biases else {}
-        summary |= {"gas_state": state.summary(used)} if state else {}
-        if recipe.comparison.fits:
-            sections = fit_all(recipe, disc, grid, used, residuals, beam)
-            write_fits_table(sections["fits"], staging / "fits.ecsv")
-            summary.update(sections)
-        (staging / "summary.json").write_text(summary_text(summary), encoding="utf-8")
-    return True
+
+
+def _pixels(compared: _Compared) -> tuple[Table, dict[str, Any] | None]:
+    """The table of pixels, and a summary of the biases inside the beam where they are asked for."""
+    recipe, used = compared.plan.recipe, compared.used
+    meta = {
+        "galaxy": recipe.galaxy.name,
+        "kspipe": __version__,
+        "imf": recipe.star_formation.imf,
+        "flags": Flag.meanings(),
+    }
+    pixels = pixel_table(
+        compared.disc, compared.residuals, used, compared.independent, compared.plan.grid, meta
+    )
+    for name, one in compared.inverted.items():
+        one.add_columns(pixels, name, used)
+    biases = add_inside_beam(
+        recipe,
+        {key: known.value for key, known in compared.inputs.items()},
+        {key: total_error(known.noise) for key, known in compared.inputs.items() if known.noise},
+        used,
+        pixels,
+    )
+    if compared.state:
+        compared.state.add_columns(pixels, used)
+    return pixels, biases
+
+
+def _profiles(compared: _Compared) -> Table:
+    recipe, disc, grid = compared.plan.recipe, compared.disc, compared.plan.grid
+    regions = environment_areas(recipe, disc.radius_kpc, grid)
+    return profile_table(recipe, disc, compared.used, grid, compared.beam, regions)
+
+
+def _summary(
+    compared: _Compared, findings: Findings, biases: dict[str, Any] | None
+) -> dict[str, Any]:
+    """Everything but the fits."""
+    plan, disc, used = compared.plan, compared.disc, compared.used
+    summary = make_summary(
+        plan,
+        disc,
+        compared.headlines,
+        compared.residuals,
+        used,
+        compared.independent,
+        compared.matched,
+        findings,
+    )
+    for name, note in compared.notes.items():
+        summary["relations"][name] |= note
+    for name, sums in summaries(
+        plan.recipe,
+        compared.inverted,
+        disc,
+        used,
+        compared.independent,
+        plan.grid.jacobian_arcsec(),
+    ).items():
+        summary["relations"][name]["from_atomic"] = sums
+    summary |= {"inside_beam": biases} if biases else {}
+    summary |= {"gas_state": compared.state.summary(used)} if compared.state else {}
+    return summary
 
 
 def reduced_plan(folder: ProductFolder, memory: InMemory | None) -> Plan:
