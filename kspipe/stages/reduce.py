@@ -199,6 +199,8 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
         if name not in disc.surfaces:
             continue
         surface = disc.surfaces[name]
+        n_drawn = disc.drawn.get(name, 0)
+        drawn = [f"ERROR: by draws in {n_drawn} pixels, where first order is off"]
         write_product(
             folder / f"{name}.fits",
             surface.value,
@@ -210,7 +212,7 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
                 "COVERAGE": (disc.coverage[name], ""),
                 "FLAGS": (disc.flags, ""),
             },
-            history=[*sources, *lines],
+            history=[*sources, *lines, *(drawn if n_drawn else [])],
         )
     everywhere = np.ones(plan.grid.shape)
     anchored = f"scale of 12+log10(O/H): {plan.recipe.metallicity.oh_scale}"
