@@ -161,6 +161,25 @@ def chain_command(
     print_chain(table)
 
 
+@app.command("fit-alpha", epilog="Example: kspipe fit-alpha galaxy --region arm")
+def fit_alpha_command(
+    folder: FolderArgument,
+    region: Annotated[
+        str | None, typer.Option("--region", metavar="NAME", help="Of the recipe's regions.")
+    ] = None,
+    debug: DebugOption = False,
+) -> None:
+    """Fit alpha_CO and the gas-to-dust ratio that scatters least, from HI, CO and dust."""
+    from kspipe.cli.session import session
+
+    with session(quiet=True, debug=debug):
+        from kspipe.stages.joint_fit import fit_cells, fit_joint
+
+        rows = fit_cells(fit_joint(folder, region))
+    for name, text in rows:
+        typer.echo(f"{name}: {text}")
+
+
 @app.command("list", epilog="Example: kspipe list alpha_co")
 def list_command(
     family: Annotated[

@@ -13,7 +13,7 @@ from kspipe.conversions.choices import Choices, Parameters
 from kspipe.conversions.convert import Converted, convert
 from kspipe.conversions.extinction import EXTINCTION, Extinction
 from kspipe.conversions.field import Field, combine
-from kspipe.conversions.finished import FINISHED, FINISHED_SFR, Finished
+from kspipe.conversions.finished import FINISHED, FINISHED_SFR, Finished, finished_factor
 from kspipe.conversions.gas_to_dust import (
     CIRCULARITY,
     GAS_TO_DUST,
@@ -99,6 +99,7 @@ __all__ = [
     "convert",
     "convert_field",
     "field_from_sfr",
+    "finished_factor",
     "fit_alpha_co_and_gas_to_dust",
     "imf_factor",
     "make_surface",

@@ -312,7 +312,7 @@ def _content(value: Any) -> Any:
     if isinstance(value, Path):
         return file_checksum(value)
     if isinstance(value, Record):
-        return value.sentence
+        return [value.sentence, *map(str, value.ranges)]
     if isinstance(value, BaseModel):
         return _values(value)
     if isinstance(value, OnMap | Profile | ByRegion):

@@ -203,6 +203,8 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
         if name not in disc.surfaces:
             continue
         surface = disc.surfaces[name]
+        n_drawn = disc.drawn.get(name, 0)
+        drawn = [f"ERROR: by draws in {n_drawn} pixels, where first order is off"]
         write_product(
             folder / f"{name}.fits",
             surface.value,
@@ -215,7 +217,12 @@ def _write_maps(folder: Path, plan: Plan, disc: Disc) -> None:
                 "FLAGS": (disc.flags, ""),
                 **_interval_of(surface, unit),
             },
-            history=[*sources, *lines, *([_RATIO_LINE] if isinstance(surface, Ratio) else [])],
+            history=[
+                *sources,
+                *lines,
+                *(drawn if n_drawn else []),
+                *([_RATIO_LINE] if isinstance(surface, Ratio) else []),
+            ],
         )
     everywhere = np.ones(plan.grid.shape)
     anchored = f"scale of 12+log10(O/H): {plan.recipe.metallicity.oh_scale}"

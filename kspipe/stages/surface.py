@@ -58,6 +58,8 @@ class Disc:
         By product: its change for 1 sigma of each typed number that pixels share.
     fields : dict of str to Field
         Quantities of the recipe that may vary, by their names in `Parameters`.
+    drawn : dict of str to int
+        By product: pixels whose random error is that of draws, not of first order.
     """
 
     surfaces: dict[str, Surface]
@@ -68,6 +70,7 @@ class Disc:
     intensity: dict[str, SkyMap]
     shifts: dict[str, list[Array]]
     fields: dict[str, Field]
+    drawn: dict[str, int]
 
 
 def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
@@ -98,9 +101,13 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
         for name, field in fields.items()
         if field.random is not None
     }
-    surfaces = bend_errors(
-        carry_noise(shifts.converted, noise), converted, intensity, noise, choices, parameters
-    )
+    straight = carry_noise(shifts.converted, noise)
+    surfaces = bend_errors(straight, converted, intensity, noise, choices, parameters)
+    drawn = {
+        name: int(np.sum(np.nan_to_num(surface.error) != np.nan_to_num(straight[name].error)))
+        for name, surface in surfaces.items()
+        if surface is not straight[name]
+    }
     coverage = {
         name: np.min([used[t].coverage for t in surface.slopes if t in used], axis=0)
         for name, surface in surfaces.items()
@@ -112,7 +119,15 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
     )
     flags = _flags(recipe, surfaces, list(used.values()), told)
     return Disc(
-        surfaces, coverage, flags, fields["oh"].value, place.radius_kpc, used, shifts.common, fields
+        surfaces=surfaces,
+        coverage=coverage,
+        flags=flags,
+        oh=fields["oh"].value,
+        radius_kpc=place.radius_kpc,
+        intensity=used,
+        shifts=shifts.common,
+        fields=fields,
+        drawn=drawn,
     )
 
 

@@ -7,12 +7,18 @@ from typing import Any
 
 import numpy as np
 import pytest
+from astropy.io import fits
 from demo_disc import converted, disc_of, matched_maps, recipe_of, shared_folder
 from helpers import demo_recipe
+from typer.testing import CliRunner
 
+from kspipe.cli.app import app
 from kspipe.conversions import GAS_TO_DUST, fit_alpha_co_and_gas_to_dust
-from kspipe.core.errors import KspipeWarning, RecipeError
+from kspipe.core.errors import InputError, KspipeWarning, RecipeError
+from kspipe.maps.product import read_image
+from kspipe.stages.joint_fit import fit_joint
 from kspipe.stages.plan import make_plan
+from kspipe.stages.reduce import reduce_maps
 
 
 @pytest.fixture(scope="module")
@@ -155,3 +161,35 @@ def test_where_co_is_a_constant_share_nothing_can_be_told() -> None:
     dust, atom, _ = region(4.0, 100.0, rng)
     noise = np.abs(rng.normal(0, 1e-3, dust.size))
     assert not fit_alpha_co_and_gas_to_dust(atom / 100.0, atom, noise, rng).is_bounded
+
+
+def test_the_fit_of_a_reduced_galaxy(out) -> None:
+    # A dust map made of the galaxy's own HI and CO with alpha_CO = 6 and a ratio of 120, and a
+    # scatter of 0.03 dex.
+    matched_maps(out)
+    raw = demo_recipe(out)
+    reduce_maps(recipe_of(out), out / "run", overwrite=True)
+    atom, header = read_image(out / "run" / "maps" / "sigma_atom.fits")
+    mol, _ = read_image(out / "run" / "maps" / "sigma_mol.fits")
+    noise = 10 ** (0.03 * np.random.default_rng(12).standard_normal(atom.shape))
+    dust = (atom + 6.0 / 4.35 * mol) / 120.0 * noise
+    fits.PrimaryHDU(dust, header).writeto(out / "dust.fits", overwrite=True)
+    table = {"tracer": "Sigma_dust", "file": "dust.fits", "noise": "0.01 Msun/pc2"}
+    maps = {**raw["maps"], "dust": {**table, "inclination": "face-on", "averages_pixels": False}}
+    changes = {"maps": maps, "regions": {"inner": {"outer": "4 kpc"}}}
+    reduce_maps(recipe_of(out, **changes), out / "dusty", overwrite=True)
+    fit = fit_joint(out / "dusty", "inner")
+    assert fit.is_bounded
+    assert abs(fit.alpha_co - 6.0) < 4 * max(fit.alpha_co_error, 0.023 * 6.0)
+    # The ratio follows alpha_CO by the share of CO in the gas, at most as much.
+    share = max(fit.alpha_co_error, 0.023 * 6.0) / fit.alpha_co
+    assert fit.gas_to_dust == pytest.approx(120.0, rel=4 * share)
+    result = CliRunner().invoke(app, ["fit-alpha", str(out / "dusty"), "--region", "inner"])
+    assert result.exit_code == 0, result.output
+    assert "held against its own input" in result.output
+    assert "alpha_CO: " in result.output
+    with pytest.raises(InputError, match='no region is called "outer"'):
+        fit_joint(out / "dusty", "outer")
+    reduce_maps(recipe_of(out), out / "run", overwrite=True)
+    with pytest.raises(InputError, match="needs maps of HI, CO and Sigma_dust"):
+        fit_joint(out / "run")

@@ -99,7 +99,7 @@ def test_through_a_recipe() -> None:
     constant = converted(out, maps=maps, stars={**table, "mass_to_light": 1.0})["sigma_star"]
     seen = np.isfinite(got["sigma_star"]) & (constant > 0) & (got["sigma_sfr"] > 0)
     expected = [
-        by_hand(q) for q in np.log10(got["sigma_sfr"] / got["sigma_star"] / 1e6)[seen].tolist()
+        by_hand(q) for q in np.log10((got["sigma_sfr"] / got["sigma_star"])[seen] / 1e6).tolist()
     ]
     np.testing.assert_allclose((got["sigma_star"] / constant)[seen], expected, atol=1e-9)
     # A map or table of M/L is one of the four ways of any quantity.

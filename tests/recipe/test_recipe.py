@@ -204,7 +204,7 @@ def test_atomic_only_is_typed(good, folder) -> None:
         ({"gas": ["atomic only"]}, "gas", "table"),
         ({"gas": "atomic only"}, "gas", "maps.co is CO(2-1)"),
         ({"maps__co": ...}, "gas.alpha_co", 'gas = "atomic only"'),
-        ({"gas__alpha_co": ...}, "gas.alpha_co", "missing"),
+        ({"gas__alpha_co": ...}, "gas", "give either alpha_co"),
         ({"gas__alpha_co": "bolato2013_galactic"}, "gas.alpha_co", '"bolatto2013_galactic"'),
         ({"gas__alpha_co": -4.35}, "gas.alpha_co", "alpha_CO between 0 and 1000"),
         ({"gas__line_ratio": ...}, "gas.line_ratio", "CO(2-1) needs its ratio"),

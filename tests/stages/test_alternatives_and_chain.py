@@ -218,6 +218,8 @@ def test_a_chain_with_everything(out) -> None:
         },
     }
     reduce_maps(recipe_of(out, **changes), out / "chain", overwrite=True)
+    history = " ".join(fits.getheader(out / "chain" / "maps" / "sigma_mol.fits")["HISTORY"])
+    assert "ERROR: by draws in" in " ".join(history.split())
     table = kspipe.chain(out / "chain", "03h12m24.0s -27d18m36s")
     for product in ("sigma_star", "sigma_mol", "sigma_sfr"):
         rows = [row for row in table if row["product"] == product]
