@@ -36,7 +36,8 @@ def solve_falling(
     Parameters
     ----------
     residual : callable
-        ``residual(x, inputs)``, of order one; for an array or a `Dual`, with the inputs of the same pixels.
+        ``residual(x, inputs)``, of order one; of an array or a `Dual` and the inputs of the same
+        pixels.
     inputs : mapping of str to float64 array
         Each a single value or of the shape of `start`.
     low, high : float

@@ -103,7 +103,7 @@ def compare_relations(
         progress(done, len(names), f"comparing with {name}")
         table = recipe.relations[name]
         residuals[name] = predict_residuals(inputs, sfr, disc.flags, table.law, table.parameters)
-        notes[name] = relation_notes(recipe, name, inputs, disc, used)
+        notes[name] = relation_notes(recipe, name, inputs, disc, residuals[name], used)
         rng = generator(recipe.seed, "compare", name)
         headlines[name] = headline(
             residuals[name], sfr, used, independent, grid.jacobian_arcsec(), rng

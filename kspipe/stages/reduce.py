@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kspipe.conversions import STAR_FORMATION, imf_factor
-from kspipe.core.errors import KspipeWarning
+from kspipe.core.errors import Fault, KspipeWarning, OutputError
 from kspipe.core.progress import Progress, no_progress
 from kspipe.kernels.coarse import evaluate_smoothly
 from kspipe.kernels.geometry import disc_radius, position_offsets
@@ -21,10 +21,10 @@ from kspipe.maps.product import read_matched, write_matched, write_product
 from kspipe.maps.read import load_map, relative_noise, with_photon_noise
 from kspipe.maps.skymap import Flag, SkyMap
 from kspipe.matching import match_map, measure_noise, measure_noise_correlation
-from kspipe.recipe import Recipe
+from kspipe.recipe import Recipe, load_recipe
 from kspipe.recipe.resolved import resolved_recipe
 from kspipe.stages.folder import ProductFolder
-from kspipe.stages.plan import InMemory, Plan, make_plan, records_of
+from kspipe.stages.plan import InMemory, Plan, compare_print, make_plan, records_of
 from kspipe.stages.steps import (
     STEPS_FILE,
     judge_maps,
@@ -89,6 +89,13 @@ def reduce_maps(
     totals = read_totals(plan)
     folder = ProductFolder.open(out)
     stale = folder.check(plan.prints, overwrite=overwrite)
+    if not stale and _asks_otherwise(recipe, out):
+        # The relations live in DIR/recipe.toml: it is written anew, with maps converted anew.
+        if not overwrite:
+            what = "holds a reduction whose recipe asks for other relations"
+            do = "type --overwrite to take over the new ones, or another --out"
+            raise OutputError(Fault(str(out), what, do))
+        stale = ["convert"]
     if not stale:
         log.info("reduce: nothing changed, %s is reused", out)
         return False
@@ -156,6 +163,12 @@ def match_one(plan: Plan, name: str) -> SkyMap:
         workers=os.cpu_count() or 1,
     )
     return note_steps(sky, matched, plan)
+
+
+def _asks_otherwise(recipe: Recipe, out: Path) -> bool:
+    """Whether the recipe of a reduction would be compared in another way than this one."""
+    kept = load_recipe(out / "recipe.toml", in_memory=frozenset(recipe.maps))
+    return compare_print(kept, "") != compare_print(recipe, "")
 
 
 def _outside_galaxy(sky: SkyMap, recipe: Recipe) -> NDArray[np.bool_]:
