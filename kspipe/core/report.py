@@ -33,7 +33,7 @@ def measured(value: float | None, error: float | None, digits: int = 2) -> str:
 
 
 def noted_lines(summary: dict[str, Any]) -> list[str]:
-    """What the reader should know of each map and relation, one line for each thing; empty for nothing."""
+    """What the reader should know of each map and relation, a line for each thing."""
     lines = []
     for name, entry in summary["maps"].items():
         registration, negative = entry.get("registration", {}), entry.get("negative") or {}
