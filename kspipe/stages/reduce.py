@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kspipe.conversions import STAR_FORMATION, imf_factor
-from kspipe.core.errors import Fault, KspipeWarning, OutputError
+from kspipe.core.errors import Fault, KspipeWarning, OutputError, RecipeError
 from kspipe.core.progress import Progress, no_progress
 from kspipe.kernels.coarse import evaluate_smoothly
 from kspipe.kernels.geometry import disc_radius, position_offsets
@@ -89,12 +89,10 @@ def reduce_maps(
     totals = read_totals(plan)
     folder = ProductFolder.open(out)
     stale = folder.check(plan.prints, overwrite=overwrite)
-    if not stale and _asks_otherwise(recipe, out):
-        # The relations live in DIR/recipe.toml: it is written anew, with maps converted anew.
+    if not stale and not _asks_the_same(out, recipe):
         if not overwrite:
-            what = "holds a reduction whose recipe asks for other relations"
-            do = "type --overwrite to take over the new ones, or another --out"
-            raise OutputError(Fault(str(out), what, do))
+            what = "the recipe asks for another comparison than the one kept in recipe.toml"
+            raise OutputError(Fault(str(out), what, "type --overwrite, or another --out"))
         stale = ["convert"]
     if not stale:
         log.info("reduce: nothing changed, %s is reused", out)
@@ -131,6 +129,15 @@ def reduce_maps(
     return True
 
 
+def _asks_the_same(out: Path, recipe: Recipe) -> bool:
+    """Whether DIR/recipe.toml, which the comparison reads, asks what the recipe asks."""
+    try:
+        kept = load_recipe(out / "recipe.toml", in_memory=frozenset(recipe.maps))
+    except RecipeError:
+        return True  # its files have moved, which changes no number
+    return compare_print(kept, "") == compare_print(recipe, "")
+
+
 def _is_gone(stage: str, plan: Plan) -> bool:
     return stage.startswith("match.") and stage not in plan.prints
 
@@ -163,12 +170,6 @@ def match_one(plan: Plan, name: str) -> SkyMap:
         workers=os.cpu_count() or 1,
     )
     return note_steps(sky, matched, plan)
-
-
-def _asks_otherwise(recipe: Recipe, out: Path) -> bool:
-    """Whether the recipe of a reduction would be compared in another way than this one."""
-    kept = load_recipe(out / "recipe.toml", in_memory=frozenset(recipe.maps))
-    return compare_print(kept, "") != compare_print(recipe, "")
 
 
 def _outside_galaxy(sky: SkyMap, recipe: Recipe) -> NDArray[np.bool_]:

@@ -223,7 +223,7 @@ def test_other_relations_are_taken_over(with_co, tmp_path) -> None:
     folder = with_co.parent
     given = {**tables(folder), "relations": {"t": {"law": "leroy2013_depletion"}}}
     recipe = parse_recipe(demo_recipe(folder, **given), folder=folder)
-    with pytest.raises(OutputError, match="asks for other relations"):
+    with pytest.raises(OutputError, match="asks for another comparison"):
         reduce_maps(recipe, out)
     assert reduce_maps(recipe, out, overwrite=True)
     assert not reduce_maps(recipe, out)
