@@ -33,7 +33,7 @@ def measured(value: float | None, error: float | None, digits: int = 2) -> str:
 
 
 def noted_lines(summary: dict[str, Any]) -> list[str]:
-    """What the reader should know of each map, one line for each thing; empty for nothing."""
+    """What the reader should know of each map and relation, a line for each thing."""
     lines = []
     for name, entry in summary["maps"].items():
         registration, negative = entry.get("registration", {}), entry.get("negative") or {}
@@ -46,6 +46,33 @@ def noted_lines(summary: dict[str, Any]) -> list[str]:
             lines.append(f"maps.{name}: {negative['text']}{masked}")
         if spacings.get("systematic"):
             lines.append(f"maps.{name}: {spacings['text']}")
+    for name, entry in summary.get("relations", {}).items():
+        lines += [f"relations.{name}: {text}" for text in _relation_notes(entry)]
+    return lines
+
+
+def _relation_notes(entry: dict[str, Any]) -> list[str]:
+    """Where a relation has no prediction or is beyond its range, and what both sides share."""
+    lines = []
+    reasons = [
+        f"{need} unusable in {known['n_unusable']}"
+        for need, known in entry.get("inputs", {}).items()
+        if known["n_unusable"]
+    ]
+    if entry.get("n_no_solution"):
+        why = f" ({', '.join(reasons)})" if reasons else ""
+        lines.append(f"{entry['n_no_solution']} pixels without prediction{why}")
+    if entry.get("n_outside_range"):
+        lines.append(f"{entry['n_outside_range']} pixels outside its range, predicted all the same")
+    atomic = entry.get("from_atomic")
+    if atomic:
+        lines.append(
+            f"by the HI that it leaves: {atomic['n_without_root']} pixels without root, "
+            f"{atomic['n_one_root']} with one, {atomic['n_several_roots']} with several"
+        )
+    maps = [shared["what"] for shared in entry.get("shared", []) if shared["covariance_carried"]]
+    if maps:
+        lines.append(f"shares {', '.join(dict.fromkeys(maps))} with the observed star formation")
     return lines
 
 

@@ -59,7 +59,7 @@ def galaxy_z_prime(products: Products) -> Array:
 
 
 def other_inputs(products: Products, name: str) -> dict[str, float]:
-    """Medians over the galaxy of what a relation takes besides gas and metallicity."""
+    """Medians of what a relation takes besides gas and metallicity, where S/N is sufficient."""
     inputs = products.summary["relations"][name].get("inputs", {})
     law = LAWS.get(products.recipe.relations[name].law)
     return {

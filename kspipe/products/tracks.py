@@ -29,6 +29,7 @@ __all__ = ["OUTSIDE_LINE", "draw_tracks_figure", "in_and_out", "tracks_table", "
 
 Array = NDArray[np.float64]
 OUTSIDE_LINE: Final = (0, (2, 2))
+MOST_DECADES: Final = 1e-6
 PRODUCTS: Final = ("tracks.ecsv", "tracks.pdf", "tracks.png")
 
 
@@ -117,7 +118,10 @@ def draw_tracks_figure(tracks: Sequence[Track]) -> Figure:
     )
     if any(t.prediction.outside_range.any() for t in tracks):
         axes[0].plot([], [], color="0.4", ls=OUTSIDE_LINE, lw=0.8, label="outside the range")
-    axes[0].legend(loc="upper left")
+    # What is less than a millionth of the most is in the table and below the frame.
+    low, high = axes[0].get_ylim()
+    axes[0].set_ylim(max(low, MOST_DECADES * high), high)
+    axes[0].legend(loc="lower right")
     figure.subplots_adjust(
         left=0.14, right=0.97, bottom=0.12 / panels + 0.04, top=0.88, hspace=0.06
     )

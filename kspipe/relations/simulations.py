@@ -173,7 +173,8 @@ LAWS.add(
             "oh": Direction(1),
             "g0": Direction(-1, "where U D^2 < 0.1", _is_thin_to_field),
         },
-        note="Once U D^2 is large the fraction rises with the field: Sigma_c falls as U^-1/2.",
+        note="Once U D^2 is large the fraction rises with the field: Sigma_c falls as U^-1/2. The "
+        "ranges of D and U are from memory.",
         **_FRACTION,  # type: ignore[arg-type]
     )
 )
@@ -209,7 +210,7 @@ for _key, _label, _cite, _s1, _is_erratum in (
                     -1, "where f_H2 >= 1/2", _is_molecular(erratum=_is_erratum, mostly=True)
                 ),
             },
-            note="The erratum lowers S1, by a factor 2.9 at U = 1."
+            note="The erratum lowers S1, by 2.9 at U = 1. Ranges of D and U are from memory."
             if _is_erratum
             else "Superseded by the erratum of 2016 (gnedin2014); kept to repeat older work.",
             **_FRACTION,  # type: ignore[arg-type]

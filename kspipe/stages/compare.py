@@ -165,7 +165,7 @@ def _compare(plan: Plan, out: Path, progress: Progress) -> _Compared:
     for done, (name, table) in enumerate(recipe.relations.items()):
         progress(done, len(recipe.relations), f"comparing with {name}")
         residuals[name] = predict_residuals(inputs, sfr, disc.flags, table.law, table.parameters)
-        notes[name] = relation_notes(recipe, name, inputs, disc, used)
+        notes[name] = relation_notes(recipe, name, inputs, disc, residuals[name], used)
         rng = generator(recipe.seed, "compare", name)
         headlines[name] = headline(
             residuals[name], sfr, used, independent, grid.jacobian_arcsec(), rng

@@ -8,7 +8,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from kspipe.comparison import Known, shared_with_observed
+from kspipe.comparison import Known, Residuals, shared_with_observed
+from kspipe.maps.skymap import Flag
 from kspipe.recipe import Recipe
 from kspipe.relations import LAW_INPUTS, LAWS
 from kspipe.stages.surface import Disc
@@ -21,6 +22,7 @@ def relation_notes(
     name: str,
     inputs: Mapping[str, Known],
     disc: Disc,
+    residuals: Residuals,
     used: NDArray[np.bool_],
 ) -> dict[str, Any]:
     """Say of one relation what it was given, as plain values for the summary.
@@ -32,29 +34,39 @@ def relation_notes(
         The recipe's name of the relation.
     inputs : mapping of str to Known
     disc : Disc
+    residuals : Residuals
+        Of this relation.
     used : (ny, nx) bool array
         Covered pixels.
 
     Returns
     -------
     dict
-        ``inputs``: median over the covered pixels, unit, origin and pixels without a usable value
-        of each; ``shared``: what stands on both sides of the comparison, and whether its random
-        error is carried.
+        ``inputs``: of each the median where gas and star formation are significant (everywhere
+        if that is nowhere), unit, origin, and how many covered pixels have no usable value;
+        ``n_outside_range`` and ``n_no_solution``: covered pixels so flagged by this relation;
+        ``shared``: what stands on both sides of the comparison, and whether its random error is
+        carried.
     """
     law = LAWS.get(recipe.relations[name].law)
     described = {}
+    good = (disc.flags & int(Flag.LOW_SNR)) == 0
     for need in law.takes(inputs):
-        value = np.broadcast_to(inputs[need].value, used.shape)[used]
+        value = np.broadcast_to(inputs[need].value, used.shape)
         known = np.isfinite(value) if need in ("oh", "beta") else value > 0
+        known = known & used
+        seen = known & good if (known & good).any() else known
         described[need] = {
-            "median": float(np.median(value[known])) if known.any() else float("nan"),
+            "median": float(np.median(value[seen])) if seen.any() else float("nan"),
             "unit": LAW_INPUTS[need].unit,
             "origin": getattr(inputs[need], "origin", "map of this reduction"),
-            "n_unusable": int(np.sum(~known)),
+            "n_unusable": int(np.sum(used & ~known)),
         }
+    added = residuals.flags & ~disc.flags
     return {
         "inputs": described,
+        "n_outside_range": int(np.sum(used & ((added & int(Flag.OUTSIDE_RANGE)) != 0))),
+        "n_no_solution": int(np.sum(used & np.isnan(residuals.predicted))),
         "shared": [
             {
                 "what": shared.what,

@@ -2,8 +2,8 @@
 
 ``python tests/bench/relations.py [--pixels 1000000] [--runs 5]`` prints, for each closed form, the
 seconds of the plain numpy expression and of `Law.predict` without and with slopes; for each solved
-form its ratio to the closed form of McKee & Krumholz 2010, the largest residual by substitution and
-the gain over a scalar root finder in a loop.
+form its ratio to the closed form of McKee & Krumholz 2010 and the gain over a scalar root finder in
+a loop. Differences are what is left of constants that are written here with five digits.
 """
 
 from __future__ import annotations

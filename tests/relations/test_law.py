@@ -255,6 +255,24 @@ def test_derivatives_are_central_differences(law: Law) -> None:
             assert smooth.mean() >= most, (product, name, off.max())
 
 
+def test_slopes_by_rotation() -> None:
+    # Omega and beta enter where the disc's own free-fall time is the shorter one.
+    law = LAWS.get("krumholz2013")
+    base = {
+        "sigma_gas": np.array([20.0, 60.0]), "oh": np.array(8.5), "rho_sd": np.array(0.1),
+        "g0": np.array(1.0), "omega": np.array([400.0, 900.0]), "beta": np.array([0.0, 0.4]),
+    }  # fmt: skip
+    got = law.predict(base, {"clumping": 5.0})
+    for name, step in (("omega", 0.01), ("beta", 1e-5)):
+        more, less = (
+            law.predict({**base, name: base[name] + sign * step}, {"clumping": 5.0}).sigma_sfr
+            for sign in (1, -1)
+        )
+        slope = got.derivatives["sigma_sfr"][name]
+        assert np.all(slope > 0)
+        np.testing.assert_allclose(slope, (more - less) / (2 * step), rtol=1e-6)
+
+
 @every
 def test_values_are_continuous(law: Law) -> None:
     # Along each input in fine steps no step is much larger than its neighbours: no form jumps.

@@ -294,6 +294,27 @@ def test_half_is_molecular_at_the_pressure_that_is_named_for_it() -> None:
     )
 
 
+@pytest.mark.parametrize(
+    ("key", "given"),
+    [("blitz2006", {"scale_height": 300.0}), ("leroy2008_pressure", {"scale_length": 3.0})],
+)
+def test_hydrogen_is_half_molecular_at_p0_and_pressure_does_the_rest(key, given) -> None:
+    # R = 1 at P0 whatever the exponent; far below, R goes as P to the exponent.
+    law = LAWS.get(key)
+    at = {"sigma_gas": np.array(12.0), "sigma_star": np.array(80.0)}
+
+    def ratio(**more: float) -> float:
+        f = float(np.asarray(law.predict(at, {**given, **TIME, **more}).f_mol))
+        return f / (1 - f)
+
+    pressure = ratio(exponent=1.0, p0=1e5) * 1e5
+    for exponent in (0.5, 2.0):
+        assert ratio(exponent=exponent, p0=pressure) == pytest.approx(1.0, rel=1e-9)
+    default = {p.name: p.default for p in law.parameters}
+    expected = (pressure / float(default["p0"])) ** float(default["exponent"])
+    assert ratio() == pytest.approx(expected, rel=1e-9)
+
+
 def test_without_stars_the_gas_weighs_on_itself() -> None:
     law = LAWS.get("leroy2008_pressure")
     at = {"sigma_star": np.array(1e-12), "sigma_gas": np.array(100.0)}
