@@ -137,7 +137,7 @@ def fit_all(
             "apertures": [
                 asdict(a) for a in peak_apertures(gas, sfr, used, fwhm, grid.jacobian_arcsec())
             ],
-            "relations": _relations(galaxy, phases[0].samples, masks[0] & used, population),
+            "relations": _relations(galaxy, phases[0], masks[0] & used, population, length),
         },
         "ranking": _ranking(galaxy, phases[0].samples, masks[0] & used, blocks, population),
         "trends": _trends(galaxy, residuals, masks[0] & used),
@@ -309,24 +309,26 @@ def _uses(recipe: Recipe) -> list[RelationUse]:
 
 
 def _relations(
-    galaxy: _Galaxy, samples: LinearSamples, mask: Mask, population: Array | None
+    galaxy: _Galaxy, phase: Phase, mask: Mask, population: Array | None, length: float
 ) -> dict[str, Any]:
     """Each relation with its free parameters; the molecular fraction where CO was observed."""
     disc = galaxy.disc
     inputs = _inputs(disc, mask)
-    components = galaxy.recipe.comparison.population_components
+    given: dict[str, Any] = {
+        "components": galaxy.recipe.comparison.population_components,
+        "population": population,
+        "places": (phase.positions, length),
+    }
     out: dict[str, Any] = {}
     for use in _uses(galaxy.recipe):
-        fit, _, _ = fit_relation(samples, inputs, use, components=components, population=population)
+        fit, _, _ = fit_relation(phase.samples, inputs, use, **given)
         out[use.name] = {"sigma_sfr": asdict(fit)}
         if "sigma_mol" in disc.surfaces:
             of_gas = _samples(disc.surfaces["sigma_gas"], disc.surfaces["sigma_mol"], mask)
             molecular = RelationUse(
                 use.name, use.law, use.parameters, (FreeParameter("zero_point"),), "f_mol"
             )
-            fit, _, _ = fit_relation(
-                of_gas, inputs, molecular, components=components, population=population
-            )
+            fit, _, _ = fit_relation(of_gas, inputs, molecular, **given)
             out[use.name]["f_mol"] = asdict(fit)
     return out
 
