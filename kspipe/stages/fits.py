@@ -60,6 +60,7 @@ class _Galaxy:
     used: Mask
     beam_arcsec2: Array
     masks: list[Mask]
+    areas: dict[str, Mask]
 
     @property
     def fwhm_pix(self) -> float:
@@ -119,7 +120,9 @@ def fit_all(
     table = recipe.comparison
     fwhm = beam_axes(beam_arcsec2)[0] / grid.pixel_arcsec
     masks = lattice_phases(grid.shape, grid.centre_pixel, fwhm, table.lattice_phases)
-    galaxy = _Galaxy(recipe, disc, grid, used, beam_arcsec2, masks)
+    # Region files are read first, so that a fault in one costs no fit.
+    areas = {name: _area(disc, grid, name, e) for name, e in table.environments.items()}
+    galaxy = _Galaxy(recipe, disc, grid, used, beam_arcsec2, masks, areas)
     gas, sfr = disc.surfaces["sigma_gas"], disc.surfaces["sigma_sfr"]
     beam_length = beam_correlation_length(fwhm)
     phases = galaxy.phases(gas, sfr, used)
@@ -173,7 +176,7 @@ def _lines(galaxy: _Galaxy, everywhere: PhasedLine, length: float) -> list[dict[
         rows.append(row)
     rows.append(_ring_row(galaxy))
     for name, environment in table.environments.items():
-        area = galaxy.used & _area(galaxy, name, environment)
+        area = galaxy.used & galaxy.areas[name]
         gas = _scaled_gas(disc, environment.alpha_co_scale)
         line = fit_line_phases(galaxy.phases(gas, sfr, area), length, components=1)
         row = _row(galaxy, name, "sigma_gas", line, area)
@@ -231,10 +234,10 @@ def _ring_row(galaxy: _Galaxy) -> dict[str, Any]:
     }
 
 
-def _area(galaxy: _Galaxy, name: str, environment: EnvironmentTable) -> Mask:
+def _area(disc: Disc, grid: Grid, name: str, environment: EnvironmentTable) -> Mask:
     radii = environment.radii_kpc
     if radii is not None:
-        radius = galaxy.disc.radius_kpc
+        radius = disc.radius_kpc
         return np.asarray((radius >= radii[0]) & (radius < radii[1]))
     path = Path(environment.where)
     try:
@@ -242,7 +245,7 @@ def _area(galaxy: _Galaxy, name: str, environment: EnvironmentTable) -> Mask:
     except (OSError, UnicodeDecodeError) as error:
         where = f"comparison.environments.{name}"
         raise InputError(Fault(where, f"{path} cannot be read ({error})")) from None
-    return pixels_inside(parse_regions(text, str(path)), *galaxy.grid.sky())
+    return pixels_inside(parse_regions(text, str(path)), *grid.sky())
 
 
 def _scaled_gas(disc: Disc, scale: float) -> Surface:
