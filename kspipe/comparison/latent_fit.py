@@ -140,7 +140,11 @@ class LatentModel:
         return np.concatenate([self.start, [math.log(scatter_dex)], population])
 
     def marginal(
-        self, data: Measurements, parameters: Array, nodes: tuple[int, int] = _FINE
+        self,
+        data: Measurements,
+        parameters: Array,
+        nodes: tuple[int, int] = _FINE,
+        near: Array | None = None,
     ) -> Marginal:
         """Likelihood of every point, without priors."""
         m = self.n_mean
@@ -152,6 +156,7 @@ class LatentModel:
             max(math.exp(parameters[m]), LEAST_SCATTER_DEX),
             GaussianMixture.from_parameters(parameters[m + 1 :], self.population.least_width),
             nodes=nodes,
+            near=near,
         )
 
     def _at_rows(self, function: Mean) -> Mean:
@@ -205,13 +210,15 @@ class _Objective:
     def __init__(self, model: LatentModel, data: Measurements, full: Array, free: Array) -> None:
         self.model, self.data, self.full, self.free = model, data, full.copy(), free
         self._at: Array | None = None
+        self.near: Array | None = None
         self.nodes = _FINE
 
     def _evaluate(self, x: Array) -> None:
         if self._at is not None and np.array_equal(self._at, x):
             return
         self.full[self.free] = x
-        marginal = self.model.marginal(self.data, self.full, self.nodes)
+        marginal = self.model.marginal(self.data, self.full, self.nodes, self.near)
+        self.near = marginal.window
         value, gradient, information = self.model.log_prior(self.full)
         self.marginal = marginal
         self.log_likelihood = float(marginal.log_likelihood.sum())
@@ -225,7 +232,7 @@ class _Objective:
 
     def refine(self, x: Array, nodes: tuple[int, int]) -> None:
         """Evaluate with other nodes, from here on."""
-        self.nodes, self._at = nodes, None
+        self.nodes, self._at, self.near = nodes, None, None
         self._evaluate(x)
 
     def cost(self, x: Array) -> float:

@@ -21,6 +21,7 @@ from kspipe.comparison.latent_fit import (
     PopulationPrior,
     maximise,
 )
+from kspipe.comparison.phases import average_optima
 from kspipe.comparison.samples import LinearSamples
 from kspipe.kernels.latent import Mean, Measurements, Rows
 from kspipe.relations import LAWS
@@ -136,6 +137,7 @@ def fit_relation(
     *,
     components: int = 2,
     population: Array | None = None,
+    places: tuple[Array, float] | None = None,
 ) -> tuple[RelationFit, LatentModel | None, Optimum | None]:
     """Fit the free parameters of a relation and the scatter about it.
 
@@ -151,6 +153,9 @@ def fit_relation(
         Gaussians in the population of log10 Sigma_gas.
     population : (3 components - 1,) float64 array, optional
         Where to begin with it, from another fit of the same samples.
+    places : tuple of (n, 2) float64 array and float, optional
+        Position of each sample and the distance at which residuals correlate by 1/e, in one unit;
+        without, samples are taken as independent.
 
     Returns
     -------
@@ -177,7 +182,8 @@ def fit_relation(
     valid = _has_prediction(data, known, use)
     if not valid.any():
         return RelationFit(0, message="no sample has a prediction"), None, None
-    kept = samples.take(np.flatnonzero(usable)[valid])
+    chosen = np.flatnonzero(usable)[valid]
+    kept = samples.take(chosen)
     obstacle = kept.obstacle()
     if obstacle:
         return RelationFit(kept.n, message=obstacle), None, None
@@ -195,10 +201,17 @@ def fit_relation(
         best = maximise(model, data, start, held=(scatter,))
     if not best.is_converged:
         return RelationFit(kept.n, message="the fit did not converge: no result"), None, None
-    return _summarise(use, model, best, kept.n), model, best
+    where = None if places is None else (places[0][chosen], places[1])
+    return _summarise(use, model, best, kept.n, where), model, best
 
 
-def _summarise(use: RelationUse, model: LatentModel, best: Optimum, n: int) -> RelationFit:
+def _summarise(
+    use: RelationUse,
+    model: LatentModel,
+    best: Optimum,
+    n: int,
+    places: tuple[Array, float] | None,
+) -> RelationFit:
     m = model.n_mean
     scatter = math.exp(best.parameters[m])
     is_limit = scatter <= 1.001 * LEAST_SCATTER_DEX
@@ -207,7 +220,12 @@ def _summarise(use: RelationUse, model: LatentModel, best: Optimum, n: int) -> R
     if np.linalg.eigvalsh(information)[0] <= 0:
         return RelationFit(n, message="the likelihood has no peak: no result")
     errors = np.full(best.parameters.size, math.nan)
-    errors[keep] = np.sqrt(np.diag(np.linalg.inv(information)))
+    if places is None:
+        errors[keep] = np.sqrt(np.diag(np.linalg.inv(information)))
+    else:
+        size = m + 1 - is_limit
+        _, covariance = average_optima([best], [places[0]], keep, size, places[1])
+        errors[keep[:size]] = np.sqrt(np.diag(covariance))
     offsets = dict(zip(model.names, best.parameters[:m].tolist(), strict=True))
     return RelationFit(
         n=n,

@@ -31,6 +31,7 @@ DEPTH: Final = 16.0
 _PANELS: Final = 4
 _GRID: Final = 25
 _ZOOMS: Final = 3
+_UNIT: Final = np.linspace(0.0, 1.0, _GRID)[None, :]
 # Points at a time, so that the nodes stay in the cache.
 _BLOCK: Final = 64
 
@@ -74,11 +75,14 @@ class Marginal:
     information : (p, p) float64 array
         Minus the second derivatives of the sum; those of the mean itself are left out, so that
         it is exact where the mean is linear in its parameters.
+    window : (n, 2) float64 array
+        Where in X the integrand lives.
     """
 
     log_likelihood: Array
     scores: Array
     information: Array
+    window: Array
 
 
 def marginal_likelihood(
@@ -89,6 +93,7 @@ def marginal_likelihood(
     population: GaussianMixture,
     *,
     nodes: tuple[int, int] = (10, 18),
+    near: Array | None = None,
 ) -> Marginal:
     """Integrate both latents out of every point.
 
@@ -104,6 +109,8 @@ def marginal_likelihood(
         Of X.
     nodes : (int, int)
         Gauss-Legendre nodes in each of four panels in X, and equally spaced ones in Y.
+    near : (n, 2) float64 array, optional
+        Windows of an evaluation with parameters close by, which saves most of the search.
 
     Returns
     -------
@@ -125,13 +132,23 @@ def marginal_likelihood(
     n = data.x.size
     blocks = [slice(i, min(i + _BLOCK, n)) for i in range(0, n, _BLOCK)]
     parts = [
-        _block(data.take(rows), rows, mean, gradient, scatter_dex, population, nodes)
+        _block(
+            data.take(rows),
+            rows,
+            mean,
+            gradient,
+            scatter_dex,
+            population,
+            nodes,
+            None if near is None else near[rows],
+        )
         for rows in blocks
     ]
     return Marginal(
         np.concatenate([part.log_likelihood for part in parts]),
         np.concatenate([part.scores for part in parts], axis=1),
         np.sum([part.information for part in parts], axis=0),
+        np.concatenate([part.window for part in parts]),
     )
 
 
@@ -143,9 +160,11 @@ def _block(
     s: float,
     population: GaussianMixture,
     nodes: tuple[int, int],
+    near: Array | None,
 ) -> Marginal:
     conditional = _Conditional.of(data)
-    x, log_weight = _outer_nodes(data, conditional, rows, mean, s, population, nodes[0])
+    window = _window(data, conditional, rows, mean, s, population, near)
+    x, log_weight = _outer_nodes(data, conditional, rows, mean, s, population, nodes[0], window)
     y, sigma = conditional.at(x)
     mu = mean(x, rows)
     log_inner, moments = _inner(mu, s, y, sigma, nodes[1])
@@ -162,7 +181,9 @@ def _block(
     posterior /= total
     log_likelihood = (top + np.log(total))[:, 0]
     return Marginal(
-        log_likelihood, *_derivatives(x, posterior, moments, gradient(x, rows), s, population)
+        log_likelihood,
+        *_derivatives(x, posterior, moments, gradient(x, rows), s, population),
+        window,
     )
 
 
@@ -219,6 +240,48 @@ def _cost(at: Array, mu: Array, s: float, y: Array, sigma: Array) -> Array:
     )
 
 
+def _window(
+    data: Measurements,
+    conditional: _Conditional,
+    rows: Rows,
+    mean: Mean,
+    s: float,
+    population: GaussianMixture,
+    near: Array | None,
+) -> Array:
+    """Ends in X of where the integrand is above exp(-DEPTH) of its peak, (points, 2)."""
+    x, sigma_x = data.x[:, None], np.sqrt(data.var_x)[:, None]
+    if near is not None:
+        margin = 0.5 * (near[:, 1:] - near[:, :1])
+        low, high, n_zooms = near[:, :1] - margin, near[:, 1:] + margin, 1
+    else:
+        low = np.minimum(
+            np.log10(np.maximum(x - 7.0 * sigma_x, 0.1 * sigma_x)),
+            np.min(population.means - 8.0 * population.widths),
+        )
+        high = np.maximum(
+            np.log10(np.maximum(x, 0.0) + 7.0 * sigma_x),
+            np.max(population.means + 8.0 * population.widths),
+        )
+        n_zooms = _ZOOMS
+    for _ in range(n_zooms):
+        grid = low + (high - low) * _UNIT
+        y, sigma_y = conditional.at(grid)
+        cost = (
+            _closest(mean(grid, rows), s, y, sigma_y, steps=0)
+            + 0.5 * ((x - np.exp(LN10 * grid)) / sigma_x) ** 2
+            - population.log_density(grid)
+        )
+        inside = cost <= cost.min(axis=1, keepdims=True) + DEPTH
+        if near is not None and (inside[:, 0].any() or inside[:, -1].any()):
+            return _window(data, conditional, rows, mean, s, population, None)
+        first = np.maximum(inside.argmax(axis=1) - 1, 0)
+        last = np.minimum(_GRID - inside[:, ::-1].argmax(axis=1), _GRID - 1)
+        low = np.take_along_axis(grid, first[:, None], axis=1)
+        high = np.take_along_axis(grid, last[:, None], axis=1)
+    return np.concatenate([low, high], axis=1)
+
+
 def _outer_nodes(
     data: Measurements,
     conditional: _Conditional,
@@ -227,33 +290,11 @@ def _outer_nodes(
     s: float,
     population: GaussianMixture,
     n_nodes: int,
+    window: Array,
 ) -> tuple[Array, Array]:
     """Nodes in X, (points, 4 n_nodes), and the logarithms of their weights."""
-    x, sigma_x = data.x[:, None], np.sqrt(data.var_x)[:, None]
-    low = np.minimum(
-        np.log10(np.maximum(x - 7.0 * sigma_x, 0.1 * sigma_x)),
-        np.min(population.means - 8.0 * population.widths),
-    )
-    high = np.maximum(
-        np.log10(np.maximum(x, 0.0) + 7.0 * sigma_x),
-        np.max(population.means + 8.0 * population.widths),
-    )
-    unit = np.linspace(0.0, 1.0, _GRID)[None, :]
-    for _ in range(_ZOOMS):
-        grid = low + (high - low) * unit
-        y, sigma_y = conditional.at(grid)
-        mu = mean(grid, rows)
-        cost = (
-            _closest(mu, s, y, sigma_y, steps=0)
-            + 0.5 * ((x - np.exp(LN10 * grid)) / sigma_x) ** 2
-            - population.log_density(grid)
-        )
-        inside = cost <= cost.min(axis=1, keepdims=True) + DEPTH
-        first = np.maximum(inside.argmax(axis=1) - 1, 0)
-        last = np.minimum(_GRID - inside[:, ::-1].argmax(axis=1), _GRID - 1)
-        low = np.take_along_axis(grid, first[:, None], axis=1)
-        high = np.take_along_axis(grid, last[:, None], axis=1)
-    grid = low + (high - low) * unit
+    sigma_x = np.sqrt(data.var_x)[:, None]
+    grid = window[:, :1] + (window[:, 1:] - window[:, :1]) * _UNIT
     mu = mean(grid, rows)
     # How fast the mean runs away from what is measured, over how far it may be from it.
     expected = np.exp(LN10 * np.minimum(mu, 100.0))

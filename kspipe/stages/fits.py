@@ -35,8 +35,7 @@ from kspipe.kernels.noise import covariance, propagate
 from kspipe.kernels.statistics import beam_averaging_dex
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe
-from kspipe.recipe.environment import EnvironmentTable
-from kspipe.stages.environments import environment_area
+from kspipe.stages.environments import environment_areas
 from kspipe.stages.surface import Disc
 
 __all__ = ["fit_all", "write_fits_table"]
@@ -59,6 +58,7 @@ class _Galaxy:
     used: Mask
     beam_arcsec2: Array
     masks: list[Mask]
+    areas: dict[str, Mask]
 
     @property
     def fwhm_pix(self) -> float:
@@ -118,7 +118,9 @@ def fit_all(
     table = recipe.comparison
     fwhm = beam_axes(beam_arcsec2)[0] / grid.pixel_arcsec
     masks = lattice_phases(grid.shape, grid.centre_pixel, fwhm, table.lattice_phases)
-    galaxy = _Galaxy(recipe, disc, grid, used, beam_arcsec2, masks)
+    # Region files are read first, so that a fault in one costs no fit.
+    areas = environment_areas(recipe, disc.radius_kpc, grid)
+    galaxy = _Galaxy(recipe, disc, grid, used, beam_arcsec2, masks, areas)
     gas, sfr = disc.surfaces["sigma_gas"], disc.surfaces["sigma_sfr"]
     beam_length = beam_correlation_length(fwhm)
     phases = galaxy.phases(gas, sfr, used)
@@ -136,7 +138,7 @@ def fit_all(
             "apertures": [
                 asdict(a) for a in peak_apertures(gas, sfr, used, fwhm, grid.jacobian_arcsec())
             ],
-            "relations": _relations(galaxy, phases[0].samples, masks[0] & used, population),
+            "relations": _relations(galaxy, phases[0], masks[0] & used, population, length),
         },
         "ranking": _ranking(galaxy, phases[0].samples, masks[0] & used, blocks, population),
         "trends": _trends(galaxy, residuals, masks[0] & used),
@@ -172,7 +174,7 @@ def _lines(galaxy: _Galaxy, everywhere: PhasedLine, length: float) -> list[dict[
         rows.append(row)
     rows.append(_ring_row(galaxy))
     for name, environment in table.environments.items():
-        area = galaxy.used & _area(galaxy, name, environment)
+        area = galaxy.used & galaxy.areas[name]
         gas = _scaled_gas(disc, environment.alpha_co_scale)
         line = fit_line_phases(galaxy.phases(gas, sfr, area), length, components=1)
         row = _row(galaxy, name, "sigma_gas", line, area)
@@ -228,10 +230,6 @@ def _ring_row(galaxy: _Galaxy) -> dict[str, Any]:
         "mean_sigma_gas": rings.samples.x.tolist(),
         "mean_sigma_sfr": rings.samples.y.tolist(),
     }
-
-
-def _area(galaxy: _Galaxy, name: str, environment: EnvironmentTable) -> Mask:
-    return environment_area(name, environment, galaxy.disc.radius_kpc, galaxy.grid)
 
 
 def _scaled_gas(disc: Disc, scale: float) -> Surface:
@@ -298,24 +296,26 @@ def _uses(recipe: Recipe) -> list[RelationUse]:
 
 
 def _relations(
-    galaxy: _Galaxy, samples: LinearSamples, mask: Mask, population: Array | None
+    galaxy: _Galaxy, phase: Phase, mask: Mask, population: Array | None, length: float
 ) -> dict[str, Any]:
     """Each relation with its free parameters; the molecular fraction where CO was observed."""
     disc = galaxy.disc
     inputs = _inputs(disc, mask)
-    components = galaxy.recipe.comparison.population_components
+    given: dict[str, Any] = {
+        "components": galaxy.recipe.comparison.population_components,
+        "population": population,
+        "places": (phase.positions, length),
+    }
     out: dict[str, Any] = {}
     for use in _uses(galaxy.recipe):
-        fit, _, _ = fit_relation(samples, inputs, use, components=components, population=population)
+        fit, _, _ = fit_relation(phase.samples, inputs, use, **given)
         out[use.name] = {"sigma_sfr": asdict(fit)}
         if "sigma_mol" in disc.surfaces:
             of_gas = _samples(disc.surfaces["sigma_gas"], disc.surfaces["sigma_mol"], mask)
             molecular = RelationUse(
                 use.name, use.law, use.parameters, (FreeParameter("zero_point"),), "f_mol"
             )
-            fit, _, _ = fit_relation(
-                of_gas, inputs, molecular, components=components, population=population
-            )
+            fit, _, _ = fit_relation(of_gas, inputs, molecular, **given)
             out[use.name]["f_mol"] = asdict(fit)
     return out
 

@@ -20,6 +20,7 @@ from kspipe.kernels.geometry import (
     beam_area,
     beam_axes,
     beam_covariance,
+    disc_azimuth,
     disc_radius,
     hexagonal_lattice,
     pixel_covariance,
@@ -285,3 +286,17 @@ def test_the_lattice_goes_through_its_centre(cx: float, cy: float) -> None:
     distance = np.hypot(*(np.indices(lattice.shape) - np.array([y, x])[:, None, None]))
     if min(x, y) > 10:
         assert np.count_nonzero(lattice & (distance < 1.2 * 6.0)) == 7
+
+
+def test_azimuth_and_radius_are_polar_coordinates_of_the_disc():
+    # A point at angle t in the plane, turned by the inclination about the major axis, is at
+    # (cos t, sin t cos i) along and across it on the sky.
+    angle, inclination, pa = 70.0, 55.0, 30.0
+    along = math.cos(math.radians(angle))
+    across = math.sin(math.radians(angle)) * math.cos(math.radians(inclination))
+    sine, cosine = math.sin(math.radians(pa)), math.cos(math.radians(pa))
+    east, north = np.array(along * sine + across * cosine), np.array(along * cosine - across * sine)
+    disc = {"inclination_deg": inclination, "pa_deg": pa}
+    assert disc_azimuth(east, north, **disc) == pytest.approx(angle)
+    assert disc_radius(east, north, **disc) == pytest.approx(1.0)
+    assert disc_azimuth(np.array(1.0), np.array(0.0), inclination_deg=0.0, pa_deg=0.0) == 90.0

@@ -18,6 +18,7 @@ from kspipe.stages.reduce import reduce_maps
 DISC = 'icrs\ncircle({ra},{dec},100")\n'
 COMPARISON = {
     "lattice_phases": 1,
+    "population_components": 1,
     "environments": {
         "inner": {"where": "0 - 4 kpc", "alpha_co_scale": 0.5},
         "inner_as_is": "0 - 4 kpc",
