@@ -40,7 +40,7 @@ from kspipe.maps.skymap import CommonError, NoiseTerm, SkyMap
 from kspipe.matching import Grid, choose_beam, match_map
 from kspipe.matching.psf import matching_kernel, smallest_psf_fwhm
 from kspipe.matching.target import effective_beam, smallest_legal_fwhm
-from kspipe.stages.summary import _common_errors
+from kspipe.stages.summary import common_errors
 
 fixed = settings(derandomize=True, deadline=None, max_examples=50)
 
@@ -717,7 +717,7 @@ def test_the_summary_lists_it_beside_the_error_of_the_flux_scale() -> None:
     sky = sky.with_step("common errors", common=CommonError(0.05, 0.0, 0.1))
     surface = SimpleNamespace(slopes={"24um": np.full((2, 2), 2.0)})
     disc = SimpleNamespace(surfaces={"sigma_sfr": surface}, intensity={"24um": sky})
-    errors = _common_errors(disc, "sigma_sfr", used, areas)
+    errors = common_errors(disc, "sigma_sfr", used, areas)
     # 2 x (1 + 2 + 3) x 4 = 48: 5 % of it and 10 % of it.
     assert errors == pytest.approx({"calibration_error": 2.4, "matching_error": 4.8})
 
