@@ -499,6 +499,7 @@ def closure(
     scatter_dex: float = 0.2,
     noise: Mapping[str, float] | None = None,
     mocks: int = 20,
+    wrong: tuple[float, float] = (5.0, 1.5),
     maps: Maps | None = None,
     overwrite: bool = False,
     progress: Progress = no_progress,
@@ -516,6 +517,8 @@ def closure(
     noise : mapping of str to float, optional
         Noise of a map over the recipe's, to plan a depth.
     mocks : int
+    wrong : (float, float)
+        In one more run: true inclination less the recipe's [deg], true alpha_CO over it.
     maps, overwrite, progress
         As in `reduce`.
 
@@ -536,6 +539,7 @@ def closure(
         Path(out),
         paint,
         n_mocks=mocks,
+        wrong=wrong,
         overwrite=overwrite,
         memory=memory,
         progress=progress,

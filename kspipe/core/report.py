@@ -104,6 +104,8 @@ def total_rows(summary: dict[str, Any]) -> list[tuple[str, str, str]]:
     rows = []
     for key, entry in summary["totals"].items():
         value = f"{measured(entry['value'], entry.get('random_error'))} {entry['unit']}".strip()
+        if entry.get("upper_limit") is not None:
+            value += f", below {entry['upper_limit']:.3g} (3 sigma)"
         calibration = entry.get("calibration_error")
         rows.append((_NAMES[key], value, f"{calibration:.2g}" if calibration else ""))
     return rows

@@ -66,34 +66,40 @@ def region_covariance(
             if term.source in by_source:
                 key = (term.source, id(term.sampled), term.correlation_arcsec2.tobytes())
                 terms.setdefault(key, term)
-                one, other = (
-                    np.where(used, t.sigma * weights, 0.0)[box]
-                    for t in (term, by_source[term.source])
-                )
+                partner = by_source[term.source]
+                one = np.where(used, term.sigma * weights, 0.0)[box]
+                is_same = partner is term
+                other = one if is_same else np.where(used, partner.sigma * weights, 0.0)[box]
                 by_noise.setdefault(key, []).append((i, one, other))
+    table, first_of, second_of = _bins(where, count)
     for key, products in by_noise.items():
-        for dy, dx, rho in _lags(terms[key], (where.shape[0], where.shape[1]), jacobian_arcsec):
+        for dy, dx, rho in _half_lags(
+            terms[key], (where.shape[0], where.shape[1]), jacobian_arcsec
+        ):
             here, there = _overlap(dy, where.shape[0]), _overlap(dx, where.shape[1])
             at, beside = (here[0], there[0]), (here[1], there[1])
-            bins = _bins(where[at], where[beside], count)
+            bins = table[first_of[at] + second_of[beside]].ravel()
             for i, one, other in products:
-                each = (one[at] * other[beside]).ravel()
-                totals[i] += rho * np.bincount(bins, each, minlength=2 * count + 1)
+                each = one[at] * other[beside]
+                if (dy, dx) != (0, 0):
+                    each = each + each if one is other else each + other[at] * one[beside]
+                totals[i] += rho * np.bincount(bins, each.ravel(), minlength=2 * count + 1)
     # Both orders of a pair of neighbouring regions were added.
     return [(t[:count], 0.5 * t[count : 2 * count - 1]) for t in totals]
 
 
-def _lags(
+def _half_lags(
     term: NoiseTerm, shape: tuple[int, int], jacobian_arcsec: Array
 ) -> Iterator[tuple[int, int, float]]:
-    """Pixel lags at which noise is correlated, and how much."""
+    """Pixel lags at which noise is correlated, and how much; of each and its opposite one."""
     if term.sampled is None and not np.any(term.correlation_arcsec2):
         yield 0, 0, 1.0
         return
-    dy, dx = np.mgrid[-shape[0] + 1 : shape[0], -shape[1] + 1 : shape[1]]
+    dy, dx = np.mgrid[0 : shape[0], -shape[1] + 1 : shape[1]]
     (ex, ey), (nx, ny) = jacobian_arcsec
     rho = term.correlation_at(ex * dx + ey * dy, nx * dx + ny * dy)
-    for row, column in np.argwhere(np.abs(rho) > LEAST_CORRELATION):
+    is_first = (dy > 0) | (dx >= 0)
+    for row, column in np.argwhere(is_first & (np.abs(rho) > LEAST_CORRELATION)):
         yield int(dy[row, column]), int(dx[row, column]), float(rho[row, column])
 
 
@@ -102,12 +108,18 @@ def _overlap(lag: int, n: int) -> tuple[slice, slice]:
     return slice(max(0, -lag), n - max(0, lag)), slice(max(0, lag), n - max(0, -lag))
 
 
-def _bins(one: NDArray[np.int_], other: NDArray[np.int_], count: int) -> NDArray[np.int_]:
-    """Where a pair of pixels counts: its region, the border to the next one, or nowhere."""
-    lower = np.minimum(one, other)
-    apart = np.abs(one - other)
+def _bins(
+    labels: NDArray[np.int_], count: int
+) -> tuple[NDArray[np.intp], NDArray[np.int_], NDArray[np.int_]]:
+    """Where a pair of pixels counts: its region, the border to the next one, or nowhere.
+
+    The bin is the table's entry at the sum of one number of each pixel.
+    """
+    one, other = np.meshgrid(np.arange(-1, count), np.arange(-1, count), indexing="ij")
+    lower, apart = np.minimum(one, other), np.abs(one - other)
     bins = np.where(apart == 0, one, np.where(apart == 1, count + lower, 2 * count))
-    return np.asarray(np.where(lower < 0, 2 * count, bins).ravel())
+    table = np.where(lower < 0, 2 * count, bins).ravel().astype(np.intp)
+    return table, (labels + 1) * (count + 1), labels + 1
 
 
 def upper_limit(value: Array | float, error: Array | float, n_sigma: float = 3.0) -> Array:

@@ -18,7 +18,7 @@ from kspipe.comparison.line import LineFit
 from kspipe.core.errors import Fault, InputError
 from kspipe.core.progress import Progress, no_progress
 from kspipe.core.seeds import generator
-from kspipe.trials.draws import SampleInputs, convert_draws, inputs_of, sums_of
+from kspipe.trials.draws import SampleInputs, convert_draws, inputs_of, not_carried, sums_of
 from kspipe.trials.flips import Flip, evaluate, find_flips
 from kspipe.trials.priors import Prior, priors_of
 from kspipe.trials.reduced import Reduced, line_samples
@@ -138,6 +138,11 @@ def make_budget(
     lattice = reduced.lattice()
     inputs = inputs_of(reduced, lattice)
     priors, fixed = priors_of(reduced.recipe, reduced.matched, set(inputs.intensity))
+    fixed += [
+        f"bias of {name}: its law needs {', '.join(absent)}, which the draws do not carry"
+        for name, table in reduced.recipe.relations.items()
+        if (absent := not_carried(table.law))
+    ]
     fit, response = line_response(line_samples(reduced.disc, lattice))
 
     progress(1, 5, f"{n_draws} draws")

@@ -26,6 +26,7 @@ from kspipe.recipe import Recipe
 from kspipe.stages.plan import InMemory
 from kspipe.stages.surface import Disc
 from kspipe.trials.closure_result import Closure, WrongRun, power_of, summed_up
+from kspipe.trials.draws import not_carried
 from kspipe.trials.painted import Paint, Painter, Sky
 from kspipe.trials.reduced import covered_by_all, line_samples
 
@@ -123,6 +124,9 @@ def _check(recipe: Recipe, paint: Paint, n_mocks: int) -> None:
         faults.append(
             Fault("--paint", f'"{paint.relation}" is no relation of the recipe ({known})')
         )
+    elif paint.relation and (absent := not_carried(recipe.relations[paint.relation].law)):
+        what = f'"{paint.relation}" needs {", ".join(absent)}, which a painted sky does not carry'
+        faults.append(Fault("--paint", what, "paint another relation, or a line"))
     for name, factor in paint.noise.items():
         if name not in recipe.maps:
             known = ", ".join(recipe.maps)
@@ -260,7 +264,8 @@ def _rank(
     mocks: _Mocks,
 ) -> None:
     """Rank all relations of the recipe, zero points fixed and then free within a prior."""
-    names = list(painter.recipe.relations)
+    relations = painter.recipe.relations
+    names = [name for name, table in relations.items() if not not_carried(table.law)]
     if len(names) < 2:
         return
     fwhm_pix = painter.plan.fwhm_arcsec / painter.plan.grid.pixel_arcsec

@@ -21,7 +21,7 @@ from kspipe.stages.surface import parameters_of
 from kspipe.trials.priors import Prior
 from kspipe.trials.reduced import Reduced
 
-__all__ = ["Drawn", "SampleInputs", "convert_draws", "inputs_of", "sums_of"]
+__all__ = ["Drawn", "SampleInputs", "convert_draws", "inputs_of", "not_carried", "sums_of"]
 
 Array = NDArray[np.float64]
 
@@ -307,7 +307,7 @@ def sums_of(drawn: Drawn, recipe: Recipe) -> dict[str, Array]:
         found["t_dep"] = _log_ratio(drawn.mol, drawn.sfr) - 3.0
     for name, table in recipe.relations.items():
         law = LAWS.get(table.law)
-        if set(law.needs) - {"sigma_gas", "oh"}:
+        if not_carried(table.law):
             continue
         inputs = {"sigma_gas": drawn.gas, "oh": np.broadcast_to(drawn.oh, drawn.gas.shape)}
         predicted = law.predict(inputs, table.parameters).sigma_sfr
@@ -316,6 +316,11 @@ def sums_of(drawn: Drawn, recipe: Recipe) -> dict[str, Array]:
             np.where(has_value, drawn.sfr, 0.0), np.where(has_value, predicted, 0.0)
         )
     return found
+
+
+def not_carried(law: str) -> list[str]:
+    """Inputs of a relation that samples and painted skies do not carry; empty for most."""
+    return sorted(set(LAWS.get(law).needs) - {"sigma_gas", "oh"})
 
 
 def _log_ratio(top: Array, bottom: Array) -> Array:

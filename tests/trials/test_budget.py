@@ -14,13 +14,16 @@ import pytest
 
 from kspipe.comparison.samples import LinearSamples
 from kspipe.core.errors import InputError
-from kspipe.trials.budget import make_budget
+from kspipe.products.style import figure_style, save_figure
+from kspipe.products.trial_figures import _budget_figure
+from kspipe.trials.budget import make_budget, plain_budget
 from kspipe.trials.draws import convert_draws, inputs_of, sums_of
 from kspipe.trials.flips import _first_crossing
 from kspipe.trials.priors import Prior
 from kspipe.trials.reduced import line_samples
 from kspipe.trials.response import line_response, refit
 from kspipe.trials.universes import ranges_of
+from kspipe.trials.write import as_json
 
 
 @pytest.fixture(scope="module")
@@ -128,6 +131,20 @@ def test_crossing_is_the_nearest_of_both_sides():
     assert _first_crossing(amounts, margin, 1.0) == pytest.approx(-1.5)
     assert _first_crossing(amounts, margin + 5, 6.0) is None
     assert _first_crossing(amounts, np.full(6, np.nan), 1.0) is None
+
+
+def test_figure_has_a_panel_for_each_quantity(budget, tmp_path):
+    plain = as_json({"galaxy": "Orrinda", **plain_budget(budget)})
+    with figure_style():
+        for name in ("one", "two"):
+            figure = _budget_figure(plain)
+            save_figure(figure, tmp_path / name)
+    assert len(figure.axes) == len(budget.quantities)
+    for suffix in (".png", ".pdf"):
+        files = [(tmp_path / name).with_suffix(suffix).read_bytes() for name in ("one", "two")]
+        assert files[0] == files[1]
+    written = {text.get_text() for axes in figure.axes for text in axes.get_yticklabels()}
+    assert {"alpha_CO", "together"} <= written
 
 
 def test_too_few_draws_are_refused(demo):
