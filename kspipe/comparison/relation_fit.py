@@ -252,8 +252,8 @@ def _has_prediction(
 ) -> NDArray[np.bool_]:
     """Samples for which the law has a value at a gas density that their noise allows."""
     gas = np.maximum(data.x, np.sqrt(data.var_x))
-    given = {**inputs, "sigma_gas": gas}
-    prediction = LAWS.get(use.law).predict(given, use.parameters)
+    law = LAWS.get(use.law)
+    prediction = law.predict({**inputs, law.gas: gas}, use.parameters)
     value = prediction.sigma_sfr if use.quantity == "sigma_sfr" else prediction.f_mol
     if value is None:
         return np.zeros(gas.shape, dtype=bool)
@@ -265,6 +265,7 @@ def relation_model(
 ) -> LatentModel:
     """Write a relation as a mean of latents whose parameters are offsets in dex."""
     names = tuple(free.name for free in use.free)
+    law = LAWS.get(use.law)
 
     def predicted(theta: Array, x: Array, rows: Rows) -> Array:
         offset = dict(zip(names, theta, strict=True))
@@ -278,7 +279,7 @@ def relation_model(
         parameters = {
             name: value * 10.0 ** offset.get(name, 0.0) for name, value in use.parameters.items()
         }
-        prediction = LAWS.get(use.law).predict({**given, "sigma_gas": gas}, parameters)
+        prediction = law.predict({**given, law.gas: gas}, parameters)
         if use.quantity == "sigma_sfr":
             value = prediction.sigma_sfr
         else:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any, Final
@@ -35,7 +35,9 @@ from kspipe.kernels.noise import covariance, propagate
 from kspipe.kernels.statistics import beam_averaging_dex
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe
+from kspipe.relations import LAWS
 from kspipe.stages.environments import environment_areas
+from kspipe.stages.law_inputs import law_inputs
 from kspipe.stages.surface import Disc
 
 __all__ = ["fit_all", "write_fits_table"]
@@ -266,14 +268,16 @@ def _posterior(
     }
 
 
-def _inputs(disc: Disc, mask: Mask) -> dict[str, Array]:
-    """What laws may need beside the gas, per sample."""
-    inputs = {"oh": disc.oh[mask]}
-    for name in ("sigma_star", "f_mol"):
-        if name in disc.surfaces:
-            inputs[name] = np.nan_to_num(disc.surfaces[name].value[mask])
-    if "f_mol" in inputs:
-        inputs["f_mol"] = np.clip(inputs["f_mol"], 0.0, 1.0)
+def _inputs(galaxy: _Galaxy, uses: Iterable[RelationUse], mask: Mask) -> dict[str, Array]:
+    """What some laws take beside the gas, per sample; taken as known."""
+    known = law_inputs(galaxy.recipe, galaxy.disc)
+    laws = [LAWS.get(use.law) for use in uses]
+    names = {name for law in laws for name in law.needs if name != law.gas}
+    inputs = {name: np.broadcast_to(known[name].value, mask.shape)[mask] for name in names}
+    # Share of the gas that a scale of alpha_CO acts on.
+    if "f_mol" in galaxy.disc.surfaces:
+        share = np.nan_to_num(galaxy.disc.surfaces["f_mol"].value[mask])
+        inputs["f_mol"] = np.clip(share, 0.0, 1.0)
     return inputs
 
 
@@ -300,7 +304,6 @@ def _relations(
 ) -> dict[str, Any]:
     """Each relation with its free parameters; the molecular fraction where CO was observed."""
     disc = galaxy.disc
-    inputs = _inputs(disc, mask)
     given: dict[str, Any] = {
         "components": galaxy.recipe.comparison.population_components,
         "population": population,
@@ -308,9 +311,14 @@ def _relations(
     }
     out: dict[str, Any] = {}
     for use in _uses(galaxy.recipe):
-        fit, _, _ = fit_relation(phase.samples, inputs, use, **given)
+        law, inputs = LAWS.get(use.law), _inputs(galaxy, [use], mask)
+        samples = phase.samples
+        if law.gas == "sigma_mol":
+            inputs["f_mol"] = np.ones(samples.x.size)
+            samples = _samples(disc.surfaces["sigma_mol"], disc.surfaces["sigma_sfr"], mask)
+        fit, _, _ = fit_relation(samples, inputs, use, **given)
         out[use.name] = {"sigma_sfr": asdict(fit)}
-        if "sigma_mol" in disc.surfaces:
+        if law.has_fraction and law.gas == "sigma_gas" and "sigma_mol" in disc.surfaces:
             of_gas = _samples(disc.surfaces["sigma_gas"], disc.surfaces["sigma_mol"], mask)
             molecular = RelationUse(
                 use.name, use.law, use.parameters, (FreeParameter("zero_point"),), "f_mol"
@@ -327,8 +335,10 @@ def _ranking(
     blocks: NDArray[np.intp],
     population: Array | None,
 ) -> list[dict[str, Any]]:
-    """Both footings, side by side."""
-    uses = _uses(galaxy.recipe)
+    """Both footings, side by side; laws of molecular gas alone stand on another abscissa."""
+    every = _uses(galaxy.recipe)
+    uses = [use for use in every if LAWS.get(use.law).gas == "sigma_gas"]
+    apart = {use.name: "takes molecular gas only" for use in every if use not in uses}
     if len(uses) < 2 or samples.obstacle():
         return []
     out = []
@@ -336,7 +346,7 @@ def _ranking(
         rng = generator(galaxy.recipe.seed, "ranking", f"{width:g}")
         ranking = rank_relations(
             samples,
-            _inputs(galaxy.disc, mask),
+            _inputs(galaxy, uses, mask),
             uses,
             blocks,
             rng,
@@ -344,7 +354,7 @@ def _ranking(
             components=galaxy.recipe.comparison.population_components,
             population=population,
         )
-        out.append(asdict(ranking))
+        out.append({**asdict(ranking), "left_out": {**ranking.left_out, **apart}})
     return out
 
 
