@@ -39,8 +39,8 @@ def smooth_part(value: Array, error: Array, fwhm_pix: float) -> Array:
     Notes
     -----
     The map is smoothed; pixels more than 3 sigma above the result are put down to it; and so on
-    until it settles. A smooth sky is all smooth part, whatever its noise: the clip takes off
-    4e-4 sigma of the mean of pure noise (the mean of a normal deviate cut at 3 sigma).
+    until it settles. A smooth sky is all smooth part but for what the clip takes off noise:
+    0.0044 sigma, the density of a normal deviate at 3.
     """
     observed = np.isfinite(value)
     sigma_pix = fwhm_pix / FWHM_PER_SIGMA

@@ -108,6 +108,7 @@ def test_where_alpha_co_bends(name: str) -> None:
         assert error == pytest.approx(drawn[product], rel=0.01), product
 
 
+@pytest.mark.slow
 @pytest.mark.parametrize("name", CASES)
 def test_at_a_signal_of_three_sigma(name: str) -> None:
     stated, drawn, linear = stated_and_drawn(name, 3.0)

@@ -163,6 +163,7 @@ def test_where_co_is_a_constant_share_nothing_can_be_told() -> None:
     assert not fit_alpha_co_and_gas_to_dust(atom / 100.0, atom, noise, rng).is_bounded
 
 
+@pytest.mark.slow
 def test_the_fit_of_a_reduced_galaxy(out) -> None:
     # A dust map made of the galaxy's own HI and CO with alpha_CO = 6 and a ratio of 120, and a
     # scatter of 0.03 dex.

@@ -90,6 +90,7 @@ def test_light_and_star_formation_at_and_below_zero() -> None:
     assert np.isnan(got[4])
 
 
+@pytest.mark.slow
 def test_through_a_recipe() -> None:
     out: Path = shared_folder()
     maps = demo_recipe(out)["maps"]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+import pytest
 from astropy.io import fits
 from demo_disc import disc_of, matched_maps, recipe_of, shared_folder
 
@@ -41,6 +42,7 @@ def hdu_in(name: str, unit: str, factor: float | np.ndarray) -> fits.PrimaryHDU:
     return fits.PrimaryHDU(data, header)
 
 
+@pytest.mark.slow
 def test_the_same_sky_in_any_unit() -> None:
     out = shared_folder()
     base = disc_of(out)

@@ -149,6 +149,7 @@ def test_own_records_travel(out) -> None:
     assert LINE_RATIO.get(ratio) is ratio
 
 
+@pytest.mark.slow
 def test_one_of_the_total_is_solved(out) -> None:
     record = own(
         family="alpha_co",
