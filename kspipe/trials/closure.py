@@ -39,6 +39,7 @@ Mask = NDArray[np.bool_]
 AT_LOG_GAS: Final = 1.0
 # Rounds in which weights, slope and scatter of the truth settle.
 TRUTH_ROUNDS: Final = 10
+LAW_STEP_DEX: Final = 1e-3
 PRODUCTS: Final[tuple[str, ...]] = ("sigma_atom", "sigma_mol", "sigma_gas", "sigma_sfr")
 
 
@@ -215,19 +216,47 @@ def _true_line(truth: Disc, disc: Disc, chosen: Mask) -> tuple[float, float, flo
     is looked at. Samples therefore count by the errors that the maps have there, taken at the
     true values, beside the scatter: weighted least squares, which needs no model of the fit.
     """
-    names = ("sigma_gas", "sigma_sfr")
-    gas, sfr = (truth.surfaces[name].value[chosen] for name in names)
-    gas_error, sfr_error = (disc.surfaces[name].error[chosen] for name in names)
-    positive = (gas > 0) & (sfr > 0)
-    x, y = np.log10(gas[positive]), np.log10(sfr[positive])
-    e_x = (gas_error[positive] / gas[positive]) / math.log(10.0)
-    e_y = (sfr_error[positive] / sfr[positive]) / math.log(10.0)
+    _, x, y, e_x, e_y = _true_logarithms(truth, disc, chosen)
     slope, intercept, scatter = 1.0, 0.0, 0.2
     for _ in range(TRUTH_ROUNDS):
         weight = 1.0 / (scatter**2 + e_y**2 + (slope * e_x) ** 2)
         slope, intercept = np.polyfit(x, y, 1, w=np.sqrt(weight))
         scatter = math.sqrt(float(np.average((y - slope * x - intercept) ** 2, weights=weight)))
     return float(slope), float(intercept + slope * AT_LOG_GAS), scatter
+
+
+def _true_zero_point(
+    painter: Painter, paint: Paint, truth: Disc, disc: Disc, chosen: Mask
+) -> float:
+    """Mean of log10(true / law) over the samples, weighed as in `_true_line`."""
+    positive, x, y, e_x, e_y = _true_logarithms(truth, disc, chosen)
+    law, oh = paint.law(painter.recipe), truth.oh[chosen][positive]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        at, above = (np.log10(law(10.0 ** (x + step), oh)) for step in (0.0, LAW_STEP_DEX))
+    offset, slope = y - at + paint.shift_dex, (above - at) / LAW_STEP_DEX
+    known = np.isfinite(offset) & np.isfinite(slope)
+    zero, scatter = 0.0, 0.2
+    for _ in range(TRUTH_ROUNDS):
+        weight = 1.0 / (scatter**2 + e_y**2 + (slope * e_x) ** 2)[known]
+        zero = float(np.average(offset[known], weights=weight))
+        scatter = math.sqrt(float(np.average((offset[known] - zero) ** 2, weights=weight)))
+    return zero
+
+
+def _true_logarithms(
+    truth: Disc, disc: Disc, chosen: Mask
+) -> tuple[Mask, Array, Array, Array, Array]:
+    """Which samples have logarithms, those of gas and star formation, and the errors of both [dex].
+
+    The errors are those of the maps, at the true values.
+    """
+    names = ("sigma_gas", "sigma_sfr")
+    gas, sfr = (truth.surfaces[name].value[chosen] for name in names)
+    gas_error, sfr_error = (disc.surfaces[name].error[chosen] for name in names)
+    positive = (gas > 0) & (sfr > 0)
+    e_x = (gas_error[positive] / gas[positive]) / math.log(10.0)
+    e_y = (sfr_error[positive] / sfr[positive]) / math.log(10.0)
+    return positive, np.log10(gas[positive]), np.log10(sfr[positive]), e_x, e_y
 
 
 def _use(painter: Painter, name: str, free: tuple[FreeParameter, ...] = ()) -> RelationUse:
@@ -241,11 +270,7 @@ def _relation(
     """The painted relation's zero point, found and true."""
     use = _use(painter, paint.relation, (FreeParameter(ZERO_POINT),))
     fit, _, _ = fit_relation(line_samples(disc, chosen), {"oh": disc.oh[chosen]}, use)
-    gas, sfr = (sky.truth.surfaces[name].value[chosen] for name in ("sigma_gas", "sigma_sfr"))
-    predicted = paint.law(painter.recipe)(gas, sky.truth.oh[chosen]) / 10.0**paint.shift_dex
-    with np.errstate(invalid="ignore", divide="ignore"):
-        offsets = np.log10(sfr / predicted)
-    true = float(np.mean(offsets[np.isfinite(offsets)]))
+    true = _true_zero_point(painter, paint, sky.truth, disc, chosen)
     mocks.zero_points.append(true)
     if fit.is_fitted:
         name = f"zero point of {paint.relation}"

@@ -10,7 +10,7 @@ import pytest
 
 from kspipe.core.errors import InputError
 from kspipe.recipe import load_recipe
-from kspipe.trials.closure import run_closure
+from kspipe.trials.closure import _true_zero_point, run_closure
 from kspipe.trials.closure_result import Found, summed_up
 from kspipe.trials.painted import Paint, Painter, noise_factors
 
@@ -54,6 +54,19 @@ def test_wrong_assumptions_show_as_they_must(painter):
         used = disc.coverage[name] > 0.9999
         ratio = disc.surfaces[name].value[used] / truth[used]
         np.testing.assert_allclose(ratio, factor, rtol=3e-3, err_msg=name)
+
+
+def test_true_zero_point_moves_with_the_paint(painter):
+    used = np.isfinite(painter.plan.grid.offsets_arcsec()[0])
+    found = []
+    for shift in (0.0, 0.1):
+        paint = Paint(relation="shielding_kpc", shift_dex=shift)
+        truth = painter.sky(paint, 3).truth
+        found.append(_true_zero_point(painter, paint, truth, truth, used))
+    # The same sky with stars brighter by 0.1 dex everywhere.
+    assert found[1] - found[0] == pytest.approx(0.1, abs=1e-6)
+    # Clumps within the beam make a steep law yield more stars than its mean gas would.
+    assert 0.0 < found[0] < 0.3
 
 
 def test_noise_factor_reaches_map_and_recipe(painter):
