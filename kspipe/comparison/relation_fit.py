@@ -253,7 +253,7 @@ def _has_prediction(
     """Samples for which the law has a value at a gas density that their noise allows."""
     gas = np.maximum(data.x, np.sqrt(data.var_x))
     law = LAWS.get(use.law)
-    prediction = law.predict({**inputs, law.gas: gas}, use.parameters)
+    prediction = law.predict({**inputs, law.gas: gas}, use.parameters, slopes=False)
     value = prediction.sigma_sfr if use.quantity == "sigma_sfr" else prediction.f_mol
     if value is None:
         return np.zeros(gas.shape, dtype=bool)
@@ -279,7 +279,7 @@ def relation_model(
         parameters = {
             name: value * 10.0 ** offset.get(name, 0.0) for name, value in use.parameters.items()
         }
-        prediction = law.predict({**given, law.gas: gas}, parameters)
+        prediction = law.predict({**given, law.gas: gas}, parameters, slopes=False)
         if use.quantity == "sigma_sfr":
             value = prediction.sigma_sfr
         else:

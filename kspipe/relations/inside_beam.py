@@ -39,7 +39,13 @@ class Relation(Protocol):
     def needs(self) -> tuple[str, ...]:
         """Names of the inputs, the gas first."""
 
-    def predict(self, inputs: Mapping[str, Array], parameters: Mapping[str, float]) -> Prediction:
+    def predict(
+        self,
+        inputs: Mapping[str, Array],
+        parameters: Mapping[str, float],
+        *,
+        slopes: bool = True,
+    ) -> Prediction:
         """Evaluate it."""
 
 
@@ -129,7 +135,7 @@ def beam_bias_dex(
     Negative where evaluating at the mean predicts too little. Parameters are those of
     `mean_over_lognormal`.
     """
-    plain = law.predict(inputs, parameters).sigma_sfr
+    plain = law.predict(inputs, parameters, slopes=False).sigma_sfr
     return _log_ratio(plain, mean_over_lognormal(law, inputs, parameters, scatter_dex))
 
 
@@ -171,7 +177,7 @@ def noise_bias(
 
     Parameters are those of `mean_over_noise`. NaN where nothing is predicted without noise.
     """
-    plain = law.predict(inputs, parameters).sigma_sfr
+    plain = law.predict(inputs, parameters, slopes=False).sigma_sfr
     noisy = mean_over_noise(law, inputs, parameters, gas_error)
     with np.errstate(invalid="ignore", divide="ignore"):
         return np.where(plain > 0, noisy / plain, np.nan)
@@ -185,7 +191,7 @@ def _average(
 ) -> Array:
     total: Array | float = 0.0
     for node, weight in zip(_NODES, _WEIGHTS, strict=True):
-        predicted = law.predict({**inputs, law.needs[0]: at(float(node))}, parameters)
+        predicted = law.predict({**inputs, law.needs[0]: at(float(node))}, parameters, slopes=False)
         total = total + weight * predicted.sigma_sfr
     return np.asarray(total)
 

@@ -158,6 +158,10 @@ class Law:
     is_linear: bool = False
     note: str = ""
 
+    def __reduce__(self) -> tuple[object, tuple[str]]:
+        """Travel by key."""
+        return _by_key, (self.key,)
+
     @property
     def gas(self) -> str:
         """Name of the gas that it takes: ``sigma_gas`` or ``sigma_mol``."""
@@ -339,3 +343,7 @@ class _Blank:
 
 
 LAWS = Registry[Law]("relation")
+
+
+def _by_key(key: str) -> Law:
+    return LAWS.get(key)

@@ -180,7 +180,7 @@ LAWS.add(
 )
 for _key, _label, _cite, _s1, _is_erratum in (
     (
-        "gnedin2014", "Gnedin & Draine 2014, erratum", "gnedin2016",
+        "gnedin2014", "Gnedin & Draine 2014, erratum", "gnedin2014",
         "(50/g) r/(1 + 1.69 r), r = (0.001 + 0.1 U)^0.5", True,
     ),
     (
@@ -193,7 +193,8 @@ for _key, _label, _cite, _s1, _is_erratum in (
             key=_key,
             label=_label,
             cite=_cite,
-            where="fit for averages over a scale (equation number from memory)",
+            where="fit for averages over a scale (equation number from memory)"
+            + (", as in the erratum, ApJ 830, 54" if _is_erratum else ""),
             formula=f"f_H2 = R/(1 + R), R = (Sigma_H/S1)^a, a = 0.5 + 1/(1 + (U D^2/600)^0.5), "
             f"S1 = {_s1}, g = (D^2 + D_*(L)^2)^0.5",
             certainty="verified",

@@ -310,7 +310,7 @@ def sums_of(drawn: Drawn, recipe: Recipe) -> dict[str, Array]:
         if not_carried(table.law):
             continue
         inputs = {"sigma_gas": drawn.gas, "oh": np.broadcast_to(drawn.oh, drawn.gas.shape)}
-        predicted = law.predict(inputs, table.parameters).sigma_sfr
+        predicted = law.predict(inputs, table.parameters, slopes=False).sigma_sfr
         has_value = np.isfinite(predicted)
         found[f"bias {name}"] = _log_ratio(
             np.where(has_value, drawn.sfr, 0.0), np.where(has_value, predicted, 0.0)

@@ -101,7 +101,9 @@ class Paint:
 
         def predict(gas: Array, oh: Array) -> Array:
             inputs = {"sigma_gas": gas, "oh": oh}
-            return np.asarray(factor * law.predict(inputs, table.parameters).sigma_sfr)
+            return np.asarray(
+                factor * law.predict(inputs, table.parameters, slopes=False).sigma_sfr
+            )
 
         return predict
 

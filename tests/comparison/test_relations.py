@@ -26,7 +26,8 @@ from kspipe.comparison.samples import LinearSamples, independent_samples
 from kspipe.core.registry import Registry
 from kspipe.kernels.blocks import correlation_length, square_blocks
 from kspipe.relations import LAWS
-from kspipe.relations.law import Law, Parameter, Prediction
+from kspipe.relations.law import Law, Outcome
+from kspipe.relations.parameters import Parameter
 
 # Two beams apart instead of one and a half: 144 samples, for speed.
 LATTICE = independent_samples((N_PIXELS, N_PIXELS), CENTRE, 4.0 / 3.0 * PIXELS_PER_BEAM)
@@ -34,11 +35,9 @@ POSITIONS = np.stack(np.nonzero(LATTICE)[::-1], axis=1).astype(float)
 KMT = RelationUse("kmt", "krumholz2009", {"clumping": 5.0, "anchor_oh": 8.69})
 
 
-def power_law(inputs, parameters):
-    gas = np.asarray(inputs["sigma_gas"], dtype=float)
-    level = 10 ** (LEVEL + parameters["shift"]) * parameters["efficiency"]
-    none = np.zeros(gas.shape, dtype=bool)
-    return Prediction(level * gas / 10**PIVOT, None, {}, none, none)
+def power_law(own, given):
+    level = 10 ** (LEVEL + given["shift"]) * given["efficiency"]
+    return Outcome(sigma_sfr=own["sigma_gas"] * (level / 10**PIVOT))
 
 
 @pytest.fixture(autouse=True)
@@ -52,6 +51,10 @@ def shelf(monkeypatch):
             key="power_law",
             function=power_law,
             needs=("sigma_gas",),
+            optional=(),
+            has_fraction=False,
+            ranges={},
+            monotonic={},
             parameters=(
                 Parameter("shift", "dex", 0.0, -9.0, 9.0),
                 Parameter("efficiency", "factor", 1.0, 1e-9, 1e9),
