@@ -47,10 +47,12 @@ def one_kind(slope: float, scatter: float, number: int, phases: int) -> None:
             continue
         limits += fit.is_limit
         level = LEVEL + slope * (fit.pivot - PIVOT)
-        off = np.array([fit.slope - slope, fit.intercept - level, fit.scatter_dex - scatter])
+        # A limit is not a value: it is counted above and enters no mean.
+        scatter_off = np.nan if fit.is_limit else fit.scatter_dex - scatter
+        off = np.array([fit.slope - slope, fit.intercept - level, scatter_off])
         rows.append([off, [fit.slope_error, fit.intercept_error, fit.scatter_error]])
         older = classical_fits(samples[0].samples, PIVOT)
-        classical.append([one.slope - slope for one in older])
+        classical.append([fit.slope - slope for fit in older])
     off, error = np.moveaxis(np.array(rows), 1, 0)
     pulls = off / error
     print(
@@ -59,15 +61,17 @@ def one_kind(slope: float, scatter: float, number: int, phases: int) -> None:
         f"{(time.process_time() - begin) / number:.2f} s each"
     )
     for i, name in enumerate(("slope", "intercept", "scatter")):
-        if not np.isfinite(pulls[:, i]).any():
+        good = np.isfinite(pulls[:, i])
+        if not good.any():
             continue
-        held = [100 * np.nanmean(np.abs(pulls[:, i]) < z) for z in (1.0, 1.96)]
+        held = [100 * np.mean(np.abs(pulls[good, i]) < z) for z in (1.0, 1.96)]
+        one = off[good, i]
         print(
-            f"  {name:9s} bias {off[:, i].mean():+.4f} +- {off[:, i].std() / len(off) ** 0.5:.4f}, "
-            f"error {np.nanmean(error[:, i]):.4f}, 68 % holds {held[0]:.1f} %, "
+            f"  {name:9s} bias {one.mean():+.4f} +- {one.std() / len(one) ** 0.5:.4f}, "
+            f"error {error[good, i].mean():.4f}, 68 % holds {held[0]:.1f} %, "
             f"95 % holds {held[1]:.1f} %"
         )
-    names = [one.method for one in older]
+    names = [fit.method for fit in older]
     means = np.nanmean(classical, axis=0)
     print(
         "  slope - true: " + ", ".join(f"{n} {m:+.2f}" for n, m in zip(names, means, strict=True)),
