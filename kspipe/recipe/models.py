@@ -233,7 +233,7 @@ class ComparisonTable(Table):
 
     low_snr: float = Field(default=5.0, ge=0.0)
     fits: bool = True
-    lattice_phases: int = Field(default=4, ge=1, le=4)
+    lattice_phases: int = Field(default=1, ge=1, le=4)
     population_components: int = Field(default=2, ge=1, le=3)
     zero_point_prior: float = Field(default=0.2, gt=0.0, le=2.0)
     free: dict[str, dict[str, FreeWidth]] = Field(default_factory=dict)
