@@ -31,7 +31,6 @@ from kspipe.conversions.midplane import midplane_density_msun_pc3, scale_height_
 from kspipe.conversions.nitrogen import NITROGEN, Nitrogen
 from kspipe.conversions.oh_scales import OH_SCALES, USUAL_SHIFT_DEX, scale_shift_dex
 from kspipe.conversions.own import GIVEN_ALPHA_CO, OwnForm, own_record
-from kspipe.conversions.radiation_field import FIELD_UNITS, convert_field, field_from_sfr
 from kspipe.conversions.record import Range, Record
 from kspipe.conversions.shifts import Shifts, parameter_shifts
 from kspipe.conversions.solar import SOLAR_ANCHORS, anchor_shift_dex, oh_of_z_prime
@@ -47,7 +46,6 @@ __all__ = [
     "BALMER",
     "CIRCULARITY",
     "EXTINCTION",
-    "FIELD_UNITS",
     "FINISHED",
     "FINISHED_SFR",
     "GAS_TO_DUST",
@@ -97,8 +95,6 @@ __all__ = [
     "carry_noise",
     "combine",
     "convert",
-    "convert_field",
-    "field_from_sfr",
     "finished_factor",
     "fit_alpha_co_and_gas_to_dust",
     "imf_factor",

@@ -1,4 +1,4 @@
-"""Mass-to-light ratio by specific star formation, heights of discs, and the radiation field."""
+"""Mass-to-light ratio by specific star formation, and heights of discs."""
 
 from __future__ import annotations
 
@@ -11,13 +11,10 @@ from helpers import demo_recipe
 from scipy.optimize import brentq
 
 from kspipe.conversions import (
-    FIELD_UNITS,
     MASS_TO_LIGHT,
     Choices,
     Parameters,
     convert,
-    convert_field,
-    field_from_sfr,
     midplane_density_msun_pc3,
     scale_height_from_length,
 )
@@ -120,16 +117,3 @@ def test_heights_of_either_definition_give_one_density() -> None:
     ]
     assert densities[0] == pytest.approx(densities[1], rel=1e-14)
     assert densities[0] == pytest.approx(50.0 / (4 * 300.0), rel=1e-12)
-
-
-def test_units_of_the_radiation_field() -> None:
-    # Draine 1978 is 1.71 of Habing 1968 (value from memory; 1.7 in common practice).
-    assert float(convert_field(1.0, "Draine", "Habing")) == pytest.approx(1.7, abs=0.05)
-    for given in FIELD_UNITS:
-        for wanted in FIELD_UNITS:
-            there = convert_field(3.0, given, wanted)
-            assert float(convert_field(there, wanted, given)) == pytest.approx(3.0, rel=1e-15)
-    # One in the solar neighbourhood, proportional, and signs are kept.
-    rates = np.array([2.5e-3, 2.5e-2, 0.0, -2.5e-3, np.nan])
-    np.testing.assert_allclose(field_from_sfr(rates, "solar neighbourhood"), rates / 2.5e-3)
-    np.testing.assert_allclose(field_from_sfr(rates, "Habing"), 1.71 * rates / 2.5e-3, rtol=1e-12)
