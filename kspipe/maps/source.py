@@ -18,7 +18,7 @@ from astropy.wcs import WCS
 from astropy.wcs.utils import skycoord_to_pixel
 from numpy.typing import NDArray
 
-from kspipe.core.errors import BeamError, Fault, MapError, ShapeError
+from kspipe.core.errors import BeamError, Fault, GridError, MapError, ShapeError
 from kspipe.core.tracers import TRACERS, Tracer
 from kspipe.kernels.geometry import beam_area
 from kspipe.maps.beams import Beam, BeamTable, beam_table, find_beam
@@ -353,6 +353,15 @@ class MapSource:
         )
         x, y = _centre_pixel(wcs, image.shape, centre_deg)
         own, jacobian = pixel_jacobian(wcs, x, y, icrs=False), pixel_jacobian(wcs, x, y)
+        if not abs(float(np.linalg.det(own))) > 0:
+            raise GridError(
+                Fault(
+                    f"{where}, {image}",
+                    f"neighbouring pixels lie at one place on the sky: CRVAL1 and CRVAL2 are "
+                    f"{image.header.get('CRVAL1')!r} and {image.header.get('CRVAL2')!r}",
+                    "check CRVAL1 and CRVAL2 (degrees are expected)",
+                )
+            )
         to_icrs = jacobian @ np.linalg.inv(own)
         pixel_area = abs(float(np.linalg.det(own)))
         psf = _psf(request, jacobian, where)
