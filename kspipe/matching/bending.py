@@ -210,6 +210,8 @@ def _bend(
     xxx, xxy, xyy, yyy = (everywhere(part) for part in moments.skewness)
     (cxx, cxy), (_, cyy) = kernel_pix2
     here = (cxx + xx) * (cyy + yy) - (cxy + xy) ** 2
+    # A kernel narrower than a pixel leaves white noise nearly as it is, however it bends.
+    is_wide = float(np.min(np.linalg.eigvalsh(kernel_pix2))) > 1.0
     return Bend(
         shift_pix=np.array([everywhere(part) for part in moments.mean]),
         terms={
@@ -221,7 +223,7 @@ def _bend(
             (1, 2): xyy / 2,
             (0, 3): yyy / 6,
         },
-        gain=np.sqrt((cxx * cyy - cxy**2) / here),
+        gain=np.sqrt((cxx * cyy - cxy**2) / here) if is_wide else np.ones(x.size),
     )
 
 

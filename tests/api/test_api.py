@@ -60,6 +60,7 @@ def test_wrong_names_say_what_there_is(comparison):
         _ = kspipe.reduse
 
 
+@pytest.mark.slow
 def test_maps_in_memory_equal_files(comparison, tmp_path):
     painted = load_demo().paint(1)
     maps = {

@@ -146,6 +146,7 @@ def test_resolved_recipe_gives_identical_numbers(made, tmp_path):
     assert {p.name for p in differing} <= {"manifest.json", "recipe.toml"}
 
 
+@pytest.mark.slow
 def test_changing_alpha_co_does_not_smooth_again(made, tmp_path):
     out, _ = made
     folder = tmp_path / "copy"

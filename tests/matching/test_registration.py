@@ -110,6 +110,7 @@ CASES = {
 }
 
 
+@pytest.mark.slow
 def test_bias_and_pull_width_with_holes_and_uneven_noise() -> None:
     # The displacement is painted; the noise is smoothed in real space.
     snr, case = CASES["holes and uneven noise"]

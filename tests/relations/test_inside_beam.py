@@ -28,7 +28,7 @@ class PowerLaw:
     exponent: float
     needs: tuple[str, ...] = ("sigma_gas",)
 
-    def predict(self, inputs, _, *, slopes=True) -> Prediction:
+    def predict(self, inputs, _, *, slopes=True) -> Prediction:  # noqa: ARG002 - as a Law has it
         sigma = np.asarray(inputs["sigma_gas"], dtype=float)
         nothing = np.zeros(sigma.shape, dtype=bool)
         return Prediction(2.5e-4 * sigma**self.exponent, None, {}, nothing, nothing)

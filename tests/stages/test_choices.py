@@ -117,6 +117,7 @@ def test_an_initial_mass_function(out) -> None:
     assert "face-on, Salpeter IMF" in text
 
 
+@pytest.mark.slow
 def test_a_power_law_counts_what_it_leaves_out(out) -> None:
     with pytest.warns(KspipeWarning, match=r"calzetti2007_24um.*power law, and \d+ pixels"):
         reduced(out, star_formation={"calibration": "calzetti2007_24um", "maps": ["ir"]})
@@ -168,6 +169,7 @@ def with_stars(out: Path) -> dict[str, Any]:
     return {"maps": maps, "stars": stars_table}
 
 
+@pytest.mark.slow
 def test_stars_and_the_alpha_co_that_needs_them(out) -> None:
     tables = with_stars(out)
     gas = {"alpha_co": "bolatto2013_eq31", "line_ratio": 0.65}

@@ -133,6 +133,7 @@ def test_crossing_is_the_nearest_of_both_sides():
     assert _first_crossing(amounts, np.full(6, np.nan), 1.0) is None
 
 
+@pytest.mark.slow
 def test_figure_has_a_panel_for_each_quantity(budget, tmp_path):
     plain = as_json({"galaxy": "Orrinda", **plain_budget(budget)})
     with figure_style():
