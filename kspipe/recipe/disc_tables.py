@@ -11,6 +11,7 @@ from pydantic import AfterValidator, BeforeValidator, Field, model_validator
 from kspipe.conversions.midplane import ScaleHeight
 from kspipe.core.errors import nearest
 from kspipe.core.radiation import FIELD_UNITS, FieldUnit
+from kspipe.recipe.kinds import FieldStrength
 from kspipe.recipe.quantity import Measured, parse_measured
 from kspipe.recipe.values import Table
 
@@ -44,7 +45,6 @@ def _unit(typed: Any) -> str:
 Density = Annotated[Measured, _positive("Msun/pc3", '"0.05 Msun/pc3"')]
 DensityOrZero = Annotated[Measured, _positive("Msun/pc3", '"0.01 Msun/pc3"', or_zero=True)]
 Height = Annotated[Measured, _positive("pc", '"300 pc"')]
-Strength = Annotated[Measured, _positive("", "1.0")]
 
 
 class MidplaneTable(Table):
@@ -76,9 +76,9 @@ class MidplaneTable(Table):
 
 
 class RadiationFieldTable(Table):
-    """Far-ultraviolet field: a number in a stated unit, or as the stars form."""
+    """Far-ultraviolet field: a number, a map or a table in a stated unit, or as the stars form."""
 
-    field: Strength | None = None
+    field: FieldStrength | None = None
     unit: Annotated[FieldUnit | None, BeforeValidator(_unit)] = None
     origin: Literal["star formation"] | None = None
 

@@ -10,9 +10,11 @@ from kspipe.recipe.varying import Kind, Varying, varying
 __all__ = [
     "ABUNDANCE",
     "ALPHA_CO_VALUE",
+    "FIELD_STRENGTH",
     "FRACTION",
     "RATIO",
     "Abundance",
+    "FieldStrength",
     "Fraction",
     "LineMap",
     "MetalContent",
@@ -36,6 +38,7 @@ ALPHA_CO_VALUE: Final = Kind(
 FRACTION: Final = Kind(
     "", '0.3 or "0.3 +- 0.1"', 0, 1, "a fraction from 0 to below 1", from_low=True
 )
+FIELD_STRENGTH: Final = Kind("", '1.0 or "1.0 +- 0.3"', 0, math.inf, "a positive field")
 LINE_VALUE: Final = Kind("", "-0.6 or 1.2", -math.inf, math.inf, "a number")
 
 Abundance = Annotated[Varying, varying(ABUNDANCE)]
@@ -44,4 +47,5 @@ Ratio = Annotated[Varying, varying(RATIO)]
 RatioOrZero = Annotated[Varying, varying(RATIO_OR_ZERO)]
 Reddening = Annotated[Varying, varying(REDDENING)]
 Fraction = Annotated[Varying, varying(FRACTION)]
+FieldStrength = Annotated[Varying, varying(FIELD_STRENGTH)]
 LineMap = Annotated[Varying, varying(LINE_VALUE)]

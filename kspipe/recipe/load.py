@@ -93,7 +93,9 @@ def load_recipe(path: str | Path, *, in_memory: frozenset[str] = frozenset()) ->
     except (OSError, UnicodeDecodeError) as error:
         raise RecipeError(Fault(str(path), f"the recipe cannot be read ({error})")) from None
     except tomllib.TOMLDecodeError as error:
-        raise RecipeError(Fault(str(path), f"not valid TOML: {error}")) from None
+        twice = "Cannot overwrite" in str(error) or "Cannot declare" in str(error)
+        do = "a key or table stands there for the second time: keep one" if twice else ""
+        raise RecipeError(Fault(str(path), f"not valid TOML: {error}", do)) from None
     resolved = path.resolve()
     return parse_recipe(raw, folder=resolved.parent, path=resolved, in_memory=in_memory)
 
@@ -143,7 +145,7 @@ def parse_recipe(
     tables["relations"] = with_beam_clumping(raw, tables, _relations, faults)
     if "gas_state" in raw:
         tables["gas_state"] = _gas_state(raw["gas_state"], folder, faults)
-    for name in ("metallicity", "foreground", "gas", "stars", "star_formation"):
+    for name in ("metallicity", "foreground", "gas", "stars", "star_formation", "radiation_field"):
         if isinstance(tables.get(name), BaseModel):
             tables[name] = located(tables[name], folder, name, faults)
     tables["records"] = records

@@ -62,7 +62,7 @@ def law_inputs(recipe: Recipe, disc: Disc) -> dict[str, Known]:
     if recipe.midplane is not None:
         inputs["rho_sd"] = _midplane(recipe.midplane, inputs)
     if recipe.radiation_field is not None:
-        inputs["g0"] = _radiation_field(recipe.radiation_field, disc.surfaces["sigma_sfr"])
+        inputs["g0"] = _radiation_field(recipe.radiation_field, disc)
     if recipe.rotation is not None:
         omega, beta = rotation_of(recipe.rotation, disc.radius_kpc)
         inputs["omega"] = LawField(omega, origin="rotation: velocity over radius")
@@ -87,14 +87,20 @@ def _midplane(table: MidplaneTable, inputs: Mapping[str, Known]) -> LawField:
     return LawField(density, propagate({"stars": stars.noise}, {"stars": slope}), origin)
 
 
-def _radiation_field(table: RadiationFieldTable, sfr: Known) -> LawField:
+def _radiation_field(table: RadiationFieldTable, disc: Disc) -> LawField:
     if table.field is not None and table.unit is not None:
-        value = field_in(table.field.value, table.unit, "solar neighbourhood")
-        return LawField(
-            np.asarray(value),
-            origin=f"radiation field {table.field} in units {table.unit!r}, everywhere: "
-            f"{value:.4g} of the solar neighbourhood",
-        )
+        given = disc.for_relations["g0"]
+        factor = float(field_in(1.0, table.unit, "solar neighbourhood"))
+        noise: tuple[NoiseTerm, ...] = ()
+        if given.random is not None:
+            beam = next(iter(disc.intensity.values())).beam_arcsec2
+            sigma = np.broadcast_to(factor * given.random, disc.oh.shape)
+            noise = (NoiseTerm("parameter g0", sigma, beam),)
+        what = "; ".join(given.notes) or f"radiation field {table.field}, everywhere"
+        middle = float(np.nanmedian(factor * given.value))
+        origin = f"{what}, in units {table.unit!r}: {middle:.4g} of the solar neighbourhood"
+        return LawField(factor * given.value, noise, origin + (" (median)" if given.notes else ""))
+    sfr = disc.surfaces["sigma_sfr"]
     slope = 1.0 / SOLAR_SFR_MSUN_YR_KPC2
     return LawField(
         slope * sfr.value,

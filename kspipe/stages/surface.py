@@ -60,6 +60,8 @@ class Disc:
         Quantities of the recipe that may vary, by their names in `Parameters`.
     drawn : dict of str to int
         By product: pixels whose random error is that of draws, not of first order.
+    for_relations : dict of str to Field
+        Quantities that only relations take, in the recipe's units.
     """
 
     surfaces: dict[str, Surface]
@@ -71,6 +73,7 @@ class Disc:
     shifts: dict[str, list[Array]]
     fields: dict[str, Field]
     drawn: dict[str, int]
+    for_relations: dict[str, Field]
 
 
 def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
@@ -128,6 +131,7 @@ def surfaces_of(recipe: Recipe, matched: dict[str, SkyMap], grid: Grid) -> Disc:
         shifts=shifts.common,
         fields=fields,
         drawn=drawn,
+        for_relations=relation_fields(recipe, place),
     )
 
 
@@ -190,6 +194,14 @@ def fields_of(recipe: Recipe, place: Place) -> dict[str, Field]:
         if isinstance(quantity, Measured | OnMap | Profile | ByRegion)
     }
     return {"oh": metallicity_of(recipe, place), **fields}
+
+
+def relation_fields(recipe: Recipe, place: Place) -> dict[str, Field]:
+    """Quantities that only relations take, by the names of their inputs, in the recipe's units."""
+    table = recipe.radiation_field
+    if table is None or table.field is None:
+        return {}
+    return {"g0": spread(table.field, place, "radiation_field.field")}
 
 
 def parameters_of(recipe: Recipe, fields: Mapping[str, Field]) -> Parameters:

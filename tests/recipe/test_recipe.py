@@ -585,3 +585,11 @@ def test_paths_count_from_the_folder_of_the_recipe(tmp_path, monkeypatch) -> Non
 def test_any_path_gives_a_message(good, folder, file) -> None:
     faults = faults_of(changed(good, maps__hi__file=file), folder)
     assert list(faults) == ["maps.hi.file"]
+
+
+def test_a_key_typed_twice_is_told(tmp_path) -> None:
+    text = (CHECKOUT / "recipes" / "orrinda_short.toml").read_text(encoding="utf-8")
+    file = tmp_path / "twice.toml"
+    file.write_text(text.replace("ebv = 0.0", "ebv = 0.0\nebv = 0.1"), encoding="utf-8")
+    with pytest.raises(RecipeError, match=r"twice\.toml.*line \d+.*second time: keep one"):
+        load_recipe(file)
