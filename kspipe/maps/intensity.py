@@ -16,15 +16,18 @@ from numpy.typing import NDArray
 
 from kspipe.core.constants import (
     ARCSEC2_SR,
-    C_CM_S,
-    H_ERG_S,
-    HALPHA_CM,
-    HI_COLUMN_PER_K_KMS,
-    RAYLEIGH_PHOTONS_S_CM2_SR,
 )
 from kspipe.core.errors import Fault, UnitError
 from kspipe.core.tracers import Tracer
 from kspipe.core.units import StoredUnit, UnitReadingError, read_unit
+from kspipe.maps.canonical import (
+    FLUX_PER_ANGSTROM,
+    LINE_FLUX,
+    SPEED,
+    band_intensity,
+    line_intensity,
+    line_temperature,
+)
 
 __all__ = [
     "Door",
@@ -46,10 +49,7 @@ _EXAMPLES = {
     "Msun/yr/kpc2": "'Msun/yr/kpc2', 'Msun/yr/pc2'",
 }
 
-_SPEED: Final = u.km / u.s
 _COUNTS: Final = (u.count, u.DN, u.adu, u.electron)
-_LINE_FLUX: Final = u.erg / u.s / u.cm**2
-_FLUX_PER_ANGSTROM: Final = _LINE_FLUX / u.AA
 
 _FINISHED_UNITS: Final = {
     "Msun/pc2": u.Msun / u.pc**2,
@@ -60,12 +60,12 @@ _NO_SOLID_ANGLE: Final = "a flux without a solid angle (per beam, pixel, sr or a
 _KINDS: Final = (
     (u.K, "a temperature that is not integrated over velocity"),
     (u.Jy / u.sr, "an intensity per frequency, not integrated over a line"),
-    (_FLUX_PER_ANGSTROM / u.sr, "an intensity per wavelength, not integrated over a line"),
-    (_LINE_FLUX / u.sr, "an intensity integrated over frequency"),
+    (FLUX_PER_ANGSTROM / u.sr, "an intensity per wavelength, not integrated over a line"),
+    (LINE_FLUX / u.sr, "an intensity integrated over frequency"),
     (u.Jy, _NO_SOLID_ANGLE),
-    (u.Jy * _SPEED, _NO_SOLID_ANGLE),
-    (_LINE_FLUX, _NO_SOLID_ANGLE),
-    (_FLUX_PER_ANGSTROM, _NO_SOLID_ANGLE),
+    (u.Jy * SPEED, _NO_SOLID_ANGLE),
+    (LINE_FLUX, _NO_SOLID_ANGLE),
+    (FLUX_PER_ANGSTROM, _NO_SOLID_ANGLE),
     (u.Msun / u.pc**2, "a surface density, which is read for finished maps (Sigma_HI ...) only"),
     (u.cm**-2, "a column density, which is read for HI only"),
     (u.mag, "a magnitude of an unsaid system and without a solid angle"),
@@ -111,7 +111,7 @@ class UnitReading:
     @property
     def needs_frequency(self) -> bool:
         """Whether flux density must become brightness temperature."""
-        return bool(_per_steradian(self.linear).is_equivalent(u.Jy / u.sr * _SPEED))
+        return bool(_per_steradian(self.linear).is_equivalent(u.Jy / u.sr * SPEED))
 
 
 @dataclass(frozen=True)
@@ -279,11 +279,11 @@ def open_door(
         unit = u.Unit(unit * u.pix / (pixel_area_arcsec2 * ARCSEC2_SR * u.sr))
         notes.append(f"pixel of {pixel_area_arcsec2:.6g} arcsec2")
     if tracer.unit == "K km/s":
-        factor = _line_temperature(unit, tracer, frequency_ghz, frequency_note, notes)
+        factor = line_temperature(unit, tracer, frequency_ghz, frequency_note, notes)
     elif tracer.unit == "MJy/sr":
-        factor = _band_intensity(unit, tracer, wavelength_um, notes)
+        factor = band_intensity(unit, tracer, wavelength_um, notes)
     elif tracer.unit == "erg/s/cm2/sr":
-        factor = _line_intensity(unit, tracer, notes)
+        factor = line_intensity(unit, tracer, notes)
     else:
         finished = _FINISHED_UNITS[tracer.unit]
         factor = float(unit.to(finished)) if unit.is_equivalent(finished) else None
@@ -446,53 +446,3 @@ def _worth(counts: str, name: str) -> u.UnitBase:
 
 def _has_solid_angle(unit: u.UnitBase) -> bool:
     return u.rad in unit.decompose().bases or any(one in unit.bases for one in (u.beam, u.pix))
-
-
-def _line_temperature(
-    unit: u.UnitBase,
-    tracer: Tracer,
-    frequency_ghz: float | None,
-    frequency_note: str,
-    notes: list[str],
-) -> float | None:
-    """Brightness temperature over velocity [K km/s] for one `unit`, or None."""
-    if unit.is_equivalent(u.K * _SPEED):
-        return float(unit.to(u.K * _SPEED))
-    if unit.is_equivalent(u.cm**-2) and tracer.key == "HI":
-        notes.append(f"{HI_COLUMN_PER_K_KMS:.4g} H atoms per cm2 for 1 K km/s, optically thin")
-        return float(unit.to(u.cm**-2)) / HI_COLUMN_PER_K_KMS
-    if unit.is_equivalent(u.Jy / u.sr * _SPEED) and frequency_ghz is not None:
-        origin = f" from {frequency_note}" if frequency_note else ""
-        notes.append(f"Rayleigh-Jeans at {frequency_ghz:.8g} GHz observed{origin}")
-        kelvin = u.brightness_temperature(frequency_ghz * u.GHz)
-        per_speed = unit.to(u.Jy / u.sr * _SPEED)
-        return float((per_speed * u.Jy / u.sr).to_value(u.K, kelvin))
-    return None
-
-
-def _band_intensity(
-    unit: u.UnitBase, tracer: Tracer, wavelength_um: float | None, notes: list[str]
-) -> float | None:
-    """Specific intensity [MJy/sr] for one `unit`, or None."""
-    if unit.is_equivalent(u.MJy / u.sr):
-        return float(unit.to(u.MJy / u.sr))
-    if unit.is_equivalent(_FLUX_PER_ANGSTROM / u.sr):
-        if wavelength_um is None:
-            wavelength, origin = C_CM_S / (tracer.frequency_ghz * 1e9) * u.cm, tracer.source
-        else:
-            wavelength, origin = wavelength_um * u.um, "recipe wavelength"
-        notes.append(f"lambda^2 / c at {wavelength.to_value(u.AA):.6g} Angstrom: {origin}")
-        per_frequency = (1.0 * unit) * wavelength**2 / (C_CM_S * u.cm / u.s)
-        return float(per_frequency.to_value(u.MJy / u.sr))
-    return None
-
-
-def _line_intensity(unit: u.UnitBase, tracer: Tracer, notes: list[str]) -> float | None:
-    """Integrated intensity [erg/s/cm2/sr] for one `unit`, or None; photons of H-alpha only."""
-    if unit.is_equivalent(_LINE_FLUX / u.sr):
-        return float(unit.to(_LINE_FLUX / u.sr))
-    if unit.is_equivalent(u.R) and tracer.key == "Halpha":
-        notes.append("photons of 6562.8 A")
-        photon_erg = H_ERG_S * C_CM_S / HALPHA_CM
-        return float(unit.to(u.R)) * RAYLEIGH_PHOTONS_S_CM2_SR * photon_erg
-    return None

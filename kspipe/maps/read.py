@@ -11,7 +11,8 @@ from kspipe.core.errors import Fault, MapError, ShapeError
 from kspipe.maps.header import pixel_areas_arcsec2
 from kspipe.maps.psf_records import psf_record
 from kspipe.maps.skymap import CommonError, NoiseTerm, SkyMap
-from kspipe.maps.source import MapSource, StoredImage
+from kspipe.maps.source import MapSource
+from kspipe.maps.stored import StoredImage
 
 __all__ = ["load_map", "relative_area_of", "relative_noise", "with_photon_noise"]
 

@@ -3,17 +3,13 @@
 from __future__ import annotations
 
 import math
-import warnings
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from collections.abc import Callable
 from dataclasses import dataclass
-from pathlib import Path
-from typing import Final, Literal
+from typing import Final
 
 import numpy as np
 from astropy.coordinates import SkyCoord
 from astropy.io import fits
-from astropy.utils.exceptions import AstropyUserWarning
 from astropy.wcs import WCS
 from astropy.wcs.utils import skycoord_to_pixel
 from numpy.typing import NDArray
@@ -21,7 +17,7 @@ from numpy.typing import NDArray
 from kspipe.core.errors import BeamError, Fault, GridError, MapError, ShapeError
 from kspipe.core.tracers import TRACERS, Tracer
 from kspipe.kernels.geometry import beam_area
-from kspipe.maps.beams import Beam, BeamTable, beam_table, find_beam
+from kspipe.maps.beams import Beam, find_beam
 from kspipe.maps.header import (
     celestial_wcs,
     observed_frequency_ghz,
@@ -37,231 +33,15 @@ from kspipe.maps.intensity import (
     refuse_unused_counts,
 )
 from kspipe.maps.psf import PsfImage, read_psf
+from kspipe.maps.request import MapRequest
+from kspipe.maps.stored import StoredImage
 
-__all__ = ["MapRequest", "MapSource", "NoiseRequest", "StoredImage"]
+__all__ = ["MapSource"]
 
 Array = NDArray[np.float64]
 
 # A beam of more pixels than this is BMAJ in the wrong unit, not a map.
 MOST_PIXELS_PER_BEAM: Final = 300.0
-
-
-@dataclass(frozen=True)
-class NoiseRequest:
-    """How a recipe states the noise of a map.
-
-    Attributes
-    ----------
-    kind : {"measure", "value", "file"}
-    value : float
-        1-sigma error per stored pixel, for ``value``.
-    unit : str
-        Unit of `value`; empty for that of the map.
-    file : Path or None
-    hdu : int or None
-    stated : {"sigma", "variance", "inverse variance"}
-        What the numbers in `file` are.
-    correlated : {"beam", "none", "measure"}
-        Whether the noise has the correlation of the beam (radio), none (detectors), or one to be
-        measured on blank sky.
-    shape_file : Path or None
-        Map of how the noise varies over the field.
-    shape_is : {"primary beam", "exposure", "weight", "channels"}
-        Noise goes as 1 / primary beam, 1 / sqrt(exposure or weight), sqrt(channels summed).
-    gain : float or None
-        Photons per stored unit of one pixel: adds photon noise sqrt(value / gain).
-    """
-
-    kind: Literal["measure", "value", "file"]
-    value: float = math.nan
-    unit: str = ""
-    file: Path | None = None
-    hdu: int | None = None
-    stated: Literal["sigma", "variance", "inverse variance"] = "sigma"
-    correlated: Literal["beam", "none", "measure"] = "none"
-    shape_file: Path | None = None
-    shape_is: Literal["primary beam", "exposure", "weight", "channels"] = "primary beam"
-    gain: float | None = None
-
-
-@dataclass(frozen=True)
-class MapRequest:
-    """What a recipe says of one map; plain values, so that it travels between processes.
-
-    Attributes
-    ----------
-    name, tracer : str
-    file : Path
-    noise : NoiseRequest
-    hdu : int or None
-    unit : str or None
-        Overrides BUNIT.
-    beam : (float, float, float) or None
-        FWHM major, minor [arcsec] and position angle [deg]; overrides the header.
-    averages_pixels : bool
-        Whether values are means over the pixel on top of the beam.
-    calibration_error : float
-        Fraction.
-    pedestal_error : (float, str) or None
-        1-sigma error of the zero level with its unit.
-    background : {"keep", "subtract"}
-        Whether the level of the sky beyond the galaxy is taken off.
-    zeros : {"flux", "blank"} or None
-        What pixels at exactly zero mean.
-    counts : str or None
-        Physical intensity or flux per pixel of one stored count (per second), with its unit.
-    zero_point : float or None
-        AB magnitude of one stored count (per second).
-    wavelength_um : float or None
-        Effective wavelength for units per Angstrom; by default that of the tracer.
-    psf : Path or None
-        Image of the point-spread function, instead of a Gaussian beam.
-    regrid : {"spline", "area"} or None
-        How the map is brought to the grid; None for the choice by its sampling.
-    shift_arcsec : (float, float)
-        East and north, added to the map's sky coordinates.
-    mask_negative : bool
-        Whether connected regions below -4 sigma are taken as not observed.
-    short_spacings : {"yes", "no", "unknown"} or None
-        Whether an interferometer map holds them.
-    largest_scale_arcsec : float or None
-        Largest scale that it recovers.
-    total_flux : str or None
-        Flux by a single dish, with its unit, to compare with.
-    """
-
-    name: str
-    tracer: str
-    file: Path
-    noise: NoiseRequest
-    hdu: int | None = None
-    unit: str | None = None
-    beam: tuple[float, float, float] | None = None
-    averages_pixels: bool = False
-    calibration_error: float = 0.0
-    pedestal_error: tuple[float, str] | None = None
-    background: Literal["keep", "subtract"] = "keep"
-    zeros: Literal["flux", "blank"] | None = None
-    counts: str | None = None
-    zero_point: float | None = None
-    wavelength_um: float | None = None
-    psf: Path | None = None
-    regrid: Literal["spline", "area"] | None = None
-    shift_arcsec: tuple[float, float] = (0.0, 0.0)
-    mask_negative: bool = False
-    short_spacings: Literal["yes", "no", "unknown"] | None = None
-    largest_scale_arcsec: float | None = None
-    total_flux: str | None = None
-
-
-@dataclass(frozen=True)
-class StoredImage:
-    """One two-dimensional image of a FITS file, or an HDU in memory.
-
-    Attributes
-    ----------
-    file : Path
-        For messages, and to read from.
-    index : int
-        HDU.
-    header : astropy.io.fits.Header
-    shape : (int, int)
-        Rows and columns without degenerate axes.
-    memory : HDU or None
-        Read from here instead of the file.
-    beams : BeamTable or None
-        The file's table of beams.
-    """
-
-    file: Path
-    index: int
-    header: fits.Header
-    shape: tuple[int, int]
-    memory: fits.PrimaryHDU | None = None
-    beams: BeamTable | None = None
-
-    def __str__(self) -> str:
-        return f"{self.file}" + (f"[{self.index}]" if self.index else "")
-
-    @classmethod
-    def find(
-        cls, file: Path, hdu: int | None, memory: fits.PrimaryHDU | None = None
-    ) -> StoredImage:
-        """Find the one image in a file.
-
-        Raises
-        ------
-        MapError
-            If the file cannot be read, or holds no image or several.
-        ShapeError
-            If the image has more than two axes longer than one.
-        """
-        if memory is not None:
-            return cls(file, 0, memory.header.copy(), _plane(memory.header, str(file)), memory)
-        with _open(file) as hdus:
-            images = [
-                i for i, h in enumerate(hdus) if h.is_image and len(_long_axes(h.header)) >= 2
-            ]
-            listed = ", ".join(f"{i} {hdus[i].name or 'unnamed'}" for i in images)
-            if hdu is not None and hdu not in images:
-                raise MapError(
-                    Fault(str(file), f"HDU {hdu} holds no image; images are in: {listed or 'none'}")
-                )
-            if hdu is None and len(images) != 1:
-                what = "the file holds no image" if not images else f"several images: {listed}"
-                raise MapError(Fault(str(file), what, "type hdu = N for this map"))
-            index = images[0] if hdu is None else hdu
-            header = hdus[index].header.copy()
-            beams = beam_table(hdus)
-        return cls(file, index, header, _plane(header, f"{file}[{index}]"), beams=beams)
-
-    def read(self) -> Array:
-        """Read the pixels, degenerate axes dropped, as a fresh (ny, nx) float64 array."""
-        if self.memory is not None:
-            return np.array(self.memory.data, dtype=float).reshape(self.shape)
-        with _open(self.file) as hdus:
-            try:
-                return np.array(hdus[self.index].data, dtype=float).reshape(self.shape)
-            except (OSError, TypeError, ValueError) as error:
-                what = f"the pixels cannot be read; is the file cut off? ({error})"
-                raise MapError(Fault(str(self), what)) from error
-
-
-def _long_axes(header: fits.Header) -> list[int]:
-    return [
-        axis for axis in range(1, header.get("NAXIS", 0) + 1) if header.get(f"NAXIS{axis}", 0) > 1
-    ]
-
-
-def _plane(header: fits.Header, where: str) -> tuple[int, int]:
-    axes = _long_axes(header)
-    sizes = [header.get(f"NAXIS{axis}", 0) for axis in axes]
-    if axes != [1, 2]:
-        raise ShapeError(
-            Fault(
-                where,
-                f"axes {axes} are longer than one (sizes {sizes}); expected an image on axes 1 "
-                "and 2",
-                "make an integrated map of the cube first" if len(axes) > 2 else "",
-            )
-        )
-    return sizes[1], sizes[0]
-
-
-@contextmanager
-def _open(file: Path) -> Iterator[fits.HDUList]:
-    """Open a FITS file; every way in which that fails becomes one message."""
-    try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore", AstropyUserWarning)
-            hdus = fits.open(file)
-            hdus.info(output=False)
-    except FileNotFoundError as error:
-        raise MapError(Fault(str(file), "the file does not exist")) from error
-    except Exception as error:  # astropy and gzip raise many kinds for damaged files
-        raise MapError(Fault(str(file), f"the file cannot be read as FITS ({error})")) from error
-    with hdus:
-        yield hdus
 
 
 @dataclass(frozen=True)

@@ -12,7 +12,8 @@ from kspipe.core.errors import Fault, MapError
 from kspipe.core.tracers import RADIO_LINES
 from kspipe.core.units import UnitReadingError, read_unit
 from kspipe.maps.header import header_frequency_ghz, observed_frequency_ghz
-from kspipe.maps.source import MapRequest, MapSource
+from kspipe.maps.request import MapRequest
+from kspipe.maps.source import MapSource
 
 __all__ = ["ShortSpacings", "Total", "judge_short_spacings", "jy_per_k_sr", "read_total"]
 

@@ -15,7 +15,7 @@ from kspipe.conversions import Field
 from kspipe.core.errors import Fault, GridError
 from kspipe.kernels.geometry import disc_radius, position_offsets
 from kspipe.maps.header import celestial_wcs
-from kspipe.maps.source import StoredImage
+from kspipe.maps.stored import StoredImage
 from kspipe.matching import Grid
 from kspipe.recipe import Recipe
 from kspipe.recipe.quantity import Measured

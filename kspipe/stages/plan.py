@@ -41,7 +41,7 @@ from kspipe.core.errors import Fault, KspipeWarning, MapError
 from kspipe.kernels.geometry import beam_axes
 from kspipe.maps import MapSource
 from kspipe.maps.header import celestial_wcs
-from kspipe.maps.source import StoredImage
+from kspipe.maps.stored import StoredImage
 from kspipe.matching import Grid, choose_beam
 from kspipe.recipe import Recipe
 from kspipe.recipe.varying import ByRegion, OnMap, Profile, typed_as

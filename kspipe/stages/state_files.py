@@ -16,7 +16,7 @@ from kspipe.kernels.geometry import beam_axes
 from kspipe.maps import MapSource
 from kspipe.maps.header import celestial_wcs
 from kspipe.maps.read import load_map
-from kspipe.maps.source import StoredImage
+from kspipe.maps.stored import StoredImage
 from kspipe.matching import Grid, match_map
 from kspipe.recipe import Recipe
 from kspipe.recipe.gas_state import GasStateTable, LinewidthMap

@@ -284,7 +284,7 @@ def test_measured_noise_is_the_true_one(correlated, contents) -> None:
         value[:40] = np.nan
     measured = measure_noise(sky_with(value), is_outside, correlated=correlated)
     (term,) = measured.noise
-    # The issue asks for 3 %: about 2000 beams outside know the scatter to 1.5 %.
+    # Within 3 %: about 2000 beams outside know the scatter to 1.5 %.
     np.testing.assert_allclose(term.sigma, 0.37, rtol=0.03)
     assert term.sigma.shape == value.shape
     expected = round_beam(12.0) if correlated else NONE

@@ -13,7 +13,7 @@ from astropy.io import fits
 from helpers import CHECKOUT, demo_recipe
 
 from kspipe.core.errors import KspipeWarning, RecipeError
-from kspipe.maps.source import StoredImage
+from kspipe.maps.stored import StoredImage
 from kspipe.recipe import Recipe, load_recipe, parse_recipe
 from kspipe.stages.plan import make_plan
 
