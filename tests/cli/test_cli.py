@@ -233,14 +233,19 @@ def test_closure_prints_bias_and_coverage(tmp_path):
     assert len(Table.read(out / "closure.ecsv")) >= 6
 
 
+def slow(*values):
+    """Seconds of imports each: one of a kind is enough by default."""
+    return pytest.param(*values, marks=pytest.mark.slow)
+
+
 @pytest.mark.parametrize(
     ("arguments", "words"),
     [
-        (["budget", "nowhere"], "holds no reduction"),
-        (["closure", SHORT, "--out", "x", "--noise", "co"], "--noise co=0.5"),
+        slow(["budget", "nowhere"], "holds no reduction"),
+        slow(["closure", SHORT, "--out", "x", "--noise", "co"], "--noise co=0.5"),
         (["reduce", "nowhere.toml", "--out", "x"], "does not exist"),
         (["compare", "nowhere"], "holds no reduction"),
-        (["figures", "nowhere"], "comparison"),
+        slow(["figures", "nowhere"], "comparison"),
         (["reduce", SHORT], "--out"),
         (["polish"], "polish"),
     ],
