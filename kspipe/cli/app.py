@@ -217,7 +217,7 @@ def explain_command(
 
 app.command(
     "tracks",
-    epilog="Example: kspipe tracks krumholz2009 --metallicity 8.7 --parameter clumping=5 --out DIR",
+    epilog="Example: kspipe tracks krumholz2009 --metallicity 8.7 --parameter clumping=5 --out out",
 )(tracks_command)
 add_trials(app)
 

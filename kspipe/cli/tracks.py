@@ -31,7 +31,7 @@ def tracks_command(
     overwrite: Annotated[bool, typer.Option("--overwrite", help="Replace older tracks.")] = False,
     debug: Annotated[bool, typer.Option("--debug", help="Show where an error arose.")] = False,
 ) -> None:
-    """Draw a relation against gas, without maps; write tracks.ecsv, tracks.pdf, tracks.png."""
+    """Draw a relation against gas, without maps: table and figure."""
     from kspipe.cli.session import session
 
     with session(quiet=True, debug=debug):

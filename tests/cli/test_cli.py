@@ -22,6 +22,23 @@ def kspipe(*arguments: object, cwd: Path | None = None) -> subprocess.CompletedP
     return subprocess.run(command, capture_output=True, text=True, cwd=cwd, check=False)
 
 
+COMMANDS = (
+    "reduce",
+    "compare",
+    "figures",
+    "run",
+    "alternatives",
+    "chain",
+    "fit-alpha",
+    "budget",
+    "ladder",
+    "closure",
+    "tracks",
+    "list",
+    "explain",
+)
+
+
 @pytest.fixture(scope="module")
 def made(tmp_path_factory):
     out = tmp_path_factory.mktemp("run with spaces") / "out"
@@ -30,10 +47,7 @@ def made(tmp_path_factory):
     return out, result
 
 
-@pytest.mark.parametrize(
-    "command",
-    [[], *([c] for c in ("reduce", "compare", "figures", "run", "budget", "ladder", "closure"))],
-)
+@pytest.mark.parametrize("command", [[], *([name] for name in COMMANDS)])
 def test_help_fits_a_screen_and_is_light(command):
     code = (
         f"import sys; sys.argv = ['kspipe', *{command!r}, '--help']\n"
