@@ -9,7 +9,7 @@ from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import stats
+from scipy.special import stdtr
 
 from kspipe.comparison.latent_fit import LEAST_SCATTER_DEX, LatentModel, Optimum
 from kspipe.comparison.relation_fit import (
@@ -227,7 +227,7 @@ def _difference(
         )
         return Difference(better, worse, total, math.nan, 1.0, sentence)
     error = block_bootstrap_error(scores, blocks, rng)
-    rate = 1.0 if error == 0 else 2.0 * float(stats.t.sf(abs(total) / error, n_blocks - 1))
+    rate = 1.0 if error == 0 else 2.0 * float(stdtr(n_blocks - 1, -abs(total) / error))
     numbers = f"log predictive score {total:.1f} +- {error:.1f}, chance {_percent(rate)}"
     sentence = (
         f"{better} predicts better than {worse} ({numbers})"

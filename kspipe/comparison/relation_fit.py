@@ -172,13 +172,15 @@ def fit_relation(
         return RelationFit(samples.n, message=obstacle), None, None
     usable = samples.usable
     data = samples.measurements()
-    needed = set(LAWS.get(use.law).needs) - {"sigma_gas"}
+    law = LAWS.get(use.law)
+    needed = set(law.needs) - {law.gas}
     if any(free.name == ALPHA_CO_SCALE for free in use.free):
         needed |= {"f_mol"}
     missing = sorted(needed - set(inputs))
     if missing:
         return RelationFit(samples.n, message=f"needs {', '.join(missing)}"), None, None
-    known = {name: np.asarray(inputs[name])[usable] for name in needed}
+    taken = needed | (set(law.optional) & set(inputs))
+    known = {name: np.asarray(inputs[name])[usable] for name in taken}
     valid = _has_prediction(data, known, use)
     if not valid.any():
         return RelationFit(0, message="no sample has a prediction"), None, None

@@ -9,9 +9,10 @@ from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import stats
+from scipy.special import stdtr
 
 from kspipe.comparison.samples import LEAST_SAMPLES
+from kspipe.kernels.statistics import average_ranks
 
 __all__ = ["RunningMedian", "Trend", "partial_rank_correlation", "running_median", "trends"]
 
@@ -154,8 +155,8 @@ def partial_rank_correlation(
        correlation is that of the residuals of linear regressions, here of ranks.
     """
     n = first.size
-    design = np.column_stack([np.ones(n), *(stats.rankdata(h) for h in held)])
-    ranks = np.column_stack([stats.rankdata(first), stats.rankdata(second)])
+    design = np.column_stack([np.ones(n), *(average_ranks(h) for h in held)])
+    ranks = np.column_stack([average_ranks(first), average_ranks(second)])
     rest = ranks - design @ np.linalg.lstsq(design, ranks, rcond=None)[0]
     norms = np.sqrt(np.sum(rest**2, axis=0))
     freedom = n - 2 - len(held)
@@ -163,7 +164,7 @@ def partial_rank_correlation(
         return math.nan, math.nan
     r = float(np.clip(rest[:, 0] @ rest[:, 1] / np.prod(norms), -1.0, 1.0))
     t = abs(r) * math.sqrt(freedom / max(1.0 - r**2, 1e-300))
-    return r, 2.0 * float(stats.t.sf(t, freedom))
+    return r, 2.0 * float(stdtr(freedom, -t))
 
 
 def running_median(values: Array, ratio: Array, n_bins: int = _BINS) -> RunningMedian:

@@ -7,7 +7,7 @@ from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.stats import norm
+from scipy.special import log_ndtr, ndtri
 
 from kspipe.kernels.noise import NoiseTerm
 
@@ -143,6 +143,6 @@ def upper_limit(value: Array | float, error: Array | float, n_sigma: float = 3.0
     the Bayesian limit with a flat prior on positive values (Review of Particle Physics,
     "Statistics", section on bounded parameters; from memory).
     """
-    beyond = norm.logsf(n_sigma) + norm.logcdf(np.asarray(value) / np.asarray(error))
+    beyond = log_ndtr(-n_sigma) + log_ndtr(np.asarray(value) / np.asarray(error))
     # isf of a tiny probability is exact, ppf of one minus it is not.
-    return np.asarray(value + np.asarray(error) * norm.isf(np.exp(beyond)))
+    return np.asarray(value + np.asarray(error) * -ndtri(np.exp(beyond)))

@@ -272,7 +272,9 @@ def _inputs(galaxy: _Galaxy, uses: Iterable[RelationUse], mask: Mask) -> dict[st
     """What some laws take beside the gas, per sample; taken as known."""
     known = law_inputs(galaxy.recipe, galaxy.disc)
     laws = [LAWS.get(use.law) for use in uses]
-    names = {name for law in laws for name in law.needs if name != law.gas}
+    names = {name for law in laws for name in (*law.needs, *law.optional) if name in known} - {
+        law.gas for law in laws
+    }
     inputs = {name: np.broadcast_to(known[name].value, mask.shape)[mask] for name in names}
     # Share of the gas that a scale of alpha_CO acts on.
     if "f_mol" in galaxy.disc.surfaces:

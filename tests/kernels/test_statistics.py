@@ -12,6 +12,7 @@ from scipy import stats
 from kspipe.kernels.fourier import gaussian_smooth
 from kspipe.kernels.geometry import beam_area, beam_covariance
 from kspipe.kernels.statistics import (
+    average_ranks,
     beam_averaging_dex,
     clipped_scatter,
     correlation_area,
@@ -216,3 +217,9 @@ def test_a_beam_over_clouds_raises_a_steep_law():
     drawn = np.log10(np.mean(clouds**1.4) / np.mean(clouds) ** 1.4)
     assert beam_averaging_dex(1.4, 0.35) == pytest.approx(drawn, abs=0.002)
     assert beam_averaging_dex(1.0, 0.35) == 0.0
+
+
+def test_ranks_are_those_of_scipy() -> None:
+    rng = np.random.default_rng(6)
+    for values in (rng.normal(size=50), rng.integers(0, 5, 60).astype(float), np.ones(4)):
+        np.testing.assert_array_equal(average_ranks(values), stats.rankdata(values))
