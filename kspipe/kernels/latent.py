@@ -33,7 +33,7 @@ _GRID: Final = 25
 _ZOOMS: Final = 3
 _UNIT: Final = np.linspace(0.0, 1.0, _GRID)[None, :]
 # Points at a time, so that the nodes stay in the cache.
-_BLOCK: Final = 64
+_BLOCK: Final = 128
 
 
 @dataclass(frozen=True)

@@ -10,12 +10,14 @@ import pytest
 from PIL import Image
 
 from kspipe.core.errors import OutputError
+from kspipe.core.progress import no_progress
 from kspipe.products import draw_figures
+from kspipe.products.figures import _draw_all
 from kspipe.products.map_figures import draw_surface_densities
 from kspipe.products.read import read_products, read_recipe
 from kspipe.products.relation_figure import draw_star_formation_law
 from kspipe.products.residual_figure import draw_residual
-from kspipe.products.style import figure_style
+from kspipe.products.style import figure_style, new_figure
 from kspipe.recipe import load_recipe
 from kspipe.recipe.quantity import Measured
 from kspipe.stages.compare import compare_relations
@@ -171,3 +173,21 @@ def test_law_figure_counts_what_it_cannot_draw(products):
     assert f"{flags['nonpositive_sfr']} of {products.summary['n_pixels']} pixels" in words
     assert f"{flags['nonpositive_gas']} have" in words
     assert f"= {products.summary['n_independent']:.0f}" in words
+
+
+def test_a_figure_that_fails_beside_fails_here(tmp_path, capfd) -> None:
+    """Every second figure is drawn in a process of its own: its fault is told all the same."""
+
+    def fine():
+        return new_figure(2.0, 2.0)
+
+    def faulty():
+        raise RuntimeError("no ink")
+
+    _draw_all({"one": fine, "two": fine, "three": fine}, tmp_path, no_progress)
+    assert {file.name for file in tmp_path.iterdir()} == {
+        f"{name}.{suffix}" for name in ("one", "two", "three") for suffix in ("pdf", "png")
+    }
+    with pytest.raises(RuntimeError, match="no ink"):
+        _draw_all({"four": fine, "five": faulty}, tmp_path, no_progress)
+    capfd.readouterr()  # the other process told it, too
