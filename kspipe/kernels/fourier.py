@@ -47,7 +47,7 @@ class Padded:
     margin: int
 
 
-@lru_cache(maxsize=4)
+@lru_cache(maxsize=8)
 def _transfer(
     shape: tuple[int, int],
     cxx: float,

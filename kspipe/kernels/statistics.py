@@ -112,7 +112,8 @@ def ratio_interval(
         root = np.sqrt(np.maximum(b**2 - a * c, 0.0))
         # The form without cancellation; a = 0 puts one end at infinity.
         far = b + np.where(b >= 0, root, -root)
-        ends = np.sort([far / a, c / far], axis=0)
+        one, other = far / a, c / far
+        ends = np.fmin(one, other), np.fmax(one, other)
     is_closed = a > 0
     # With no closed interval but a numerator beyond its noise, the sign of the ratio is known.
     is_above = ~is_closed & (c > 0) & (top > 0)

@@ -57,7 +57,7 @@ def match_map(
         How to go from the map's pixels to the grid's; by default a cubic spline where the target
         beam spans at least two of the map's pixels, else area-weighted means.
     workers : int
-        Threads of the FFT; the result does not depend on them.
+        Tiles worked on at a time; the result does not depend on it.
 
     Returns
     -------

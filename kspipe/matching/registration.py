@@ -46,8 +46,8 @@ REACH_BEAMS: Final = 2.0
 LARGEST_ERROR_BEAMS: Final = 0.15
 # What the spline through the lags leaves of a displacement known exactly.
 FLOOR_PIX: Final = 0.002
-# Of a larger grid the inner square of this side is compared: some 170 beams across.
-MOST_PIXELS: Final = 512
+# Of a larger grid the inner square of this side is compared: some 130 beams across.
+MOST_PIXELS: Final = 384
 # An offset of this many errors is worth typing a shift.
 SIGNIFICANT: Final = 3.0
 

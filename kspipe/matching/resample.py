@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from functools import partial
 from typing import Final
@@ -87,16 +88,17 @@ def smooth_and_sample(
     )
     bending = bend_of(sky, target_arcsec2, smoothing, (wanted[0], wanted[1]))
     tiles = list(cut_tiles((ny, nx), margin, (wanted[0], wanted[1]), bending.tile))
-    for tile, here in zip(tiles, _members(tiles, x, y, near), strict=True):
+
+    def fill(tile: Tile, here: Indices) -> None:
         if not here.size:
-            continue
+            return
         tx, ty = x.ravel()[here] - tile.origin[1], y.ravel()[here] - tile.origin[0]
         value = tile.cut(sky.value, np.nan)
         observed = np.isfinite(value)
         is_full = bool(observed.all())
         out.on_blank.flat[here] = ~observed[np.rint(ty).astype(int), np.rint(tx).astype(int)]
         kernel, bend = bending.at(tile.core, x.ravel()[here], y.ravel()[here])
-        sample = partial(_sampled, kernel, bend, tx, ty, fine=fine, workers=workers)
+        sample = partial(_sampled, kernel, bend, tx, ty, fine=fine)
         fade = _fade(observed.shape) if fine > 1 else None
         seen = value if is_full else np.where(observed, value, 0.0)
         out.value.flat[here] = sample(seen if fade is None else seen * fade)
@@ -109,10 +111,15 @@ def smooth_and_sample(
             sigma = tile.cut(term.sigma)
             if not is_full:
                 sigma = np.where(observed, sigma, 0.0)
-            spread = sample_linear(kernel.variance(term, sigma, workers=workers), tx, ty)
+            spread = sample_linear(kernel.variance(term, sigma), tx, ty)
             if bend is not None and not np.any(term.correlation_arcsec2):
                 spread *= bend.gain
             variance.flat[here] = np.maximum(spread, 0.0)
+
+    # Tiles write to pixels of their own: the result does not depend on the threads.
+    with ThreadPoolExecutor(max(1, workers)) as pool:
+        for _ in pool.map(fill, tiles, _members(tiles, x, y, near)):
+            pass
     return out
 
 
@@ -135,18 +142,15 @@ def _sampled(
     array: Array,
     *,
     fine: int,
-    workers: int,
 ) -> Array:
     """Smooth a tile and interpolate it, each position under its own kernel."""
-    smooth = partial(kernel.smooth, array, workers=workers, as_spline=True, fine=fine)
+    smooth = partial(kernel.smooth, array, as_spline=True, fine=fine)
     if bend is None or not isinstance(kernel, GaussianSmoothing):
         return sample_cubic(smooth(), x * fine, y * fine, is_spline=True)
     at = (x + bend.shift_pix[0]) * fine, (y + bend.shift_pix[1]) * fine
     total = sample_cubic(smooth(), *at, is_spline=True)
     for orders, factor in bend.terms.items():
-        derived = kernel.smooth(
-            array, workers=workers, as_spline=True, fine=fine, derivative=orders
-        )
+        derived = kernel.smooth(array, as_spline=True, fine=fine, derivative=orders)
         total += factor * sample_cubic(derived, *at, is_spline=True)
     return total
 

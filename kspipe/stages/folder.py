@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import hashlib
 import json
+import os
 import shutil
 import tempfile
 from collections.abc import Iterator, Mapping
+from concurrent.futures import ThreadPoolExecutor
 from contextlib import contextmanager
 from dataclasses import dataclass, field, fields, is_dataclass
 from datetime import UTC, datetime
@@ -181,8 +183,10 @@ class ProductFolder:
     def _move(self, staging: Path, prints: Mapping[str, str], drop: tuple[str, ...]) -> None:
         written = sorted(p.relative_to(staging) for p in staging.rglob("*") if p.is_file())
         owners: dict[str, dict[str, str]] = {stage: {} for stage in prints}
-        for name in written:
-            owners[_owner(name, prints)][name.as_posix()] = file_checksum(staging / name)
+        with ThreadPoolExecutor(os.cpu_count() or 1) as pool:
+            checksums = list(pool.map(file_checksum, (staging / name for name in written)))
+        for name, checksum in zip(written, checksums, strict=True):
+            owners[_owner(name, prints)][name.as_posix()] = checksum
         replaced = [*drop, *prints]
         old = {name for stage in replaced for name in self.stages.get(stage, {}).get("outputs", {})}
         for name in old - {name.as_posix() for name in written}:

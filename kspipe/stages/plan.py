@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import hashlib
+import os
 import warnings
 from collections.abc import Mapping
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -125,7 +127,10 @@ def make_plan(recipe: Recipe, memory: InMemory | None = None) -> Plan:
     _warn_metallicity(recipe)
     _warn_opacity(recipe)
     _warn_circularity(recipe)
-    prints = {f"match.{name}": _match_print(recipe, sources[name], grid, fwhm) for name in sources}
+    # Checksums of large files take a second or two, and leave the interpreter free.
+    with ThreadPoolExecutor(os.cpu_count() or 1) as pool:
+        found = pool.map(lambda source: _match_print(recipe, source, grid, fwhm), listed)
+        prints = {f"match.{name}": print_ for name, print_ in zip(sources, found, strict=True)}
     prints["convert"] = convert_print(recipe, prints)
     return Plan(recipe, sources, target, grid, prints)
 
